@@ -1,0 +1,254 @@
+"""Units as engineers write them, turned to SI at the edge and nowhere else.
+
+A unit string is a pint expression, with the trade's marks for pressure: ``bar(g)`` and ``psi(g)``
+are above the barometer, ``bar(a)`` absolute, ``mmHg(vac)`` below the barometer. A pressure without
+a mark is refused: half of all mistakes with steam tables start there.
+"""
+
+from __future__ import annotations
+
+import difflib
+import re
+from dataclasses import dataclass
+from enum import StrEnum
+from functools import cache
+from typing import TYPE_CHECKING, Any, cast
+
+if TYPE_CHECKING:
+    import numpy as np
+    import numpy.typing as npt
+
+__all__ = ["PressureDatum", "Quantity", "Unit", "UnitError", "duration_s", "parse_unit", "quantity"]
+
+
+class UnitError(ValueError):
+    """A unit or a quantity that cannot be understood."""
+
+
+class Quantity(StrEnum):
+    """The kinds of quantity a steam site measures; the value names the SI unit used inside."""
+
+    PRESSURE = "Pa"
+    TEMPERATURE = "K"
+    MASS_FLOW = "kg/s"
+    POWER = "W"
+    FRACTION = "1"
+    LENGTH = "m"
+    VOLUME = "m^3"
+    MASS = "kg"
+    SPECIFIC_ENERGY = "J/kg"
+    CONDUCTANCE = "W/K"
+    TIME = "s"
+
+
+class PressureDatum(StrEnum):
+    """Where a pressure is counted from."""
+
+    ABSOLUTE = "a"
+    GAUGE = "g"
+    VACUUM = "vac"
+    DIFFERENCE = "d"
+
+
+@dataclass(frozen=True)
+class Unit:
+    """A unit reduced to ``si = value * scale + offset``.
+
+    Attributes:
+        text: the unit as written in the site file.
+        quantity: what it measures.
+        scale: SI units per unit.
+        offset: SI value at zero; only temperatures have one.
+        datum: for pressures, what zero means; gauge and vacuum still need the barometer.
+    """
+
+    text: str
+    quantity: Quantity
+    scale: float
+    offset: float = 0.0
+    datum: PressureDatum | None = None
+
+    def to_si(self, value: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:
+        """Turn values into SI. Gauge and vacuum pressures stay relative to the barometer."""
+        return value * self.scale + self.offset
+
+    def absolute(
+        self, si: npt.NDArray[np.float64], barometer: npt.NDArray[np.float64] | float
+    ) -> npt.NDArray[np.float64]:
+        """Turn a pressure in Pa on this unit's datum into Pa absolute, with the barometer [Pa]."""
+        if self.datum is PressureDatum.GAUGE:
+            return si + barometer
+        if self.datum is PressureDatum.VACUUM:
+            return barometer - si
+        return si
+
+
+_DATUM = re.compile(r"^(?P<base>.*?)\s*\((?P<datum>a|abs|g|gauge|vac|d|diff)\)$")
+_DATUM_WORDS = {"abs": "a", "gauge": "g", "diff": "d"}
+_JOINED = {
+    "barg": "bar(g)",
+    "bara": "bar(a)",
+    "psig": "psi(g)",
+    "psia": "psi(a)",
+    "kPag": "kPa(g)",
+    "kPaa": "kPa(a)",
+}
+# Spellings that pint does not have, or reads as something else.
+_SPELLINGS = {
+    "%": "percent",
+    "C": "degC",
+    "°C": "degC",
+    "F": "degF",
+    "°F": "degF",
+    "t/h": "metric_ton/hour",
+    "t/d": "metric_ton/day",
+    "klb/h": "kilopound/hour",
+    "lb/h": "pound/hour",
+    "kg/h": "kilogram/hour",
+    "mmHg": "mmHg",
+    "inHg": "inHg",
+    "cmHg": "cmHg",
+    "m3": "m^3",
+    "m³": "m^3",
+    "-": "dimensionless",
+    "1": "dimensionless",
+}
+_DIMENSIONS = {
+    Quantity.PRESSURE: "[mass] / [length] / [time] ** 2",
+    Quantity.TEMPERATURE: "[temperature]",
+    Quantity.MASS_FLOW: "[mass] / [time]",
+    Quantity.POWER: "[mass] * [length] ** 2 / [time] ** 3",
+    Quantity.FRACTION: "[]",
+    Quantity.LENGTH: "[length]",
+    Quantity.VOLUME: "[length] ** 3",
+    Quantity.MASS: "[mass]",
+    Quantity.SPECIFIC_ENERGY: "[length] ** 2 / [time] ** 2",
+    Quantity.CONDUCTANCE: "[mass] * [length] ** 2 / [time] ** 3 / [temperature]",
+    Quantity.TIME: "[time]",
+}
+_COMMON = (
+    "bar(g)", "bar(a)", "kPa(g)", "kPa(a)", "MPa(a)", "psi(g)", "psi(a)", "mbar(a)", "hPa(a)",
+    "mmHg(a)", "mmHg(vac)", "inHg(vac)", "degC", "degF", "K", "t/h", "kg/h", "kg/s", "klb/h",
+    "lb/h", "kW", "MW", "W", "%", "1", "m", "mm", "m^3", "kg", "t", "kJ/kg", "MJ/kg", "kW/K",
+)  # fmt: skip
+# The unit stands behind a space, so that a tag called '62-PT-001' is not read as a number.
+_NUMBER = re.compile(
+    r"^\s*(?P<value>[-+]?\d+(?:\.\d+)?(?:[eE][-+]?\d+)?)(?:\s+(?P<unit>\S.*?))?\s*$"
+)
+
+
+@cache
+def _registry() -> Any:  # noqa: ANN401 - pint ships no annotations that mypy accepts here
+    # Imported late: building the registry takes a second that `--help` should not pay.
+    import pint  # noqa: PLC0415
+
+    registry = pint.UnitRegistry()
+    registry.define("percent = 0.01 = %")
+    registry.define("kilopound = 1000 * pound")
+    return registry
+
+
+@cache
+def parse_unit(text: str) -> Unit:
+    """Read a unit as an engineer writes it.
+
+    Args:
+        text: for example ``bar(g)``, ``psi(a)``, ``mmHg(vac)``, ``degF``, ``klb/h``, ``MW``, ``%``.
+
+    Raises:
+        UnitError: the unit is unknown, measures nothing that the tool knows, or is a pressure that
+            does not say whether it is absolute or gauge.
+    """
+    stripped = _JOINED.get(text.strip(), text.strip())
+    match = _DATUM.match(stripped)
+    base, datum = (match["base"], match["datum"]) if match else (stripped, None)
+    try:
+        unit = _registry().Unit(_SPELLINGS.get(base, base))
+    except Exception as error:
+        near = difflib.get_close_matches(stripped, _COMMON, n=1)
+        hint = f"; did you mean '{near[0]}'?" if near else ""
+        raise UnitError(f"'{text}' is not a unit{hint}") from error
+    measured = _quantity_of(unit, text)
+    if (measured is Quantity.PRESSURE) != (datum is not None):
+        if datum is None:
+            raise UnitError(
+                f"'{text}' is a pressure without a datum; write '{base}(a)' for absolute, "
+                f"'{base}(g)' for gauge, '{base}(vac)' for vacuum or '{base}(d)' for a difference"
+            )
+        raise UnitError(f"'{text}': only a pressure can be absolute or gauge")
+    zero = cast("float", _registry().Quantity(0.0, unit).to(measured.value).magnitude)
+    one = cast("float", _registry().Quantity(1.0, unit).to(measured.value).magnitude)
+    return Unit(
+        text=text,
+        quantity=measured,
+        scale=one - zero,
+        offset=zero if measured is Quantity.TEMPERATURE else 0.0,
+        datum=PressureDatum(_DATUM_WORDS.get(datum, datum)) if datum else None,
+    )
+
+
+def _quantity_of(unit: Any, text: str) -> Quantity:  # noqa: ANN401
+    for measured, dimension in _DIMENSIONS.items():
+        if unit.is_compatible_with(measured.value) and _registry().get_dimensionality(
+            unit
+        ) == _registry().get_dimensionality(dimension):
+            return measured
+    raise UnitError(f"'{text}' measures nothing this tool knows; known are {', '.join(_COMMON)}")
+
+
+def split_number(text: str) -> tuple[float, str] | None:
+    """Split ``'12.5 bar(g)'`` into its number and unit; None when it does not start as one."""
+    match = _NUMBER.match(text)
+    if match is None:
+        return None
+    return float(match["value"]), match["unit"] or "1"
+
+
+def quantity(text: str, expected: Quantity, *, barometer: float | None = None) -> float:
+    """Read a number with its unit into SI.
+
+    Args:
+        text: for example ``12.5 bar(a)`` or ``180 degC``.
+        expected: what the place asks for.
+        barometer: [Pa] used for a gauge or vacuum pressure; without it these are refused.
+
+    Raises:
+        UnitError: no number, an unknown unit, the wrong kind of quantity, or a gauge pressure
+            where only an absolute one makes sense.
+    """
+    split = split_number(text)
+    if split is None:
+        raise UnitError(f"'{text}' is not a number with a unit, for example '{_EXAMPLE[expected]}'")
+    value, unit_text = split
+    unit = parse_unit(unit_text)
+    if unit.quantity is not expected:
+        raise UnitError(
+            f"'{text}' is a {unit.quantity.name.lower().replace('_', ' ')}, but a "
+            f"{expected.name.lower().replace('_', ' ')} is wanted, for example '{_EXAMPLE[expected]}'"
+        )
+    si = value * unit.scale + unit.offset
+    if unit.datum in {PressureDatum.GAUGE, PressureDatum.VACUUM}:
+        if barometer is None:
+            raise UnitError(f"'{text}': give this pressure as absolute, for example '1.013 bar(a)'")
+        return barometer + si if unit.datum is PressureDatum.GAUGE else barometer - si
+    return si
+
+
+def duration_s(text: str) -> float:
+    """Read a duration such as ``5 min``, ``2 h`` or ``30 s`` into seconds."""
+    return quantity(text, Quantity.TIME)
+
+
+_EXAMPLE = {
+    Quantity.PRESSURE: "12 bar(a)",
+    Quantity.TEMPERATURE: "180 degC",
+    Quantity.MASS_FLOW: "40 t/h",
+    Quantity.POWER: "5 MW",
+    Quantity.FRACTION: "0.97",
+    Quantity.LENGTH: "2.5 m",
+    Quantity.VOLUME: "60 m^3",
+    Quantity.MASS: "30 t",
+    Quantity.SPECIFIC_ENERGY: "50 MJ/kg",
+    Quantity.CONDUCTANCE: "3 kW/K",
+    Quantity.TIME: "5 min",
+}
