@@ -1,0 +1,1 @@
+"""Whether a machine is getting worse: baselines, control charts, verdicts and alarms."""
