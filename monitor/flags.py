@@ -57,6 +57,7 @@ NOT_JUDGED = (
     Flag.MISSING
     | Flag.LOW_COVERAGE
     | Flag.UNCERTAIN
+    | Flag.NEAR_SATURATION
     | Flag.OUT_OF_REGION
     | Flag.UNSTEADY
     | Flag.OFF

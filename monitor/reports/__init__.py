@@ -1,0 +1,1 @@
+"""The views that the pages draw, and the shift report."""

@@ -142,7 +142,7 @@ def _registry() -> Any:  # noqa: ANN401 - pint ships no annotations that mypy ac
     # Imported late: building the registry takes a second that `--help` should not pay.
     import pint  # noqa: PLC0415
 
-    registry = pint.UnitRegistry()
+    registry: Any = pint.UnitRegistry()
     registry.define("percent = 0.01 = %")
     registry.define("kilopound = 1000 * pound")
     return registry
@@ -224,7 +224,8 @@ def quantity(text: str, expected: Quantity, *, barometer: float | None = None) -
     if unit.quantity is not expected:
         raise UnitError(
             f"'{text}' is a {unit.quantity.name.lower().replace('_', ' ')}, but a "
-            f"{expected.name.lower().replace('_', ' ')} is wanted, for example '{_EXAMPLE[expected]}'"
+            f"{expected.name.lower().replace('_', ' ')} is wanted, "
+            f"for example '{_EXAMPLE[expected]}'"
         )
     si = value * unit.scale + unit.offset
     if unit.datum in {PressureDatum.GAUGE, PressureDatum.VACUUM}:

@@ -1,0 +1,200 @@
+"""The exergy account of one control volume: the same for every kind of equipment.
+
+Mass, energy, entropy and exergy are counted over the ports. Where the readings do not close:
+
+- A mass imbalance is valued as an unaccounted flow that leaves at the mean state of the inlets, so
+  that a bad flow meter does not pass for entropy generation.
+- An energy residual leaves as heat where the site file says so (``heat_loss = "balance"``);
+  otherwise it is an imbalance, stored as it is.
+
+Destroyed exergy is T0 * S_gen (Gouy-Stodola). The exergy balance over the same ports gives it a
+second time; the difference, `closure`, is the energy that the readings do not account for.
+Source: Bejan, Tsatsaronis, Moran, Thermal Design and Optimization (1996), chapters 3.2 to 3.5.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from monitor.equipment.base import FloatArray, mean_specific
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from monitor.equipment.base import Drawn, StreamState
+    from monitor.thermo.dead_state import DeadState
+
+__all__ = ["Account", "Balances", "account", "balances", "content_rates"]
+
+
+@dataclass(frozen=True)
+class Rates:
+    """Rates of change of a vessel's content: kg/s, W, W/K."""
+
+    mass: FloatArray | float = 0.0
+    internal_energy: FloatArray | float = 0.0
+    entropy: FloatArray | float = 0.0
+
+
+@dataclass(frozen=True)
+class Balances:
+    """What is the same at every dead state.
+
+    Attributes:
+        mass_imbalance: in - out - stored [kg/s].
+        energy_imbalance: in - out - stored - known losses, the unaccounted flow taken out [W].
+        heat_loss: heat that leaves by balance [W].
+        unmeasured_heat: heat that leaves at the dead state by the kind's own law [W].
+        unaccounted_enthalpy, unaccounted_entropy: what the unaccounted flow carries [W], [W/K].
+        rates: of the vessel's content.
+    """
+
+    mass_imbalance: FloatArray
+    energy_imbalance: FloatArray
+    heat_loss: FloatArray
+    unmeasured_heat: FloatArray
+    unaccounted_enthalpy: FloatArray
+    unaccounted_entropy: FloatArray
+    rates: Rates
+
+
+@dataclass(frozen=True)
+class Account:
+    """The exergy account of one control volume against one dead state; all [W], shape (n,).
+
+    ``exergy_in = exergy_out + heat_loss_exergy + unaccounted + stored_rate + destroyed + closure``
+    holds to rounding, by construction of ``closure``.
+    """
+
+    exergy_in: FloatArray
+    exergy_out: FloatArray
+    heat_loss_exergy: FloatArray
+    unaccounted: FloatArray
+    stored_rate: FloatArray
+    destroyed: FloatArray
+    closure: FloatArray
+    fuel: FloatArray
+    product: FloatArray
+
+
+def content_rates(drawn: Drawn) -> Rates:
+    """Rates of change of what the vessel holds, over each cell."""
+    held = drawn.content
+    if held is None:
+        return Rates()
+    return Rates(
+        mass=np.diff(held.mass) / drawn.interval,
+        internal_energy=np.diff(held.internal_energy) / drawn.interval,
+        entropy=np.diff(held.entropy) / drawn.interval,
+    )
+
+
+def balances(drawn: Drawn) -> Balances:
+    """Count mass and energy over the ports of one control volume."""
+    inlets, outlets = drawn.facing("in"), drawn.facing("out")
+    rates = content_rates(drawn)
+    mass = _sum(inlets, "mass_flow") - _sum(outlets, "mass_flow") - rates.mass
+    unaccounted = _unaccounted_state(inlets, outlets)
+    if unaccounted is None:
+        # No water at all, or fuel alone: its mass leaves as flue gas, which nobody meters.
+        mass = np.zeros_like(mass)
+        enthalpy = entropy = mass
+    else:
+        mass = mass - _sum([s for s in inlets if s.medium == "fuel"], "mass_flow", like=mass)
+        mass = mass + _sum([s for s in outlets if s.medium == "fuel"], "mass_flow", like=mass)
+        # Closed to rounding is closed: an absent state must not turn nothing into NaN.
+        closed = np.abs(mass) <= 1e-12 * np.abs(_sum(inlets, "mass_flow"))  # noqa: PLR2004
+        enthalpy = np.where(closed, 0.0, mass * unaccounted[0])
+        entropy = np.where(closed, 0.0, mass * unaccounted[1])
+    unmeasured = np.broadcast_to(drawn.item.kind.unmeasured_heat(drawn), mass.shape).astype(float)
+    residual = (
+        _sum(inlets, "energy")
+        - _sum(outlets, "energy")
+        - rates.internal_energy
+        - unmeasured
+        - enthalpy
+    )
+    by_balance = drawn.item.options.heat_loss == "balance"
+    nothing = np.zeros_like(residual)
+    return Balances(
+        mass_imbalance=mass,
+        energy_imbalance=nothing if by_balance else residual,
+        heat_loss=residual if by_balance else nothing,
+        unmeasured_heat=unmeasured,
+        unaccounted_enthalpy=enthalpy,
+        unaccounted_entropy=entropy,
+        rates=rates,
+    )
+
+
+def account(drawn: Drawn, counted: Balances, dead: DeadState) -> Account:
+    """Draw up the exergy account against one dead state."""
+    inlets, outlets = drawn.facing("in"), drawn.facing("out")
+    exergy_in = _add(*(s.exergy(dead) for s in inlets))
+    exergy_out = _add(*(s.exergy(dead) for s in outlets))
+    T0 = dead.temperature
+    stated = drawn.item.options.boundary_temperature
+    boundary = T0 if stated is None else stated
+    heat_entropy = counted.heat_loss / boundary
+    heat_exergy = counted.heat_loss - T0 * heat_entropy
+    unaccounted = (
+        counted.unaccounted_enthalpy
+        - T0 * counted.unaccounted_entropy
+        - dead.gibbs * counted.mass_imbalance
+    )
+    stored_rate = (
+        counted.rates.internal_energy
+        - T0 * counted.rates.entropy
+        - dead.gibbs * np.asarray(counted.rates.mass)
+    )
+    entropy_generation = (
+        _add(*(s.entropy_at(dead) for s in outlets))
+        - _add(*(s.entropy_at(dead) for s in inlets))
+        + counted.unaccounted_entropy
+        + heat_entropy
+        + counted.unmeasured_heat / T0
+        + counted.rates.entropy
+    )
+    # Burning turns the fuel's exergy above its heating value into nothing; there is no entropy
+    # of a fuel in the steam tables, so it joins Gouy-Stodola as what it is worth.
+    chemical = _sum(inlets, "chemical") - _sum(outlets, "chemical")
+    destroyed = np.asarray(T0 * entropy_generation + chemical)
+    balance = exergy_in - exergy_out - heat_exergy - unaccounted - stored_rate
+    fuel, product = drawn.item.kind.fuel(drawn, dead)
+    return Account(
+        exergy_in=exergy_in,
+        exergy_out=exergy_out,
+        heat_loss_exergy=np.asarray(heat_exergy),
+        unaccounted=np.asarray(unaccounted),
+        stored_rate=np.broadcast_to(stored_rate, destroyed.shape).astype(float),
+        destroyed=destroyed,
+        closure=np.asarray(balance - destroyed),
+        fuel=fuel,
+        product=product,
+    )
+
+
+def _unaccounted_state(
+    inlets: Sequence[StreamState], outlets: Sequence[StreamState]
+) -> tuple[FloatArray, FloatArray] | None:
+    """Enthalpy and entropy that an unaccounted flow is valued at: the mean state of the inlets."""
+    water = [s for s in inlets if s.medium == "water"] or [
+        s for s in outlets if s.medium == "water"
+    ]
+    if not water:
+        return None
+    mean = mean_specific(water)
+    return mean.enthalpy, mean.entropy
+
+
+def _sum(states: Sequence[StreamState], name: str, like: FloatArray | None = None) -> FloatArray:
+    if not states and like is not None:
+        return np.zeros_like(like)
+    return _add(*(getattr(s, name) for s in states))
+
+
+def _add(*terms: FloatArray) -> FloatArray:
+    return np.add.reduce(terms) if terms else np.zeros(1)

@@ -1,0 +1,92 @@
+"""Steam header: several inlets and outlets that mix, lose heat and sometimes lose steam.
+
+The energy that the outlets do not carry leaves as heat (``heat_loss = "balance"`` by default); the
+mass that they do not carry is the unaccounted flow: a leak, an open drain, or a flow meter.
+Source: Bejan, Tsatsaronis, Moran (1996), chapter 3.2 (mass, energy, exergy of a control volume).
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+
+from monitor.equipment.base import (
+    ConditionFigure,
+    Drawn,
+    Figure,
+    FloatArray,
+    Item,
+    Kind,
+    Options,
+    PortSpec,
+)
+
+if TYPE_CHECKING:
+    from monitor.thermo.dead_state import DeadState
+
+__all__ = ["Header", "HeaderOptions"]
+
+
+class HeaderOptions(Options):
+    """Keys of a header's table; the heat loss is the energy residual unless stated otherwise."""
+
+    heat_loss: Literal["none", "balance"] = "balance"
+
+
+class Header(Kind):
+    """See the module's docstring."""
+
+    name = "header"
+    title = "Steam header"
+    ports = (
+        PortSpec("inlet", "in", most=None),
+        PortSpec("outlet", "out", most=None),
+    )
+    options = HeaderOptions
+    fuel_and_product = "fuel: exergy of all inlets; product: exergy of all outlets"
+
+    def load(self, drawn: Drawn) -> FloatArray:
+        """Flow into the header [kg/s]."""
+        return np.add.reduce([s.mass_flow for s in drawn.at("inlet")])
+
+    def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
+        """Exergy of the inlets, exergy of the outlets [W]."""
+        return (
+            np.add.reduce([s.exergy(dead) for s in drawn.at("inlet")]),
+            np.add.reduce([s.exergy(dead) for s in drawn.at("outlet")]),
+        )
+
+    def figures(self, item: Item) -> tuple[Figure, ...]:
+        """Heat-loss coefficient and unaccounted flow; one is only known when it is not solved."""
+        heat = Figure(
+            "heat_loss_coefficient",
+            "heat-loss coefficient",
+            "kW/K",
+            "high",
+            1.0,
+            judged=False,
+            follows_load=False,
+        )
+        unaccounted = Figure(
+            "unaccounted_flow", "unaccounted flow", "t/h", "both", 1.5, follows_load=True
+        )
+        return (heat, unaccounted) if item.options.heat_loss == "balance" else (unaccounted,)
+
+    def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
+        """Values of `figures`."""
+        from monitor.equipment.account import balances  # noqa: PLC0415 - account builds on base
+
+        counted = balances(drawn)
+        nothing = np.zeros_like(drawn.at("inlet")[0].flag)
+        ones = np.ones(nothing.shape)
+        found = {"unaccounted_flow": ConditionFigure(counted.mass_imbalance * 3.6, ones, nothing)}
+        if drawn.item.options.heat_loss == "balance":
+            outlets = drawn.at("outlet")
+            flow = np.stack([s.mass_flow for s in outlets])
+            warmth = (np.stack([s.temperature for s in outlets]) * flow).sum(axis=0)
+            with np.errstate(divide="ignore", invalid="ignore"):
+                excess = warmth / flow.sum(axis=0) - dead.temperature
+                coefficient = counted.heat_loss / excess / 1e3
+            found["heat_loss_coefficient"] = ConditionFigure(coefficient, ones, nothing)
+        return found

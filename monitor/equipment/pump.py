@@ -1,0 +1,69 @@
+"""Pump: shaft power to pressure. eta_s = [h(p2, s1) - h1] / (h2 - h1) times the drive.
+
+Judged on the measured power, since the temperature rise of a good pump is within a thermometer's
+error: eta = m [h(p2, s1) - h1] / W.
+Source: Moran and Shapiro, Fundamentals of Engineering Thermodynamics, eq. 6.48 (isentropic pump
+efficiency).
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from monitor.equipment.base import (
+    ConditionFigure,
+    Drawn,
+    Figure,
+    FloatArray,
+    Item,
+    Kind,
+    PortSpec,
+)
+from monitor.flags import Flag
+from monitor.thermo.water import state_ps
+
+if TYPE_CHECKING:
+    from monitor.thermo.dead_state import DeadState
+
+__all__ = ["Pump"]
+
+
+class Pump(Kind):
+    """See the module's docstring."""
+
+    name = "pump"
+    title = "Pump"
+    ports = (
+        PortSpec("inlet", "in"),
+        PortSpec("power", "in", media=frozenset({"power"})),
+        PortSpec("outlet", "out"),
+    )
+    fuel_and_product = "fuel: shaft or motor power; product: exergy gained by the water"
+
+    def load(self, drawn: Drawn) -> FloatArray:
+        """Flow of water pumped [kg/s]."""
+        return drawn.only("inlet").mass_flow
+
+    def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
+        """Power, exergy gained by the water [W]."""
+        gained = drawn.only("outlet").exergy(dead) - drawn.only("inlet").exergy(dead)
+        return drawn.only("power").energy, np.asarray(gained)
+
+    def figures(self, item: Item) -> tuple[Figure, ...]:
+        """Isentropic efficiency on the measured power."""
+        del item
+        return (Figure("eta_s", "isentropic efficiency with drive", "%", "low", 2.0),)
+
+    def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
+        """Values of `figures`."""
+        del dead
+        inlet, outlet = drawn.only("inlet"), drawn.only("outlet")
+        power = drawn.only("power").energy
+        ideal = state_ps(outlet.pressure, inlet.entropy).enthalpy - inlet.enthalpy
+        with np.errstate(divide="ignore", invalid="ignore"):
+            efficiency = np.where(power > 0, inlet.mass_flow * ideal / power, np.nan)
+        impossible = np.nan_to_num(efficiency, nan=0.5) > 1
+        flag = np.where(impossible, np.int32(Flag.SECOND_LAW), np.int32(0))
+        return {"eta_s": ConditionFigure(100.0 * efficiency, np.maximum(power, 0.0), flag)}
