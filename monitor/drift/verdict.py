@@ -19,7 +19,7 @@ _DOUBTFUL = 0.2
 _CHANGE = 0.05
 """A relative change of destroyed exergy or load worth explaining."""
 _IMBALANCE = 0.02
-"""A change of the mass or energy imbalance, as a share of the throughput, that speaks of a meter."""
+"""A change of the mass or energy imbalance, as a share of throughput, that speaks of a meter."""
 
 
 @dataclass(frozen=True)
