@@ -1,0 +1,1 @@
+"""Water and steam, ice, the dead state, exergy and fuels: pure functions on arrays, in SI."""

@@ -1,0 +1,129 @@
+"""CoolProp's IF97 backend in batch: pressure and temperature in; h, s and v out.
+
+This is the only file that talks to CoolProp. Importing CoolProp takes about two seconds, so it
+happens at the first evaluation, not at import. An `AbstractState` is not shared between threads.
+"""
+
+from __future__ import annotations
+
+import threading
+from functools import cache
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+if TYPE_CHECKING:
+    from monitor.thermo.arrays import BoolArray, FloatArray
+
+__all__ = [
+    "ENTHALPY",
+    "ENTROPY",
+    "HIGHEST_PRESSURE",
+    "HIGHEST_TEMPERATURE",
+    "LOWEST_PRESSURE",
+    "LOWEST_TEMPERATURE",
+    "REGION_5_PRESSURE",
+    "REGION_5_TEMPERATURE",
+    "VOLUME",
+    "evaluate",
+    "evaluate_off_saturation",
+]
+
+ENTHALPY, ENTROPY, VOLUME = 0, 1, 2
+"""Columns of an evaluation [J/kg, J/(kg K), m3/kg]."""
+
+LOWEST_TEMPERATURE = 273.15
+HIGHEST_TEMPERATURE = 1073.15
+HIGHEST_PRESSURE = 100e6
+REGION_5_TEMPERATURE = 2273.15
+REGION_5_PRESSURE = 50e6
+LOWEST_PRESSURE = 611.213
+"""CoolProp refuses anything below the saturation pressure at 0 degC, though IF97 would not."""
+
+_ON_SATURATION = 2  # the batch call's status for "within 3.3e-5 (relative) of p_sat"
+_local = threading.local()
+
+
+@cache
+def _coolprop() -> Any:  # noqa: ANN401 - CoolProp ships no annotations
+    import CoolProp  # noqa: PLC0415 - two seconds that only an evaluation should pay
+
+    return CoolProp
+
+
+def _state() -> Any:  # noqa: ANN401
+    if not hasattr(_local, "state"):
+        _local.state = _coolprop().AbstractState("IF97", "Water")
+    return _local.state
+
+
+@cache
+def _outputs() -> Any:  # noqa: ANN401
+    coolprop = _coolprop()
+    return np.array([coolprop.iHmass, coolprop.iSmass, coolprop.iDmass], dtype=np.int32)
+
+
+def evaluate(pressure: FloatArray, temperature: FloatArray) -> FloatArray:
+    """Enthalpy, entropy and volume by the forward equations, right up to the saturation line.
+
+    A point beside the saturation line gets the phase that IF97's own comparison with the line
+    gives it. IAPWS R7-97(2012) regions 1, 2, 3 and 5.
+
+    Args:
+        pressure: [Pa], shape (n,).
+        temperature: [K], shape (n,).
+
+    Returns:
+        Shape (n, 3): h [J/kg], s [J/(kg K)], v [m3/kg]; NaN outside the formulation.
+    """
+    coolprop = _coolprop()
+    # Imposing a phase only lifts the refusal beside the saturation line: measured, it changes no
+    # value on either side of it nor in region 3.
+    return _batch(pressure, temperature, coolprop.iphase_gas)[0]
+
+
+def evaluate_off_saturation(
+    pressure: FloatArray, temperature: FloatArray
+) -> tuple[FloatArray, BoolArray]:
+    """As `evaluate`, but a point on the saturation line is refused.
+
+    Returns:
+        The values as in `evaluate`, NaN on saturation; and the mask, shape (n,), of points on
+        saturation: p within 3.3e-5 (relative) of p_sat(T), which is 0.5 to 2.7 mK of T.
+    """
+    values, status = _batch(pressure, temperature, _coolprop().iphase_not_imposed)
+    return values, status == _ON_SATURATION
+
+
+def _batch(pressure: FloatArray, temperature: FloatArray, phase: int) -> tuple[FloatArray, Any]:
+    coolprop = _coolprop()
+    values = np.full((pressure.size, 3), np.nan)
+    status = np.zeros(pressure.size, dtype=np.int32)
+    if pressure.size == 0:
+        return values, status
+    _state().fast_evaluate(
+        coolprop.PT_INPUTS,
+        np.ascontiguousarray(pressure),
+        np.ascontiguousarray(temperature),
+        _outputs(),
+        values,
+        status,
+        phase,
+    )
+    hot = (temperature > HIGHEST_TEMPERATURE) & (temperature <= REGION_5_TEMPERATURE)
+    if hot.any():
+        hot &= (pressure >= LOWEST_PRESSURE) & (pressure <= REGION_5_PRESSURE)
+        values[hot] = _region_5(pressure[hot], temperature[hot])
+    np.divide(1.0, values[:, VOLUME], out=values[:, VOLUME])
+    return values, status
+
+
+def _region_5(pressure: FloatArray, temperature: FloatArray) -> FloatArray:
+    # The batch call stops at 800 degC; PropsSI knows region 5. It marks a failure with inf.
+    props = _coolprop().CoolProp.PropsSI
+    values = np.full((pressure.size, 3), np.nan)
+    if pressure.size:
+        for column, name in enumerate(("Hmass", "Smass", "Dmass")):
+            values[:, column] = props(name, "P", pressure, "T", temperature, "IF97::Water")
+        values[~np.isfinite(values).all(axis=1)] = np.nan
+    return values
