@@ -106,7 +106,7 @@ def balances(drawn: Drawn) -> Balances:
         mass = mass - _sum([s for s in inlets if s.medium == "fuel"], "mass_flow", like=mass)
         mass = mass + _sum([s for s in outlets if s.medium == "fuel"], "mass_flow", like=mass)
         # Closed to rounding is closed: an absent state must not turn nothing into NaN.
-        closed = np.abs(mass) <= 1e-12 * np.abs(_sum(inlets, "mass_flow"))  # noqa: PLR2004
+        closed = np.abs(mass) <= 1e-12 * np.abs(_sum(inlets, "mass_flow"))
         enthalpy = np.where(closed, 0.0, mass * unaccounted[0])
         entropy = np.where(closed, 0.0, mass * unaccounted[1])
     unmeasured = np.broadcast_to(drawn.item.kind.unmeasured_heat(drawn), mass.shape).astype(float)

@@ -24,6 +24,7 @@ from monitor.equipment.base import (
     PortSpec,
     Signal,
     measured,
+    total,
 )
 from monitor.site.models import Reference
 from monitor.site.units import Quantity
@@ -89,15 +90,15 @@ class Accumulator(Kind):
 
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow in or out, whichever is larger [kg/s]."""
-        out = np.add.reduce([s.mass_flow for s in drawn.at("discharge")])
+        out = total([s.mass_flow for s in drawn.at("discharge")])
         charges = [s.mass_flow for s in drawn.at("charge")]
-        return np.maximum(np.add.reduce(charges), out) if charges else out
+        return np.maximum(total(charges), out) if charges else out
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy charged less what stays in the vessel, exergy discharged [W]."""
-        out = np.add.reduce([s.exergy(dead) for s in drawn.at("discharge")])
+        out = total([s.exergy(dead) for s in drawn.at("discharge")])
         charged = [s.exergy(dead) for s in drawn.at("charge")]
-        into = np.add.reduce(charged) if charged else np.zeros_like(out)
+        into = total(charged) if charged else np.zeros_like(out)
         held = drawn.content
         if held is None:
             raise TypeError(f"accumulator '{drawn.item.id}' was drawn without its content")

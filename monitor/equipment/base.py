@@ -15,13 +15,13 @@ import numpy as np
 import numpy.typing as npt
 from pydantic import BaseModel, BeforeValidator, ConfigDict
 
-from monitor.site.models import Reference
 from monitor.site.units import Quantity, UnitError, quantity
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
     from monitor.flags import FlagArray
+    from monitor.site.models import Reference
     from monitor.thermo.dead_state import DeadState
 
 __all__ = [
@@ -41,6 +41,7 @@ __all__ = [
     "mean_specific",
     "measured",
     "sum_flags",
+    "total",
 ]
 
 FloatArray = npt.NDArray[np.float64]
@@ -297,7 +298,7 @@ class Kind(ABC):
         """What the drive turns into heat at the dead state [W]."""
         lost_share = 1.0 / self.drive_efficiency(drawn.item) - 1.0
         powers = [s.energy for s in drawn.facing("out") if s.medium == "power"]
-        return np.add.reduce(powers) * lost_share if powers and lost_share else 0.0
+        return total(powers) * lost_share if powers and lost_share else 0.0
 
     def content(self, item: Item, signals: Mapping[str, Signal]) -> Content | None:  # noqa: ARG002
         """What the vessel holds at the cells' ends; None for kinds that store nothing."""
@@ -314,6 +315,11 @@ class Specific:
 
     enthalpy: FloatArray
     entropy: FloatArray
+
+
+def total(rates: Sequence[FloatArray]) -> FloatArray:
+    """Sum of one or more rates, cell by cell."""
+    return np.asarray(np.add.reduce(rates))
 
 
 def mean_specific(states: Sequence[StreamState]) -> Specific:
@@ -337,4 +343,4 @@ def mean_specific(states: Sequence[StreamState]) -> Specific:
 def sum_flags(states: Sequence[StreamState], signals: Sequence[Signal] = ()) -> FlagArray:
     """Bitwise or of the flags of some streams and signals."""
     flags = [s.flag for s in states] + [s.flag for s in signals]
-    return np.bitwise_or.reduce(np.stack(flags), axis=0).astype(np.int32)
+    return np.asarray(np.bitwise_or.reduce(np.stack(flags), axis=0), dtype=np.int32)

@@ -20,6 +20,7 @@ from monitor.equipment.base import (
     Kind,
     Options,
     PortSpec,
+    total,
 )
 from monitor.flags import Flag
 
@@ -54,14 +55,14 @@ class Boiler(Kind):
 
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow of steam made [kg/s]."""
-        return np.add.reduce([s.mass_flow for s in drawn.at("steam")])
+        return total([s.mass_flow for s in drawn.at("steam")])
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy of the fuel, exergy gained by the water [W]."""
-        gained = np.add.reduce(
+        gained = total(
             [s.exergy(dead) for s in (*drawn.at("steam"), *drawn.at("blowdown"))]
-        ) - np.add.reduce([s.exergy(dead) for s in drawn.at("feedwater")])
-        return np.add.reduce([s.exergy(dead) for s in drawn.at("fuel")]), np.asarray(gained)
+        ) - total([s.exergy(dead) for s in drawn.at("feedwater")])
+        return total([s.exergy(dead) for s in drawn.at("fuel")]), np.asarray(gained)
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Fuel efficiency by the direct method."""
@@ -71,10 +72,10 @@ class Boiler(Kind):
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
         del dead
-        burnt = np.add.reduce([s.energy for s in drawn.at("fuel")])
-        gained = np.add.reduce(
-            [s.energy for s in (*drawn.at("steam"), *drawn.at("blowdown"))]
-        ) - np.add.reduce([s.energy for s in drawn.at("feedwater")])
+        burnt = total([s.energy for s in drawn.at("fuel")])
+        gained = total([s.energy for s in (*drawn.at("steam"), *drawn.at("blowdown"))]) - total(
+            [s.energy for s in drawn.at("feedwater")]
+        )
         with np.errstate(divide="ignore", invalid="ignore"):
             efficiency = np.where(burnt > 0, gained / burnt, np.nan)
         impossible = np.nan_to_num(efficiency, nan=0.5) > 1

@@ -20,6 +20,7 @@ from monitor.equipment.base import (
     Item,
     Kind,
     PortSpec,
+    total,
 )
 from monitor.flags import Flag
 from monitor.thermo.water import saturation_temperature
@@ -47,11 +48,11 @@ class Condenser(Kind):
 
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow of steam into the condenser [kg/s]."""
-        return np.add.reduce([s.mass_flow for s in drawn.at("steam")])
+        return total([s.mass_flow for s in drawn.at("steam")])
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy given up by the steam, gained by the cooling water [W]."""
-        steam = np.add.reduce([s.exergy(dead) for s in drawn.at("steam")])
+        steam = total([s.exergy(dead) for s in drawn.at("steam")])
         return (
             np.asarray(steam - drawn.only("condensate").exergy(dead)),
             np.asarray(

@@ -4,9 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-import numpy as np
-
-from monitor.equipment.base import ANY_MEDIUM, Drawn, FloatArray, Kind, PortSpec
+from monitor.equipment.base import ANY_MEDIUM, Drawn, FloatArray, Kind, PortSpec, total
 
 if TYPE_CHECKING:
     from monitor.thermo.dead_state import DeadState
@@ -27,11 +25,11 @@ class ControlVolume(Kind):
 
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow of water into the control volume [kg/s]."""
-        return np.add.reduce([s.mass_flow for s in drawn.at("inlet")])
+        return total([s.mass_flow for s in drawn.at("inlet")])
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy of the inlets, exergy of the outlets [W]."""
         return (
-            np.add.reduce([s.exergy(dead) for s in drawn.at("inlet")]),
-            np.add.reduce([s.exergy(dead) for s in drawn.at("outlet")]),
+            total([s.exergy(dead) for s in drawn.at("inlet")]),
+            total([s.exergy(dead) for s in drawn.at("outlet")]),
         )

@@ -20,6 +20,7 @@ from monitor.equipment.base import (
     Kind,
     Options,
     PortSpec,
+    total,
 )
 
 if TYPE_CHECKING:
@@ -48,13 +49,13 @@ class Header(Kind):
 
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow into the header [kg/s]."""
-        return np.add.reduce([s.mass_flow for s in drawn.at("inlet")])
+        return total([s.mass_flow for s in drawn.at("inlet")])
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy of the inlets, exergy of the outlets [W]."""
         return (
-            np.add.reduce([s.exergy(dead) for s in drawn.at("inlet")]),
-            np.add.reduce([s.exergy(dead) for s in drawn.at("outlet")]),
+            total([s.exergy(dead) for s in drawn.at("inlet")]),
+            total([s.exergy(dead) for s in drawn.at("outlet")]),
         )
 
     def figures(self, item: Item) -> tuple[Figure, ...]:

@@ -21,6 +21,7 @@ from monitor.equipment.base import (
     Options,
     PortSpec,
     measured,
+    total,
 )
 from monitor.site.models import Reference
 from monitor.site.units import Quantity
@@ -70,7 +71,7 @@ class Letdown(Kind):
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy of steam and spray, exergy of the reduced steam [W]."""
         return (
-            np.add.reduce([s.exergy(dead) for s in drawn.facing("in")]),
+            total([s.exergy(dead) for s in drawn.facing("in")]),
             drawn.only("outlet").exergy(dead),
         )
 

@@ -25,6 +25,7 @@ from monitor.equipment.base import (
     PortSpec,
     StreamState,
     measured,
+    total,
 )
 from monitor.flags import Flag
 from monitor.site.units import Quantity
@@ -66,7 +67,7 @@ class Turbine(Kind):
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy given up by the steam, and power [W]."""
-        given_up = drawn.only("inlet").exergy(dead) - np.add.reduce(
+        given_up = drawn.only("inlet").exergy(dead) - total(
             [s.exergy(dead) for s in (*drawn.at("extraction"), drawn.only("exhaust"))]
         )
         return np.asarray(given_up), drawn.only("power").energy

@@ -17,6 +17,7 @@ from monitor.equipment.base import (
     Item,
     Kind,
     PortSpec,
+    total,
 )
 
 if TYPE_CHECKING:
@@ -42,13 +43,13 @@ class User(Kind):
 
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow of steam used [kg/s]."""
-        return np.add.reduce([s.mass_flow for s in drawn.at("steam")])
+        return total([s.mass_flow for s in drawn.at("steam")])
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy given up by the steam, exergy of the heat delivered [W]."""
-        steam = np.add.reduce([s.exergy(dead) for s in drawn.at("steam")])
+        steam = total([s.exergy(dead) for s in drawn.at("steam")])
         back = [s.exergy(dead) for s in drawn.at("condensate")]
-        given_up = steam - np.add.reduce(back) if back else steam
+        given_up = steam - total(back) if back else steam
         return np.asarray(given_up), drawn.only("heat").exergy(dead)
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
@@ -63,7 +64,7 @@ class User(Kind):
         if not drawn.at("condensate"):
             return {}
         steam = self.load(drawn)
-        back = np.add.reduce([s.mass_flow for s in drawn.at("condensate")])
+        back = total([s.mass_flow for s in drawn.at("condensate")])
         with np.errstate(divide="ignore", invalid="ignore"):
             share = np.where(steam > 0, 100.0 * back / steam, np.nan)
         nothing = np.zeros_like(drawn.at("steam")[0].flag)

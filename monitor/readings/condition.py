@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from monitor.equipment.base import FloatArray
     from monitor.site.models import Tag
 
-__all__ = ["RANGE_BELOW", "RANGE_ABOVE", "Conditioned", "Gridded", "condition"]
+__all__ = ["RANGE_ABOVE", "RANGE_BELOW", "Conditioned", "Gridded", "condition"]
 
 # NAMUR NE 43: 3.8 to 20.5 mA carry measured values, so a signal is trusted from 1.25 % of span
 # below the range to 3.125 % above it; beyond that it tells of a fault.
@@ -95,7 +95,7 @@ def condition(
 @dataclass(frozen=True)
 class _Part:
     seconds: FloatArray
-    values: FloatArray
+    value: FloatArray
     quality: np.ndarray[tuple[int], np.dtype[np.uint8]]
 
 
@@ -123,11 +123,11 @@ def _split(readings: pd.DataFrame) -> dict[str, _Part]:
 
 
 def _one(part: _Part, tag: Tag, grid: Grid, least_coverage: float) -> tuple[Gridded, pd.DataFrame]:
-    bad = (part.quality == Quality.BAD) | ~np.isfinite(part.values)
-    outside = ~bad & _outside(part.values, tag)
+    bad = (part.quality == Quality.BAD) | ~np.isfinite(part.value)
+    outside = ~bad & _outside(part.value, tag)
     uncertain = ~bad & ~outside & (part.quality == Quality.UNCERTAIN)
     usable = ~bad & ~outside
-    held = hold_on_grid(part.seconds[usable], part.values[usable], grid, tag.hold)
+    held = hold_on_grid(part.seconds[usable], part.value[usable], grid, tag.hold)
     missing = held.coverage < least_coverage
     # A level or position has its unit's zero; only temperatures carry an offset.
     mean = np.where(missing, np.nan, tag.unit.to_si(held.mean))
@@ -172,8 +172,8 @@ def _counts(
 ) -> pd.DataFrame:
     """What the tag delivered in each full hour that the grid touches."""
     hours = np.arange(grid.start // _HOUR * _HOUR, grid.end, _HOUR, dtype=np.int64)
-    bounds = np.append(hours, hours[-1] + _HOUR).astype(np.float64) if len(hours) else hours
-    bounds = np.clip(bounds, grid.start, grid.end)
+    ends = np.append(hours, hours[-1] + _HOUR).astype(np.float64)
+    bounds = np.clip(ends, grid.start, grid.end)
 
     def per_hour(seconds: FloatArray) -> np.ndarray[tuple[int], np.dtype[np.int64]]:
         return np.diff(np.searchsorted(seconds, bounds, side="left"))

@@ -1,8 +1,7 @@
 """The uniform time grid, and the time-weighted mean of irregular readings on it.
 
 A reading holds until the next one, up to the tag's hold time (a step function: what a historian
-that reports by exception means). Its integral at any instant follows from one cumulative sum, so
-that a window of any length costs two searches and a few array operations.
+that reports by exception means). Each cell is summed by itself, in a few array operations for all.
 """
 
 from __future__ import annotations
@@ -81,29 +80,33 @@ def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: floa
         hold: how long a reading stands when no other follows [s].
     """
     edges = grid.edges.astype(np.float64)
+    if grid.count == 0:
+        raise ValueError("a grid without cells has no means")
     count = np.diff(np.searchsorted(seconds, edges, side="left"))
     if len(seconds) == 0:
         empty = np.full(grid.count, np.nan)
         return Held(empty, np.zeros(grid.count), np.full(grid.count + 1, np.nan), count)
     until = np.minimum(np.append(seconds[1:], np.inf), seconds + hold)
-    lasted = until - seconds
-    # Relative to the first value: keeps the cumulative sum small, so that a long window loses no
-    # digits, and a constant signal's mean is that constant exactly.
-    base = values[0]
-    covered = np.concatenate([[0.0], np.cumsum(lasted)])
-    summed = np.concatenate([[0.0], np.cumsum((values - base) * lasted)])
-    index = np.searchsorted(seconds, edges, side="right") - 1
+    # The value in force changes at readings and ends at cell edges; between two such points it is
+    # constant. Sums never leave their cell, so that a figure does not depend on the window.
+    inside = (seconds > edges[0]) & (seconds < edges[-1])
+    points = np.unique(np.concatenate([seconds[inside], edges]))
+    index = np.searchsorted(seconds, points, side="right") - 1
     known = np.maximum(index, 0)
-    partial = np.where(index >= 0, np.minimum(edges, until[known]) - seconds[known], 0.0)
-    covered_at = covered[known] + partial
-    summed_at = summed[known] + (values[known] - base) * partial
-    covered_in = np.diff(covered_at)
+    lasted = np.minimum(points[1:], until[known[:-1]]) - points[:-1]
+    lasted = np.where(index[:-1] >= 0, np.maximum(lasted, 0.0), 0.0)
+    first = np.searchsorted(points, edges[:-1])
+    covered = np.add.reduceat(lasted, first)
+    # Relative to one reading of the cell: a constant signal's mean is that constant exactly.
+    base = values[known[:-1]][first]
+    above = (values[known[:-1]] - np.repeat(base, np.diff(np.append(first, len(lasted))))) * lasted
     with np.errstate(divide="ignore", invalid="ignore"):
-        mean = np.where(covered_in > 0, base + np.diff(summed_at) / covered_in, np.nan)
-    in_force = (index >= 0) & (edges <= until[known]) & (edges - seconds[known] <= hold)
+        mean = np.where(covered > 0, base + np.add.reduceat(above, first) / covered, np.nan)
+    at = np.maximum(np.searchsorted(seconds, edges, side="right") - 1, 0)
+    in_force = (seconds[at] <= edges) & (edges - seconds[at] <= hold)
     return Held(
         mean=mean,
-        coverage=covered_in / grid.interval,
-        edges=np.where(in_force, values[known], np.nan),
+        coverage=covered / grid.interval,
+        edges=np.where(in_force, values[at], np.nan),
         fresh=count,
     )

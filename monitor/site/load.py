@@ -125,13 +125,11 @@ def _with_environment(raw: dict[str, Any], issues: list[Issue]) -> dict[str, Any
             return [fill(v, where) for v in value]
         if not isinstance(value, str):
             return value
-        for name in _VARIABLE.findall(value):
-            if name not in os.environ:
-                issues.append(
-                    Issue(
-                        where, "", f"environment variable {name} is not set; set it and try again"
-                    )
-                )
+        issues.extend(
+            Issue(where, "", f"environment variable {name} is not set; set it and try again")
+            for name in _VARIABLE.findall(value)
+            if name not in os.environ
+        )
         return _VARIABLE.sub(lambda m: os.environ.get(m[1], ""), value)
 
     return cast("dict[str, Any]", fill(raw, ""))
@@ -475,17 +473,17 @@ def _check_water(stream: Stream) -> Iterator[tuple[str, str]]:
     elif p is None or t is None:
         if not fixed_side:
             given = "temperature" if p is None else "pressure"
-            yield (
-                given,
+            hint = (
                 f"alone does not fix the state; add {'pressure' if p is None else 'temperature'}, "
-                "dryness = 0.97, phase = 'vapour' or 'liquid', or enthalpy = 'balance'",
+                "dryness = 0.97, phase = 'vapour' or 'liquid', or enthalpy = 'balance'"
             )
+            yield given, hint
     elif x is not None:
-        yield (
-            "dryness",
+        hint = (
             "pressure, temperature and dryness are one too many: inside the wet dome the pressure "
-            "alone gives the temperature, so leave temperature out",
+            "alone gives the temperature, so leave temperature out"
         )
+        yield "dryness", hint
 
 
 def _check_fuel(stream: Stream) -> Iterator[tuple[str, str]]:
@@ -527,8 +525,9 @@ def _unsolved(kind: str, stream: str, items: Iterable[Item]) -> Issue:
         f"[[stream]] {stream!r}",
         key,
         f"'balance' cannot be found: the {balance} balance of "
-        f"{' and '.join(touching) or 'nothing'} has more unknowns than equations (or its energy residual is already its heat loss); "
-        "give one more measurement there, or heat_loss = 'none'",
+        f"{' and '.join(touching) or 'nothing'} has more unknowns than equations "
+        "(or its energy residual is already its heat loss); give one more measurement there, "
+        "or heat_loss = 'none'",
     )
 
 
@@ -576,7 +575,8 @@ def _check_references(site: Site, issues: list[Issue]) -> None:
             Issue(table, key, f"{what} is in '{unit.text}', a {found}; a {wanted} is wanted")
         )
     barometer = site.file.dead_state.pressure
-    if barometer.tag in site.tags and site.tags[barometer.tag].unit.datum is PressureDatum.GAUGE:
+    gauge = site.tags.get(barometer.tag or "")
+    if gauge is not None and gauge.unit.datum is PressureDatum.GAUGE:
         issues.append(
             Issue("[dead_state]", "pressure", "is a gauge pressure; the barometer is absolute")
         )
