@@ -1,0 +1,396 @@
+"""The figures that more than one page draws: the ledger over time, trends and control charts."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import pandas as pd
+
+from dashboards import series
+from dashboards.embed import Chart
+from dashboards.formats import moment, number, plotly_text, power_column, quantity, unit_text
+from dashboards.theme import COLOURS, LEDGER_COLOURS, axis, base_layout, tinted
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from dashboards.views import ResidualView, TrendView
+
+__all__ = [
+    "band_trace",
+    "date_axis",
+    "has_values",
+    "ledger_trend",
+    "line_traces",
+    "residual_chart",
+    "trend_chart",
+]
+
+_STACKED = (("used", "Used"), ("lost", "Lost"), ("destroyed", "Destroyed"))
+_CROWDED = 0.025  # marks closer than this part of the axis share one label
+
+
+def has_values(table: pd.DataFrame, *columns: str) -> bool:
+    """Tell whether any of the columns holds a number."""
+    present = [name for name in columns if name in table.columns]
+    return bool(present) and bool(np.isfinite(_floats(table[present])).any())
+
+
+def _floats(values: pd.DataFrame | pd.Series) -> Any:  # noqa: ANN401 - one or two dimensions
+    return values.to_numpy(dtype=np.float64)
+
+
+def date_axis(times: pd.DatetimeIndex, **more: Any) -> dict[str, Any]:  # noqa: ANN401
+    """Return a time axis that covers the points, an hour about a single one."""
+    first, last = times.min(), times.max()
+    if first == last:
+        margin = pd.Timedelta(hours=1)
+        first, last = first - margin, last + margin
+    return axis(type="date", range=[first, last], hoverformat="%-d %b %Y %H:%M", **more)
+
+
+def band_trace(
+    times: pd.DatetimeIndex, low: Any, high: Any, name: str, colour: str  # noqa: ANN401
+) -> dict[str, Any]:
+    """Return the area between two lines, with gaps where either is missing."""
+    xs, ys = series.band(times, low, high)
+    return {
+        "type": "scatter",
+        "mode": "lines",
+        "x": xs,
+        "y": ys,
+        "fill": "toself",
+        "fillcolor": colour,
+        "line": {"width": 0, "color": colour},
+        "hoverinfo": "skip",
+        "name": name,
+    }
+
+
+def line_traces(
+    times: pd.DatetimeIndex,
+    values: Any,  # noqa: ANN401 - a float array
+    name: str,
+    unit: str,
+    line: dict[str, Any],
+) -> list[dict[str, Any]]:
+    """Return a line with gaps, and dots for the points that stand between two gaps."""
+    shown = plotly_text(unit_text(unit))
+    hover = f"%{{y:,.4~r}} {shown}" if shown else "%{y:,.4~r}"
+    traces: list[dict[str, Any]] = [
+        {
+            "type": "scatter",
+            "mode": "lines",
+            "x": times,
+            "y": values,
+            "name": name,
+            "line": line,
+            "connectgaps": False,
+            "hovertemplate": hover,
+        }
+    ]
+    alone = series.isolated(values)
+    if alone.any():
+        traces.append(
+            {
+                "type": "scatter",
+                "mode": "markers",
+                "x": times[alone],
+                "y": values[alone],
+                "name": name,
+                "marker": {"size": 6, "color": line["color"]},
+                "showlegend": False,
+                "hoverinfo": "skip",
+            }
+        )
+    return traces
+
+
+def ledger_trend(table: pd.DataFrame, identifier: str = "ledger-trend") -> Chart | None:
+    """Draw where supplied exergy went, stacked, below the line of what was supplied.
+
+    Args:
+        table: as ``OverviewView.ledger_trend``, kW.
+        identifier: the figure's id on its page.
+
+    Returns:
+        The chart, or None when there is nothing to draw.
+    """
+    names = ["supplied", *(key for key, _ in _STACKED)]
+    if not has_values(table, *names):
+        return None
+    means, step = series.regular_means(table[names])
+    # The unit follows the largest value that is drawn, as in a table.
+    scale = power_column(_floats(means).ravel().tolist())
+    clock = series.local(means * scale.factor)
+    starts = pd.DatetimeIndex(clock.index)
+    times, ends = _step_times(starts, step)
+    stack = np.cumsum(_floats(clock[[key for key, _ in _STACKED]]), axis=1)
+    lower = np.zeros(len(clock))
+    traces: list[dict[str, Any]] = []
+    for number_, (key, label) in enumerate(_STACKED):
+        upper = stack[:, number_]
+        area = band_trace(
+            times, np.repeat(lower, 2), np.repeat(upper, 2), label, LEDGER_COLOURS[key]
+        )
+        area["fillcolor"] = tinted(LEDGER_COLOURS[key], 0.75)
+        hover = {
+            "type": "scatter",
+            "mode": "lines",
+            "x": starts,
+            "y": upper,
+            "customdata": _floats(clock[key]),
+            "hovertemplate": f"%{{customdata:,.4~r}} {scale.unit}",
+            "line": {"width": 0, "color": LEDGER_COLOURS[key]},
+            "name": label,
+            "showlegend": False,
+        }
+        traces += [area, hover]
+        lower = upper
+    supplied = np.repeat(_floats(clock["supplied"]), 2)
+    traces += line_traces(
+        times, supplied, "Supplied", scale.unit, {"color": COLOURS["ink"], "width": 1.8}
+    )
+    layout = base_layout(
+        340,
+        xaxis=date_axis(starts.append(ends[-1:])),
+        yaxis=axis(title={"text": scale.unit, "standoff": 8}, rangemode="tozero"),
+    )
+    means_text = ", ".join(
+        f"{label.lower()} {scale.with_unit(float(np.nanmean(_floats(means[key]))))}"
+        for key, label in (("supplied", "Supplied"), *_STACKED)
+        if has_values(means, key)
+    )
+    minutes = step.total_seconds() / 60.0
+    length = quantity(minutes / 60.0, "h", 3) if minutes >= 60 else quantity(minutes, "min", 3)  # noqa: PLR2004
+    return Chart(
+        identifier,
+        {"data": traces, "layout": layout},
+        f"Ledger over time. Means over what is shown: {means_text}.",
+        note=f"Means over {length} at the live dead state. A gap means that a figure is missing.",
+    )
+
+
+def _step_times(
+    starts: pd.DatetimeIndex, step: pd.Timedelta
+) -> tuple[pd.DatetimeIndex, pd.DatetimeIndex]:
+    ends = starts + step
+    both = np.column_stack([starts.to_numpy(), ends.to_numpy()]).ravel()
+    return pd.DatetimeIndex(both), ends
+
+
+def trend_chart(trend: TrendView, identifier: str) -> Chart | None:
+    """Draw one figure over time, with what is expected and the limits about it.
+
+    Returns:
+        The chart, or None when no value is a number.
+    """
+    if not has_values(trend.data, "value"):
+        return None
+    table = series.thinned(series.local(trend.data), "value")
+    times = pd.DatetimeIndex(table.index)
+    traces: list[dict[str, Any]] = []
+    if has_values(table, "low") and has_values(table, "high"):
+        low, high = _floats(table["low"]), _floats(table["high"])
+        traces.append(band_trace(times, low, high, "Limits", tinted(COLOURS["faint"], 0.28)))
+    if has_values(table, "minimum") and has_values(table, "maximum"):
+        low, high = _floats(table["minimum"]), _floats(table["maximum"])
+        shade = tinted(COLOURS["sky"], 0.4)
+        traces.append(band_trace(times, low, high, "Lowest to highest", shade))
+    if has_values(table, "expected"):
+        traces += line_traces(
+            times,
+            _floats(table["expected"]),
+            "Expected from the baseline",
+            trend.unit,
+            {"color": COLOURS["soft"], "width": 1.5, "dash": "5px,3px"},
+        )
+    traces += line_traces(
+        times,
+        _floats(table["value"]),
+        plotly_text(trend.label),
+        trend.unit,
+        {"color": COLOURS["blue"], "width": 1.6},
+    )
+    layout = base_layout(
+        270,
+        xaxis=date_axis(times),
+        yaxis=axis(title={"text": plotly_text(unit_text(trend.unit)), "standoff": 8}),
+    )
+    return Chart(
+        identifier,
+        {"data": traces, "layout": layout},
+        _trend_words(trend),
+        heading=_with_unit(trend.title, trend.unit),
+        print_height=220,
+    )
+
+
+def _with_unit(title: str, unit: str) -> str:
+    shown = unit_text(unit)
+    return f"{title}, {shown}" if shown else title
+
+
+def _trend_words(trend: TrendView) -> str:
+    values = trend.data["value"].dropna()
+    last = values.iloc[-1]
+    words = (
+        f"{trend.title}: {len(values)} values, lowest {quantity(float(values.min()), trend.unit)}, "
+        f"highest {quantity(float(values.max()), trend.unit)}, "
+        f"last {quantity(float(last), trend.unit)} at {moment(values.index[-1])}"
+    )
+    if not has_values(trend.data, "expected"):
+        return f"{words}; no baseline yet."
+    expected = trend.data["expected"].dropna().iloc[-1]
+    return f"{words}; last expected {quantity(float(expected), trend.unit)}."
+
+
+def residual_chart(view: ResidualView, identifier: str) -> Chart | None:
+    """Draw a control chart: residuals, their EWMA, its limits, and what happened when.
+
+    Returns:
+        The chart, or None when nothing was judged.
+    """
+    if not has_values(view.data, "ewma", "residual"):
+        return None
+    table = series.thinned(series.local(view.data), "residual")
+    times = pd.DatetimeIndex(table.index)
+    low, high = _floats(table["low"]), _floats(table["high"])
+    traces = [band_trace(times, low, high, "Limits of the EWMA", tinted(COLOURS["faint"], 0.28))]
+    traces.append(
+        {
+            "type": "scatter",
+            "mode": "markers",
+            "x": times,
+            "y": _floats(table["residual"]),
+            "name": "Residual",
+            "marker": {"size": 3, "color": tinted(COLOURS["blue"], 0.35)},
+            "hoverinfo": "skip",
+        }
+    )
+    ewma = {"color": COLOURS["blue"], "width": 2}
+    traces += line_traces(times, _floats(table["ewma"]), "EWMA of the residual", view.unit, ewma)
+    marks = _marks(view)
+    inside = [mark for mark in marks if times.min() <= mark[0] <= times.max()]
+    layout = base_layout(
+        300,
+        xaxis=date_axis(times),
+        yaxis=axis(
+            title={"text": plotly_text(unit_text(view.unit)), "standoff": 8},
+            zeroline=True,
+            zerolinecolor=COLOURS["soft"],
+            zerolinewidth=1,
+        ),
+        shapes=[*_reference_shape(view, times), *(_mark_line(time, name) for time, name, _ in inside)],
+        annotations=_mark_labels([(time, name) for time, name, _ in inside], times),
+    )
+    layout["margin"]["t"] = 52
+    layout["legend"]["y"] = 1.09
+    return Chart(
+        identifier,
+        {"data": traces, "layout": layout},
+        _residual_words(view),
+        heading=_with_unit(f"{view.label}: measured minus expected", view.unit),
+        note=_reference_words(view),
+        marks=tuple((name, f"{moment(time)}: {words}") for time, name, words in marks),
+    )
+
+
+def _marks(view: ResidualView) -> list[tuple[pd.Timestamp, str, str]]:
+    alarms = [
+        (time.tz_localize(None), f"A{place}", words)
+        for place, (time, words) in enumerate(view.alarms, start=1)
+    ]
+    events = [
+        (event.time.tz_localize(None), f"E{place}", f"{event.kind}. {event.note}".strip())
+        for place, event in enumerate(view.events, start=1)
+    ]
+    return sorted(alarms + events, key=lambda mark: (mark[0], mark[1]))
+
+
+def _mark_line(time: pd.Timestamp, name: str) -> dict[str, Any]:
+    is_alarm = name.startswith("A")
+    colour = COLOURS["vermilion"] if is_alarm else COLOURS["green"]
+    return {
+        "type": "line",
+        "xref": "x",
+        "yref": "paper",
+        "x0": time,
+        "x1": time,
+        "y0": 0,
+        "y1": 1,
+        "line": {"color": colour, "width": 1.5, "dash": "solid" if is_alarm else "4px,3px"},
+    }
+
+
+def _mark_labels(
+    marks: Sequence[tuple[pd.Timestamp, str]], times: pd.DatetimeIndex
+) -> list[dict[str, Any]]:
+    whole = max(times.max() - times.min(), pd.Timedelta(seconds=1))
+    groups: list[list[tuple[pd.Timestamp, str]]] = []
+    for mark in marks:
+        if groups and (mark[0] - groups[-1][0][0]) / whole < _CROWDED:
+            groups[-1].append(mark)
+        else:
+            groups.append([mark])
+    return [
+        {
+            "xref": "x",
+            "yref": "paper",
+            "x": group[0][0],
+            "y": 1.0,
+            "yanchor": "bottom",
+            "text": group[0][1] if len(group) == 1 else f"{group[0][1]}+{len(group) - 1}",
+            "showarrow": False,
+            "font": {"size": 11, "color": COLOURS["ink"]},
+        }
+        for group in groups
+    ]
+
+
+def _reference_shape(view: ResidualView, times: pd.DatetimeIndex) -> list[dict[str, Any]]:
+    if view.reference is None:
+        return []
+    start, end = (time.tz_localize(None) for time in view.reference)
+    start, end = max(start, times.min()), min(end, times.max())
+    if start >= end:
+        return []
+    return [
+        {
+            "type": "rect",
+            "xref": "x",
+            "yref": "paper",
+            "x0": start,
+            "x1": end,
+            "y0": 0,
+            "y1": 1,
+            "layer": "below",
+            "line": {"width": 0},
+            "fillcolor": tinted(COLOURS["green"], 0.1),
+        }
+    ]
+
+
+def _reference_words(view: ResidualView) -> str:
+    if view.reference is None:
+        return view.design
+    start, end = view.reference
+    return f"{view.design} Reference period (green): {moment(start)} to {moment(end)}.".strip()
+
+
+def _residual_words(view: ResidualView) -> str:
+    smooth = view.data["ewma"].dropna()
+    if smooth.empty:
+        return f"{view.label}: residuals without a smoothed value yet."
+    low, high = (view.data[side].dropna() for side in ("low", "high"))
+    limits = (
+        f"limits {number(float(low.iloc[-1]))} to {quantity(float(high.iloc[-1]), view.unit)}"
+        if len(low) and len(high)
+        else "no limits"
+    )
+    return (
+        f"Control chart of {view.label}: last smoothed residual "
+        f"{quantity(float(smooth.iloc[-1]), view.unit)} at {moment(smooth.index[-1])}, {limits}; "
+        f"{len(view.alarms)} alarms and {len(view.events)} events in it."
+    )

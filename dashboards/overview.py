@@ -1,0 +1,74 @@
+"""The overview page: what needs attention, then the ledger, then what stands behind it."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from dashboards.figures import ledger_trend
+from dashboards.files import OVERVIEW_FILE, write_atomically
+from dashboards.flows import flow_diagram, flow_kinds, ranked_destruction
+from dashboards.formats import percent, power_column
+from dashboards.render import render_page
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from dashboards.views import ConditionRow, LedgerLine, OverviewView
+
+__all__ = ["ranked_conditions", "write_overview"]
+
+_ORDER = {"drifting": 0, "steady": 1, "not judged": 2, "no baseline": 3}
+
+
+def write_overview(view: OverviewView, folder: Path) -> Path:
+    """Write the overview page.
+
+    Args:
+        view: what to draw.
+        folder: where the pages are; made if it is not there.
+
+    Returns:
+        The page's path.
+
+    Raises:
+        PageError: the folder cannot be written, or an equipment id cannot name a page.
+    """
+    content = render_page(
+        "overview.html",
+        view.context,
+        view=view,
+        conditions=ranked_conditions(view.conditions),
+        key_figures=_key_figures(view.ledger),
+        flows=flow_diagram(view.flows, view.node_names),
+        flow_kinds=flow_kinds(view.flows),
+        ranking=ranked_destruction(view.equipment, view.currency),
+        trend=ledger_trend(view.ledger_trend),
+    )
+    return write_atomically(Path(folder) / OVERVIEW_FILE, content)
+
+
+def ranked_conditions(rows: Sequence[ConditionRow]) -> list[ConditionRow]:
+    """Sort condition figures: drifting ones first, then by how near the limit they are."""
+    return sorted(rows, key=lambda row: (_ORDER[row.state], -_nearness(row)))
+
+
+def _nearness(row: ConditionRow) -> float:
+    share = abs(row.residual / row.limit) if row.limit else 0.0
+    return share if share == share else -1.0  # noqa: PLR0124 - NaN sorts last
+
+
+def _key_figures(ledger: Sequence[LedgerLine]) -> list[tuple[str, str, str, str]]:
+    """Return (key, label, rate, share of supplied) for the lines that tell the day."""
+    lines = {line.key: line for line in ledger}
+    scale = power_column(line.live_kw for line in ledger)
+    supplied = lines["supplied"].live_kw if "supplied" in lines else float("nan")
+    figures = []
+    for key in ("supplied", "used", "destroyed", "lost"):
+        if key not in lines:
+            continue
+        line = lines[key]
+        share = line.live_kw / supplied if supplied else float("nan")
+        of = "" if key == "supplied" else f"{percent(share)} of supplied"
+        figures.append((key, line.label, scale.with_unit(line.live_kw), of))
+    return figures
