@@ -38,7 +38,10 @@ FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
 Worse = Literal["low", "high", "both"]
 
-_WIDEST = 12.0
+_NOWHERE = 9.0
+"""Standard deviations that an EWMA does not reach in any run length asked for."""
+_SHORTEST_RUN = 4.0
+_LONGEST_RUN = 1e9
 
 
 class ChartError(ValueError):
@@ -104,8 +107,10 @@ def ewma_sigma(sigma: float, weight: float, phi: float = 0.0) -> float:
     return float(sigma * np.sqrt(weight / (2 - weight) * (1 + memory) / (1 - memory)))
 
 
-def average_run_length(weight: float, width: float, shift: float = 0.0) -> float:
-    """Return the average number of hours until a two-sided EWMA passes its limits.
+def average_run_length(
+    weight: float, width: float, shift: float = 0.0, worse: Worse = "both"
+) -> float:
+    """Return the average number of hours until an EWMA passes its limits.
 
     Solves Crowder's integral equation (1987) by Gauss-Legendre quadrature. The residuals are
     independent and normal; the statistic starts at zero, with the limits of a long run.
@@ -114,15 +119,21 @@ def average_run_length(weight: float, width: float, shift: float = 0.0) -> float
         weight: of the EWMA.
         width: limits in standard deviations of the EWMA.
         shift: of the residuals' mean, in their standard deviations.
+        worse: the side on which a limit stands. One limit alone is for shifts towards it: the other
+            side ends where no chart gets to.
     """
     _check_weight(weight)
-    limit = width * np.sqrt(weight / (2 - weight))
-    # The kernel is a bell of width ``weight`` on an interval of 2 ``limit``.
-    nodes, weights = _quadrature(32 + 8 * int(np.ceil(limit / weight)))
-    y, dy = limit * nodes, limit * weights
-    kernel = norm.pdf((y[None, :] - (1 - weight) * y[:, None]) / weight - shift) / weight
+    sigma = np.sqrt(weight / (2 - weight))
+    high = width * sigma
+    low = -high if worse == "both" else -_NOWHERE * sigma
+    towards = -shift if worse == "low" else shift
+    # The kernel is a bell of width ``weight``.
+    nodes, weights = _quadrature(32 + 4 * int(np.ceil((high - low) / weight)))
+    half = (high - low) / 2
+    y, dy = low + half * (nodes + 1), half * weights
+    kernel = norm.pdf((y[None, :] - (1 - weight) * y[:, None]) / weight - towards) / weight
     run_length = np.linalg.solve(np.eye(y.size) - kernel * dy, np.ones(y.size))
-    at_zero = norm.pdf(y / weight - shift) / weight
+    at_zero = norm.pdf(y / weight - towards) / weight
     return float(1 + (at_zero * dy) @ run_length)
 
 
@@ -139,25 +150,26 @@ def ewma_limit_width(weight: float, hours: float, worse: Worse = "both") -> floa
     Args:
         weight: of the EWMA.
         hours: average run length wanted while nothing is wrong.
-        worse: on which side an alarm is raised. The two sides of a chart give false alarms nearly
-            independently, so one side alone may give them twice as often.
+        worse: on which side an alarm is raised; one side alone may have a closer limit.
 
     Raises:
-        ChartError: fewer than 2 hours, where no limit makes sense.
+        ChartError: a run length that makes no sense: fewer than 4 hours, or over 100 000 years.
     """
     _check_weight(weight)
-    wanted = hours if worse == "both" else hours / 2
-    if not np.isfinite(wanted) or wanted < 2:  # noqa: PLR2004 - a chart that signals every other hour
-        raise ChartError(f"a false alarm every {hours:g} hours: allow at least 4 hours")
+    if not _SHORTEST_RUN <= hours <= _LONGEST_RUN:
+        raise ChartError(
+            f"a false alarm every {hours:g} hours: choose between {_SHORTEST_RUN:g} and "
+            f"{_LONGEST_RUN:g} hours"
+        )
+    side: Worse = "both" if worse == "both" else "high"
 
     def excess(width: float) -> float:
-        return float(np.log(average_run_length(weight, width) / wanted))
+        return float(np.log(average_run_length(weight, width, worse=side) / hours))
 
-    # From here on the run length is beyond what double precision solves for.
-    high = next((w for w in np.arange(1.0, _WIDEST, 0.5) if excess(float(w)) > 0), None)
-    if high is None:
-        raise ChartError(f"a false alarm every {hours:g} hours is rarer than can be computed")
-    return float(brentq(excess, 1e-3, float(high), xtol=1e-6))
+    high = 0.5
+    while excess(high) < 0:
+        high += 0.5
+    return float(brentq(excess, 1e-3, high, xtol=1e-6))
 
 
 def cusum(residual: npt.ArrayLike, allowance: float) -> tuple[FloatArray, FloatArray]:
