@@ -142,12 +142,10 @@ class StreamState:
         With g0 = h0 - T0 s0 this is m [(h - h0) - T0 (s - s0)], the specific flow exergy of
         Bejan, Tsatsaronis and Moran, Thermal Design and Optimization (1996), eq. 3.13.
         """
-        return np.asarray(
-            self.energy
-            - dead.temperature * self.entropy_at(dead)
-            - dead.gibbs * self.mass_flow
-            + self.chemical
-        )
+        thermal = self.energy - dead.temperature * self.entropy_at(dead) + self.chemical
+        if self.medium != "water":
+            return np.asarray(thermal)
+        return np.asarray(thermal - dead.gibbs * self.mass_flow)
 
 
 @dataclass(frozen=True)

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from monitor.equipment.base import ANY_MEDIUM, Drawn, FloatArray, Kind, PortSpec, total
 
 if TYPE_CHECKING:
@@ -25,7 +27,8 @@ class ControlVolume(Kind):
 
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow of water into the control volume [kg/s]."""
-        return total([s.mass_flow for s in drawn.at("inlet")])
+        flows = [s.mass_flow for s in drawn.at("inlet") if s.medium == "water"]
+        return total(flows) if flows else np.zeros(drawn.at("inlet")[0].flag.shape)
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy of the inlets, exergy of the outlets [W]."""

@@ -108,8 +108,7 @@ def _split(readings: pd.DataFrame) -> dict[str, _Part]:
         return {}
     codes = readings["tag"].cat.codes.to_numpy()
     names = readings["tag"].cat.categories
-    micros = readings["time"].to_numpy().astype("datetime64[us]").astype(np.int64)
-    seconds = micros / 1e6
+    seconds = pd.DatetimeIndex(readings["time"]).as_unit("us").asi8 / 1e6
     values = readings["value"].to_numpy(dtype=np.float64)
     quality = readings["quality"].to_numpy(dtype=np.uint8)
     order = np.lexsort((seconds, codes))
