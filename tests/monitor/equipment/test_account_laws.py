@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from equipment_builders import drawn, fuel, heat, power, signal, water
-from hypothesis import given, settings
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
 from monitor.equipment.account import account, balances
@@ -196,6 +196,7 @@ def test_charging_an_accumulator_destroys_and_its_two_counts_agree(p_bar, level,
     after_p, after_level = _vessel(
         mass + charge * seconds, energy + charge * seconds * inlet.enthalpy, volume
     )
+    assume(after_p < 15.9e5)  # steam of 16 bar does not flow into a vessel above that
     signals = {
         "pressure": signal([p_bar * 1e5, after_p]),
         "level": signal([level, after_level]),
