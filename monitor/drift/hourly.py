@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 __all__ = ["HOURLY_COLUMNS", "hourly_means"]
 
 HOUR = 3600
-HOURLY_COLUMNS = ("hour", "value", "load", "cells", "judged")
+HOURLY_COLUMNS = ("hour", "value", "load", "cells")
 
 
 def hourly_means(
@@ -46,7 +46,7 @@ def hourly_means(
 
     Returns:
         One row for each hour that has a cell, in order: ``hour`` (integer UTC seconds), ``value``
-        and ``load`` (NaN when fewer than ``least_cells`` count), ``cells`` and ``judged`` (counts).
+        and ``load`` (NaN when fewer than ``least_cells`` count), ``cells`` (how many count).
     """
     counts = np.isfinite(value) & (weight > 0) & ((flag & int(NOT_JUDGED)) == 0)
     share = np.where(counts, weight, 0.0)
@@ -58,18 +58,16 @@ def hourly_means(
             "weight": share,
             "load": np.where(loaded, load, 0.0),
             "loaded": loaded.astype(np.int64),
-            "judged": counts.astype(np.int64),
-            "cells": 1,
+            "cells": counts.astype(np.int64),
         }
     )
     sums = cells.groupby("hour", sort=True, as_index=False).sum()
-    enough = sums["judged"] >= max(least_cells * cells_per_hour, 1)
+    enough = sums["cells"] >= max(least_cells * cells_per_hour, 1)
     return pd.DataFrame(
         {
             "hour": sums["hour"].astype("int64"),
             "value": (sums["weighted"] / sums["weight"].where(sums["weight"] > 0)).where(enough),
             "load": (sums["load"] / sums["loaded"].where(sums["loaded"] > 0)).where(enough),
             "cells": sums["cells"],
-            "judged": sums["judged"],
         }
     )

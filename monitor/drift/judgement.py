@@ -217,8 +217,8 @@ def chart_points(
         before: where the chart stood before the first of these hours; None at the start.
 
     Returns:
-        `POINT_COLUMNS`; expected, residual, EWMA and limit are NaN where the hour is not judged: no
-        value, or a load beyond the reference period's.
+        `POINT_COLUMNS`, ``judged`` as 0 or 1. Expected, residual, EWMA and limit are NaN where the
+        hour is not judged: no value, or a load beyond the reference period's.
     """
     state = before or ChartState()
     value = hours["value"].to_numpy(dtype=np.float64)
@@ -244,7 +244,7 @@ def chart_points(
             "ewma": np.where(judged, statistic, np.nan),
             "limit": np.where(judged, limit, np.nan),
             "cells": hours["cells"].to_numpy(dtype=np.int64),
-            "judged": hours["judged"].to_numpy(dtype=np.int64),
+            "judged": judged.astype(np.int64),
         },
         columns=list(POINT_COLUMNS),
     )
