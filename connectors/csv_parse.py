@@ -1,0 +1,420 @@
+"""Lines of a CSV export, turned into rows by a column-wise parser.
+
+Most blocks are clean and take the fast way: numbers are parsed straight into floats, and times,
+tags and quality words are looked at once for each distinct text. Only a column that turns out to
+hold words is read as text, from then on.
+"""
+
+from __future__ import annotations
+
+import re
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.compute as pc
+import pyarrow.csv as pacsv
+
+from connectors.base import Quality
+from connectors.numbers import NumberReader
+from connectors.quality import QualityWords
+from connectors.tidy import ProblemCount, Rows, join_rows
+from connectors.times import NO_TIME, ParsedTimes, TimeReader
+
+if TYPE_CHECKING:
+    from collections.abc import Iterable, Sequence
+
+    import numpy.typing as npt
+
+    from connectors.csv_header import Encoding, Header
+    from connectors.csv_options import CsvOptions
+
+__all__ = ["BlockParser", "Parsed", "Reading", "Span", "TagBook"]
+
+_TEXT = pa.string()
+_DISTINCT = pa.dictionary(pa.int32(), pa.string())
+_CHUNK = 1 << 20
+
+_NO_TIME = "row dropped: its time cannot be read"
+_MISSING_HOUR = "row dropped: its local time does not exist, the clock was put forward"
+_NO_TAG = "row dropped: it names no tag"
+_WRONG_CELLS = "row dropped: more or fewer cells than the header"
+_NOT_A_NUMBER = "value is not a number: the reading is kept as bad"
+_UNKNOWN_QUALITY = "quality word is in no list: the reading counts as uncertain"
+_NOT_DECODED = "characters that the encoding does not have, replaced"
+_STRAY_QUOTE = "block with a quotation mark that is not closed: quotes are read as plain text there"
+
+
+class TagBook:
+    """Gives every tag name a code, and knows the names that have been asked for."""
+
+    def __init__(self) -> None:
+        self.names: list[str] = []
+        self._codes: dict[str, int] = {}
+        self._wanted: set[str] | None = set()
+
+    def want(self, tags: Iterable[str]) -> bool:
+        """Note names that are asked for; true when some of them are new."""
+        if self._wanted is None:
+            return False
+        before = len(self._wanted)
+        self._wanted |= set(tags)
+        return len(self._wanted) > before
+
+    def want_all(self) -> None:
+        """Ask for every tag there is."""
+        self._wanted = None
+
+    def is_wanted(self, name: str) -> bool:
+        """Say whether a name has been asked for."""
+        return self._wanted is None or name in self._wanted
+
+    def codes(self, names: Sequence[str]) -> npt.NDArray[np.int32]:
+        """Return the codes of names, new ones for new names."""
+        for name in names:
+            if name not in self._codes:
+                self._codes[name] = len(self.names)
+                self.names.append(name)
+        return np.array([self._codes[name] for name in names], dtype=np.int32)
+
+
+@dataclass(frozen=True)
+class Reading:
+    """What the parsers of one source share: how its cells are read."""
+
+    options: CsvOptions
+    book: TagBook
+    times: TimeReader
+    numbers: NumberReader
+    words: QualityWords
+
+    @classmethod
+    def of(cls, options: CsvOptions, book: TagBook) -> Reading:
+        """Build the readers that the options describe."""
+        words = QualityWords(options)
+        return cls(
+            options=options,
+            book=book,
+            times=TimeReader(options.time_format, options.time_zone),
+            numbers=NumberReader(options.decimal, options.thousands, words),
+            words=words,
+        )
+
+
+@dataclass(frozen=True)
+class Span:
+    """The times of a block.
+
+    Attributes:
+        first, last: [us] the first and last, both candidates of a doubled hour included; ``first``
+            > ``last`` when there are none.
+        doubled: some are in a doubled hour.
+        ordered: they stand in the order of time.
+    """
+
+    first: int = NO_TIME + 1
+    last: int = NO_TIME
+    doubled: bool = False
+    ordered: bool = True
+
+
+@dataclass(frozen=True)
+class Parsed:
+    """A parsed block.
+
+    Attributes:
+        rows: its readings, of the wanted tags alone (of all tags in a doubled hour, where the order
+            of all rows counts).
+        span: what its times are like, those of all tags.
+        lines: how many lines it has.
+    """
+
+    rows: Rows
+    span: Span
+    lines: int
+
+
+class BlockParser:
+    """Parses blocks of whole lines of one file.
+
+    Args:
+        reading: how cells are read.
+        header: the file's header.
+        encoding: the file's encoding.
+        file: the file's name for problems.
+    """
+
+    def __init__(self, reading: Reading, header: Header, encoding: Encoding, file: str) -> None:
+        self._reading, self._header, self._encoding, self._file = reading, header, encoding, file
+        self._as_text: set[int] = set()
+        options = reading.options
+        self._time = header.position(options.time_column)
+        self._long = options.layout == "long"
+        if self._long:
+            self._tag = header.position(options.tag_column)
+            self._value = header.position(options.value_column)
+            self._quality = (
+                header.position(options.quality_column) if options.quality_column else None
+            )
+        self._comment = (
+            re.compile(rb"(?m)^" + re.escape(options.comment.encode()) + rb".*\n?")
+            if options.comment
+            else None
+        )
+
+    def parse(self, raw: bytes, line: int, problems: ProblemCount) -> Parsed:
+        """Parse whole lines.
+
+        Args:
+            raw: the bytes.
+            line: the number of the first line, for problems.
+            problems: what is passed over is counted here.
+        """
+        data = self._encoding.to_utf8(raw)
+        lines = _line_ends(data)
+        if self._comment is not None:
+            data = self._comment.sub(b"", data)
+        if not data or data.isspace():
+            return Parsed(join_rows([]), Span(), lines)
+        note = _Note(self._file, line, problems)
+        columns = self._value_columns()
+        table = self._table(data, columns, note)
+        if self._long:
+            return self._parse_long(table, lines, note)
+        return self._parse_wide(table, columns, lines, note)
+
+    def _value_columns(self) -> tuple[int, ...]:
+        if self._long:
+            return (self._value,)
+        names = self._header.columns
+        last = {name: at for at, name in enumerate(names) if name and at != self._time}
+        return tuple(sorted(at for name, at in last.items() if self._reading.book.is_wanted(name)))
+
+    def _table(self, data: bytes, columns: tuple[int, ...], note: _Note) -> pa.Table:
+        types = {_name(at): _TEXT if at in self._as_text else pa.float64() for at in columns}
+        try:
+            table, refused = self._read(data, types, _CHUNK)
+        except pa.ArrowInvalid:
+            # Words among the numbers, bytes that are no UTF-8, or one huge line: read as text.
+            data = self._decoded(data, note)
+            types = dict.fromkeys(types, _TEXT)
+            table, refused = self._read(data, types, len(data) + 1)
+            self._as_text.update(at for at in columns if not _all_numbers(table[_name(at)]))
+        if b'"' in data and table.num_rows + refused.count != _lines(data):
+            note.count(_STRAY_QUOTE, 1)
+            types = dict.fromkeys(types, _TEXT)
+            table, refused = self._read(
+                self._decoded(data, note), types, len(data) + 1, quote=False
+            )
+        note.count(_WRONG_CELLS, refused.count, example=refused.example, row=table.num_rows)
+        return table
+
+    def _read(
+        self, data: bytes, types: dict[str, Any], chunk: int, *, quote: bool = True
+    ) -> tuple[pa.Table, _Refused]:
+        refused = _Refused()
+        keys = [self._time]
+        if self._long:
+            keys += [self._tag] if self._quality is None else [self._tag, self._quality]
+        types = {**{_name(at): _DISTINCT for at in keys}, **types}
+        options = self._reading.options
+        table = pacsv.read_csv(
+            pa.BufferReader(data),
+            read_options=pacsv.ReadOptions(
+                column_names=[_name(at) for at in range(len(self._header.columns))],
+                block_size=chunk,
+            ),
+            parse_options=pacsv.ParseOptions(
+                delimiter=options.delimiter,
+                quote_char='"' if quote else False,
+                invalid_row_handler=refused,
+            ),
+            convert_options=pacsv.ConvertOptions(
+                include_columns=list(types),
+                column_types=types,
+                null_values=self._null_values(),
+                decimal_point=options.decimal,
+            ),
+        )
+        return table.unify_dictionaries(), refused
+
+    def _null_values(self) -> list[str]:
+        if not self._long:
+            return [""]  # a word must be told from an empty cell
+        words = self._reading.options.bad_words
+        return ["", *{form for w in words for form in (w, w.lower(), w.upper(), w.capitalize())}]
+
+    def _decoded(self, data: bytes, note: _Note) -> bytes:
+        try:
+            data.decode()
+        except UnicodeDecodeError:
+            text = data.decode(errors="replace")
+            note.count(_NOT_DECODED, text.count("\ufffd"))
+            return text.encode()
+        return data
+
+    def _parse_long(self, table: pa.Table, lines: int, note: _Note) -> Parsed:
+        times, has_time = self._times(table, note)
+        names, name_at = _distinct(table[_name(self._tag)])
+        names = [name.strip(' \t"') for name in names]
+        named = np.array([bool(name) for name in names], dtype=np.bool_)
+        has_tag = named[name_at] if not named.all() else np.ones(len(name_at), dtype=np.bool_)
+        note.rows(_NO_TAG, has_time & ~has_tag)
+        there = has_time & has_tag
+        codes = self._reading.book.codes(names)
+        wanted = np.array([self._reading.book.is_wanted(name) for name in names], dtype=np.bool_)
+        doubled = times.doubled
+        keep = there & (wanted[name_at] | doubled)
+        value, bad = self._numbers(table[_name(self._value)], there, note)
+        quality = self._qualities(table, there, note)
+        quality[bad] = Quality.BAD
+        rows = Rows(codes[name_at], times.first, value, quality, *_doubled(times, doubled))
+        return Parsed(rows if keep.all() else rows.keep(keep), _span(times, there), lines)
+
+    def _parse_wide(
+        self, table: pa.Table, columns: tuple[int, ...], lines: int, note: _Note
+    ) -> Parsed:
+        times, has_time = self._times(table, note)
+        span = _span(times, has_time)
+        if not columns:
+            return Parsed(join_rows([]), span, lines)
+        cells = [self._cells(table[_name(at)], has_time, note) for at in columns]
+        value, bad, there = (np.column_stack(part) for part in zip(*cells, strict=True))
+        there &= has_time[:, np.newaxis]
+        codes = self._reading.book.codes([self._header.columns[at] for at in columns])
+        row, column = np.nonzero(there)
+        rows = Rows(
+            codes[column],
+            times.first[row],
+            value[there],
+            np.where(bad[there], Quality.BAD, Quality.GOOD).astype(np.uint8),
+            *_doubled(times.take(row), times.doubled[row]),
+        )
+        return Parsed(rows, span, lines)
+
+    def _times(self, table: pa.Table, note: _Note) -> tuple[ParsedTimes, npt.NDArray[np.bool_]]:
+        column = table[_name(self._time)].combine_chunks()
+        at = column.indices.to_numpy(zero_copy_only=False)
+        distinct = self._reading.times.read(column.dictionary)
+        times = distinct.take(at)
+        has_time = times.first != NO_TIME
+        if not has_time.all():
+            missing = times.in_missing_hour
+            for what, rows in ((_MISSING_HOUR, missing), (_NO_TIME, ~has_time & ~missing)):
+                example = str(column.dictionary[at[int(rows.argmax())]]) if rows.any() else ""
+                note.rows(what, rows, example=example)
+        return times, has_time
+
+    def _cells(
+        self, column: pa.ChunkedArray, has_time: npt.NDArray[np.bool_], note: _Note
+    ) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.bool_], npt.NDArray[np.bool_]]:
+        """Return a wide column's values, where they are bad, and where there is a cell at all."""
+        if pa.types.is_string(column.type):
+            there = pc.not_equal(pc.utf8_trim_whitespace(column), "").to_numpy()
+        else:
+            there = column.is_valid().to_numpy()
+        value, bad = self._numbers(column, has_time & there, note)
+        return value, bad, there
+
+    def _numbers(
+        self, column: pa.ChunkedArray, counted: npt.NDArray[np.bool_], note: _Note
+    ) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.bool_]]:
+        """Return values, NaN where there is none, and where they are bad."""
+        if pa.types.is_string(column.type):
+            parsed = self._reading.numbers.read(column.combine_chunks())
+            value, unknown, example = parsed.value, parsed.not_understood, parsed.example
+        else:
+            value = column.to_numpy()
+            unknown, example = np.isinf(value), ""
+        if unknown.any():
+            note.rows(_NOT_A_NUMBER, unknown & counted, example=example)
+            value = np.where(unknown, np.nan, value)
+        return value, np.isnan(value)
+
+    def _qualities(
+        self, table: pa.Table, counted: npt.NDArray[np.bool_], note: _Note
+    ) -> npt.NDArray[np.uint8]:
+        if self._quality is None:
+            return np.full(table.num_rows, Quality.GOOD, dtype=np.uint8)
+        words, at = _distinct(table[_name(self._quality)])
+        classes, unknown = self._reading.words.classify(words)
+        if unknown.any():
+            rows = unknown[at] & counted
+            note.rows(_UNKNOWN_QUALITY, rows, example=words[at[int(rows.argmax())]])
+        return classes[at]
+
+
+class _Refused:
+    """Counts the rows that have the wrong number of cells."""
+
+    def __init__(self) -> None:
+        self.count, self.example = 0, ""
+
+    def __call__(self, row: Any) -> str:  # noqa: ANN401 - the parser's own row type
+        self.count += 1
+        self.example = self.example or str(row.text)
+        return "skip"
+
+
+@dataclass(frozen=True)
+class _Note:
+    file: str
+    line: int
+    problems: ProblemCount
+
+    def rows(self, what: str, rows: npt.NDArray[np.bool_], *, example: str = "") -> None:
+        count = int(np.count_nonzero(rows))
+        if count:
+            self.count(what, count, example=example, row=int(rows.argmax()))
+
+    def count(self, what: str, count: int, *, example: str = "", row: int = 0) -> None:
+        place = f"line {self.line + row}" if what != _WRONG_CELLS else f"after line {self.line}"
+        self.problems.add(self.file, place, what, count, example=example)
+
+
+def _name(at: int) -> str:
+    return f"c{at}"  # headers may be empty or occur twice; these do not
+
+
+def _distinct(column: pa.ChunkedArray) -> tuple[list[str], npt.NDArray[np.int32]]:
+    joined = column.combine_chunks()
+    return joined.dictionary.to_pylist(), joined.indices.to_numpy(zero_copy_only=False)
+
+
+def _all_numbers(column: pa.ChunkedArray) -> bool:
+    try:
+        pc.if_else(pc.equal(column, ""), None, column).cast(pa.float64())
+    except pa.ArrowInvalid:
+        return False
+    return True
+
+
+def _lines(data: bytes) -> int:
+    blank = len(re.findall(rb"(?m)^\r?\n", data))
+    return _line_ends(data) + (not data.endswith(b"\n")) - blank
+
+
+def _line_ends(data: bytes) -> int:
+    # Three times as fast as bytes.count for a single byte.
+    return int(np.count_nonzero(np.frombuffer(data, dtype=np.uint8) == ord("\n")))
+
+
+def _span(times: ParsedTimes, there: npt.NDArray[np.bool_]) -> Span:
+    if not there.any():
+        return Span()
+    first, second = times.first, times.second
+    if not there.all():
+        first, second = first[there], second[there]
+    ordered = bool((first[1:] >= first[:-1]).all())
+    if first is second:
+        return Span(int(first.min()), int(first.max()), doubled=False, ordered=ordered)
+    doubled = bool((first != second).any())
+    return Span(int(first.min()), int(second.max()), doubled=doubled, ordered=ordered)
+
+
+def _doubled(
+    times: ParsedTimes, doubled: npt.NDArray[np.bool_]
+) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.int64]]:
+    at = np.flatnonzero(doubled)
+    return at, times.second[at]

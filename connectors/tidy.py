@@ -1,0 +1,184 @@
+"""Raw rows of any source, brought into the one table that `ReadResult` promises."""
+
+from __future__ import annotations
+
+from collections import Counter
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+from connectors.base import Problem, Quality
+from connectors.times import from_microseconds, resolve_doubled_hour
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    import numpy.typing as npt
+
+__all__ = ["ProblemCount", "Rows", "join_rows", "settle_doubled_hour", "tidy"]
+
+
+@dataclass(frozen=True)
+class Rows:
+    """Readings in the order they were written, one entry a reading in each array.
+
+    Attributes:
+        tag: a code for the tag's name.
+        time: [us] UTC; in a doubled hour the earlier candidate.
+        value: in the historian's own unit, NaN for none.
+        quality: see `Quality`.
+        doubled_at: the positions of the rows in a doubled hour, ascending.
+        doubled_second: [us] UTC; the later candidate of each of those.
+    """
+
+    tag: npt.NDArray[np.int32]
+    time: npt.NDArray[np.int64]
+    value: npt.NDArray[np.float64]
+    quality: npt.NDArray[np.uint8]
+    doubled_at: npt.NDArray[np.int64]
+    doubled_second: npt.NDArray[np.int64]
+
+    def __len__(self) -> int:
+        return len(self.time)
+
+    @property
+    def nbytes(self) -> int:
+        """The memory that the arrays take."""
+        arrays = (self.tag, self.time, self.value, self.quality)
+        return sum(a.nbytes for a in (*arrays, self.doubled_at, self.doubled_second))
+
+    def keep(self, mask: npt.NDArray[np.bool_]) -> Rows:
+        """Return the rows where the mask is true."""
+        kept = mask[self.doubled_at]
+        position = np.cumsum(mask) - 1
+        return Rows(
+            self.tag[mask],
+            self.time[mask],
+            self.value[mask],
+            self.quality[mask],
+            position[self.doubled_at[kept]],
+            self.doubled_second[kept],
+        )
+
+    def between(self, low: int, high: int) -> Rows:
+        """Return a slice of rows that hold no doubled hour."""
+        part = slice(low, high)
+        none = self.doubled_at[:0]
+        return Rows(
+            self.tag[part], self.time[part], self.value[part], self.quality[part], none, none
+        )
+
+
+class ProblemCount:
+    """Counts problems by what they are; keeps the place of the first of each."""
+
+    def __init__(self) -> None:
+        self._counts: Counter[tuple[str, str]] = Counter()
+        self._first: dict[tuple[str, str], tuple[str, str]] = {}
+
+    def add(self, source: str, place: str, what: str, count: int, *, example: str = "") -> None:
+        """Count a problem.
+
+        Args:
+            source: the file or table.
+            place: where in it the first one stands, empty when there is no place to name.
+            what: what was found and what became of it.
+            count: how often; nothing is noted for 0.
+            example: the first text concerned.
+        """
+        if not count:
+            return
+        key = (source, what)
+        self._counts[key] += int(count)
+        shown = f" (first: {example[:40]!r})" if example else ""
+        self._first.setdefault(key, (f"{source}:{place}" if place else source, what + shown))
+
+    def problems(self) -> tuple[Problem, ...]:
+        """Return what was counted, in the order it was met."""
+        return tuple(Problem(*self._first[key], count) for key, count in self._counts.items())
+
+
+def join_rows(parts: Sequence[Rows]) -> Rows:
+    """Put rows after one another."""
+    if len(parts) == 1:
+        return parts[0]
+    if not parts:
+        none = np.zeros(0, dtype=np.int64)
+        return Rows(
+            none.astype(np.int32),
+            none,
+            none.astype(np.float64),
+            none.astype(np.uint8),
+            none,
+            none,
+        )
+    offsets = np.cumsum([0, *(len(part) for part in parts[:-1])])
+    return Rows(
+        np.concatenate([part.tag for part in parts]),
+        np.concatenate([part.time for part in parts]),
+        np.concatenate([part.value for part in parts]),
+        np.concatenate([part.quality for part in parts]),
+        np.concatenate([p.doubled_at + at for p, at in zip(parts, offsets, strict=True)]),
+        np.concatenate([part.doubled_second for part in parts]),
+    )
+
+
+def settle_doubled_hour(
+    rows: Rows, part: npt.NDArray[np.int32]
+) -> tuple[Rows, npt.NDArray[np.int64]]:
+    """Give each row of a doubled hour its time, by the order of the rows.
+
+    Args:
+        rows: rows in the order they were written.
+        part: the file of each row.
+
+    Returns:
+        The rows with their times settled, and the positions of those whose pass the order does not
+        tell: these count as the first pass and are at best uncertain.
+    """
+    at = rows.doubled_at
+    if not len(at):
+        return rows, at
+    passes = resolve_doubled_hour(rows.time[at], rows.tag[at], part[at])
+    time, quality = rows.time.copy(), rows.quality.copy()
+    later = passes == 1
+    time[at[later]] = rows.doubled_second[later]
+    unsettled = at[passes < 0]
+    quality[unsettled] = np.maximum(quality[unsettled], np.uint8(Quality.UNCERTAIN))
+    return Rows(rows.tag, time, rows.value, quality, at[:0], at[:0]), unsettled
+
+
+def tidy(rows: Rows, tags: Sequence[str]) -> tuple[pd.DataFrame, int]:
+    """Sort readings by tag and time, and keep the last one written of each tag and time.
+
+    Args:
+        rows: settled rows whose tag is the position in ``tags``.
+        tags: the names asked for, distinct and sorted.
+
+    Returns:
+        The table that `ReadResult` promises, and how many readings gave way to a later one.
+    """
+    order = np.arange(len(rows))
+    if len(rows) and (np.diff(rows.time) < 0).any():
+        order = np.argsort(rows.time, kind="stable")
+    # The stable sort of small integers is a radix sort: it costs next to nothing.
+    small = np.int16 if len(tags) < np.iinfo(np.int16).max else np.int32
+    order = order[np.argsort(rows.tag[order].astype(small), kind="stable")]
+    tag, time = rows.tag[order], rows.time[order]
+    last = np.ones(len(order), dtype=np.bool_)
+    last[:-1] = (tag[1:] != tag[:-1]) | (time[1:] != time[:-1])
+    replaced = int(len(last) - last.sum())
+    if replaced:
+        order, tag, time = order[last], tag[last], time[last]
+    table = pd.DataFrame(
+        {
+            "tag": pd.Categorical.from_codes(tag, categories=pd.Index(list(tags), dtype="str")),
+            "time": from_microseconds(time),
+            "value": rows.value[order],
+            "quality": rows.quality[order],
+        },
+        copy=False,
+    )
+    return table, replaced

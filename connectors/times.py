@@ -1,0 +1,292 @@
+"""Times as historians write them, turned into microseconds of UTC.
+
+Local time has two odd hours a year. In spring an hour is missing: a time inside it cannot have been
+read and is refused. In autumn an hour comes twice: which of the two is meant shows only in the
+order of the rows, so such a time is carried with both candidates until the order is known.
+"""
+
+from __future__ import annotations
+
+import datetime as dt
+import zoneinfo
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any, cast
+
+import numpy as np
+import pandas as pd
+import pyarrow as pa
+import pyarrow.compute as pc
+
+if TYPE_CHECKING:
+    import numpy.typing as npt
+
+__all__ = [
+    "DAY",
+    "DOUBLED_HOUR_REACH",
+    "NO_TIME",
+    "ParsedTimes",
+    "TimeReader",
+    "check_time_format",
+    "check_zone",
+    "from_microseconds",
+    "microseconds",
+    "resolve_doubled_hour",
+]
+
+NO_TIME = int(np.iinfo(np.int64).min)
+"""Stands for a time that could not be read."""
+
+DAY = 86_400_000_000
+"""[us]"""
+
+DOUBLED_HOUR_REACH = 3 * 3_600_000_000
+"""[us] Rows farther than this from a window share no doubled hour with it."""
+
+# What lies outside is a mistaken time_format (milliseconds read as seconds), not a reading.
+_EARLIEST = int(dt.datetime(1900, 1, 1, tzinfo=dt.UTC).timestamp()) * 1_000_000
+_LATEST = int(dt.datetime(2200, 1, 1, tzinfo=dt.UTC).timestamp()) * 1_000_000
+
+_EPOCH_SCALE = {"epoch_s": 1_000_000.0, "epoch_ms": 1_000.0, "epoch_us": 1.0}
+_NUMBER = r"^[+-]?\d+(\.\d*)?$"
+_ENDS_WITH_AN_OFFSET = r"\d[Tt ]\s*\d.*(?:[Zz]|[+-]\d{2}(?::?\d{2})?)$"
+
+
+@dataclass(frozen=True)
+class ParsedTimes:
+    """Times in microseconds since 1970-01-01 UTC.
+
+    Attributes:
+        first: the time, or the earlier candidate in a doubled hour; `NO_TIME` where there is none.
+        second: the later candidate; equal to ``first`` outside a doubled hour.
+        in_missing_hour: the local time does not exist (``first`` is `NO_TIME`).
+    """
+
+    first: npt.NDArray[np.int64]
+    second: npt.NDArray[np.int64]
+    in_missing_hour: npt.NDArray[np.bool_]
+
+    @property
+    def doubled(self) -> npt.NDArray[np.bool_]:
+        """Where two times are possible."""
+        if self.first is self.second:  # the zone has no doubled hours
+            return np.zeros(len(self.first), dtype=np.bool_)
+        return cast("npt.NDArray[np.bool_]", self.first != self.second)
+
+    def take(self, rows: npt.NDArray[np.int32] | npt.NDArray[np.intp]) -> ParsedTimes:
+        """Return the times of these rows."""
+        first = self.first[rows]
+        second = first if self.second is self.first else self.second[rows]
+        return ParsedTimes(first, second, self.in_missing_hour[rows])
+
+
+class TimeReader:
+    """Reads one source's times.
+
+    Args:
+        time_format: ``iso``, ``epoch_s``, ``epoch_ms``, ``epoch_us`` or a strptime format.
+        time_zone: IANA name; holds for times that carry no offset of their own.
+    """
+
+    def __init__(self, time_format: str, time_zone: str) -> None:
+        self._format = time_format
+        self._zone = None if time_zone in {"UTC", "Etc/UTC"} else zoneinfo.ZoneInfo(time_zone)
+
+    def read(self, texts: pa.Array) -> ParsedTimes:
+        """Read distinct texts; what cannot be read becomes `NO_TIME`, never an error."""
+        if self._format in _EPOCH_SCALE:
+            return self.universal(_read_epoch(texts, _EPOCH_SCALE[self._format]))
+        if self._format == "iso":
+            return self._read_iso(texts)
+        parsed = pd.to_datetime(
+            _stripped(texts), format=self._format, errors="coerce", utc="%z" in self._format
+        )
+        if "%z" in self._format:
+            return self.universal(_series_microseconds(parsed))
+        return self.local(_series_microseconds(parsed))
+
+    def universal(self, time: npt.NDArray[np.int64]) -> ParsedTimes:
+        """Take microseconds of UTC as they are, but for those that no reading can have."""
+        time = _plausible(time)
+        return ParsedTimes(time, time, np.zeros(len(time), dtype=np.bool_))
+
+    def local(self, time: npt.NDArray[np.int64]) -> ParsedTimes:
+        """Turn microseconds of local wall-clock time into UTC."""
+        if self._zone is None:
+            return self.universal(time)
+        there = time != NO_TIME
+        wall = pd.DatetimeIndex(_plausible(time).view("datetime64[us]"))
+        # pandas takes an array of "is this the first of the two?" for the doubled hour.
+        one, other = (
+            wall.tz_localize(
+                self._zone, ambiguous=np.full(len(wall), fill_value=first), nonexistent="NaT"
+            )
+            .tz_convert("UTC")
+            .as_unit("us")
+            .asi8
+            for first in (True, False)
+        )
+        missing = there & (one == NO_TIME) & (wall.asi8 != NO_TIME)
+        return ParsedTimes(np.minimum(one, other), np.maximum(one, other), missing)
+
+    def wall_clock(self, time: pd.Timestamp) -> pd.Timestamp:
+        """Return the local wall-clock time, without a zone, of a moment."""
+        return time.tz_convert(self._zone or "UTC").tz_localize(None)
+
+    def _read_iso(self, texts: pa.Array) -> ParsedTimes:
+        zoned = len(texts) > 0 and str(texts[0]).strip('" ')[-1:] in {"Z", "z"}
+        try:
+            stamps = texts.cast(pa.timestamp("us", "UTC") if zoned else pa.timestamp("us"))
+        except pa.ArrowInvalid:
+            return self._read_mixed_iso(texts)
+        time = stamps.cast(pa.int64()).to_numpy(zero_copy_only=False)
+        return self.universal(time) if zoned else self.local(time)
+
+    def _read_mixed_iso(self, texts: pa.Array) -> ParsedTimes:
+        stripped = _stripped(texts).str.replace(r",(?=\d)", ".", regex=True)
+        zoned = stripped.str.contains(_ENDS_WITH_AN_OFFSET, regex=True).to_numpy(dtype=np.bool_)
+        with_offset = self.universal(_iso_microseconds(stripped.where(zoned), utc=True))
+        without = self.local(_iso_microseconds(stripped.where(~zoned), utc=False))
+        return ParsedTimes(
+            np.where(zoned, with_offset.first, without.first),
+            np.where(zoned, with_offset.second, without.second),
+            ~zoned & without.in_missing_hour,
+        )
+
+
+def resolve_doubled_hour(
+    first: npt.NDArray[np.int64],
+    tag: npt.NDArray[np.int32],
+    part: npt.NDArray[np.int32],
+) -> npt.NDArray[np.int8]:
+    """Tell the two passes through a doubled hour apart by the order of the rows.
+
+    The clock runs forward but for one step back between the passes. Rows are looked at as a whole,
+    then tag by tag (an export may list one tag after the other), then part by part. A group shows
+    both passes when it steps back exactly once and some tag stands on both sides of that step:
+    without the second condition, two tags listed one after the other would pass for two passes.
+
+    Args:
+        first: [us] the earlier candidate of each row, in the order the rows were written.
+        tag: the tag of each row.
+        part: the file of each row.
+
+    Returns:
+        0 for the first pass, 1 for the second, -1 where the order does not tell.
+    """
+    if not len(first):
+        return np.zeros(0, dtype=np.int8)
+    result = np.full(len(first), -1, dtype=np.int8)
+    distinct = np.unique(first)
+    autumn = np.searchsorted(distinct[1:][np.diff(distinct) > DAY], first, side="right")
+    whole = np.zeros(len(first), dtype=np.int64)
+    # A tag's own time cannot stand still: equal times of one tag are a step too (hourly exports).
+    for group, equal_steps in ((whole, False), (tag, True), (part, False)):
+        key = group.astype(np.int64) * (int(autumn.max()) + 1) + autumn
+        seen = _passes(key, first, tag, equal_steps=equal_steps)
+        result = np.where(result >= 0, result, seen).astype(np.int8)
+    return result
+
+
+def _passes(
+    key: npt.NDArray[np.int64],
+    first: npt.NDArray[np.int64],
+    tag: npt.NDArray[np.int32],
+    *,
+    equal_steps: bool,
+) -> npt.NDArray[np.int8]:
+    order = np.argsort(key, kind="stable")
+    sorted_key, sorted_first = key[order], first[order]
+    same = sorted_key[1:] == sorted_key[:-1]
+    back = (
+        sorted_first[1:] <= sorted_first[:-1]
+        if equal_steps
+        else sorted_first[1:] < sorted_first[:-1]
+    )
+    group = np.concatenate([[0], np.cumsum(~same)])
+    steps = np.concatenate([[0], np.cumsum(same & back)])
+    starts = np.concatenate([[0], np.flatnonzero(~same) + 1])
+    ends = np.concatenate([starts[1:], [len(order)]]) - 1
+    taken = steps - steps[starts][group]
+    once = (steps[ends] - steps[starts]) == 1
+    sides = np.unique(np.stack([group, tag[order], taken])[:, once[group]], axis=1)
+    shared = np.zeros(len(starts), dtype=np.bool_)
+    both = (sides[0, 1:] == sides[0, :-1]) & (sides[1, 1:] == sides[1, :-1])
+    shared[sides[0, 1:][both]] = True
+    result = np.empty(len(order), dtype=np.int8)
+    result[order] = np.where((once & shared)[group], taken, -1)
+    return result
+
+
+def microseconds(time: pd.Timestamp) -> int:
+    """Return a moment as whole microseconds since 1970-01-01 UTC."""
+    return int(pd.DatetimeIndex([time.tz_convert("UTC")]).as_unit("us").asi8[0])
+
+
+def from_microseconds(time: npt.NDArray[np.int64]) -> pd.DatetimeIndex:
+    """Return microseconds since 1970-01-01 UTC as an index of UTC times."""
+    return pd.DatetimeIndex(time.view("datetime64[us]")).tz_localize("UTC")
+
+
+def check_zone(name: str) -> str:
+    """Return the name of a time zone that exists.
+
+    Raises:
+        ValueError: there is no such zone.
+    """
+    try:
+        zoneinfo.ZoneInfo(name)
+    except (zoneinfo.ZoneInfoNotFoundError, ValueError, OSError) as error:
+        raise ValueError(
+            f"'{name}' is not a time zone; write one such as 'Europe/Vienna' or 'UTC'"
+        ) from error
+    return name
+
+
+def check_time_format(text: str) -> str:
+    """Return a time format that can be read.
+
+    Raises:
+        ValueError: neither ``iso``, an ``epoch_`` word nor a strptime format with a full date.
+    """
+    if text == "iso" or text in _EPOCH_SCALE:
+        return text
+    known = f"write 'iso', {', '.join(map(repr, _EPOCH_SCALE))} or such as '%d.%m.%Y %H:%M'"
+    if "%" not in text:
+        raise ValueError(f"'{text}' is not a time format; {known}")
+    moment = dt.datetime(2026, 11, 23, 13, 0, tzinfo=dt.UTC)
+    try:
+        back = pd.to_datetime(moment.strftime(text), format=text)
+    except (ValueError, TypeError) as error:
+        raise ValueError(f"'{text}' is not a time format ({error}); {known}") from error
+    if (back.year, back.month, back.day, back.hour) != (2026, 11, 23, 13):
+        raise ValueError(
+            f"'{text}' leaves part of a date or hour out (13:00 on 23 November 2026 reads back as "
+            f"{back}); {known}"
+        )
+    return text
+
+
+def _stripped(texts: pa.Array) -> pd.Series[Any]:
+    trimmed = pc.utf8_trim(texts, characters=' \t"')
+    return pd.Series(trimmed.to_numpy(zero_copy_only=False), dtype="str")
+
+
+def _iso_microseconds(texts: pd.Series[Any], *, utc: bool) -> npt.NDArray[np.int64]:
+    parsed = pd.to_datetime(texts, format="ISO8601", errors="coerce", utc=utc)
+    return _series_microseconds(parsed)
+
+
+def _series_microseconds(times: pd.Series[Any]) -> npt.NDArray[np.int64]:
+    return pd.DatetimeIndex(times).as_unit("us").asi8
+
+
+def _read_epoch(texts: pa.Array, scale: float) -> npt.NDArray[np.int64]:
+    trimmed = pc.utf8_trim(texts, characters=' \t"')
+    number = pc.if_else(pc.match_substring_regex(trimmed, _NUMBER), trimmed, None)
+    values = number.cast(pa.float64()).to_numpy(zero_copy_only=False) * scale
+    readable = np.abs(values) < float(_LATEST)  # False for NaN
+    return np.where(readable, np.rint(np.where(readable, values, 0.0)), NO_TIME).astype(np.int64)
+
+
+def _plausible(time: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:
+    return np.where((time >= _EARLIEST) & (time < _LATEST), time, NO_TIME)
