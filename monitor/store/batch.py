@@ -94,8 +94,9 @@ class FigureBatch:
             a full hour. Rows of these subjects in [start, end) are replaced by the batch's.
         streams: ``subject``, ``time``, `STREAM_COLUMNS`, ``flag``.
         equipment: ``subject``, ``time``, `EQUIPMENT_COLUMNS`, ``flag``.
-        conditions: ``subject``, ``figure``, ``time``, `CONDITION_COLUMNS`, ``flag``; ``value`` in the
-            figure's own unit, ``weight`` its denominator for weighted means (1 where it has none).
+        conditions: ``subject``, ``figure``, ``time``, `CONDITION_COLUMNS`, ``flag``; ``value`` in
+            the figure's own unit, ``weight`` its denominator for weighted means (1 where it has
+            none).
         ledger: ``time``, `LEDGER_COLUMNS`, ``flag``.
         tag_quality: ``tag``, ``hour`` (integer UTC seconds), `QUALITY_COLUMNS`; counts.
     """

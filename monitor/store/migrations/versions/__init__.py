@@ -1,0 +1,1 @@
+"""One module a schema revision; a published one is never changed."""
