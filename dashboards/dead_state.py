@@ -12,7 +12,7 @@ from dashboards import series
 from dashboards.embed import Chart
 from dashboards.figures import band_trace, date_axis, has_values, line_traces
 from dashboards.files import DEAD_STATE_FILE, write_atomically
-from dashboards.formats import number, power_column, quantity
+from dashboards.formats import duration, number, power_column, quantity
 from dashboards.render import render_page
 from dashboards.theme import COLOURS, LEDGER_COLOURS, axis, base_layout, tinted
 
@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 __all__ = ["write_dead_state"]
 
 _FREEZING = 0.0  # degC; below it dead-state water is ice Ih
+_MEANS = 250  # few enough that the two lines stand apart
 _PAIRS = (("destroyed", "Destroyed"), ("lost", "Lost"), ("supplied", "Supplied"))
 
 
@@ -99,9 +100,7 @@ def _ambient_chart(
         f"highest {quantity(float(known.max()), unit)}, reference {quantity(reference, unit)}."
     )
     note = "Orange spans: the reading is held, or the reference stands in." if held.any() else ""
-    return Chart(
-        f"ambient-{name}", {"data": traces, "layout": layout}, summary, heading, note, 200
-    )
+    return Chart(f"ambient-{name}", {"data": traces, "layout": layout}, summary, heading, note, 200)
 
 
 def _held_shape(times: pd.DatetimeIndex, start: int, stop: int) -> dict[str, Any]:
@@ -124,7 +123,7 @@ def _pair_chart(view: DeadStateView, key: str, label: str) -> Chart | None:
     live, reference = f"{key}_live", f"{key}_reference"
     if not has_values(view.ledger, live, reference):
         return None
-    means, _ = series.regular_means(view.ledger[[live, reference]])
+    means, step = series.regular_means(view.ledger[[live, reference]], _MEANS)
     scale = power_column(means.to_numpy(dtype=np.float64).ravel().tolist())
     clock = series.local(means * scale.factor)
     times = pd.DatetimeIndex(clock.index)
@@ -156,5 +155,6 @@ def _pair_chart(view: DeadStateView, key: str, label: str) -> Chart | None:
         f"{label} exergy, mean {live_words} {scale.unit} at the live and {reference_words} "
         f"{scale.unit} at the reference dead state.",
         f"{label} exergy, {scale.unit}",
+        f"Means over {duration(step)}.",
         print_height=190,
     )

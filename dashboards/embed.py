@@ -47,11 +47,11 @@ class Chart:
 
 
 def figure_json(figure: dict[str, Any]) -> Markup:
-    """Write a figure as JSON for a ``script`` element of type ``application/json``.
+    r"""Write a figure as JSON for a ``script`` element of type ``application/json``.
 
     Times are coded as a start and steps, each distinct axis once, since several lines share one;
     numbers carry five significant digits. Every ``<``, ``>`` and ``&`` and everything beyond ASCII
-    is a ``\\u`` escape, so that no text ends the element or opens a comment.
+    is a ``\u`` escape, so that no text ends the element or opens a comment.
     """
     axes: list[dict[str, Any]] = []
     known: dict[bytes, int] = {}
@@ -67,12 +67,10 @@ def figure_json(figure: dict[str, Any]) -> Markup:
 def _plain(value: Any, axes: list[dict[str, Any]], known: dict[bytes, int]) -> Any:  # noqa: ANN401
     if isinstance(value, dict):
         return {str(key): _plain(item, axes, known) for key, item in value.items()}
-    if isinstance(value, (list, tuple)):
+    if isinstance(value, (list, tuple, np.ndarray)):
         return [_plain(item, axes, known) for item in value]
     if isinstance(value, pd.DatetimeIndex):
         return {"times": _coded(value, axes, known)}
-    if isinstance(value, np.ndarray):
-        return [_number(float(item)) for item in value]
     if isinstance(value, pd.Timestamp):
         return value.tz_localize(None).strftime("%Y-%m-%d %H:%M:%S")
     if isinstance(value, (float, np.floating)):

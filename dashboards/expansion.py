@@ -28,7 +28,9 @@ def expansion_chart(view: ExpansionView) -> Chart | None:
         The chart, or None when no state is known.
     """
     points = view.points
-    known = points[np.isfinite(_column(points, "entropy")) & np.isfinite(_column(points, "enthalpy"))]
+    known = points[
+        np.isfinite(_column(points, "entropy")) & np.isfinite(_column(points, "enthalpy"))
+    ]
     if known.empty:
         return None
     window = _window(view, known)

@@ -9,13 +9,25 @@ import pandas as pd
 
 from dashboards import series
 from dashboards.embed import Chart
-from dashboards.formats import moment, number, plotly_text, power_column, quantity, unit_text
+from dashboards.formats import (
+    duration,
+    moment,
+    number,
+    plotly_text,
+    power_column,
+    quantity,
+    unit_text,
+)
 from dashboards.theme import COLOURS, LEDGER_COLOURS, axis, base_layout, tinted
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
+    import numpy.typing as npt
+
     from dashboards.views import ResidualView, TrendView
+
+    Floats = npt.NDArray[np.float64]
 
 __all__ = [
     "band_trace",
@@ -28,6 +40,13 @@ __all__ = [
 ]
 
 _STACKED = (("used", "Used"), ("lost", "Lost"), ("destroyed", "Destroyed"))
+_DAY_MS = 86_400_000
+_DATE_TICKS = [
+    {"dtickrange": [None, _DAY_MS - 1], "value": "%H:%M\n%-d %b %Y"},
+    {"dtickrange": [_DAY_MS, "M1"], "value": "%-d %b\n%Y"},
+    {"dtickrange": ["M1", "M12"], "value": "%b\n%Y"},
+    {"dtickrange": ["M12", None], "value": "%Y"},
+]
 _CROWDED = 0.025  # marks closer than this part of the axis share one label
 
 
@@ -37,7 +56,7 @@ def has_values(table: pd.DataFrame, *columns: str) -> bool:
     return bool(present) and bool(np.isfinite(_floats(table[present])).any())
 
 
-def _floats(values: pd.DataFrame | pd.Series) -> Any:  # noqa: ANN401 - one or two dimensions
+def _floats(values: pd.DataFrame | pd.Series) -> Floats:
     return values.to_numpy(dtype=np.float64)
 
 
@@ -47,11 +66,21 @@ def date_axis(times: pd.DatetimeIndex, **more: Any) -> dict[str, Any]:  # noqa: 
     if first == last:
         margin = pd.Timedelta(hours=1)
         first, last = first - margin, last + margin
-    return axis(type="date", range=[first, last], hoverformat="%-d %b %Y %H:%M", **more)
+    return axis(
+        type="date",
+        range=[first, last],
+        hoverformat="%-d %b %Y %H:%M",
+        tickformatstops=_DATE_TICKS,
+        **more,
+    )
 
 
 def band_trace(
-    times: pd.DatetimeIndex, low: Any, high: Any, name: str, colour: str  # noqa: ANN401
+    times: pd.DatetimeIndex,
+    low: Floats,
+    high: Floats,
+    name: str,
+    colour: str,
 ) -> dict[str, Any]:
     """Return the area between two lines, with gaps where either is missing."""
     xs, ys = series.band(times, low, high)
@@ -70,7 +99,7 @@ def band_trace(
 
 def line_traces(
     times: pd.DatetimeIndex,
-    values: Any,  # noqa: ANN401 - a float array
+    values: Floats,
     name: str,
     unit: str,
     line: dict[str, Any],
@@ -125,7 +154,7 @@ def ledger_trend(table: pd.DataFrame, identifier: str = "ledger-trend") -> Chart
     scale = power_column(_floats(means).ravel().tolist())
     clock = series.local(means * scale.factor)
     starts = pd.DatetimeIndex(clock.index)
-    times, ends = _step_times(starts, step)
+    times = _step_times(starts, step)
     stack = np.cumsum(_floats(clock[[key for key, _ in _STACKED]]), axis=1)
     lower = np.zeros(len(clock))
     traces: list[dict[str, Any]] = []
@@ -154,7 +183,7 @@ def ledger_trend(table: pd.DataFrame, identifier: str = "ledger-trend") -> Chart
     )
     layout = base_layout(
         340,
-        xaxis=date_axis(starts.append(ends[-1:])),
+        xaxis=date_axis(times),
         yaxis=axis(title={"text": scale.unit, "standoff": 8}, rangemode="tozero"),
     )
     means_text = ", ".join(
@@ -162,22 +191,18 @@ def ledger_trend(table: pd.DataFrame, identifier: str = "ledger-trend") -> Chart
         for key, label in (("supplied", "Supplied"), *_STACKED)
         if has_values(means, key)
     )
-    minutes = step.total_seconds() / 60.0
-    length = quantity(minutes / 60.0, "h", 3) if minutes >= 60 else quantity(minutes, "min", 3)  # noqa: PLR2004
     return Chart(
         identifier,
         {"data": traces, "layout": layout},
         f"Ledger over time. Means over what is shown: {means_text}.",
-        note=f"Means over {length} at the live dead state. A gap means that a figure is missing.",
+        note=f"Means over {duration(step)} at the live dead state. A gap: a figure is missing.",
     )
 
 
-def _step_times(
-    starts: pd.DatetimeIndex, step: pd.Timedelta
-) -> tuple[pd.DatetimeIndex, pd.DatetimeIndex]:
-    ends = starts + step
-    both = np.column_stack([starts.to_numpy(), ends.to_numpy()]).ravel()
-    return pd.DatetimeIndex(both), ends
+def _step_times(starts: pd.DatetimeIndex, step: pd.Timedelta) -> pd.DatetimeIndex:
+    """Return each step's start and end: a mean holds for all of its step."""
+    both = np.column_stack([starts.to_numpy(), (starts + step).to_numpy()])
+    return pd.DatetimeIndex(both.ravel())
 
 
 def trend_chart(trend: TrendView, identifier: str) -> Chart | None:
@@ -282,7 +307,10 @@ def residual_chart(view: ResidualView, identifier: str) -> Chart | None:
             zerolinecolor=COLOURS["soft"],
             zerolinewidth=1,
         ),
-        shapes=[*_reference_shape(view, times), *(_mark_line(time, name) for time, name, _ in inside)],
+        shapes=[
+            *_reference_shape(view, times),
+            *(_mark_line(time, name) for time, name, _ in inside),
+        ],
         annotations=_mark_labels([(time, name) for time, name, _ in inside], times),
     )
     layout["margin"]["t"] = 52
@@ -341,12 +369,17 @@ def _mark_labels(
             "x": group[0][0],
             "y": 1.0,
             "yanchor": "bottom",
-            "text": group[0][1] if len(group) == 1 else f"{group[0][1]}+{len(group) - 1}",
+            "text": _joined([name for _, name in group]),
             "showarrow": False,
             "font": {"size": 11, "color": COLOURS["ink"]},
         }
         for group in groups
     ]
+
+
+def _joined(names: Sequence[str]) -> str:
+    few = 3
+    return ", ".join(names) if len(names) <= few else f"{names[0]} … {names[-1]}"
 
 
 def _reference_shape(view: ResidualView, times: pd.DatetimeIndex) -> list[dict[str, Any]]:

@@ -14,9 +14,9 @@ if TYPE_CHECKING:
 __all__ = [
     "MISSING",
     "Column",
-    "ago",
     "column",
     "day",
+    "duration",
     "energy_column",
     "moment",
     "money_column",
@@ -206,9 +206,9 @@ def span(start: pd.Timestamp, end: pd.Timestamp) -> str:
     return f"{head} to {tail}" if start.date() == end.date() else f"{head} to {day(end)} {tail}"
 
 
-def ago(duration: pd.Timedelta) -> str:
+def duration(length: pd.Timedelta) -> str:
     """Write a length of time in its two largest units (``3 h 20 min``)."""
-    minutes = max(int(duration.total_seconds() // 60), 0)
+    minutes = max(int(length.total_seconds() // 60), 0)
     days, hours, left = minutes // 1440, minutes // 60 % 24, minutes % 60
     if days:
         return f"{days} d {hours} h" if hours else f"{days} d"

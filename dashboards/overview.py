@@ -63,7 +63,7 @@ def _key_figures(ledger: Sequence[LedgerLine]) -> list[tuple[str, str, str, str]
     lines = {line.key: line for line in ledger}
     scale = power_column(line.live_kw for line in ledger)
     supplied = lines["supplied"].live_kw if "supplied" in lines else float("nan")
-    figures = []
+    figures: list[tuple[str, str, str, str]] = []
     for key in ("supplied", "used", "destroyed", "lost"):
         if key not in lines:
             continue

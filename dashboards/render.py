@@ -110,6 +110,9 @@ def _freshness(context: PageContext) -> str:
     if age > STALE:
         return (
             f"Stale: the newest figure is from {formats.moment(context.newest)}, "
-            f"{formats.ago(age)} before this page was made. Look at the sources and the daemon."
+            f"{formats.duration(age)} before this page was made. "
+            "Look at the sources and the daemon."
         )
-    return f"Newest figure {formats.moment(context.newest)}, page made {formats.ago(age)} later."
+    return (
+        f"Newest figure {formats.moment(context.newest)}, page made {formats.duration(age)} later."
+    )

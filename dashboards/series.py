@@ -41,7 +41,7 @@ def local(table: pd.DataFrame) -> pd.DataFrame:
     numbers = plain.astype("float64")
     pieces: list[pd.DataFrame] = []
     start = 0
-    for stop in back + 1:
+    for stop in (back + 1).tolist():
         pieces.append(numbers.iloc[start:stop])
         gap = numbers.iloc[stop - 1 : stop] * np.nan
         pieces.append(gap)

@@ -16,19 +16,17 @@ from dashboards.overview import ranked_conditions
 from dashboards.render import render_page
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
-
     from dashboards.views import ConditionRow, LedgerLine, ShiftView
 
 __all__ = ["FirstPage", "first_page", "write_shift"]
 
 # What one A4 page holds; the details hold the rest.
-_SENTENCES = 6
-_SENTENCE = 220
+_SENTENCES = 5
+_SENTENCE = 170
 _EQUIPMENT = 5
-_ALARMS = 5
-_CONDITIONS = 5
-_TAGS = 5
+_ALARMS = 4
+_CONDITIONS = 4
+_TAGS = 4
 
 _MOVED = 0.5  # a residual from here on, as a part of its limit, has moved
 _START = re.compile(rb'<meta name="shift-start" content="([^"]{10,40})">')
