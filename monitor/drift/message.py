@@ -14,6 +14,7 @@ from monitor.drift.charts import change_point
 
 if TYPE_CHECKING:
     from monitor.drift.judgement import FigureRule
+    from monitor.drift.verdict import Verdict
 
 __all__ = ["Finding", "finding", "message", "priority"]
 
@@ -57,12 +58,22 @@ def finding(points: pd.DataFrame, known: int) -> Finding:
 def message(
     rule: FigureRule,
     found: Finding,
+    judged: Verdict,
     *,
     time_zone: str,
     cost_per_day: float | None = None,
     currency: str = "",
 ) -> str:
-    """Say a finding in two or three sentences, times in the site's own zone."""
+    """Say a finding in two or three sentences: what, why it is so, and what it costs a day.
+
+    Args:
+        rule: the figure.
+        found: what its chart shows.
+        judged: the verdict on it.
+        time_zone: the site's own, for the time said.
+        cost_per_day: what the extra lost work costs, None where not known.
+        currency: of the cost.
+    """
     decimals = _decimals(rule.smallest_change, found.expected)
     unit = f" {rule.unit}" if rule.unit not in {"", "1"} else ""
     change_unit = " points" if rule.unit == "%" else unit
@@ -74,7 +85,10 @@ def message(
         f"{found.expected:.{decimals}f}{unit}{at_load}: {direction} "
         f"{abs(found.change):.{decimals}f}{change_unit} since about {since.day} {since:%b %H:%M}."
     )
-    sentences = [what, "The live weather is not the cause: the figure does not depend on it."]
+    why = "The live weather is not the cause: the figure does not depend on it."
+    if judged.cause == "instrument":
+        why = f"Look at the instruments first: {'; '.join(judged.reasons)}."
+    sentences = [what, why]
     if cost_per_day is not None and math.isfinite(cost_per_day) and cost_per_day > 0:
         sentences.append(
             f"The extra lost work costs about {_three_digits(cost_per_day)} {currency} a day."
