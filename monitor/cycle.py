@@ -10,13 +10,13 @@ from connectors.base import Problem, ReadResult, Window
 from monitor.figures import Computed, compute, lead_in
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Iterable, Mapping, Sequence
 
     from connectors.base import Connector
     from monitor.site.load import Site
     from monitor.store.site import SiteStore
 
-__all__ = ["read_window", "run_window"]
+__all__ = ["compute_window", "read_window", "run_window", "store_window"]
 
 
 def run_window(
@@ -41,9 +41,31 @@ def run_window(
         ConnectorError: a source cannot be read; nothing is written.
         StoreError: the store cannot be written; nothing is half-written.
     """
-    computed = compute(site, read_window(site, sources, start, end), start, end)
-    store.write(computed.batch, run_id, watermarks=dict.fromkeys(sources, end))
+    computed = compute_window(site, sources, start, end)
+    store_window(store, sources, computed, run_id)
     return computed
+
+
+def compute_window(site: Site, sources: Mapping[str, Connector], start: int, end: int) -> Computed:
+    """Read and compute one window; nothing is stored.
+
+    Raises:
+        ConnectorError: a source cannot be read.
+    """
+    return compute(site, read_window(site, sources, start, end), start, end)
+
+
+def store_window(store: SiteStore, sources: Iterable[str], computed: Computed, run_id: int) -> None:
+    """Store one computed window; watermarks move forward with it, and never back.
+
+    A backfill of last month must not send the daemon back to last month.
+
+    Raises:
+        StoreError: the store cannot be written; nothing is half-written.
+    """
+    end, known = computed.batch.end, store.watermarks()
+    moved = {source: end for source in sources if known.get(source, end) <= end}
+    store.write(computed.batch, run_id, watermarks=moved)
 
 
 def read_window(site: Site, sources: Mapping[str, Connector], start: int, end: int) -> ReadResult:

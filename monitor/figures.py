@@ -345,7 +345,7 @@ def _ledger_table(
     ambient = plant.ambient
     supplied = [s for s in site.streams if s not in site.producer]
     leaving = [s for s in site.streams if s not in site.consumer]
-    used = [s for s in leaving if _counts_as_used(site, s)]
+    used = [s for s in leaving if site.counts_as_used(s)]
     lost = [s for s in leaving if s not in used]
     columns: dict[str, FloatArray] = {
         "t0_degc": ambient.live.temperature - 273.15,
@@ -368,8 +368,3 @@ def _ledger_table(
     flag = np.bitwise_or.reduce(np.stack([a.flag for a in accounted]), axis=0) & ~np.int32(own)
     ordered = {name: columns[name] for name in LEDGER_COLUMNS}
     return _table(None, grid, ordered, np.asarray(flag | ambient.flag, dtype=np.int32), n)
-
-
-def _counts_as_used(site: Site, stream_id: str) -> bool:
-    stream = site.streams[stream_id]
-    return (stream.counts_as or ("used" if stream.medium == "power" else "lost")) == "used"

@@ -73,6 +73,11 @@ class Site:
         """The site's short name, in every row of the store."""
         return self.file.site.id
 
+    def counts_as_used(self, stream_id: str) -> bool:
+        """Whether a stream that leaves the site counts as used (else as lost)."""
+        stream = self.streams[stream_id]
+        return (stream.counts_as or ("used" if stream.medium == "power" else "lost")) == "used"
+
     def used_tags(self) -> dict[str, Tag]:
         """Tags that some stream, equipment or the dead state reads, in the order of the file."""
         used = {reference.tag for _, _, reference, _ in _references(self) if reference.tag}

@@ -1,0 +1,178 @@
+"""The shift report: what changed, what it costs, what to do."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+import dashboards
+from dashboards.views import LedgerLine, ShiftView
+from monitor.reports.gather import Gathered
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+    from pathlib import Path
+
+    from dashboards.views import AlarmRow, EquipmentRow, QualityRow
+    from monitor.site.load import Site
+    from monitor.site.shifts import Span
+    from monitor.store.site import SiteStore
+
+__all__ = ["shift_text", "shift_view", "write_shift_report"]
+
+_WEEK = 7
+# A change of destroyed exergy under this share of the week's mean is not worth a sentence.
+_NOTICEABLE = 0.03
+_POOR = 0.05
+
+
+def write_shift_report(
+    site: Site, store: SiteStore, span: Span, now: pd.Timestamp, folder: Path
+) -> Path:
+    """Write one shift's report and return its path.
+
+    Raises:
+        PageError: the folder cannot be written.
+    """
+    view = shift_view(site, store, span, now)
+    dashboards.write_assets(folder)
+    return dashboards.write_shift(view, folder)
+
+
+def shift_view(site: Site, store: SiteStore, span: Span, now: pd.Timestamp) -> ShiftView:
+    """Gather the report of one shift."""
+    start = pd.Timestamp(span.start, unit="s", tz="UTC")
+    end = pd.Timestamp(span.end, unit="s", tz="UTC")
+    gathered = Gathered(site, store, start, end, now)
+    ledger = gathered.ledger(start, end)
+    previous = _previous(gathered, span)
+    rows = gathered.equipment_rows()
+    alarms = gathered.alarms_between(start, end)
+    quality = tuple(q for q in gathered.quality(start, end) if _worth_a_look(q))
+    # A control chart needs its history; the shift alone would show no point of it.
+    history = replace(gathered, start=end - pd.Timedelta(days=14))
+    return ShiftView(
+        context=gathered.context,
+        shift_name=span.name,
+        summary=_summary(gathered, ledger, previous, rows, alarms, quality),
+        ledger=ledger,
+        previous_ledger=previous,
+        equipment=rows,
+        conditions=history.condition_rows(),
+        alarms=alarms,
+        events=gathered.events(start, end),
+        quality=quality,
+        ledger_trend=gathered.ledger_trend(start, end),
+        currency=site.file.economics.currency,
+    )
+
+
+def _worth_a_look(row: QualityRow) -> bool:
+    return row.bad + row.missing + row.uncertain > _POOR
+
+
+def _previous(gathered: Gathered, span: Span) -> tuple[LedgerLine, ...]:
+    """Mean ledger of the same shift on the seven days before."""
+    spans = gathered.site.calendar.spans(span.start - (_WEEK + 1) * 86400, span.start)
+    same = [s for s in spans if s.name == span.name][-_WEEK:]
+    ledgers = [
+        gathered.ledger(
+            pd.Timestamp(s.start, unit="s", tz="UTC"), pd.Timestamp(s.end, unit="s", tz="UTC")
+        )
+        for s in same
+    ]
+    known = [lines for lines in ledgers if np.isfinite(lines[0].live_kw)]
+    return tuple(_mean_line(lines) for lines in zip(*known, strict=True))
+
+
+def _mean_line(lines: Sequence[LedgerLine]) -> LedgerLine:
+    paid = lines[0].cost is not None
+
+    def mean(values: Sequence[float | None]) -> float:
+        return float(np.nanmean([np.nan if v is None else v for v in values]))
+
+    return LedgerLine(
+        key=lines[0].key,
+        label=lines[0].label,
+        live_kw=mean([x.live_kw for x in lines]),
+        reference_kw=mean([x.reference_kw for x in lines]),
+        live_mwh=mean([x.live_mwh for x in lines]),
+        cost=mean([x.cost for x in lines]) if paid else None,
+        co2_t=mean([x.co2_t for x in lines]) if paid else None,
+    )
+
+
+def _summary(
+    gathered: Gathered,
+    ledger: tuple[LedgerLine, ...],
+    previous: tuple[LedgerLine, ...],
+    rows: tuple[EquipmentRow, ...],
+    alarms: tuple[AlarmRow, ...],
+    quality: tuple[QualityRow, ...],
+) -> tuple[str, ...]:
+    lines = {line.key: line for line in ledger}
+    if not np.isfinite(lines["destroyed"].live_kw):
+        return ("There are no figures for this shift: look at the sources with `lostwork check`.",)
+    sentences = [_destroyed_sentence(gathered, lines["destroyed"], previous)]
+    if rows and np.isfinite(rows[0].destroyed_kw):
+        top = rows[0]
+        sentences.append(
+            f"Most of it in {top.name}: {top.destroyed_kw:,.0f} kW, {top.share:.0%} of the site's."
+        )
+    sentences += _alarm_sentences(alarms)
+    if quality:
+        named = ", ".join(q.tag for q in quality[:3])
+        more = f" and {len(quality) - 3} more" if len(quality) > 3 else ""  # noqa: PLR2004
+        sentences.append(f"Look at the readings of {named}{more}: many are bad or missing.")
+    return tuple(sentences)
+
+
+def _destroyed_sentence(
+    gathered: Gathered, now: LedgerLine, previous: tuple[LedgerLine, ...]
+) -> str:
+    currency = gathered.site.file.economics.currency
+    cost = "" if now.cost is None else f", worth {now.cost:,.0f} {currency}"
+    base = f"The site destroyed {now.live_mwh:,.0f} MWh of exergy ({now.live_kw:,.0f} kW){cost}"
+    before = next((line for line in previous if line.key == "destroyed"), None)
+    if before is None:
+        return f"{base}; there is no week before to compare with."
+    live = now.live_kw / before.live_kw - 1.0
+    reference = now.reference_kw / before.reference_kw - 1.0
+    if abs(live) < _NOTICEABLE:
+        return f"{base}: as in the same shifts of the week before."
+    word = "more" if live > 0 else "less"
+    if abs(reference) < _NOTICEABLE:
+        why = "at the fixed reference dead state it is unchanged, so this is the weather"
+    else:
+        why = (
+            f"{abs(reference):.0%} {'more' if reference > 0 else 'less'} with the weather taken out"
+        )
+    return f"{base}: {abs(live):.0%} {word} than the same shifts of the week before; {why}."
+
+
+def _alarm_sentences(alarms: tuple[AlarmRow, ...]) -> list[str]:
+    active = [a for a in alarms if a.cleared is None]
+    if not active:
+        return ["No alarm is open."]
+    sentences = [a.message for a in active[:3]]
+    if len(active) > 3:  # noqa: PLR2004
+        sentences.append(f"{len(active) - 3} more alarms are open.")
+    return sentences
+
+
+def shift_text(view: ShiftView) -> str:
+    """The report for a terminal."""
+    head = (
+        f"{view.context.site_name}, {view.shift_name} shift, "
+        f"{view.context.start:%Y-%m-%d %H:%M} to {view.context.end:%H:%M} {view.context.time_zone}"
+    )
+    before = {line.key: line for line in view.previous_ledger}
+    width = max(len(line.label) for line in view.ledger)
+    table = [f"{'':{width}}  {'kW':>10}  {'MWh':>9}  {'week before, kW':>15}"]
+    for line in view.ledger:
+        past = f"{before[line.key].live_kw:15,.0f}" if line.key in before else f"{'-':>15}"
+        table.append(f"{line.label:{width}}  {line.live_kw:10,.0f}  {line.live_mwh:9,.1f}  {past}")
+    return "\n".join([head, "", *view.summary, "", *table])
