@@ -129,8 +129,8 @@ def _design(gathered: Gathered, figure: Figure) -> str:
     days = drift.false_alarm_every / 86400.0
     return (
         f"EWMA with weight {drift.weight:g}; limits designed for one false alarm in {days:.0f} "
-        "days of judged hours (average run length, Crowder 1987), widened for autocorrelation and never "
-        f"narrower than {figure.smallest_change:g} {figure.unit}."
+        "days of judged hours (average run length, Crowder 1987), widened for autocorrelation "
+        f"and never narrower than {figure.smallest_change:g} {figure.unit}."
     )
 
 

@@ -135,6 +135,12 @@ def live_ambient(
 
 
 def _trailing_sum(values: FloatArray, cells: int) -> FloatArray:
-    total = np.concatenate([np.zeros(1), np.cumsum(values)])
-    first = np.maximum(np.arange(values.size) + 1 - cells, 0)
-    return np.asarray(total[1:] - total[first])
+    """Sum over the last ``cells`` values, this one included.
+
+    Summed offset by offset and not as a difference of running totals, so that a cell's sum is the
+    same to the last bit wherever the series begins.
+    """
+    total = np.zeros_like(values)
+    for offset in range(min(cells, values.size)):
+        total[offset:] += values[: values.size - offset]
+    return total
