@@ -26,6 +26,7 @@ __all__ = [
     "REGION_5_TEMPERATURE",
     "VOLUME",
     "evaluate",
+    "evaluate_column",
     "evaluate_off_saturation",
 ]
 
@@ -41,6 +42,7 @@ LOWEST_PRESSURE = 611.213
 """CoolProp refuses anything below the saturation pressure at 0 degC, though IF97 would not."""
 
 _ON_SATURATION = 2  # the batch call's status for "within 3.3e-5 (relative) of p_sat"
+_ALL = (ENTHALPY, ENTROPY, VOLUME)
 _local = threading.local()
 
 
@@ -58,9 +60,10 @@ def _state() -> Any:  # noqa: ANN401
 
 
 @cache
-def _outputs() -> Any:  # noqa: ANN401
+def _outputs(columns: tuple[int, ...]) -> Any:  # noqa: ANN401
     coolprop = _coolprop()
-    return np.array([coolprop.iHmass, coolprop.iSmass, coolprop.iDmass], dtype=np.int32)
+    keys = (coolprop.iHmass, coolprop.iSmass, coolprop.iDmass)
+    return np.array([keys[column] for column in columns], dtype=np.int32)
 
 
 def evaluate(pressure: FloatArray, temperature: FloatArray) -> FloatArray:
@@ -76,10 +79,14 @@ def evaluate(pressure: FloatArray, temperature: FloatArray) -> FloatArray:
     Returns:
         Shape (n, 3): h [J/kg], s [J/(kg K)], v [m3/kg]; NaN outside the formulation.
     """
-    coolprop = _coolprop()
     # Imposing a phase only lifts the refusal beside the saturation line: measured, it changes no
     # value on either side of it nor in region 3.
-    return _batch(pressure, temperature, coolprop.iphase_gas)[0]
+    return _batch(pressure, temperature, _coolprop().iphase_gas, _ALL)[0]
+
+
+def evaluate_column(pressure: FloatArray, temperature: FloatArray, column: int) -> FloatArray:
+    """One column of `evaluate`, shape (n,), at less than half of its cost."""
+    return _batch(pressure, temperature, _coolprop().iphase_gas, (column,))[0][:, 0]
 
 
 def evaluate_off_saturation(
@@ -91,13 +98,15 @@ def evaluate_off_saturation(
         The values as in `evaluate`, NaN on saturation; and the mask, shape (n,), of points on
         saturation: p within 3.3e-5 (relative) of p_sat(T), which is 0.5 to 2.7 mK of T.
     """
-    values, status = _batch(pressure, temperature, _coolprop().iphase_not_imposed)
+    values, status = _batch(pressure, temperature, _coolprop().iphase_not_imposed, _ALL)
     return values, status == _ON_SATURATION
 
 
-def _batch(pressure: FloatArray, temperature: FloatArray, phase: int) -> tuple[FloatArray, Any]:
+def _batch(
+    pressure: FloatArray, temperature: FloatArray, phase: int, columns: tuple[int, ...]
+) -> tuple[FloatArray, Any]:
     coolprop = _coolprop()
-    values = np.full((pressure.size, 3), np.nan)
+    values = np.full((pressure.size, len(columns)), np.nan)
     status = np.zeros(pressure.size, dtype=np.int32)
     if pressure.size == 0:
         return values, status
@@ -105,7 +114,7 @@ def _batch(pressure: FloatArray, temperature: FloatArray, phase: int) -> tuple[F
         coolprop.PT_INPUTS,
         np.ascontiguousarray(pressure),
         np.ascontiguousarray(temperature),
-        _outputs(),
+        _outputs(columns),
         values,
         status,
         phase,
@@ -113,17 +122,21 @@ def _batch(pressure: FloatArray, temperature: FloatArray, phase: int) -> tuple[F
     hot = (temperature > HIGHEST_TEMPERATURE) & (temperature <= REGION_5_TEMPERATURE)
     if hot.any():
         hot &= (pressure >= LOWEST_PRESSURE) & (pressure <= REGION_5_PRESSURE)
-        values[hot] = _region_5(pressure[hot], temperature[hot])
-    np.divide(1.0, values[:, VOLUME], out=values[:, VOLUME])
+        values[hot] = _region_5(pressure[hot], temperature[hot], columns)
+    if columns[-1] == VOLUME:
+        np.divide(1.0, values[:, -1], out=values[:, -1])
     return values, status
 
 
-def _region_5(pressure: FloatArray, temperature: FloatArray) -> FloatArray:
+def _region_5(
+    pressure: FloatArray, temperature: FloatArray, columns: tuple[int, ...]
+) -> FloatArray:
     # The batch call stops at 800 degC; PropsSI knows region 5. It marks a failure with inf.
     props = _coolprop().CoolProp.PropsSI
-    values = np.full((pressure.size, 3), np.nan)
+    values = np.full((pressure.size, len(columns)), np.nan)
     if pressure.size:
-        for column, name in enumerate(("Hmass", "Smass", "Dmass")):
-            values[:, column] = props(name, "P", pressure, "T", temperature, "IF97::Water")
+        for place, column in enumerate(columns):
+            name = ("Hmass", "Smass", "Dmass")[column]
+            values[:, place] = props(name, "P", pressure, "T", temperature, "IF97::Water")
         values[~np.isfinite(values).all(axis=1)] = np.nan
     return values

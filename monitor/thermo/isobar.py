@@ -87,7 +87,7 @@ def _estimate(*, vapour: bool, column: int) -> _Estimate:
         ends = t_sat * (1.0 + SIDE_STEP), np.full_like(t_sat, engine.HIGHEST_TEMPERATURE)
     else:
         ends = np.full_like(t_sat, engine.LOWEST_TEMPERATURE), t_sat * (1.0 - SIDE_STEP)
-    low, high = (engine.evaluate(pressure, end)[:, column] for end in ends)
+    low, high = (engine.evaluate_column(pressure, end, column) for end in ends)
     target = low[:, None] + (high - low)[:, None] * 0.5 * (y + 1.0)
     p, first, last = (np.repeat(v, y.size) for v in (pressure, *ends))
     temperature = _bracketed(p, first, last, target.ravel(), column).reshape(target.shape)
@@ -191,8 +191,8 @@ def _bracketed(
     from scipy.optimize.elementwise import find_root  # noqa: PLC0415
 
     def excess(temperature: FloatArray, p: FloatArray, wanted: FloatArray) -> FloatArray:
-        found = engine.evaluate(p.ravel(), temperature.ravel())[:, column].reshape(p.shape)
-        return np.asarray(found - wanted)
+        found = engine.evaluate_column(p.ravel(), temperature.ravel(), column)
+        return np.asarray(found.reshape(p.shape) - wanted)
 
     ends = excess(low, pressure, target), excess(high, pressure, target)
     between = (ends[0] <= 0.0) & (ends[1] >= 0.0)

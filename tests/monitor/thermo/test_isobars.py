@@ -1,0 +1,138 @@
+"""States from p,h and p,s: they come back through the forward equations, wet and dry."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from monitor.thermo.water import (
+    saturated,
+    saturation_temperature,
+    state_ph,
+    state_ps,
+    state_pt,
+    state_px,
+)
+
+PRESSURES = st.floats(np.log(650.0), np.log(16.5e6)).map(np.exp)
+FRACTIONS = st.floats(0.0, 1.0)
+
+
+@given(PRESSURES, st.floats(275.0, 1073.0))
+@settings(deadline=None, max_examples=300)
+def test_a_single_phase_state_comes_back_from_its_enthalpy_and_from_its_entropy(p, temperature):
+    state = state_pt(p, temperature)
+    if not state.valid:
+        return
+    from_h, from_s = state_ph(p, state.enthalpy), state_ps(p, state.entropy)
+    # 1e-3 J/kg is the stated consistency; with cp of 0.9 to 20 kJ/(kg K) below region 3, 1e-6 K.
+    assert from_h.temperature == pytest.approx(temperature, abs=1e-6)
+    assert from_s.temperature == pytest.approx(temperature, abs=1e-6)
+    assert from_s.enthalpy == pytest.approx(state.enthalpy, abs=1e-3)
+    assert from_h.entropy == pytest.approx(state.entropy, abs=1e-5)
+    assert from_h.volume == pytest.approx(state.volume, rel=1e-6)
+    assert from_s.volume == pytest.approx(state.volume, rel=1e-6)
+    assert from_h.dryness == from_s.dryness == state.dryness
+
+
+@given(PRESSURES, FRACTIONS)
+@settings(deadline=None, max_examples=300)
+def test_a_wet_state_comes_back_from_its_enthalpy_and_from_its_entropy(p, dryness):
+    wet = state_px(p, dryness)
+    for again in (state_ph(p, wet.enthalpy), state_ps(p, wet.entropy)):
+        assert again.valid
+        assert again.temperature == pytest.approx(saturation_temperature(p), abs=1e-6)
+        assert again.dryness == pytest.approx(dryness, abs=1e-9)
+        assert again.enthalpy == pytest.approx(wet.enthalpy, abs=1e-3)
+        assert again.entropy == pytest.approx(wet.entropy, abs=1e-6)
+        assert again.volume == pytest.approx(wet.volume, rel=1e-9)
+
+
+@given(st.floats(16.53e6, 100e6), st.floats(275.0, 1073.0))
+@settings(deadline=None, max_examples=300)
+def test_entropy_comes_back_at_high_pressure(p, temperature):
+    state = state_pt(p, temperature)
+    if not state.valid:
+        return
+    end = state_ps(p, state.entropy)
+    assert end.valid
+    assert end.entropy == state.entropy
+    # Regions 1, 2 and 3 meet with small jumps; within one, at most 0.03 kJ/kg near critical.
+    assert end.enthalpy == pytest.approx(state.enthalpy, abs=30.0)
+
+
+def test_a_dense_sweep_of_the_plant_range_is_consistent_with_the_forward_equations():
+    rng = np.random.default_rng(3)
+    pressure = np.exp(rng.uniform(np.log(650.0), np.log(16.5e6), 20_000))
+    saturation = saturation_temperature(pressure)
+    near = rng.uniform(0.0, 1.0, pressure.size) ** 3  # crowd the points near saturation
+    for temperature in (
+        saturation + 0.01 + near * (1073.0 - saturation),
+        saturation - 0.01 - near * (saturation - 273.17),
+    ):
+        state = state_pt(pressure, temperature)
+        for found in (state_ps(pressure, state.entropy), state_ph(pressure, state.enthalpy)):
+            ok = state.valid
+            assert np.array_equal(found.valid[ok], ok[ok])
+            forward = state_pt(pressure, found.temperature)
+            assert np.max(np.abs(forward.enthalpy - state.enthalpy)[ok]) < 1e-3
+            assert np.max(np.abs(forward.enthalpy - found.enthalpy)[ok]) < 1e-3
+            assert np.max(np.abs(forward.volume / found.volume - 1.0)[ok]) < 1e-6
+
+
+@pytest.mark.parametrize("pressure", [1e3, 1e5, 1e6, 1e7, 16.6e6, 20e6])
+def test_the_saturation_limits_belong_to_the_wet_region(pressure):
+    liquid, vapour = saturated(pressure)
+    assert state_ph(pressure, liquid.enthalpy).dryness == 0.0
+    assert state_ps(pressure, vapour.entropy).dryness == 1.0
+    beyond = state_ph(pressure, vapour.enthalpy + 1.0)
+    assert beyond.valid
+    assert beyond.dryness == 1.0
+    assert 0.0 < beyond.temperature - vapour.temperature < 0.01
+    below = state_ps(pressure, liquid.entropy - 0.01)
+    assert below.valid
+    assert below.dryness == 0.0
+    assert 0.0 < liquid.temperature - below.temperature < 0.01
+
+
+def test_above_800_degc_the_high_temperature_region_takes_over():
+    state = state_pt(2e6, [1050.0, 1073.1, 1073.2, 1100.0, 1500.0, 2200.0])
+    assert state_ph(2e6, state.enthalpy).temperature == pytest.approx(state.temperature, abs=1e-6)
+    assert state_ps(2e6, state.entropy).temperature == pytest.approx(state.temperature, abs=1e-6)
+
+
+def test_supercritical_states_come_back():
+    # Steam of an ultra-supercritical boiler, and the fluid on its way there.
+    state = state_pt(30e6, [400.0, 600.0, 680.0, 720.0, 873.15])
+    again = state_ph(30e6, state.enthalpy)
+    assert again.temperature == pytest.approx(state.temperature, abs=1e-4)
+    np.testing.assert_array_equal(again.dryness, [0.0, 0.0, np.nan, np.nan, np.nan])
+
+
+@given(
+    st.floats(np.log(2e4), np.log(16e6)).map(np.exp),
+    st.floats(300.0, 1000.0),
+    st.floats(0.05, 1.0),
+)
+@settings(deadline=None, max_examples=300)
+def test_throttling_never_loses_entropy(p, temperature, ratio):
+    start = state_pt(p, temperature)
+    end = state_ph(p * ratio, start.enthalpy)
+    if start.valid and end.valid:
+        # Where IF97's regions meet, s has a jump of under 2e-4 J/(kg K).
+        assert end.entropy - start.entropy > -1e-3
+
+
+@given(
+    st.floats(np.log(1e5), np.log(16e6)).map(np.exp),
+    st.floats(450.0, 1000.0),
+    st.floats(0.002, 1.0),
+)
+@settings(deadline=None, max_examples=300)
+def test_an_isentropic_expansion_never_gains_enthalpy(p, temperature, ratio):
+    start = state_pt(p, temperature)
+    end = state_ps(max(p * ratio, 1e3), start.entropy)
+    if start.valid and end.valid:
+        assert end.enthalpy <= start.enthalpy + 1e-3
