@@ -138,8 +138,9 @@ class CsvSource:
         return rows
 
     def _of_tags(self, rows: Rows, names: Sequence[str], start: int, end: int) -> Rows:
-        position = np.full(len(self._book.names) + 1, -1, dtype=np.int32)
-        position[self._book.codes(names)] = np.arange(len(names), dtype=np.int32)
+        asked = self._book.codes(names)  # gives the names that no row has their codes
+        position = np.full(len(self._book.names), -1, dtype=np.int32)
+        position[asked] = np.arange(len(names), dtype=np.int32)
         tag = position[rows.tag]
         rows = Rows(tag, rows.time, rows.value, rows.quality, rows.doubled_at, rows.doubled_second)
         keep = (tag >= 0) & (rows.time >= start) & (rows.time < end)

@@ -1,0 +1,143 @@
+"""The time column of a table: how a window is asked for, and how times are read."""
+
+from __future__ import annotations
+
+import datetime as dt
+import re
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import pandas as pd
+import pyarrow as pa
+from sqlalchemy import select
+
+from connectors.base import ConnectorError
+from connectors.times import DOUBLED_HOUR_REACH, TimeReader
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from sqlalchemy import ColumnElement, Connection
+
+    from connectors.base import Window
+    from connectors.sql_options import SqlOptions
+    from connectors.times import ParsedTimes
+
+__all__ = ["SqlTimes"]
+
+_REACH = pd.Timedelta(microseconds=DOUBLED_HOUR_REACH)
+_FARTHEST_OFFSET = pd.Timedelta(hours=26)
+_PER_SECOND = {"epoch_s": 1, "epoch_ms": 1_000}
+_MINUTE = len("2026-01-31T06:00")
+_DATE = len("2026-01-31")
+_ISO = re.compile(r"\d{4}-\d{2}-\d{2}([T ]|$)")
+
+
+@dataclass(frozen=True)
+class SqlTimes:
+    """A time column.
+
+    Attributes:
+        column: the column.
+        name: its name, for messages.
+        kind: ``zoned``, ``local``, ``text_iso``, ``epoch_s`` or ``epoch_ms``.
+        reader: reads texts and local times.
+        zone: the zone of times without an offset.
+    """
+
+    column: Any
+    name: str
+    kind: str
+    reader: TimeReader
+    zone: str
+
+    @classmethod
+    def of(cls, column: Any, options: SqlOptions, *, is_text_store: bool) -> SqlTimes:  # noqa: ANN401
+        """Describe a column as it was found in the database.
+
+        Args:
+            column: the reflected column.
+            options: what the site file says.
+            is_text_store: the database keeps times as text whatever the column's type (SQLite).
+        """
+        kind: str = options.time_kind
+        if kind == "timestamp":
+            zoned = bool(getattr(column.type, "timezone", False)) or "OFFSET" in repr(column.type)
+            kind = "zoned" if zoned else "local"
+            if is_text_store:
+                kind = "text_iso"
+        return cls(
+            column=column,
+            name=options.time_column,
+            kind=kind,
+            reader=TimeReader(kind if kind in _PER_SECOND else "iso", options.time_zone),
+            zone=options.time_zone,
+        )
+
+    def condition(
+        self, connection: Connection, window: Window
+    ) -> tuple[ColumnElement[bool], ColumnElement[bool]]:
+        """Return what a row must fulfil to be in the window, or close to it.
+
+        Local times and texts are asked for with a margin: the exact cut is made on UTC afterwards.
+        """
+        if self.kind == "zoned":
+            return self._between(
+                window.start.tz_convert("UTC").to_pydatetime(),
+                window.end.tz_convert("UTC").to_pydatetime(),
+            )
+        if self.kind in _PER_SECOND:
+            scale = _PER_SECOND[self.kind]
+            bounds = [int(np.ceil(end.timestamp() * scale)) for end in (window.start, window.end)]
+            return self._between(*bounds)
+        start, end = self._wall_clock(window)
+        if self.kind == "local":
+            return self._between(start.to_pydatetime(), end.to_pydatetime())
+        return self._text_between(connection, start, end)
+
+    def parse(self, cells: Sequence[Any]) -> ParsedTimes:
+        """Read fetched cells; what cannot be read becomes `NO_TIME`."""
+        codes, distinct = pd.factorize(pd.Series(cells, dtype=object), use_na_sentinel=False)
+        at = codes.astype(np.int32)
+        if self.kind in {"zoned", "local"}:
+            moments = pd.Series(pd.to_datetime(list(distinct), utc=self.kind == "zoned"))
+            time = pd.DatetimeIndex(moments).as_unit("us").asi8
+            read = self.reader.universal if self.kind == "zoned" else self.reader.local
+            return read(time).take(at)
+        texts = pa.array(["" if cell is None else str(cell) for cell in distinct], type=pa.string())
+        return self.reader.read(texts).take(at)
+
+    def _wall_clock(self, window: Window) -> tuple[pd.Timestamp, pd.Timestamp]:
+        """Return local bounds that hold the window, both passes of a doubled hour included."""
+        start, end = window.start, window.end
+        around = [self.reader.wall_clock(t) - t.tz_convert("UTC").tz_localize(None)
+                  for t in (start - _REACH, end + _REACH)]  # fmt: skip
+        margin = _REACH if around[0] != around[1] else pd.Timedelta(0)
+        return self.reader.wall_clock(start) - margin, self.reader.wall_clock(end) + margin
+
+    def _text_between(
+        self, connection: Connection, start: pd.Timestamp, end: pd.Timestamp
+    ) -> tuple[ColumnElement[bool], ColumnElement[bool]]:
+        """Compare texts as texts, written as the column's own are."""
+        example = connection.execute(
+            select(self.column).where(self.column.is_not(None)).limit(1)
+        ).scalar()
+        text = "2026-01-31T06:00" if example is None else str(example)
+        if not _ISO.match(text):
+            raise ConnectorError(
+                f"column '{self.name}' holds times such as {text[:40]!r}, which are no ISO "
+                "texts; correct the source's time_kind (epoch_s and epoch_ms are for numbers)"
+            )
+        separator = text[_DATE] if len(text) > _DATE else "T"
+        plain = text[_DATE:].rstrip("Zz").replace("+00:00", "")
+        if "+" in plain or "-" in plain or (self.zone != "UTC" and plain != text[_DATE:]):
+            start, end = start - _FARTHEST_OFFSET, end + _FARTHEST_OFFSET
+        low = start.floor("min").isoformat(sep=separator)[:_MINUTE]
+        high = (end.ceil("min") + dt.timedelta(minutes=1)).isoformat(sep=separator)[:_MINUTE]
+        return self._between(low, high)
+
+    def _between(
+        self, low: object, high: object
+    ) -> tuple[ColumnElement[bool], ColumnElement[bool]]:
+        return self.column >= low, self.column < high
