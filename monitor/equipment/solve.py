@@ -101,7 +101,9 @@ def _step_at(item: Item, open_unknowns: set[Unknown], free: set[str]) -> Step | 
         return Step(item.id, "mass", flows)
     if "energy" in free and not flows and len(others) == 1:
         return Step(item.id, "energy", others)
-    if free == {"mass", "energy"} and len(flows) == 2 and not others:  # noqa: PLR2004
+    # Two flows alone would only be found to be zero: something at the equipment must be known.
+    enough = len(streams) > len(flows)
+    if free == {"mass", "energy"} and len(flows) == 2 and not others and enough:  # noqa: PLR2004
         return Step(item.id, "mass and energy", flows)
     return None
 

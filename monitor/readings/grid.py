@@ -97,9 +97,13 @@ def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: floa
     lasted = np.where(index[:-1] >= 0, np.maximum(lasted, 0.0), 0.0)
     first = np.searchsorted(points, edges[:-1])
     covered = np.add.reduceat(lasted, first)
-    # Relative to one reading of the cell: a constant signal's mean is that constant exactly.
-    base = values[known[:-1]][first]
-    above = (values[known[:-1]] - np.repeat(base, np.diff(np.append(first, len(lasted))))) * lasted
+    # Relative to the first reading that counts in the cell: a constant signal's mean is that
+    # constant exactly, and an expired reading leaves no trace in the last bit.
+    value = values[known[:-1]]
+    place = np.arange(len(lasted))
+    counting = np.minimum.reduceat(np.where(lasted > 0, place, len(lasted) - 1), first)
+    base = value[counting]
+    above = (value - np.repeat(base, np.diff(np.append(first, len(lasted))))) * lasted
     with np.errstate(divide="ignore", invalid="ignore"):
         mean = np.where(covered > 0, base + np.add.reduceat(above, first) / covered, np.nan)
     at = np.maximum(np.searchsorted(seconds, edges, side="right") - 1, 0)

@@ -26,6 +26,7 @@ from monitor.site.models import Reference, SiteFile, Stream, Tag
 from monitor.site.shifts import ShiftCalendar
 from monitor.site.units import PressureDatum, Quantity
 from monitor.thermo.fuels import exergy_ratio
+from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
     from collections.abc import Iterable, Iterator, Mapping
@@ -33,6 +34,8 @@ if TYPE_CHECKING:
 
 __all__ = ["Site", "load_site"]
 
+# Two fixed numbers that come this close to the saturation line [K] were meant to lie on it.
+_SATURATION_ERROR = 0.5
 _VARIABLE = re.compile(r"\$\{([A-Za-z_][A-Za-z0-9_]*)\}")
 
 
@@ -464,6 +467,11 @@ def _check_water(stream: Stream) -> Iterator[tuple[str, str]]:
     for key in ("power", "heat", "lower_heating_value", "exergy_ratio"):
         if getattr(stream, key) is not None:
             yield key, "does not belong to a stream of water or steam"
+    yield from _check_state(stream)
+
+
+def _check_state(stream: Stream) -> Iterator[tuple[str, str]]:
+    """What a water stream says must fix its state, and not say it twice."""
     p, t, x = stream.pressure, stream.temperature, stream.dryness
     fixed_side = x is not None or stream.phase is not None
     if stream.enthalpy is not None:
@@ -472,14 +480,13 @@ def _check_water(stream: Stream) -> Iterator[tuple[str, str]]:
                 "enthalpy",
                 "'balance' goes with a pressure alone: leave out temperature, dryness and phase",
             )
-        return
-    if p is None and t is None:
+    elif p is None and t is None:
         yield "pressure", "is missing: a stream needs pressure and temperature, or one with dryness"
     elif p is None or t is None:
         if not fixed_side:
-            given = "temperature" if p is None else "pressure"
+            given, other = ("temperature", "pressure") if p is None else ("pressure", "temperature")
             hint = (
-                f"alone does not fix the state; add {'pressure' if p is None else 'temperature'}, "
+                f"alone does not fix the state; add {other}, "
                 "dryness = 0.97, phase = 'vapour' or 'liquid', or enthalpy = 'balance'"
             )
             yield given, hint
@@ -489,6 +496,21 @@ def _check_water(stream: Stream) -> Iterator[tuple[str, str]]:
             "alone gives the temperature, so leave temperature out"
         )
         yield "dryness", hint
+    elif not fixed_side:
+        yield from _check_saturation(p, t)
+
+
+def _check_saturation(p: Reference, t: Reference) -> Iterator[tuple[str, str]]:
+    """Two fixed numbers on the saturation line fix no state; measured ones are flagged later."""
+    if p.fixed is None or t.fixed is None:
+        return
+    boiling = float(saturation_temperature(p.fixed))
+    if abs(t.fixed - boiling) < _SATURATION_ERROR:
+        hint = (
+            f"lies at saturation ({boiling - 273.15:.2f} degC at this pressure), where p and T do "
+            "not fix the state: give a dryness, or phase = 'vapour' or 'liquid', instead"
+        )
+        yield "temperature", hint
 
 
 def _check_fuel(stream: Stream) -> Iterator[tuple[str, str]]:

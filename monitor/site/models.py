@@ -215,18 +215,30 @@ class Tag(_Table):
 
 
 def parse_uncertainty(text: str, unit: Unit) -> Uncertainty:
-    """Read '0.25 % range', '1 % reading' or '1.0 K' into a standard uncertainty."""
+    """Read '0.25 % range', '1 % reading' or '1.0 K' into a standard uncertainty.
+
+    Raises:
+        UnitError: it cannot be read, or is in a unit unlike the tag's.
+    """
     words = text.split()
-    if words and words[-1] in {"range", "reading"}:
-        share = quantity(" ".join(words[:-1]), Quantity.FRACTION)
-        return Uncertainty(amount=share, basis="range" if words[-1] == "range" else "reading")
-    split = split_number(text)
-    if split is None:
-        raise UnitError(f"'{text}' is not an uncertainty; write '0.25 % range' or '1.0 K'")
-    own = parse_unit(split[1])
-    if own.quantity is not unit.quantity:
+    share_of = words[-1] if words else ""
+    number = " ".join(words[:-1]) if share_of in {"range", "reading"} else text
+    try:
+        split = split_number(number)
+        own = None if split is None else parse_unit(split[1])
+    except UnitError:
+        split = own = None
+    if split is None or own is None:
+        raise UnitError(
+            f"'{text}' is not an uncertainty; write '0.25 % range', '1 % reading' or '1.0 K'"
+        )
+    expected = Quantity.FRACTION if number != text else unit.quantity
+    if own.quantity is not expected:
         raise UnitError(f"uncertainty '{text}' is not in a unit like the tag's '{unit.text}'")
-    return Uncertainty(amount=split[0] * own.scale, basis="absolute")
+    amount = split[0] * own.scale
+    if share_of == "range":
+        return Uncertainty(amount=amount, basis="range")
+    return Uncertainty(amount=amount, basis="reading" if share_of == "reading" else "absolute")
 
 
 class Stream(_Table):
