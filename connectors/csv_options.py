@@ -30,10 +30,14 @@ def _encoding(name: str) -> str:
 
 def _one_character(value: object) -> object:
     named = {"tab": "\t", "\\t": "\t", "space": " "}
-    return named.get(value, value) if isinstance(value, str) else value
+    if not isinstance(value, str):
+        return value
+    if len(named.get(value, value)) > 1:
+        raise ValueError(f"{value!r}: write one character, or 'tab' or 'space'")
+    return named.get(value, value)
 
 
-Mark = Annotated[str, BeforeValidator(_one_character), Field(min_length=1, max_length=1)]
+Mark = Annotated[str, BeforeValidator(_one_character), Field(min_length=1)]
 
 
 class CsvOptions(QualityOptions):
@@ -73,7 +77,7 @@ class CsvOptions(QualityOptions):
     )
     delimiter: Mark = Field(default=",", description="Between cells; 'tab' for a tabulator.")
     decimal: Mark = Field(default=".", description="The decimal mark.")
-    thousands: Annotated[str, BeforeValidator(_one_character), Field(max_length=1)] = Field(
+    thousands: Annotated[str, BeforeValidator(_one_character)] = Field(
         default="", description="The mark between groups of three digits, empty for none."
     )
     comment: str = Field(
