@@ -7,8 +7,9 @@ same code, and a file's bytes do not depend on how its rows were portioned.
 from __future__ import annotations
 
 import io
+import itertools
 import sqlite3
-from typing import TYPE_CHECKING, Protocol
+from typing import TYPE_CHECKING, Any, Protocol
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -17,7 +18,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from pyarrow import csv as arrow_csv
 
-from monitor.demo.readings import BAD, GOOD, NO_VALUE, UNCERTAIN, Column, Readings
+from monitor.demo.readings import BAD, NO_VALUE, Column, Readings
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -27,6 +28,7 @@ if TYPE_CHECKING:
 __all__ = ["LOCAL_ZONE", "Writer", "open_writers"]
 
 LOCAL_ZONE = ZoneInfo("Europe/Berlin")
+# In the order of the quality codes of `readings`.
 DCS_WORDS = ("Good", "Uncertain", "Bad", "Comm Fail")
 HISTORIAN_CODES = (192, 64, 0, 0)
 _NEEDED = arrow_csv.WriteOptions(include_header=False, quoting_style="none")
@@ -59,7 +61,7 @@ def _runs(keys: npt.NDArray[np.int64], first: int, last: int) -> list[tuple[int,
         return []
     cuts = np.flatnonzero(np.diff(keys[first:last])) + 1 + first
     edges = [first, *cuts.tolist(), last]
-    return list(zip(edges[:-1], edges[1:], strict=True))
+    return list(itertools.pairwise(edges))
 
 
 def _append(path: Path, head: str, table: pa.Table, options: arrow_csv.WriteOptions) -> None:
@@ -93,7 +95,7 @@ class _DcsFiles:
         before = before[-count - 1 : -1] if first else np.vstack([before[:1], before[:-1]])
         quality, present = self._stack("quality", first, last), self._stack("present", first, last)
         # A doubled row stands first with the value before, then as it should be.
-        times = present.astype(np.int64) + self._stack("doubled", first, last)
+        times = present.astype(np.int64) + self._stack("doubled", first, last).astype(np.int64)
         order = np.repeat(np.arange(count * tags), times.ravel())
         is_first = np.append(True, order[1:] != order[:-1])
         is_stale = is_first & (times.ravel()[order] > 1)
@@ -111,9 +113,9 @@ class _DcsFiles:
         )
         day = stamps[0][:10]
         _append(self._folder / f"{day}.csv", "time,tag,value,quality\n", table, _NEEDED)
-        return table.num_rows
+        return int(table.num_rows)
 
-    def _stack(self, name: str, first: int, last: int) -> npt.NDArray[np.generic]:
+    def _stack(self, name: str, first: int, last: int) -> npt.NDArray[Any]:
         return np.stack([getattr(c, name)[first:last] for c in self._columns], axis=1)
 
 
@@ -135,7 +137,7 @@ class _UtilitiesFiles:
         present = np.stack([c.present[first:last] for c in self._columns])
         filled = np.stack([_has_number(c, first, last) for c in self._columns])
         # The logger writes a row with blank cells, but no row at all in an outage.
-        rows = present.any(axis=0)
+        rows: npt.NDArray[np.bool_] = np.any(present, axis=0)
         stamps = self._local[first:last][rows].strftime("%d.%m.%Y %H:%M:%S")
         columns: dict[str, pa.Array] = {"Time": pa.array(stamps.astype(str).to_numpy(dtype=object))}
         for column, there in zip(self._columns, filled, strict=True):
@@ -212,7 +214,3 @@ def _has_number(column: Column, first: int, last: int) -> npt.NDArray[np.bool_]:
 def _iso(times: npt.NDArray[np.int64]) -> npt.NDArray[np.str_]:
     text = np.datetime_as_string(times.astype("datetime64[s]"), unit="s")
     return np.char.add(text, "Z")
-
-
-if (GOOD, UNCERTAIN, BAD, NO_VALUE) != tuple(range(len(DCS_WORDS))):  # pragma: no cover
-    raise AssertionError("the words above stand in the order of the quality codes")

@@ -73,10 +73,18 @@ def load(plan: DemoPlan, air: Weather) -> Load:
     wanted = throttle + let_down_62 + condensing
     boilers = lag(lag(wanted, 150.0, interval), 150.0, interval)
     bark = np.minimum(66.0 + _wander(plan, "bark", 3.0, 3 * 3600), 0.6 * boilers)
-    flows = (
-        board, heating, dispersion, condensing, boilers, bark, let_down_12, let_down_62, discharge,
-    )  # fmt: skip
-    return Load(*(flow * TONNE_PER_HOUR for flow in flows), stop=stop)
+    return Load(
+        board_machine=board * TONNE_PER_HOUR,
+        heating=heating * TONNE_PER_HOUR,
+        dispersion=dispersion * TONNE_PER_HOUR,
+        condensing_target=condensing * TONNE_PER_HOUR,
+        boiler_steam=boilers * TONNE_PER_HOUR,
+        bark_steam=bark * TONNE_PER_HOUR,
+        let_down_12=let_down_12 * TONNE_PER_HOUR,
+        let_down_62=let_down_62 * TONNE_PER_HOUR,
+        discharge=discharge * TONNE_PER_HOUR,
+        stop=stop,
+    )
 
 
 def _wander(plan: DemoPlan, topic: str, spread: float, time_constant: float) -> FloatArray:

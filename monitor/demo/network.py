@@ -1,8 +1,9 @@
 """One pass through the demo plant's steam network, from the boilers down and back.
 
 Flows downstream are demands, the boilers give what their master controller asks for, and the
-condensing turbine takes the rest. So mass and energy close exactly in every pass; what a pass takes
-from the one before is weak: how an efficiency follows its own flow, a heat loss its own temperature.
+condensing turbine takes the rest. So mass and energy close exactly in every pass; what a pass
+takes from the one before is weak: how an efficiency follows its own flow, a heat loss its own
+temperature.
 """
 
 from __future__ import annotations
@@ -29,8 +30,8 @@ if TYPE_CHECKING:
 __all__ = ["Lagged", "LowPressure", "MidPressure", "Network", "TopPressure", "run_network"]
 
 WATER_HEAT_CAPACITY = 4184.0
-COARSE_INTERVAL = 600.0
-COARSE_PASSES, FINE_PASSES = 3, 2
+COARSE_INTERVAL = 300.0
+COARSE_PASSES, FINE_PASSES = 3, 1
 
 
 @dataclass(frozen=True)
@@ -241,11 +242,7 @@ def _low(given: Given, last: Lagged, top: TopPressure, mid: MidPressure) -> LowP
     hotwell = state_pt(vacuum, saturation - 0.8)
     condensate = _pump(hotwell, np.full_like(vacuum, 6.0e5), DESIGN.pump_efficiency[1])
     feed_flow = (
-        given.load.boiler_steam
-        + sum(given.blowdown)
-        + top.spray
-        + mid.spray
-        + mid.vessel.fill
+        given.load.boiler_steam + sum(given.blowdown) + top.spray + mid.spray + mid.vessel.fill
     )
     steam, makeup, header = _deaerate(
         given, last, top, mid, (exhaust, discharge, condensate), feed_flow

@@ -129,7 +129,7 @@ def entropy_generation(plant: Plant, machine: Machine, T0: FloatArray) -> FloatA
 
 
 def destroyed(plant: Plant, machine: Machine, dead: DeadState) -> FloatArray:
-    """Exergy destroyed [W]: T0 S_gen (Gouy-Stodola), and a fuel's exergy above its heating value."""
+    """Exergy destroyed [W]: T0 S_gen (Gouy-Stodola), and a fuel's part above its LHV."""
     made = entropy_generation(plant, machine, dead.temperature)
     return dead.temperature * made + _net(plant, machine, "chemical")
 

@@ -106,7 +106,9 @@ def _soiled(clean: Column, plan: DemoPlan, log: list[tuple[str, str, int]]) -> C
     spikes = (rng.random(value.size) < SPIKE) & (not tag.name.endswith("-0001"))
     above = rng.random(value.size) < 0.5 if tag.low < 0 else np.ones(value.size, dtype=np.bool_)  # noqa: PLR2004
     span = tag.high - tag.low
-    value[spikes] = np.round(np.where(above, tag.high, tag.low - 0.4 * span) + 0.2 * span, 1)[spikes]
+    value[spikes] = np.round(np.where(above, tag.high, tag.low - 0.4 * span) + 0.2 * span, 1)[
+        spikes
+    ]
 
     doubtful = rng.random(value.size) < DOUBTFUL
     quality[doubtful] = UNCERTAIN

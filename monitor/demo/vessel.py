@@ -180,7 +180,7 @@ def _integrate(
         flows.append((charge, discharge, fill, h_in, h_out, loss))
         mass += interval * (charge + fill - discharge)
         energy += interval * (charge * h_in + fill * h_fill - discharge * h_out - loss)
-        for _ in range(2):
+        for _ in range(3):
             place = (p - LOWEST) / spacing
             i = int(place)
             share = place - i
