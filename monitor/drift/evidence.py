@@ -17,28 +17,33 @@ if TYPE_CHECKING:
 
 __all__ = ["extra_destroyed", "gather"]
 
-HOUR = 3600
-_SPAN = 24 * HOUR
 _DOUBTFUL = Flag.UNCERTAIN | Flag.BAD | Flag.OUT_OF_RANGE
 
 
 def gather(
-    store: SiteStore, rule: FigureRule, reference: tuple[int, int], until: int, *, drifts: bool
+    store: SiteStore,
+    rule: FigureRule,
+    reference: tuple[int, int],
+    since: int,
+    until: int,
+    *,
+    drifts: bool,
 ) -> Evidence:
-    """Compare the day before a time with the reference period.
+    """Compare a stretch of time with the reference period.
 
     Args:
         store: the site's figures.
         rule: the figure in question.
         reference: reference period of its baseline, integer UTC seconds on full hours.
-        until: end of the day that is looked at, on a full hour.
+        since: start of the stretch, on a full hour.
+        until: its end, on a full hour.
         drifts: whether the figure's chart calls for an alarm.
     """
-    cells = store.conditions(rule.subject, rule.figure, until - _SPAN, until)
+    cells = store.conditions(rule.subject, rule.figure, since, until)
     flags = cells["flag"].to_numpy()
     flags = flags[(flags & int(Flag.OFF)) == 0]
     before = _means(store, rule.subject, *reference)
-    now = _means(store, rule.subject, until - _SPAN, until)
+    now = _means(store, rule.subject, since, until)
     return Evidence(
         judged=True,
         drifts=drifts,
@@ -56,13 +61,13 @@ def extra_destroyed(
     store: SiteStore,
     subject: str,
     reference: tuple[int, int],
+    since: int,
     until: int,
     least_hours: int,
 ) -> float:
     """Return how much more exergy [kW] is destroyed than at the same load in the reference period.
 
-    At the reference dead state, mean over the last day before ``until``; NaN when it cannot be
-    told.
+    At the reference dead state, mean from ``since`` to ``until``; NaN when it cannot be told.
     """
     names = ("destroyed_reference_kw", "load_kg_s")
     rolled = store.rollups("equipment", "hour", reference[0], until, subject=subject, figures=names)
@@ -70,7 +75,7 @@ def extra_destroyed(
     wide = wide.reindex(columns=list(names))
     hours = wide.set_axis(["value", "load"], axis=1).reset_index(drop=True)
     hours["hour"] = pd.DatetimeIndex(wide.index).as_unit("s").asi8
-    return excess(hours, reference, until, least_hours=least_hours)
+    return excess(hours, reference, since, until, least_hours=least_hours)
 
 
 def _share(flags: np.ndarray, bits: Flag) -> float:

@@ -53,6 +53,7 @@ __all__ = [
 
 HOUR = 3600
 ALARM_KIND = "drift"
+_LOOK_BACK = 24 * HOUR
 RESTARTING_EVENTS = frozenset({"wash", "overhaul", "calibration"})
 """Kinds of events after which a machine, or its instruments, are not what they were."""
 
@@ -399,8 +400,10 @@ class _FigureJudge:
         if chart.baseline is not None:
             watched = watched[watched["hour"] >= chart.baseline.end]
         shown = finding(watched, episode.raised)
-        cost = self._cost(chart, episode.raised)
-        evidence = gather(self.store, rule, chart.reference, episode.raised, drifts=True)
+        # Hours before the change would dilute what it costs, and what it comes with.
+        stretch = max(shown.since, episode.raised - _LOOK_BACK), episode.raised
+        cost = self._cost(chart.reference, *stretch)
+        evidence = gather(self.store, rule, chart.reference, *stretch, drifts=True)
         active = (watched["hour"] < (episode.cleared or self.now)) & (
             watched["hour"] >= episode.raised - HOUR
         )
@@ -429,11 +432,11 @@ class _FigureJudge:
             cost_per_day=cost,
         )
 
-    def _cost(self, chart: _Chart, until: int) -> float | None:
+    def _cost(self, reference: tuple[int, int], since: int, until: int) -> float | None:
         if self.money is None:
             return None
         extra = extra_destroyed(
-            self.store, self.rule.subject, chart.reference, until, self.settings.least_hours
+            self.store, self.rule.subject, reference, since, until, self.settings.least_hours
         )
         if not np.isfinite(extra):
             return None

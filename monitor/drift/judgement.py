@@ -262,16 +262,16 @@ def alarm_episodes(
 
 
 def excess(
-    hours: pd.DataFrame, period: tuple[int, int], until: int, *, least_hours: int, span: int = 24
+    hours: pd.DataFrame, period: tuple[int, int], since: int, until: int, *, least_hours: int
 ) -> float:
     """Return how far a quantity lies above what it was in a reference period at the same load.
 
     Args:
         hours: hourly ``value`` and ``load``, for example of destroyed exergy in kW.
         period: reference period.
-        until: the mean is over the last ``span`` hours with a value before this time.
+        since: the mean is over the hours from here ...
+        until: ... to here.
         least_hours: fewest hours to compare with.
-        span: hours.
 
     Returns:
         Mean of measured minus expected; NaN when it cannot be told.
@@ -282,7 +282,7 @@ def excess(
         )
     except BaselineError:
         return float("nan")
-    before = hours[hours["hour"] < until]
-    difference = before["value"].to_numpy() - baseline.expected(before["load"].to_numpy())
-    recent = difference[np.isfinite(difference)][-span:]
-    return float(recent.mean()) if recent.size else float("nan")
+    recent = hours[(hours["hour"] >= since) & (hours["hour"] < until)]
+    difference = recent["value"].to_numpy() - baseline.expected(recent["load"].to_numpy())
+    difference = difference[np.isfinite(difference)]
+    return float(difference.mean()) if difference.size else float("nan")
