@@ -13,7 +13,6 @@ from functools import partial
 from typing import TYPE_CHECKING
 
 import numpy as np
-import pandas as pd
 
 from monitor.equipment.account import Account, Balances, account, balances
 from monitor.equipment.base import Content, Drawn, FloatArray, Item, Signal, StreamState, sum_flags
@@ -21,23 +20,18 @@ from monitor.equipment.solve import complete
 from monitor.flags import Flag, FlagArray
 from monitor.readings.condition import Conditioned, Gridded, condition
 from monitor.readings.grid import Grid
-from monitor.store.batch import (
-    CONDITION_COLUMNS,
-    EQUIPMENT_COLUMNS,
-    LEDGER_COLUMNS,
-    STREAM_COLUMNS,
-    FigureBatch,
-)
+from monitor.store.batch import FigureBatch
 from monitor.streams import Gauges, signals_of, stream_states, with_enthalpy
+from monitor.tables import condition_table, equipment_table, ledger_table, stream_table
 from monitor.thermo.dead_state import DeadState, dead_state, live_ambient
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Mapping
 
     from connectors.base import Problem, ReadResult
     from monitor.site.load import Site
 
-__all__ = ["Computed", "compute", "lead_in"]
+__all__ = ["Accounted", "Ambient", "Computed", "Plant", "compute", "lead_in"]
 
 _HOUR = 3600
 # Without stated uncertainties, destruction below this share of the exergy that comes in is taken
@@ -93,7 +87,7 @@ def compute(site: Site, read: ReadResult, start: int, end: int) -> Computed:
 
 
 @dataclass(frozen=True)
-class _Ambient:
+class Ambient:
     """The surroundings over the kept cells: live dead state, the fixed one, and the barometer."""
 
     live: DeadState
@@ -104,7 +98,7 @@ class _Ambient:
     barometer_flag: FlagArray
 
 
-def _ambient(site: Site, conditioned: Conditioned, kept: int) -> _Ambient:
+def _ambient(site: Site, conditioned: Conditioned, kept: int) -> Ambient:
     table = site.file.dead_state
     interval = site.file.site.interval
     hold, mean = int(table.hold // interval), max(int(table.mean // interval), 1)
@@ -131,7 +125,7 @@ def _ambient(site: Site, conditioned: Conditioned, kept: int) -> _Ambient:
     T0, p0, barometer = T0[-kept:], p0[-kept:], barometer[-kept - 1 :]
     live = dead_state(T0, p0)
     freezing = np.where(live.frozen, np.int32(Flag.FREEZING), np.int32(0))
-    return _Ambient(
+    return Ambient(
         live=live,
         reference=dead_state(table.reference_temperature, table.reference_pressure),
         flag=np.asarray(T_flag[-kept:] | p_flag[-kept:] | freezing, dtype=np.int32),
@@ -143,17 +137,17 @@ def _ambient(site: Site, conditioned: Conditioned, kept: int) -> _Ambient:
 
 
 @dataclass(frozen=True)
-class _Plant:
+class Plant:
     """The whole site over the kept cells (steadiness lead-in included)."""
 
-    ambient: _Ambient
+    ambient: Ambient
     states: Mapping[str, StreamState]
     drawn: Mapping[str, Drawn]
 
 
 def _plant(
-    site: Site, conditioned: Conditioned, ambient: _Ambient, kept: int, interval: int
-) -> _Plant:
+    site: Site, conditioned: Conditioned, ambient: Ambient, kept: int, interval: int
+) -> Plant:
     tags: dict[str, Gridded] = {k: v.tail(kept) for k, v in conditioned.tags.items()}
     gauges = Gauges(tags, ambient.barometer, ambient.barometer_edges, ambient.barometer_flag)
     states = stream_states(site, gauges)
@@ -161,7 +155,7 @@ def _plant(
     contents = {i.id: i.kind.content(i, signals[i.id]) for i in site.items.values()}
     draw = partial(_draw, site.items, states, signals, contents, interval)
     complete(site.steps, states, draw, with_enthalpy)
-    return _Plant(ambient, states, {item: draw(item) for item in site.items})
+    return Plant(ambient, states, {item: draw(item) for item in site.items})
 
 
 def _draw(
@@ -178,7 +172,7 @@ def _draw(
 
 
 @dataclass(frozen=True)
-class _Accounted:
+class Accounted:
     """One piece of equipment with its account at both dead states."""
 
     drawn: Drawn
@@ -189,7 +183,7 @@ class _Accounted:
     flag: FlagArray
 
 
-def _accounted(site: Site, drawn: Drawn, ambient: _Ambient) -> _Accounted:
+def _accounted(site: Site, drawn: Drawn, ambient: Ambient) -> Accounted:
     counted = balances(drawn)
     live = account(drawn, counted, ambient.live)
     reference = account(drawn, counted, ambient.reference)
@@ -200,7 +194,7 @@ def _accounted(site: Site, drawn: Drawn, ambient: _Ambient) -> _Accounted:
     flag[contradicts] |= Flag.SECOND_LAW
     absent = ~np.isfinite(live.destroyed) & ((flag & Flag.OUT_OF_REGION) == 0)
     flag[absent] |= Flag.MISSING
-    return _Accounted(drawn, counted, live, reference, load, flag)
+    return Accounted(drawn, counted, live, reference, load, flag)
 
 
 def _running(site: Site, item: Item, load: FloatArray) -> FlagArray:
@@ -220,22 +214,21 @@ def _running(site: Site, item: Item, load: FloatArray) -> FlagArray:
 
 def _figures(
     site: Site,
-    plant: _Plant,
+    plant: Plant,
     grid: Grid,
     conditioned: Conditioned,
     problems: tuple[Problem, ...],
 ) -> Computed:
-    n = grid.count
     accounted = [_accounted(site, d, plant.ambient) for d in plant.drawn.values()]
     quality = conditioned.quality
     quality = quality[(quality["hour"] >= grid.start) & (quality["hour"] < grid.end)]
     batch = FigureBatch(
         start=grid.start,
         end=grid.end,
-        streams=_stream_table(plant, grid, n),
-        equipment=_equipment_table(accounted, grid, n),
-        conditions=_condition_table(accounted, plant.ambient, grid, n),
-        ledger=_ledger_table(site, plant, accounted, grid, n),
+        streams=stream_table(plant, grid),
+        equipment=equipment_table(accounted, grid),
+        conditions=condition_table(accounted, plant.ambient, grid),
+        ledger=ledger_table(site, plant, accounted, grid),
         tag_quality=quality.reset_index(drop=True),
     )
     return Computed(
@@ -245,126 +238,3 @@ def _figures(
         missing=int(quality["cells_missing"].sum()),
         problems=problems,
     )
-
-
-def _table(
-    subject: str | None, grid: Grid, columns: Mapping[str, FloatArray], flag: FlagArray, n: int
-) -> pd.DataFrame:
-    head: dict[str, object] = {} if subject is None else {"subject": subject}
-    body = {name: np.broadcast_to(values, flag.shape)[-n:] for name, values in columns.items()}
-    return pd.DataFrame(head | {"time": grid.starts} | body | {"flag": flag[-n:]})
-
-
-def _stream_table(plant: _Plant, grid: Grid, n: int) -> pd.DataFrame:
-    absent = np.full(len(plant.ambient.flag), np.nan)
-    tables = []
-    for state in plant.states.values():
-        values = (
-            state.mass_flow,
-            state.pressure / 1e5,
-            state.temperature - 273.15,
-            state.enthalpy / 1e3,
-            state.entropy / 1e3,
-            state.dryness,
-            state.energy / 1e3,
-            state.exergy(plant.ambient.live) / 1e3,
-            state.exergy(plant.ambient.reference) / 1e3,
-            absent,
-            absent,
-        )
-        columns = dict(zip(STREAM_COLUMNS, values, strict=True))
-        flag = np.asarray(state.flag | plant.ambient.flag, dtype=np.int32)
-        tables.append(_table(state.id, grid, columns, flag, n))
-    return pd.concat(tables, ignore_index=True)
-
-
-def _equipment_table(accounted: Sequence[_Accounted], grid: Grid, n: int) -> pd.DataFrame:
-    tables = []
-    for a in accounted:
-        live, reference, counted = a.live, a.reference, a.counted
-        in_kw = {
-            "exergy_in_live_kw": live.exergy_in,
-            "exergy_out_live_kw": live.exergy_out,
-            "destroyed_live_kw": live.destroyed,
-            "fuel_live_kw": live.fuel,
-            "product_live_kw": live.product,
-            "exergy_in_reference_kw": reference.exergy_in,
-            "exergy_out_reference_kw": reference.exergy_out,
-            "destroyed_reference_kw": reference.destroyed,
-            "fuel_reference_kw": reference.fuel,
-            "product_reference_kw": reference.product,
-            "heat_loss_kw": counted.heat_loss + counted.unmeasured_heat,
-            "heat_loss_exergy_live_kw": live.heat_loss_exergy,
-            "stored_rate_live_kw": live.stored_rate,
-            "unaccounted_live_kw": live.unaccounted,
-            "closure_live_kw": live.closure,
-            "energy_imbalance_kw": counted.energy_imbalance,
-        }
-        values = {k: np.asarray(v) / 1e3 for k, v in in_kw.items()} | {
-            "load_kg_s": a.load,
-            "mass_imbalance_kg_s": counted.mass_imbalance,
-            "u_destroyed_live_kw": np.full_like(a.load, np.nan),
-        }
-        columns = {name: values[name] for name in EQUIPMENT_COLUMNS}
-        tables.append(_table(a.drawn.item.id, grid, columns, a.flag, n))
-    return pd.concat(tables, ignore_index=True)
-
-
-def _condition_table(
-    accounted: Sequence[_Accounted], ambient: _Ambient, grid: Grid, n: int
-) -> pd.DataFrame:
-    tables = []
-    for a in accounted:
-        item = a.drawn.item
-        values = item.kind.condition(a.drawn, ambient.live)
-        for figure in item.kind.figures(item):
-            got = values[figure.name]
-            running = Flag.OFF | Flag.UNSTEADY
-            flag = a.flag if figure.needs_load else a.flag & ~np.int32(running)
-            flag = np.asarray(flag | got.flag, dtype=np.int32)
-            flag[~np.isfinite(got.value)] |= Flag.MISSING
-            columns = dict(
-                zip(
-                    CONDITION_COLUMNS,
-                    (got.value, got.weight, np.full_like(a.load, np.nan)),
-                    strict=True,
-                )
-            )
-            table = _table(item.id, grid, columns, flag, n)
-            table.insert(1, "figure", figure.name)
-            tables.append(table)
-    if not tables:
-        return pd.DataFrame(columns=["subject", "figure", "time", *CONDITION_COLUMNS, "flag"])
-    return pd.concat(tables, ignore_index=True)
-
-
-def _ledger_table(
-    site: Site, plant: _Plant, accounted: Sequence[_Accounted], grid: Grid, n: int
-) -> pd.DataFrame:
-    """Supplied = used + lost + destroyed + change in store + imbalance, at both dead states."""
-    ambient = plant.ambient
-    supplied = [s for s in site.streams if s not in site.producer]
-    leaving = [s for s in site.streams if s not in site.consumer]
-    used = [s for s in leaving if site.counts_as_used(s)]
-    lost = [s for s in leaving if s not in used]
-    columns: dict[str, FloatArray] = {
-        "t0_degc": ambient.live.temperature - 273.15,
-        "p0_bar": ambient.live.pressure / 1e5,
-    }
-    nothing = np.zeros(len(ambient.flag))
-    for name, dead in (("live", ambient.live), ("reference", ambient.reference)):
-        accounts = [a.live if name == "live" else a.reference for a in accounted]
-        crossing = {
-            "supplied": sum((plant.states[s].exergy(dead) for s in supplied), nothing),
-            "used": sum((plant.states[s].exergy(dead) for s in used), nothing),
-            "lost": sum((plant.states[s].exergy(dead) for s in lost), nothing)
-            + sum((a.heat_loss_exergy for a in accounts), nothing),
-            "destroyed": sum((a.destroyed for a in accounts), nothing),
-            "stored_rate": sum((a.stored_rate for a in accounts), nothing),
-            "imbalance": sum((a.unaccounted + a.closure for a in accounts), nothing),
-        }
-        columns |= {f"{key}_{name}_kw": value / 1e3 for key, value in crossing.items()}
-    own = Flag.UNSTEADY | Flag.OFF
-    flag = np.bitwise_or.reduce(np.stack([a.flag for a in accounted]), axis=0) & ~np.int32(own)
-    ordered = {name: columns[name] for name in LEDGER_COLUMNS}
-    return _table(None, grid, ordered, np.asarray(flag | ambient.flag, dtype=np.int32), n)

@@ -33,6 +33,7 @@ RANGE_BELOW = 0.0125
 RANGE_ABOVE = 0.03125
 
 _HOUR = 3600
+_Counts = dict[str, np.ndarray[tuple[int], np.dtype[np.int64]]]
 
 
 @dataclass(frozen=True)
@@ -83,13 +84,11 @@ def condition(
     """
     by_tag = _split(readings)
     gridded: dict[str, Gridded] = {}
-    rows: list[pd.DataFrame] = []
+    counts: dict[str, _Counts] = {}
     for name, tag in tags.items():
         part = by_tag.get(name, _NOTHING)
-        gridded[name], counts = _one(part, tag, grid, least_coverage)
-        rows.append(counts.assign(tag=name))
-    quality = pd.concat(rows, ignore_index=True) if rows else pd.DataFrame()
-    return Conditioned(grid, gridded, quality)
+        gridded[name], counts[name] = _one(part, tag, grid, least_coverage)
+    return Conditioned(grid, gridded, _quality_table(counts, _hours(grid)))
 
 
 @dataclass(frozen=True)
@@ -121,7 +120,7 @@ def _split(readings: pd.DataFrame) -> dict[str, _Part]:
     }
 
 
-def _one(part: _Part, tag: Tag, grid: Grid, least_coverage: float) -> tuple[Gridded, pd.DataFrame]:
+def _one(part: _Part, tag: Tag, grid: Grid, least_coverage: float) -> tuple[Gridded, _Counts]:
     bad = (part.quality == Quality.BAD) | ~np.isfinite(part.value)
     outside = ~bad & _outside(part.value, tag)
     uncertain = ~bad & ~outside & (part.quality == Quality.UNCERTAIN)
@@ -162,15 +161,20 @@ def _cells(seconds: FloatArray, grid: Grid) -> np.ndarray[tuple[int], np.dtype[n
     return np.diff(np.searchsorted(seconds, grid.edges.astype(np.float64), side="left"))
 
 
+def _hours(grid: Grid) -> np.ndarray[tuple[int], np.dtype[np.int64]]:
+    """Start of each full hour that the grid touches."""
+    return np.arange(grid.start // _HOUR * _HOUR, grid.end, _HOUR, dtype=np.int64)
+
+
 def _counts(
     part: _Part,
     grid: Grid,
     held: Held,
     missing: np.ndarray[tuple[int], np.dtype[np.bool_]],
     **kinds: np.ndarray[tuple[int], np.dtype[np.bool_]],
-) -> pd.DataFrame:
+) -> _Counts:
     """What the tag delivered in each full hour that the grid touches."""
-    hours = np.arange(grid.start // _HOUR * _HOUR, grid.end, _HOUR, dtype=np.int64)
+    hours = _hours(grid)
     ends = np.append(hours, hours[-1] + _HOUR).astype(np.float64)
     bounds = np.clip(ends, grid.start, grid.end)
 
@@ -184,10 +188,9 @@ def _counts(
 
     total = per_hour(part.seconds)
     counts = {name: per_hour(part.seconds[mask]) for name, mask in kinds.items()}
-    good = total - counts["bad"] - counts["outside"] - counts["uncertain"]
-    columns = {
+    return {
         "readings": total,
-        "good": good,
+        "good": total - counts["bad"] - counts["outside"] - counts["uncertain"],
         "uncertain": counts["uncertain"],
         "bad": counts["bad"],
         "out_of_range": counts["outside"],
@@ -195,4 +198,18 @@ def _counts(
         "cells_missing": cells_where(missing),
         "cells_held": cells_where((held.fresh == 0) & ~missing),
     }
-    return pd.DataFrame({"hour": hours} | {name: columns[name] for name in QUALITY_COLUMNS})
+
+
+def _quality_table(
+    counts: Mapping[str, _Counts], hours: np.ndarray[tuple[int], np.dtype[np.int64]]
+) -> pd.DataFrame:
+    names = list(counts)
+    codes = np.repeat(np.arange(len(names)), len(hours))
+    table: dict[str, object] = {
+        "tag": pd.Categorical.from_codes(codes, categories=pd.Index(names, dtype=object)),
+        "hour": np.tile(hours, len(names)),
+    }
+    empty = [np.empty(0, dtype=np.int64)]
+    for column in QUALITY_COLUMNS:
+        table[column] = np.concatenate([c[column] for c in counts.values()] or empty)
+    return pd.DataFrame(table)
