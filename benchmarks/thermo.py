@@ -12,8 +12,8 @@ import sys
 import time
 from typing import TYPE_CHECKING
 
-import CoolProp
 import numpy as np
+from CoolProp import CoolProp
 from CoolProp.CoolProp import PropsSI
 
 from monitor.thermo.water import saturated, saturation_temperature, state_ph, state_ps, state_pt
@@ -51,7 +51,7 @@ def main(points: int) -> None:
     pressure = rng.uniform(1e5, 12e6, points)
     temperature = saturation_temperature(pressure) + rng.uniform(5.0, 300.0, points)
     steam = state_pt(pressure, temperature)
-    low = pressure / 50.0
+    low = pressure / 12.0
     expanded = state_ps(low, steam.entropy)
     high = pressure + 17e6
     live = state_pt(high, 873.15)
@@ -73,7 +73,7 @@ def main(points: int) -> None:
             lambda: _props("Hmass", pressure, "Smass", steam.entropy),
         ),
         (
-            f"p,s expanded, {np.mean(expanded.dryness < 1):.0%} wet: T, h, v, x",
+            f"p,s expanded, {np.mean(expanded.dryness < 1.0):.0%} wet: T, h, v, x",
             lambda: state_ps(low, steam.entropy),
             "PropsSI p,s: h alone",
             lambda: _props("Hmass", low, "Smass", steam.entropy),

@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.polynomial import chebyshev
 
-from monitor.thermo import engine
+from monitor.thermo import engine, polynomial
 from monitor.thermo.engine import ENTHALPY, ENTROPY
 from monitor.thermo.saturation import (
     CRITICAL_PRESSURE,
@@ -33,7 +33,6 @@ __all__ = ["solve_single_phase"]
 
 _X_DEGREE, _Y_DEGREE = 40, 30
 _LOWEST_LIQUID_PRESSURE = 2000.0  # below it the liquid isobar is too short to scale by
-_CHUNK = 8192  # rows of polynomial terms that stay in the processor's cache
 _LAST_STEP = 1e-3  # [K] the longest step that the slope of the estimate is trusted with
 
 
@@ -45,33 +44,31 @@ class _Estimate:
         vapour: whether the phase is vapour.
         column: `ENTHALPY` or `ENTROPY`, what the isobar is followed by.
         lowest: the lowest T_sat of the fit [K].
-        surface: coefficients of T over x and y.
-        slope: coefficients of dT/dy.
-        far_end: coefficients over x of h or s at the isobar's other end (800 degC, or 0 degC).
+        coefficients: over x (rows), side by side: of T over y, of dT/dy over y, and of h or s at
+            the isobar's other end (800 degC, or 0 degC).
     """
 
     vapour: bool
     column: int
     lowest: float
-    surface: FloatArray
-    slope: FloatArray
-    far_end: FloatArray
+    coefficients: FloatArray
 
     def __call__(
         self, t_sat: FloatArray, at_saturation: FloatArray, target: FloatArray
     ) -> tuple[FloatArray, FloatArray]:
         """Return T [K] and its slope along the isobar; NaN outside the fit."""
         x = (t_sat - self.lowest) * (2.0 / (REGION_3_TEMPERATURE - self.lowest)) - 1.0
-        x_terms = chebyshev.chebvander(x, _X_DEGREE)
-        far_end = x_terms @ self.far_end
+        along = polynomial.combine(polynomial.terms(x, _X_DEGREE), self.coefficients)
+        surface, gradient = along[:, : _Y_DEGREE + 1], along[:, _Y_DEGREE + 1 : -1]
+        far_end = along[:, -1]
         low, high = (at_saturation, far_end) if self.vapour else (far_end, at_saturation)
         scale = 2.0 / (high - low)
         y = (target - low) * scale - 1.0
         inside = (np.abs(x) <= 1.0) & (np.abs(y) <= 1.0)
         # Far outside, the terms would only overflow.
-        y_terms = chebyshev.chebvander(np.where(inside, y, 0.0), _Y_DEGREE)
-        temperature = np.einsum("ij,ij->i", x_terms @ self.surface, y_terms)
-        slope = np.einsum("ij,ij->i", x_terms @ self.slope, y_terms[:, :-1]) * scale
+        across = polynomial.terms(np.where(inside, y, 0.0), _Y_DEGREE)
+        temperature = np.einsum("ij,ij->i", surface, across)
+        slope = np.einsum("ij,ij->i", gradient, across[:, :-1]) * scale
         return np.where(inside, temperature, np.nan), slope
 
 
@@ -91,15 +88,11 @@ def _estimate(*, vapour: bool, column: int) -> _Estimate:
     target = low[:, None] + (high - low)[:, None] * 0.5 * (y + 1.0)
     p, first, last = (np.repeat(v, y.size) for v in (pressure, *ends))
     temperature = _bracketed(p, first, last, target.ravel(), column).reshape(target.shape)
-    x_terms, y_terms = chebyshev.chebvander(x, _X_DEGREE), chebyshev.chebvander(y, _Y_DEGREE)
-    surface = np.linalg.solve(x_terms, np.linalg.solve(y_terms, temperature.T).T)
+    surface = polynomial.fit(y, temperature.T)
+    far_end = high if vapour else low
+    over_y = np.vstack([surface, chebyshev.chebder(surface), far_end])
     return _Estimate(
-        vapour=vapour,
-        column=column,
-        lowest=lowest,
-        surface=surface,
-        slope=np.asarray(chebyshev.chebder(surface, axis=1), dtype=np.float64),
-        far_end=np.asarray(np.linalg.solve(x_terms, high if vapour else low), dtype=np.float64),
+        vapour=vapour, column=column, lowest=lowest, coefficients=polynomial.fit(x, over_y.T)
     )
 
 
@@ -131,8 +124,7 @@ def solve_single_phase(
     if pressure.size == 0:
         return temperature, values
     estimate = _estimate(vapour=vapour, column=column)
-    for start in range(0, pressure.size, _CHUNK):
-        part = slice(start, start + _CHUNK)
+    for part in polynomial.chunks(pressure.size):
         first, slope = estimate(t_sat[part], at_saturation[part], target[part])
         temperature[part], values[part] = _finish(
             pressure[part], first, slope, target[part], column

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.polynomial import chebyshev
 
-from monitor.thermo import engine
+from monitor.thermo import engine, polynomial
 
 if TYPE_CHECKING:
     import numpy.typing as npt
@@ -43,7 +43,6 @@ SIDE_STEP = 1e-11
 """A relative step off the line in T: larger than its rounding, 4e-5 J/kg in h at most."""
 
 _DEGREE = 40
-_CHUNK = 8192  # rows of polynomial terms that stay in the processor's cache
 
 # IAPWS R7-97(2012), Table 34.
 _N = (
@@ -123,8 +122,7 @@ def saturation_properties(pressure: FloatArray, temperature: FloatArray) -> Floa
     low = temperature <= REGION_3_TEMPERATURE
     coefficients = _line()
     if low.all():
-        for start in range(0, pressure.size, _CHUNK):
-            part = slice(start, start + _CHUNK)
+        for part in polynomial.chunks(pressure.size):
             out[part] = _interpolate(temperature[part], coefficients)
         return out
     if low.any():
@@ -142,15 +140,15 @@ def _line() -> FloatArray:
     temperature = low + 0.5 * (nodes + 1.0) * (high - low)
     values = _both_sides(saturation_pressure(temperature), temperature)
     values[:, 5] = np.log(values[:, 5])  # v'' spans five decades
-    return np.asarray(np.linalg.solve(chebyshev.chebvander(nodes, _DEGREE), values))
+    return polynomial.fit(nodes, values)
 
 
 def _interpolate(temperature: FloatArray, coefficients: FloatArray) -> FloatArray:
     low, high = engine.LOWEST_TEMPERATURE, REGION_3_TEMPERATURE
     scaled = (temperature - low) * (2.0 / (high - low)) - 1.0
-    values = chebyshev.chebvander(scaled, _DEGREE) @ coefficients
+    values = polynomial.combine(polynomial.terms(scaled, _DEGREE), coefficients)
     np.exp(values[:, 5], out=values[:, 5])
-    return np.asarray(values)
+    return values
 
 
 def _both_sides(pressure: FloatArray, temperature: FloatArray) -> FloatArray:

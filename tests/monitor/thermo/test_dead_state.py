@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from thermo_reference import kelvin, rows
 
@@ -185,6 +185,7 @@ def test_a_live_ambient_without_sense_is_refused(hold, mean, reference):
     st.integers(0, 5),
     st.integers(1, 8),
 )
+@settings(deadline=None)
 def test_filling_agrees_with_pandas(series, hold, mean):
     values = np.array([v for v, _ in series], dtype=float)
     usable = np.array([u for _, u in series], dtype=bool)

@@ -7,8 +7,12 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from monitor.thermo.engine import ENTHALPY, ENTROPY, evaluate_column
+from monitor.thermo.isobar import _estimate
+from monitor.thermo.saturation import saturation_properties
 from monitor.thermo.water import (
     saturated,
+    saturation_pressure,
     saturation_temperature,
     state_ph,
     state_ps,
@@ -80,6 +84,25 @@ def test_a_dense_sweep_of_the_plant_range_is_consistent_with_the_forward_equatio
             assert np.max(np.abs(forward.enthalpy - state.enthalpy)[ok]) < 1e-3
             assert np.max(np.abs(forward.enthalpy - found.enthalpy)[ok]) < 1e-3
             assert np.max(np.abs(forward.volume / found.volume - 1.0)[ok]) < 1e-6
+
+
+@pytest.mark.parametrize("column", [ENTHALPY, ENTROPY])
+@pytest.mark.parametrize("vapour", [True, False])
+def test_the_first_estimate_is_close_enough_to_need_no_iteration(vapour, column):
+    rng = np.random.default_rng(5)
+    saturation = rng.uniform(295.0, 623.0, 5000)
+    pressure = saturation_pressure(saturation)
+    far = 1073.0 if vapour else 273.2
+    share = rng.uniform(1e-6, 1.0, saturation.size) ** 2
+    temperature = saturation + share * (far - saturation)
+    target = evaluate_column(pressure, temperature, column)
+    at_saturation = saturation_properties(pressure, saturation)[:, (3 if vapour else 0) + column]
+    estimate = _estimate(vapour=vapour, column=column)
+    found, slope = estimate(saturation, at_saturation, target)
+    assert np.max(np.abs(found - temperature)) < 1e-4
+    step = 0.01 if vapour else -0.01
+    rise = evaluate_column(pressure, temperature + step, column) - target
+    assert slope == pytest.approx(step / rise, rel=0.01)
 
 
 @pytest.mark.parametrize("pressure", [1e3, 1e5, 1e6, 1e7, 16.6e6, 20e6])
