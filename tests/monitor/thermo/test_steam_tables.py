@@ -106,7 +106,7 @@ def test_saturation_in_region_3_is_within_its_stated_limit():
 
 def test_if97_stays_close_to_iapws_95_over_the_plant_range():
     # IAPWS R6-95(2018) through CoolProp's HEOS. Largest deviations found over this sweep:
-    # h 0.24 kJ/kg, s 0.00040 kJ/(kg K), h - T0 s 0.13 kJ/kg at 15 degC, v 0.08 %.
+    # h 0.23 kJ/kg, s 0.00042 kJ/(kg K), h - T0 s 0.11 kJ/kg at 15 degC, v 0.012 %.
     pressure, temperature = _plant_states(1000)
     state = state_pt(pressure, temperature)
     enthalpy = PropsSI("Hmass", "P", pressure, "T", temperature, "Water")
@@ -117,7 +117,7 @@ def test_if97_stays_close_to_iapws_95_over_the_plant_range():
     assert np.max(np.abs(state.entropy - entropy)) < 0.45
     work_potential = state.enthalpy - enthalpy - 288.15 * (state.entropy - entropy)
     assert np.max(np.abs(work_potential)) < 150.0
-    assert np.max(np.abs(state.volume * density - 1.0)) < 1e-3
+    assert np.max(np.abs(state.volume * density - 1.0)) < 2e-4
 
 
 def test_single_phase_check_values_of_iapws_95_are_met_within_the_formulations_difference():
