@@ -175,13 +175,18 @@ class Content:
 
 @dataclass(frozen=True)
 class Item:
-    """One piece of equipment as the site file has it: its kind, and the ids at each port."""
+    """One piece of equipment as the site file has it: its kind, and the ids at each port.
+
+    ``spare`` names the balances (``mass``, ``energy``) that no unknown was taken from: only these
+    say anything about the readings.
+    """
 
     id: str
     name: str
     kind: Kind
     ports: Mapping[str, tuple[str, ...]]
     options: Options
+    spare: frozenset[str] = frozenset({"mass", "energy"})
 
     def ids(self, direction: Literal["in", "out"]) -> tuple[str, ...]:
         """Stream ids at all ports that face one way, in the order of the kind's ports."""

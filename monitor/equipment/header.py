@@ -59,7 +59,7 @@ class Header(Kind):
         )
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Heat-loss coefficient and unaccounted flow; one is only known when it is not solved."""
+        """Heat-loss coefficient, and unaccounted flow where no flow is solved from the mass."""
         heat = Figure(
             "heat_loss_coefficient",
             "heat-loss coefficient",
@@ -72,7 +72,8 @@ class Header(Kind):
         unaccounted = Figure(
             "unaccounted_flow", "unaccounted flow", "t/h", "both", 1.5, follows_load=True
         )
-        return (heat, unaccounted) if item.options.heat_loss == "balance" else (unaccounted,)
+        by_balance = item.options.heat_loss == "balance"
+        return ((heat,) if by_balance else ()) + ((unaccounted,) if "mass" in item.spare else ())
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""

@@ -22,7 +22,7 @@ if TYPE_CHECKING:
 
     from monitor.equipment.base import Drawn, Item
 
-__all__ = ["Needs", "Step", "complete", "plan"]
+__all__ = ["Needs", "Plan", "Step", "complete", "plan", "spare_balances"]
 
 Unknown = tuple[Literal["flow", "enthalpy", "rate"], str]
 
@@ -86,6 +86,12 @@ def plan(items: Sequence[Item], needs: Needs) -> Plan:
             free_balances[item.id] -= set(step.balance.split(" and "))
             progress = True
     return Plan(tuple(steps), frozenset(open_unknowns))
+
+
+def spare_balances(item: Item, steps: Sequence[Step]) -> frozenset[str]:
+    """The balances of one piece of equipment that no step has used."""
+    used = {b for step in steps if step.equipment == item.id for b in step.balance.split(" and ")}
+    return frozenset(_offered(item) - used)
 
 
 def _offered(item: Item) -> set[str]:

@@ -1,5 +1,8 @@
 """Process user: steam in, condensate back or lost, heat delivered at the process temperature.
 
+What leaves through ``lost`` (live steam into the process, condensate to drain) is no product and is
+not given back to the fuel.
+
 Source: Bejan, Tsatsaronis, Moran (1996), eq. 3.5 (exergy of heat at a boundary temperature).
 """
 
@@ -34,6 +37,7 @@ class User(Kind):
     ports = (
         PortSpec("steam", "in", most=None),
         PortSpec("condensate", "out", least=0, most=None),
+        PortSpec("lost", "out", least=0, most=None),
         PortSpec("heat", "out", media=frozenset({"heat"})),
     )
     fuel_and_product = (

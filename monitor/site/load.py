@@ -12,7 +12,7 @@ import os
 import re
 import tomllib
 from collections import Counter
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any, cast
 
 import pydantic
@@ -20,7 +20,7 @@ import pydantic
 import connectors
 from monitor.equipment import KINDS
 from monitor.equipment.base import Item, Kind, Medium, Options
-from monitor.equipment.solve import Needs, Step, plan
+from monitor.equipment.solve import Needs, Step, plan, spare_balances
 from monitor.errors import Issue, LostworkError, SiteFileError
 from monitor.site.models import Reference, SiteFile, Stream, Tag
 from monitor.site.shifts import ShiftCalendar
@@ -282,6 +282,7 @@ def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Sit
         _check_stream(stream, producer, consumer, issues)
     needs = _needs(streams.values())
     planned = plan(list(items.values()), needs)
+    items = {k: replace(v, spare=spare_balances(v, planned.steps)) for k, v in items.items()}
     for kind, stream_id in sorted(planned.unsolved):
         issues.append(_unsolved(kind, stream_id, items.values()))
     site = Site(
