@@ -10,15 +10,13 @@ way the same figures and events give the same points and alarms.
 from __future__ import annotations
 
 import json
-from dataclasses import asdict, dataclass, field, replace
+from dataclasses import asdict, dataclass, field
 from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 import pandas as pd
 
-from monitor.drift.alarms import Action, AlarmState, Episode, OperatorAction, Transition, replay
 from monitor.drift.baseline import Baseline, BaselineError
-from monitor.drift.evidence import extra_destroyed, gather
 from monitor.drift.hourly import hourly_means
 from monitor.drift.judgement import (
     POINT_COLUMNS,
@@ -26,44 +24,27 @@ from monitor.drift.judgement import (
     FigureRule,
     Segment,
     Settings,
-    alarm_episodes,
     chart_points,
     fit_reference,
     reference_period,
     segments,
 )
-from monitor.drift.message import finding, message, priority
-from monitor.drift.verdict import verdict
-from monitor.store.alarms import AlarmRecord, AlarmTransition
+from monitor.drift.raising import Chart, Raising
 from monitor.store.baselines import BaselineRecord
 
 if TYPE_CHECKING:
     from collections.abc import Iterable, Mapping, Sequence
 
+    from monitor.drift.alarms import OperatorAction
+    from monitor.drift.raising import Money
+    from monitor.store.alarms import AlarmRecord
     from monitor.store.site import SiteStore
 
-__all__ = [
-    "ALARM_KIND",
-    "RESTARTING_EVENTS",
-    "FigureStatus",
-    "Money",
-    "baseline_of",
-    "judge",
-]
+__all__ = ["RESTARTING_EVENTS", "FigureStatus", "baseline_of", "judge"]
 
 HOUR = 3600
-ALARM_KIND = "drift"
-_LOOK_BACK = 24 * HOUR
 RESTARTING_EVENTS = frozenset({"wash", "overhaul", "calibration"})
 """Kinds of events after which a machine, or its instruments, are not what they were."""
-
-
-@dataclass(frozen=True)
-class Money:
-    """What lost work costs: per MWh of exergy, in the site's currency."""
-
-    exergy_price: float
-    currency: str
 
 
 @dataclass(frozen=True)
@@ -84,17 +65,6 @@ class FigureStatus:
     reason: str = ""
     alarms: tuple[AlarmRecord, ...] = ()
     refused: tuple[tuple[OperatorAction, str], ...] = ()
-
-
-@dataclass(frozen=True)
-class _Chart:
-    """One segment judged: its points from the baseline's start on."""
-
-    segment: Segment
-    baseline: Baseline | None
-    reference: tuple[int, int]
-    points: pd.DataFrame
-    reason: str = ""
 
 
 def baseline_of(record: BaselineRecord) -> Baseline:
@@ -180,7 +150,8 @@ class _FigureJudge:
             if i >= at - 1
         ]
         since = charts[0].segment.start or 0
-        alarms, refused = self._alarms(charts, since)
+        raising = Raising(self.store, self.rule, self.settings, self.now, self.money)
+        alarms, refused = raising.replace_alarms(charts, since)
         current = charts[-1]
         return FigureStatus(
             self.rule.subject,
@@ -192,7 +163,7 @@ class _FigureJudge:
         )
 
     def _state(
-        self, chart: _Chart, alarms: Sequence[AlarmRecord]
+        self, chart: Chart, alarms: Sequence[AlarmRecord]
     ) -> Literal["steady", "drifting", "no baseline", "not judged"]:
         if chart.baseline is None:
             return "no baseline"
@@ -205,7 +176,7 @@ class _FigureJudge:
 
     def _chart(
         self, segment: Segment, gap_from: int | None, start: int, end: int, *, last: bool
-    ) -> _Chart:
+    ) -> Chart:
         end = end if segment.end is None else min(end, segment.end)
         record = self._record(segment, last=last)
         if record is not None and start >= record.reference_end:
@@ -217,7 +188,7 @@ class _FigureJudge:
 
     def _go_on(
         self, segment: Segment, record: BaselineRecord, start: int, end: int
-    ) -> _Chart | None:
+    ) -> Chart | None:
         """Continue the stored chart; None when it is not this baseline's."""
         try:
             baseline = baseline_of(record)
@@ -242,7 +213,7 @@ class _FigureJudge:
             self._store(start, end, new, record.baseline_id)
             points = pd.concat([before, new], ignore_index=True) if len(new) else before
         reference = (record.reference_start, record.reference_end)
-        return _Chart(segment, baseline, reference, points)
+        return Chart(segment, baseline, reference, points)
 
     def _anew(
         self,
@@ -252,7 +223,7 @@ class _FigureJudge:
         record: BaselineRecord | None,
         *,
         last: bool,
-    ) -> _Chart:
+    ) -> Chart:
         """Make the segment's whole chart, and its baseline if its reference period is over."""
         hours = self._hours(segment.start or 0, end)
         try:
@@ -262,11 +233,11 @@ class _FigureJudge:
             if last:
                 self.store.retire_baseline(self.rule.subject, self.rule.figure, self.now)
             self._store(clear_from, end, _without_baseline(hours), None)
-            return _Chart(segment, None, (0, 0), _without_baseline(hours), str(error))
+            return Chart(segment, None, (0, 0), _without_baseline(hours), str(error))
         number = self._keep(baseline, reference, record, last=last)
         points = chart_points(hours, baseline, self.rule, self.settings)
         self._store(clear_from, end, points, number, from_hour=baseline.start)
-        return _Chart(segment, baseline, reference, points[points["hour"] >= baseline.start])
+        return Chart(segment, baseline, reference, points[points["hour"] >= baseline.start])
 
     def _hours(self, start: int, end: int) -> pd.DataFrame:
         rule = self.rule
@@ -349,113 +320,6 @@ class _FigureJudge:
             retired=None if last else self.now,
         )
         return self.store.add_baseline(made)
-
-    # --- alarms ----------------------------------------------------------------------------------
-
-    def _alarms(
-        self, charts: Sequence[_Chart], since: int
-    ) -> tuple[tuple[AlarmRecord, ...], tuple[tuple[OperatorAction, str], ...]]:
-        found: list[tuple[Episode, _Chart]] = []
-        for chart in charts:
-            if chart.baseline is None:
-                continue
-            for episode in alarm_episodes(chart.points, chart.baseline, self.rule, self.settings):
-                cleared = episode.cleared
-                if chart.segment.end is not None and cleared is None:
-                    # What was wrong before the event is judged no further.
-                    cleared = chart.segment.end
-                found.append((Episode(episode.raised, cleared), chart))
-        actions = [
-            OperatorAction(a.time, Action(a.action), a.who, a.note, a.until)
-            for a in self.store.alarm_actions(self.rule.subject, self.rule.figure)
-            if a.kind == ALARM_KIND
-        ]
-        played = replay([episode for episode, _ in found], actions, self.now)
-        records = []
-        for index, (episode, chart) in enumerate(found):
-            later = found[index + 1][0].raised if index + 1 < len(found) else None
-            steps = [
-                step
-                for step in played.transitions
-                if step.time >= episode.raised and (later is None or step.time < later)
-            ]
-            # A new alarm of the same figure takes over what was still to be acknowledged.
-            state = played.alarm.state if later is None else AlarmState.NORMAL
-            records.append((self._alarm(episode, chart, state, steps), _as_stored(steps)))
-        numbers = self.store.replace_alarms(
-            self.rule.subject, self.rule.figure, ALARM_KIND, since, records
-        )
-        refused = tuple(pair for pair in played.refused if pair[0].time >= since)
-        alarms = [
-            replace(record, alarm_id=number)
-            for (record, _), number in zip(records, numbers, strict=True)
-        ]
-        return tuple(alarms), refused
-
-    def _alarm(
-        self, episode: Episode, chart: _Chart, state: AlarmState, steps: Sequence[Transition]
-    ) -> AlarmRecord:
-        rule = self.rule
-        watched = chart.points
-        if chart.baseline is not None:
-            watched = watched[watched["hour"] >= chart.baseline.end]
-        shown = finding(watched, episode.raised)
-        # Hours before the change would dilute what it costs, and what it comes with.
-        stretch = max(shown.since, episode.raised - _LOOK_BACK), episode.raised
-        cost = self._cost(chart.reference, *stretch)
-        evidence = gather(self.store, rule, chart.reference, *stretch, drifts=True)
-        active = (watched["hour"] < (episode.cleared or self.now)) & (
-            watched["hour"] >= episode.raised - HOUR
-        )
-        acknowledged = [s.time for s in steps if s.action is Action.ACKNOWLEDGE]
-        shelved = [s.until for s in steps if s.action is Action.SHELVE]
-        return AlarmRecord(
-            subject=rule.subject,
-            figure=rule.figure,
-            kind=ALARM_KIND,
-            state=str(state),
-            priority=priority(watched[active]),
-            raised=episode.raised,
-            message=message(
-                rule,
-                shown,
-                verdict(evidence),
-                time_zone=self.store.time_zone,
-                cost_per_day=cost,
-                currency=self.money.currency if self.money else "",
-            ),
-            cleared=episode.cleared,
-            acknowledged=acknowledged[0] if acknowledged else None,
-            shelved_until=shelved[-1] if state is AlarmState.SHELVED and shelved else None,
-            value=shown.measured,
-            unit=rule.unit,
-            cost_per_day=cost,
-        )
-
-    def _cost(self, reference: tuple[int, int], since: int, until: int) -> float | None:
-        if self.money is None:
-            return None
-        extra = extra_destroyed(
-            self.store, self.rule.subject, reference, since, until, self.settings.least_hours
-        )
-        if not np.isfinite(extra):
-            return None
-        return max(extra, 0.0) / 1000 * 24 * self.money.exergy_price
-
-
-def _as_stored(steps: Sequence[Transition]) -> list[AlarmTransition]:
-    return [
-        AlarmTransition(
-            time=step.time,
-            action=str(step.action),
-            from_state=str(step.before),
-            to_state=str(step.after),
-            who=step.by,
-            note=step.note,
-            until=step.until,
-        )
-        for step in steps
-    ]
 
 
 def _plain(stored: pd.DataFrame) -> pd.DataFrame:

@@ -43,13 +43,19 @@ def figure_rules(items: Iterable[Item], drift: Drift) -> tuple[FigureRule, ...]:
 
 
 def settings_of(drift: Drift, alarms: Alarms, time_zone: str) -> Settings:
-    """Turn [drift] and [alarms] into seconds; a stated time without an offset is local."""
+    """Turn [drift] and [alarms] into seconds; a stated time without an offset is local.
+
+    Of a reference period with one end stated, ``reference_length`` gives the other.
+    """
     reference = None
-    if drift.reference_from is not None and drift.reference_to is not None:
-        reference = (
-            _seconds(drift.reference_from, time_zone),
-            _seconds(drift.reference_to, time_zone),
-        )
+    begins, ends = drift.reference_from, drift.reference_to
+    length = int(drift.reference_length)
+    if begins is not None:
+        first = _seconds(begins, time_zone)
+        reference = first, first + length if ends is None else _seconds(ends, time_zone)
+    elif ends is not None:
+        last = _seconds(ends, time_zone)
+        reference = last - length, last
     return Settings(
         weight=drift.weight,
         false_alarm_every=drift.false_alarm_every,

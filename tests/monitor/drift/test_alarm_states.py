@@ -4,7 +4,7 @@ import itertools
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from monitor.drift.alarms import (
@@ -175,6 +175,7 @@ def by_hand(calls, times, on, off):
     return result if raised is None else [*result, Episode(int(raised), None)]
 
 
+@settings(deadline=None)
 @given(
     calls=st.lists(st.booleans(), max_size=80),
     on=st.integers(1, 5),
@@ -186,6 +187,7 @@ def test_episodes_are_what_watching_hour_by_hour_gives(calls, on, off, gaps):
     assert episodes(calls, times, on * HOUR, off * HOUR) == by_hand(calls, times, on, off)
 
 
+@settings(deadline=None)
 @given(calls=st.lists(st.booleans(), max_size=60), more=st.lists(st.booleans(), max_size=20))
 def test_more_hours_never_change_what_has_happened(calls, more):
     times = HOUR * np.arange(1, len(calls) + len(more) + 1)

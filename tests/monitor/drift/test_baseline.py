@@ -122,7 +122,7 @@ def test_autocorrelated_hours_know_the_mean_less_well():
     assert 4 < ratio < 16
 
 
-@settings(max_examples=30, deadline=None)
+@settings(max_examples=15, deadline=None)
 @given(shift=st.floats(-1e4, 1e4), scale=st.floats(1e-3, 1e3))
 def test_a_figure_in_another_unit_gives_the_same_baseline_in_that_unit(shift, scale):
     value, load, hour = figure(phi=0.4)
@@ -135,7 +135,7 @@ def test_a_figure_in_another_unit_gives_the_same_baseline_in_that_unit(shift, sc
     assert other.phi == pytest.approx(one.phi, abs=1e-4)
 
 
-@settings(max_examples=30, deadline=None)
+@settings(max_examples=15, deadline=None)
 @given(factor=st.floats(0.01, 100.0))
 def test_a_load_in_another_unit_gives_the_same_expected_values(factor):
     value, load, hour = figure()
@@ -143,7 +143,7 @@ def test_a_load_in_another_unit_gives_the_same_expected_values(factor):
     np.testing.assert_allclose(other.expected(factor * load), one.expected(load), rtol=1e-9)
 
 
-@settings(max_examples=30, deadline=None)
+@settings(max_examples=15, deadline=None)
 @given(seed=st.integers(0, 1000))
 def test_the_order_of_the_hours_does_not_matter(seed):
     value, load, hour = figure(phi=0.5)
@@ -234,7 +234,7 @@ def test_a_baseline_is_written_and_read_without_a_digit_lost():
         assert Baseline.from_json(fitted.to_json()) == fitted
 
 
-@settings(max_examples=30, deadline=None)
+@settings(max_examples=15, deadline=None)
 @given(
     number=st.floats(allow_nan=False, allow_infinity=False),
     notes=st.lists(st.text(), max_size=3),

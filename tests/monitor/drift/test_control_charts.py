@@ -5,7 +5,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 from scipy.signal import lfilter
@@ -153,6 +153,7 @@ def test_the_exact_variance_is_what_a_simulation_gives(phi):
     np.testing.assert_allclose(z[:, at - 1].var(axis=0), ewma_variance(at, 0.1, phi), rtol=0.04)
 
 
+@settings(deadline=None)
 @given(weight=st.floats(0.01, 1.0), phi=st.floats(0.0, 0.95))
 def test_the_exact_variance_ends_at_the_published_one(weight, phi):
     long = float(ewma_variance(5000, weight, phi))
@@ -181,6 +182,7 @@ def test_limits_for_memory_keep_false_alarms_away():
 # --- gaps and laws -------------------------------------------------------------------------------
 
 
+@settings(deadline=None)
 @given(residual=residuals, weight=st.floats(0.01, 1.0))
 def test_the_ewma_is_its_definition(residual, weight):
     z, expected = 0.0, []
@@ -190,6 +192,7 @@ def test_the_ewma_is_its_definition(residual, weight):
     np.testing.assert_allclose(ewma(residual, weight), expected, rtol=1e-9, atol=1e-9)
 
 
+@settings(deadline=None)
 @given(residual=residuals, gaps=st.integers(0, 2**32 - 1))
 def test_a_gap_holds_the_statistic_and_counts_for_nothing(residual, gaps):
     rng = np.random.default_rng(gaps)
@@ -203,6 +206,7 @@ def test_a_gap_holds_the_statistic_and_counts_for_nothing(residual, gaps):
     np.testing.assert_allclose(up[~holes], cusum(residual[~holes], 0.5)[0], atol=1e-8)
 
 
+@settings(deadline=None)
 @given(residual=residuals, cut=st.integers(0, 60))
 def test_a_chart_goes_on_from_where_it_stood(residual, cut):
     cut = min(cut, residual.size)

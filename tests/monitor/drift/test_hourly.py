@@ -2,7 +2,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from monitor.drift.hourly import HOURLY_COLUMNS, hourly_means
@@ -65,6 +65,7 @@ def test_no_cells_give_no_hours():
     assert tuple(hours.columns) == HOURLY_COLUMNS
 
 
+@settings(deadline=None)
 @given(seed=st.integers(0, 10_000))
 def test_the_order_of_the_cells_does_not_matter(seed):
     rng = np.random.default_rng(seed)

@@ -8,8 +8,9 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from monitor.drift.judge import ALARM_KIND, Money, baseline_of, judge
+from monitor.drift.judge import baseline_of, judge
 from monitor.drift.judgement import FigureRule, Settings
+from monitor.drift.raising import ALARM_KIND, Money
 from monitor.drift.rules import figure_rules, settings_of
 from monitor.equipment.base import Figure
 from monitor.flags import Flag
@@ -383,3 +384,16 @@ def test_a_stated_reference_without_an_offset_is_local_time():
         pd.Timestamp("2024-07-15T00:00Z").timestamp(),
     )
     assert settings_of(Drift(), Alarms(), "UTC").reference is None
+
+
+@pytest.mark.parametrize(
+    "stated",
+    [{"reference_from": "2024-07-01T00:00:00Z"}, {"reference_to": "2024-07-15T00:00:00Z"}],
+)
+def test_a_reference_with_one_end_stated_gets_the_other_from_its_length(stated):
+    reference = settings_of(Drift(**stated), Alarms(), "UTC").reference
+    # Two weeks is the default length.
+    assert reference == (
+        pd.Timestamp("2024-07-01T00:00Z").timestamp(),
+        pd.Timestamp("2024-07-15T00:00Z").timestamp(),
+    )

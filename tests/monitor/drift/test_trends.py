@@ -5,7 +5,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from monitor.drift.trends import degradation_rate, mann_kendall
@@ -47,6 +47,7 @@ def test_the_slope_of_the_example_is_the_published_one():
     assert found.days == 14
 
 
+@settings(deadline=None)
 @given(slope=st.floats(-5, 5).filter(lambda s: abs(s) > 1e-6), level=st.floats(-100, 100))
 def test_a_straight_line_has_its_own_slope(slope, level):
     found = degradation_rate(*hourly(level + slope * np.arange(30.0)))
