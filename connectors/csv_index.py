@@ -51,6 +51,7 @@ _SETTLED_AFTER = 600.0
 _MARK = 1024
 _HEADER_WITHIN = 4 * BLOCK
 _PIECE = 1 << 16
+_TWICE = "column that occurs more than once in the header: the last one is read"
 _DAMAGED = "packed file ends early or is damaged: what follows is not read"
 
 
@@ -188,10 +189,12 @@ class IndexedFile:
                 self._drop_unfinished()
                 self._extend(file, extent.size, problems, quiet=quiet or self._packed)
                 self._remember(file)
+        except FileNotFoundError:
+            raise
         except OSError as error:
             self._forget()
-            self._extent = None
-            raise unreadable(self.path, error) from error
+            self._extent, self.error = None, unreadable(self.path, error)
+            raise self.error from error
         except ConnectorError as error:
             self._forget()
             self._extent, self.error = extent, error
@@ -203,9 +206,7 @@ class IndexedFile:
         rows = self._cache.get(block)
         if rows is None:
             try:
-                with open_export(self.path) as file:
-                    file.seek(block.offset)
-                    raw = read_up_to(file, block.length, self.path.name, ProblemCount())
+                raw = self._read(block)
             except OSError as error:
                 raise unreadable(self.path, error) from error
             # What is wrong in the block was reported when it was indexed.
@@ -217,6 +218,11 @@ class IndexedFile:
         """Release what is kept in memory for this file."""
         for block in self.blocks:
             self._cache.drop(block)
+
+    def _read(self, block: Block) -> bytes:
+        with open_export(self.path) as file:
+            file.seek(block.offset)
+            return read_up_to(file, block.length, self.path.name, ProblemCount())
 
     def _parser(self) -> BlockParser:
         if self._parsed_by is None:
@@ -272,7 +278,7 @@ class IndexedFile:
             at_end = len(more) < BLOCK
             raw += more
             if self._parsed_by is None:
-                header = self._start(raw)
+                header = self._start(raw, problems)
                 if header is None:
                     continue
                 raw = raw[header.body :]
@@ -285,7 +291,7 @@ class IndexedFile:
             self._unfinished = self._block(raw, problems)
             self.blocks.append(self._unfinished)
 
-    def _start(self, raw: bytes) -> Header | None:
+    def _start(self, raw: bytes, problems: ProblemCount) -> Header | None:
         options = self._reading.options
         encoding = detect_encoding(options.encoding, raw, str(self.path))
         header = read_header(raw, options, encoding)
@@ -297,6 +303,9 @@ class IndexedFile:
                 )
             return None
         check_columns(header, options, str(self.path))
+        twice = {name for name in header.columns if name and header.columns.count(name) > 1}
+        example = min(twice, default="")
+        problems.add(self.path.name, "header", _TWICE, len(twice), example=example)
         self._encoding = encoding
         self._parsed_by = BlockParser(self._reading, header, encoding, self.path.name)
         self._end, self._line = header.body, header.lines + 1

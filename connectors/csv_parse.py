@@ -171,13 +171,17 @@ class BlockParser:
             line: the number of the first line, for problems.
             problems: what is passed over is counted here.
         """
+        note = _Note(self._file, line, problems)
         data = self._encoding.to_utf8(raw)
+        if data is not raw:
+            note.count(_NOT_DECODED, data.count("\ufffd".encode()))
+        elif not data.isascii():
+            data = _decoded(data, note)
         lines = _line_ends(data)
         if self._comment is not None:
             data = self._comment.sub(b"", data)
         if not data or data.isspace():
             return Parsed(join_rows([]), Span(), lines)
-        note = _Note(self._file, line, problems)
         columns = self._value_columns()
         table = self._table(data, columns, note)
         if self._long:
@@ -196,17 +200,14 @@ class BlockParser:
         try:
             table, refused = self._read(data, types, _CHUNK)
         except pa.ArrowInvalid:
-            # Words among the numbers, bytes that are no UTF-8, or one huge line: read as text.
-            data = self._decoded(data, note)
+            # Words among the numbers, or one huge line: read as text.
             types = dict.fromkeys(types, _TEXT)
             table, refused = self._read(data, types, len(data) + 1)
             self._as_text.update(at for at in columns if not _all_numbers(table[_name(at)]))
         if b'"' in data and table.num_rows + refused.count != _lines(data):
             note.count(_STRAY_QUOTE, 1)
             types = dict.fromkeys(types, _TEXT)
-            table, refused = self._read(
-                self._decoded(data, note), types, len(data) + 1, quote=False
-            )
+            table, refused = self._read(data, types, len(data) + 1, quote=False)
         note.count(_WRONG_CELLS, refused.count, example=refused.example, row=table.num_rows)
         return table
 
@@ -244,15 +245,6 @@ class BlockParser:
             return [""]  # a word must be told from an empty cell
         words = self._reading.options.bad_words
         return ["", *{form for w in words for form in (w, w.lower(), w.upper(), w.capitalize())}]
-
-    def _decoded(self, data: bytes, note: _Note) -> bytes:
-        try:
-            data.decode()
-        except UnicodeDecodeError:
-            text = data.decode(errors="replace")
-            note.count(_NOT_DECODED, text.count("\ufffd"))
-            return text.encode()
-        return data
 
     def _parse_long(self, table: pa.Table, lines: int, note: _Note) -> Parsed:
         times, has_time = self._times(table, note)
@@ -388,6 +380,16 @@ def _all_numbers(column: pa.ChunkedArray) -> bool:
     except pa.ArrowInvalid:
         return False
     return True
+
+
+def _decoded(data: bytes, note: _Note) -> bytes:
+    try:
+        data.decode()
+    except UnicodeDecodeError:
+        text = data.decode(errors="replace")
+        note.count(_NOT_DECODED, text.count("\ufffd"))
+        return text.encode()
+    return data
 
 
 def _lines(data: bytes) -> int:

@@ -45,8 +45,7 @@ class CsvSource:
     """
 
     def __init__(self, options: CsvOptions, folder: Path, *, cache_limit: int = _CACHE) -> None:
-        self._options = options
-        self._pattern = str(folder / Path(options.path).expanduser())
+        self._options, self._folder = options, folder
         self._cache = RowCache(cache_limit)
         self._book = TagBook()
         self._reading = Reading.of(options, self._book)
@@ -88,12 +87,20 @@ class CsvSource:
         self._files.clear()
 
     def _paths(self) -> list[Path]:
-        found = [Path(path) for path in glob.glob(self._pattern, recursive=True)]  # noqa: PTH207
-        paths = sorted((path for path in found if path.is_file()), key=_by_name)
+        try:
+            pattern = Path(self._options.path).expanduser()
+        except RuntimeError as error:
+            raise ConnectorError(f"path '{self._options.path}': {error}") from error
+        # Only the pattern is one: a folder may have '[' in its name, and so may a single file.
+        if (self._folder / pattern).is_file():
+            return [self._folder / pattern]
+        found = glob.glob(str(pattern), root_dir=self._folder, recursive=True)  # noqa: PTH207
+        paths = sorted((self._folder / path for path in found), key=_by_name)
+        paths = [path for path in paths if path.is_file()]
         if not paths:
             raise ConnectorError(
-                f"no file matches {self._pattern}; correct the source's path, or start the export "
-                "that writes there"
+                f"no file matches {self._folder / pattern}; correct the source's path, or start "
+                "the export that writes there"
             )
         return paths
 

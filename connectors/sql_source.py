@@ -14,7 +14,7 @@ from sqlalchemy import MetaData, Table, func, select, type_coerce
 from sqlalchemy.exc import NoSuchTableError
 from sqlalchemy.types import NullType
 
-from connectors.base import ConnectorError, Probe, Quality, ReadResult
+from connectors.base import ConnectorError, Probe, Quality, ReadResult, Window
 from connectors.numbers import NumberReader
 from connectors.quality import QualityWords
 from connectors.sql_engine import Database
@@ -30,14 +30,16 @@ if TYPE_CHECKING:
     from pydantic import BaseModel
     from sqlalchemy import Column, Connection
 
-    from connectors.base import Connector, Window
+    from connectors.base import Connector
 
 __all__ = ["SqlKind", "SqlSource"]
 
 _BATCH = 500
 """Tags a statement: well below the least limit of bound parameters (999 in old SQLite files)."""
 
-_MOST_TAGS = 10_000
+_MOST_TAGS = 100_000
+_RECENT = pd.Timedelta(days=30)
+_A_MOMENT = pd.Timedelta(seconds=1)
 
 _NO_TIME = "row dropped: its time cannot be read"
 _MISSING_HOUR = "row dropped: its local time does not exist, the clock was put forward"
@@ -198,18 +200,27 @@ class SqlSource:
     def _look(self, connection: Connection) -> Probe:
         problems = ProblemCount()
         tables, times = self._tables(connection)
-        named = tables.tag if tables.name is None else tables.name
-        found = connection.execute(select(named).distinct().limit(_MOST_TAGS)).scalars().all()
+        where = f"table {self._options.table} of {self._database.shown}"
         ends = connection.execute(select(func.min(tables.time), func.max(tables.time))).one()
         first = last = None
         if ends[0] is not None:
             parsed = times.parse(list(ends))
-            if (parsed.first == NO_TIME).any():
-                problems.add(self._options.table, "", _NO_TIME, 1, example=str(ends[0]))
-            else:
+            lost = parsed.first == NO_TIME
+            example = str(ends[int(lost.argmax())])
+            problems.add(self._options.table, "", _NO_TIME, int(lost.sum()), example=example)
+            if not lost.any():
                 first, last = from_microseconds(np.array([parsed.first[0], parsed.second[1]]))
+        if tables.name is not None:
+            statement = select(tables.name)
+        elif last is not None:
+            # All tags ever written would be a scan of the whole table, hours on a large one.
+            recent = times.condition(connection, Window(last - _RECENT, last + _A_MOMENT))
+            statement = select(tables.tag).where(*recent)
+            where += f"; tags are those of the newest {_RECENT.days} days"
+        else:
+            statement = select(tables.tag)
+        found = connection.execute(statement.distinct().limit(_MOST_TAGS)).scalars().all()
         tags = tuple(sorted(str(name) for name in found if name is not None))
-        where = f"table {self._options.table} of {self._database.shown}"
         return Probe(tags, first, last, where, problems.problems())
 
     def _tables(self, connection: Connection) -> tuple[_Tables, SqlTimes]:

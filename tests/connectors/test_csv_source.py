@@ -491,6 +491,65 @@ def test_a_probe_of_a_wide_export_lists_its_headers(tmp_path):
     assert source(tmp_path, layout="wide").probe().tags == ("a", "b")
 
 
+def test_a_folder_and_a_file_may_have_brackets_in_their_names(tmp_path):
+    folder = tmp_path / "unit [1]"
+    folder.mkdir()
+    write(folder, LONG, "a[1].csv")
+    for path in ("*.csv", "a[1].csv", str(folder / "a[1].csv")):
+        assert len(source(folder, path).read(TAGS, DAY).readings) == 4
+
+
+def test_a_home_that_is_not_there_is_told(tmp_path):
+    with pytest.raises(ConnectorError, match="nobody-of-this-name"):
+        source(tmp_path, "~nobody-of-this-name/*.csv").probe()
+
+
+def test_a_wide_header_with_a_tag_twice_is_counted_and_the_last_is_read(tmp_path):
+    write(tmp_path, "time,a,a\n2026-01-31 06:00,1,2\n")
+    result = source(tmp_path, layout="wide").read(["a"], DAY)
+    assert rows(result) == [("a", "06:00", 2, "GOOD")]
+    assert counts(result) == {"column that occurs more than once in the header": 1}
+
+
+def test_characters_that_cp1252_does_not_have_are_counted(tmp_path):
+    (tmp_path / "export.csv").write_bytes(b"time,tag,value\n2026-01-31 06:00,a\x81,1\n")
+    result = source(tmp_path, encoding="cp1252").read(["a\ufffd"], DAY)
+    assert rows(result) == [("a\ufffd", "06:00", 1, "GOOD")]
+    assert counts(result) == {"characters that the encoding does not have, replaced": 1}
+
+
+def test_a_file_that_may_not_be_read_is_told(tmp_path, monkeypatch):
+    write(tmp_path, LONG)
+
+    def refuse(path):
+        raise PermissionError(13, "Permission denied", str(path))
+
+    monkeypatch.setattr(connectors.csv_index, "open_export", refuse)
+    with pytest.raises(ConnectorError, match=r"export\.csv cannot be read \(Permission denied\)"):
+        source(tmp_path).read(TAGS, DAY)
+
+
+@settings(
+    max_examples=150, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture]
+)
+@given(
+    noise=st.lists(
+        st.one_of(
+            st.binary(max_size=30),
+            st.sampled_from([b'"', b",", b"\n", b"\r", b"\x00", b"2026-01-31 06:00", b"62-PT-001"]),
+        ),
+        max_size=12,
+    ),
+    encoding=st.sampled_from(["utf-8", "cp1252"]),
+)
+def test_noise_in_a_file_never_stops_the_reader(tmp_path_factory, noise, encoding):
+    folder = tmp_path_factory.mktemp("noise")
+    tail = b"\n2026-01-31 07:00:00,62-PT-001,5,Good\n"
+    (folder / "export.csv").write_bytes(LONG.encode() + b"".join(noise) + tail)
+    result = source(folder, encoding=encoding).read(TAGS, DAY)
+    assert set(rows(result)) >= {(*row[:3], "GOOD") for row in EXPECTED}
+
+
 # A law: how rows are cut into files, blocks and pieces does not matter --------------------------
 
 _READING = st.tuples(

@@ -1,7 +1,7 @@
 """What reading exports costs, beside what a user would write by hand.
 
-Run ``python benchmarks/connectors.py [days]``. Every figure is the best of three, as a ratio to one
-plain read of all bytes; the machine's own speed drops out.
+Run ``python benchmarks/read_exports.py [days]``. Every figure is the best of three, as a ratio to
+one plain read of all bytes; the machine's own speed drops out.
 """
 
 from __future__ import annotations
@@ -101,12 +101,14 @@ def main():
         write_long(words, days, words=True)
         write_wide(wide, days)
         quality = {"quality_column": "quality"}
-        assert backfill(clean, days, **quality) == count
-        assert backfill(wide, days, layout="wide") == count
+        if (
+            backfill(clean, days, **quality) != count
+            or backfill(wide, days, layout="wide") != count
+        ):
+            raise SystemExit("a backfill lost readings: nothing is measured")
         by_hand, typed = best(read_by_hand, clean), best(typed_read, clean)
-        print(
-            f"{days} days, {count / 1e6:.2f} million readings, {clean.stat().st_size / 1e6:.0f} MB"
-        )
+        size = clean.stat().st_size / 1e6
+        print(f"{days} days, {count / 1e6:.2f} million readings, {size:.0f} MB")
         print(f"{'':44}{'s':>8}{'/ by hand':>11}{'/ parser':>10}")
         source = open_source("csv", {"path": str(clean), **quality}, clean.parent)
         live(source, clean)
