@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-__all__ = ["Issue", "LostworkError", "SiteFileError"]
+__all__ = ["Issue", "LostworkError", "SiteFileError", "SiteUnreadableError", "WrongUseError"]
 
 
 class LostworkError(Exception):
@@ -38,3 +38,11 @@ class SiteFileError(LostworkError):
         self.issues = issues
         count = f"{len(issues)} error{'s' if len(issues) > 1 else ''}"
         super().__init__("\n".join([f"{path}: {count}", *(f"  {issue}" for issue in issues)]))
+
+
+class SiteUnreadableError(LostworkError):
+    """A site file that is not there, may not be read, or is no TOML."""
+
+
+class WrongUseError(LostworkError):
+    """A command was asked for something that it cannot mean; says what it can."""

@@ -1,0 +1,260 @@
+"""Many windows, one after the other: what a site missed, or a stretch of its past.
+
+Each window is a transaction of its own, so whatever ends the work, what is done is kept whole. With
+two processes one reads and computes ahead while the other writes; the figures are the same.
+"""
+
+from __future__ import annotations
+
+import itertools
+import multiprocessing
+import os
+import signal
+import threading
+from concurrent.futures import ProcessPoolExecutor
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
+
+import structlog
+
+from monitor.cycle import compute_window, run_window, store_window
+from monitor.errors import WrongUseError
+from monitor.log import logger
+from monitor.sources import open_sources
+from monitor.version import version
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Iterator, Mapping
+    from concurrent.futures import Future
+
+    from connectors.base import Connector, Problem
+    from monitor.figures import Computed
+    from monitor.site.load import Site
+    from monitor.store.site import SiteStore
+
+__all__ = ["Tally", "backfill", "catch_up", "last_complete", "recorded_run", "windows"]
+
+HOUR, DAY = 3600, 86400
+_AHEAD = 2
+"""Windows computed ahead of the one being written: more only takes memory."""
+
+
+@dataclass
+class Tally:
+    """What some windows came to.
+
+    Attributes:
+        windows: how many were stored.
+        readings, bad, missing: readings; those left out; cells without a value.
+        problems: what the sources passed over, counted.
+    """
+
+    windows: int = 0
+    readings: int = 0
+    bad: int = 0
+    missing: int = 0
+    problems: dict[tuple[str, str], int] = field(default_factory=dict)
+
+    def add(self, computed: Computed) -> None:
+        """Count a window in."""
+        self.windows += 1
+        self.readings += computed.readings
+        self.bad += computed.bad
+        self.missing += computed.missing
+        for problem in computed.problems:
+            self._note(problem)
+
+    def _note(self, problem: Problem) -> None:
+        key = (problem.where, problem.what)
+        self.problems[key] = self.problems.get(key, 0) + problem.count
+
+
+def windows(start: int, end: int) -> list[tuple[int, int]]:
+    """Cut [start, end) at midnights UTC; integer UTC seconds, half open."""
+    cuts = [start, *range((start // DAY + 1) * DAY, end, DAY), end]
+    return [(a, b) for a, b in itertools.pairwise(cuts) if a < b]
+
+
+def last_complete(site: Site, now: float) -> int:
+    """End of the newest cell that is over and has settled, integer UTC seconds."""
+    general = site.file.site
+    return int((now - general.settle) // general.interval * general.interval)
+
+
+def backfill(
+    site: Site,
+    store: SiteStore,
+    start: int,
+    end: int,
+    *,
+    progress: Callable[[int, int, Computed], None] | None = None,
+    run_kind: str = "backfill",
+    workers: int = 1,
+) -> Tally:
+    """Compute a stretch of time, a UTC day a window.
+
+    Args:
+        site: the site.
+        store: its part of the store.
+        start: integer UTC seconds; the first window starts at the full hour at or before it.
+        end: integer UTC seconds; the last window ends on the grid at or before it.
+        progress: told after each window: windows done, windows in all, the window.
+        run_kind: the run's name in the store.
+        workers: 1 computes and writes in turn; 2 computes ahead in a process of its own.
+
+    Raises:
+        WrongUseError: the stretch holds no whole cell.
+        ConnectorError: a source cannot be read; windows before that are kept.
+        StoreError: the store cannot be written; windows before that are kept.
+    """
+    interval = int(site.file.site.interval)
+    first, last = start // HOUR * HOUR, end // interval * interval
+    if first >= last:
+        raise WrongUseError("the stretch to compute is empty: it must end after it starts")
+    cut = windows(first, last)
+    source_ids = [source.id for source in site.file.source]
+    with recorded_run(site, store, run_kind, first, last) as (run_id, tally):
+        with _computed(site, cut, workers) as stream:
+            for computed in stream:
+                store_window(store, source_ids, computed, run_id)
+                tally.add(computed)
+                if progress is not None:
+                    progress(tally.windows, len(cut), computed)
+        return tally
+
+
+def catch_up(
+    site: Site,
+    store: SiteStore,
+    sources: Mapping[str, Connector],
+    now: float,
+    *,
+    stop: Callable[[], bool] = lambda: False,
+    run_kind: str = "cycle",
+) -> list[Computed]:
+    """Compute what came since the last time, and the look-back before it again.
+
+    From the oldest watermark less ``look_back`` to the newest cell that has settled, a UTC day a
+    window at most. An empty store gets its last 24 hours; older ones are for `backfill`.
+
+    Args:
+        site: the site.
+        store: its part of the store.
+        sources: open connectors by source id.
+        now: the wall clock, UTC seconds.
+        stop: asked between windows; what is left is for the next time.
+        run_kind: the run's name in the store.
+
+    Returns:
+        The windows in order; empty when there is nothing new.
+
+    Raises:
+        ConnectorError, StoreError: as `backfill`.
+    """
+    end = last_complete(site, now)
+    known = store.watermarks()
+    marks = [known[source] for source in sources if source in known]
+    if not marks:
+        logger().info("the store is empty: taking the last 24 hours; use backfill for older ones")
+        start = (end - DAY) // HOUR * HOUR
+    elif min(marks) >= end:
+        return []
+    else:
+        start = int(min(marks) - site.file.site.look_back) // HOUR * HOUR
+    done: list[Computed] = []
+    with recorded_run(site, store, run_kind, start, end) as (run_id, tally):
+        for first, last in windows(start, end):
+            if stop():
+                break
+            done.append(run_window(site, store, sources, first, last, run_id))
+            tally.add(done[-1])
+    return done
+
+
+@contextmanager
+def recorded_run(
+    site: Site, store: SiteStore, job: str, start: int | None, end: int | None
+) -> Iterator[tuple[int, Tally]]:
+    """Record a run, and how it ends: ``done``, or ``failed`` with the cause."""
+    run_id = store.begin_run(job, version(), site.hash, start, end)
+    tally = Tally()
+    try:
+        with structlog.contextvars.bound_contextvars(run=run_id):
+            yield run_id, tally
+    except BaseException as error:
+        cause = str(error) or type(error).__name__
+        try:
+            _finish(store, run_id, "failed", tally, cause)
+        except Exception as second:  # noqa: BLE001 - the first cause is the one to tell
+            logger().warning("the failed run could not be recorded", run=run_id, cause=str(second))
+        raise
+    _finish(store, run_id, "done", tally, f"{tally.windows} windows")
+
+
+def _finish(store: SiteStore, run_id: int, status: str, tally: Tally, message: str) -> None:
+    store.finish_run(
+        run_id,
+        "done" if status == "done" else "failed",
+        readings=tally.readings,
+        bad=tally.bad,
+        missing=tally.missing,
+        message=message,
+    )
+
+
+@contextmanager
+def _computed(site: Site, cut: list[tuple[int, int]], workers: int) -> Iterator[Iterator[Computed]]:
+    """Give computed windows in order, from this process or from one that works ahead."""
+    if workers == 1:
+        with open_sources(site) as sources:
+            yield (compute_window(site, sources, first, last) for first, last in cut)
+        return
+    pool = ProcessPoolExecutor(
+        1, mp_context=multiprocessing.get_context("spawn"), initializer=_start, initargs=(site,)
+    )
+    try:
+        yield _ahead(pool, cut)
+    finally:
+        pool.shutdown(wait=True, cancel_futures=True)
+
+
+def _ahead(pool: ProcessPoolExecutor, cut: list[tuple[int, int]]) -> Iterator[Computed]:
+    waiting: list[Future[Computed]] = []
+    for window in cut:
+        waiting.append(pool.submit(_compute, window))
+        if len(waiting) > _AHEAD:
+            yield waiting.pop(0).result()
+    for future in waiting:
+        yield future.result()
+
+
+class _Worker:
+    """What the computing process keeps between windows: the site, and its open sources."""
+
+    site: Site
+    stack: ExitStack
+    sources: Mapping[str, Connector] | None = None
+
+
+def _start(site: Site) -> None:
+    # Ctrl-C reaches every process of a terminal; the writing one decides what happens.
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    # A writer that was killed tells nobody; without this the process would wait for it for ever.
+    threading.Thread(target=_leave_with_parent, daemon=True).start()
+    _Worker.site = site
+
+
+def _leave_with_parent() -> None:
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        parent.join()
+        os._exit(1)
+
+
+def _compute(window: tuple[int, int]) -> Computed:
+    if _Worker.sources is None:
+        # Opened here and not at the start, where an error would only break the pool.
+        _Worker.stack = ExitStack()
+        _Worker.sources = _Worker.stack.enter_context(open_sources(_Worker.site))
+    return compute_window(_Worker.site, _Worker.sources, *window)

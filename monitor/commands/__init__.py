@@ -1,0 +1,1 @@
+"""The commands, a file a group: parse, call, print. `monitor.cli` puts them together."""

@@ -1,0 +1,71 @@
+"""``lostwork check``: everything that can be told before anything runs."""
+
+from __future__ import annotations
+
+from collections import Counter
+from pathlib import Path  # noqa: TC003 - typer reads it
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from monitor.commands.exits import ExitCode
+from monitor.commands.group import write_json
+from monitor.commands.opening import open_site
+from monitor.commands.tables import Column, print_table
+
+if TYPE_CHECKING:
+    from monitor.check import Line, Verdict
+    from monitor.site.load import Site
+
+__all__ = ["check"]
+
+
+def check(
+    site: Annotated[Path, typer.Argument(help="The site file (TOML).")],
+    *,
+    as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
+) -> None:
+    """Look at a site before anything runs.
+
+    Site file, sources, tags, streams and balances over the newest day; nothing is stored. Each line
+    says ok, look (worth your eyes) or wrong (figures would be wrong). Ends with exit code 1 when
+    anything is wrong, 3 when the site file itself is.
+
+    Example: lostwork check config/demo/site.toml
+    """
+    from monitor.check import check as look  # noqa: PLC0415
+
+    read = open_site(site)
+    lines = look(read)
+    count = Counter(line.verdict for line in lines)
+    if as_json:
+        write_json(
+            {
+                "site": read.id,
+                "ok": count["ok"],
+                "look": count["look"],
+                "wrong": count["wrong"],
+                "lines": [vars(line) | {"figures": dict(line.figures)} for line in lines],
+            }
+        )
+    else:
+        _print(read, lines, count)
+    if count["wrong"]:
+        raise typer.Exit(ExitCode.FOUND_WRONG)
+
+
+def _print(site: Site, lines: list[Line], count: Counter[Verdict]) -> None:
+    colours = {"ok": "green", "look": "yellow", "wrong": "red"}
+    columns = [
+        Column("what"),
+        Column("name"),
+        Column("", styles=colours),
+        Column("found"),
+        Column("why"),
+    ]
+    rows = [(line.kind, line.subject, line.verdict, line.found, line.reason) for line in lines]
+    print_table(columns, rows)
+    typer.echo(
+        f"{site.file.site.name}: {count['ok']} ok, {count['look']} to look at, "
+        f"{count['wrong']} wrong"
+    )

@@ -1,0 +1,126 @@
+"""``lostwork explain``: where one figure comes from."""
+
+from __future__ import annotations
+
+import math
+import time
+from dataclasses import asdict
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from monitor.commands.arguments import Json, Site  # noqa: TC001 - typer reads them
+from monitor.commands.exits import ExitCode
+from monitor.commands.group import write_json
+from monitor.commands.names import known
+from monitor.commands.opening import opened_to_read
+from monitor.commands.tables import Column, print_table
+from monitor.commands.times import local, read_time, utc_text
+
+if TYPE_CHECKING:
+    from monitor.explain import Explanation
+
+__all__ = ["explain"]
+
+_STATE = ("mass_flow_kg_s", "pressure_bar", "temperature_degc", "enthalpy_kj_kg",
+          "entropy_kj_kgk", "dryness", "energy_kw", "exergy_live_kw")  # fmt: skip
+
+
+def explain(
+    site: Site,
+    subject: Annotated[str, typer.Argument(help="A stream, an equipment, or 'ledger'.")],
+    figure: Annotated[
+        str,
+        typer.Argument(help="For example exergy_live_kw, destroyed_live_kw."),
+    ],
+    at_time: Annotated[
+        str, typer.Option("--at", help="A time in the grid cell; left out: the newest cell.")
+    ] = "",
+    *,
+    as_json: Json = False,
+) -> None:
+    """Show where one figure comes from.
+
+    Readings, gridded values, states, formula, numbers and units, step by step. It is read and
+    computed again and compared with the stored one; exit code 1 when they differ.
+
+    Example: lostwork explain site.toml TG1 eta_s_1 --at "2026-03-01 06:00"
+    """
+    from monitor.explain import explain as work  # noqa: PLC0415
+    from monitor.explain import figures_of  # noqa: PLC0415
+    from monitor.sources import open_sources  # noqa: PLC0415
+
+    with opened_to_read(site) as at:
+        known(subject, [*at.site.items, *at.site.streams, "ledger"], "stream or equipment")
+        known(figure, figures_of(at.site, subject), f"figure of '{subject}':")
+        zone = at.site.file.site.time_zone
+        newest = at.store.newest()
+        if at_time or newest is None:
+            when = read_time(at_time or "now", zone, int(time.time()), "--at")
+        else:
+            when = int(newest.timestamp())
+        with open_sources(at.site) as sources:
+            found = work(at.site, at.store, sources, subject, figure, when)
+    if as_json:
+        write_json(
+            asdict(found)
+            | {
+                "start": utc_text(found.start),
+                "end": utc_text(found.end),
+                "by_steps": found.by_steps,
+                "agrees": found.agrees,
+            }
+        )
+    else:
+        _print(found, zone)
+    if not found.agrees:
+        raise typer.Exit(ExitCode.FOUND_WRONG)
+
+
+def _print(found: Explanation, zone: str) -> None:
+    typer.echo(
+        f"{found.figure} of {found.subject}, {local(found.start, zone)} to {local(found.end, zone)}"
+    )
+    _section("readings (the one before the cell is still in force)")
+    rows = [
+        (r.tag, local(int(r.time.timestamp()), zone), _digits(r.value), r.unit, r.quality)
+        for r in found.readings
+    ]
+    heads = ("tag", "time", "value", "unit", "quality")
+    print_table([Column(h, right=h == "value") for h in heads], rows)
+    _section("on the grid (time-weighted means)")
+    means = [(g.tag, _digits(g.value), g.unit, g.rests_on) for g in found.gridded]
+    print_table(
+        [Column(h, right=h == "value") for h in ("tag", "value", "unit", "rests on")], means
+    )
+    _section("states")
+    states = [
+        (s.stream, *(_digits(s.figures[name]) for name in _STATE), s.rests_on) for s in found.states
+    ]
+    columns = [Column(h, right=h in _STATE) for h in ("stream", *_STATE, "rests on")]
+    print_table(columns, states)
+    if found.steps:
+        _section("step by step")
+    for number, step in enumerate(found.steps, start=1):
+        typer.echo(f"{number}. {step.gives}: {step.formula}")
+        typer.echo(f"   {step.numbers} = {_digits(step.value)} {step.unit}")
+    _section("the figure")
+    for label, value in (
+        ("computed now", found.computed),
+        ("stored", found.stored),
+        ("by these steps", found.by_steps),
+    ):
+        if value is not None:
+            typer.echo(f"{label:16} {_digits(value)} {found.unit}".rstrip())
+    if found.stored is None:
+        typer.echo(f"{'stored':16} nothing for this cell")
+    typer.echo(f"{'rests on':16} {found.rests_on}")
+    typer.echo(f"{'they agree':16} {'yes' if found.agrees else 'NO: compute that time again'}")
+
+
+def _section(title: str) -> None:
+    typer.echo(f"\n{title}")
+
+
+def _digits(value: float) -> str:
+    return "-" if math.isnan(value) else f"{value:.6g}"

@@ -1,0 +1,149 @@
+"""``lostwork status``: is it running, is it up to date, is anything open."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import asdict, dataclass
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from monitor.commands.arguments import Json, Site  # noqa: TC001 - typer reads them
+from monitor.commands.exits import ExitCode
+from monitor.commands.group import write_json
+from monitor.commands.opening import Opened, opened_to_read
+from monitor.commands.times import duration_seconds, local, utc_text
+
+if TYPE_CHECKING:
+    from monitor.store.runs import Run
+
+__all__ = ["status"]
+
+_LOOKED_AT = 50
+
+
+@dataclass(frozen=True)
+class _Status:
+    newest: int | None
+    lag_s: int | None
+    allowed_lag_s: int
+    holder: str | None
+    last_run: Run | None
+    failures: int
+    """Runs that failed since the last one that did not."""
+    open_alarms: int
+    unhealthy: tuple[str, ...]
+
+
+def status(
+    site: Site,
+    allowed: Annotated[
+        str,
+        typer.Option(
+            "--max-lag", help="Figures older than this are unhealthy; left out: 3 intervals."
+        ),
+    ] = "",
+    *,
+    as_json: Json = False,
+) -> None:
+    """Say how a site's figures stand.
+
+    For a person, or for a watchdog by its exit code.
+
+    Exit code 1 when the newest figure is too old, no instance runs, or the last run failed.
+
+    Example: lostwork status site.toml --max-lag 30min
+    """
+    with opened_to_read(site) as at:
+        found = _status(at, duration_seconds(allowed, "--max-lag") if allowed else None)
+        zone = at.site.file.site.time_zone
+    if as_json:
+        run = None if found.last_run is None else asdict(found.last_run)
+        write_json(
+            {
+                "healthy": not found.unhealthy,
+                "unhealthy": found.unhealthy,
+                "newest": utc_text(found.newest),
+                "lag_s": found.lag_s,
+                "allowed_lag_s": found.allowed_lag_s,
+                "instance": found.holder,
+                "last_run": run,
+                "failures": found.failures,
+                "open_alarms": found.open_alarms,
+            }
+        )
+    else:
+        _print(found, zone)
+    if found.unhealthy:
+        raise typer.Exit(ExitCode.FOUND_WRONG)
+
+
+def _status(at: Opened, allowed: int | None) -> _Status:
+    general = at.site.file.site
+    limit = allowed if allowed is not None else int(3 * general.interval + general.settle)
+    edge = at.store.newest()
+    newest = None if edge is None else int(edge.timestamp()) + at.store.interval_s
+    lag = None if newest is None else max(0, int(time.time()) - newest)
+    runs = at.store.runs(_LOOKED_AT)
+    over = [run for run in runs if run.status != "running"]
+    failures = next((n for n, run in enumerate(over) if run.status == "done"), len(over))
+    holder = _holder(at)
+    unhealthy = []
+    if lag is None or newest is None:
+        unhealthy.append("there are no figures yet")
+    elif lag > limit:
+        unhealthy.append(f"the newest figure is {_span(lag)} old, more than {_span(limit)}")
+    if holder is None:
+        unhealthy.append("no instance is running")
+    if failures:
+        unhealthy.append(f"the last {failures} runs failed: {over[0].message}")
+    return _Status(
+        newest,
+        lag,
+        limit,
+        holder,
+        runs[0] if runs else None,
+        failures,
+        len(at.store.open_alarms()),
+        tuple(unhealthy),
+    )
+
+
+def _holder(at: Opened) -> str | None:
+    """Who computes the site, None when nobody does: by trying the lock, which cannot be stale."""
+    from monitor.store.errors import InstanceRunning  # noqa: PLC0415
+    from monitor.store.lock import lock_site  # noqa: PLC0415
+
+    try:
+        # Not `instance_lock`: a look must not close other processes' runs.
+        with lock_site(at.database.engine, at.store.site_id, at.site.id, "lostwork status"):
+            return None
+    except InstanceRunning as running:
+        text = str(running)
+        return text.partition("computed by ")[2].partition(";")[0] or text
+
+
+def _print(found: _Status, zone: str) -> None:
+    lag = "-" if found.lag_s is None else f"{_span(found.lag_s)} ago"
+    run = found.last_run
+    rows = [
+        ("newest figure", f"{local(found.newest, zone)} ({lag})"),
+        ("instance", found.holder or "none"),
+        (
+            "last run",
+            "-" if run is None else f"{run.job} {run.run_id}: {run.status}; {run.message}",
+        ),
+        ("failures since", str(found.failures)),
+        ("open alarms", str(found.open_alarms)),
+        ("health", "; ".join(found.unhealthy) or "good"),
+    ]
+    for label, text in rows:
+        typer.echo(f"{label:16} {text}")
+
+
+def _span(seconds: int) -> str:
+    if seconds < 120:  # noqa: PLR2004
+        return f"{seconds} s"
+    if seconds < 7200:  # noqa: PLR2004
+        return f"{seconds // 60} min"
+    return f"{seconds // 3600} h" if seconds < 172800 else f"{seconds // 86400} days"  # noqa: PLR2004

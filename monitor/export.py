@@ -1,0 +1,119 @@
+"""Stored figures out of the store, as CSV or Parquet, a day at a time."""
+
+from __future__ import annotations
+
+import io
+from typing import TYPE_CHECKING, Literal
+
+import pandas as pd
+import pyarrow as pa
+from pyarrow import parquet
+
+from monitor.store.alarms import AlarmRecord
+from monitor.store.batch import (
+    CONDITION_COLUMNS,
+    EQUIPMENT_COLUMNS,
+    LEDGER_COLUMNS,
+    STREAM_COLUMNS,
+)
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+    from typing import BinaryIO
+
+    from monitor.store.site import SiteStore
+
+__all__ = ["Format", "What", "columns_of", "export", "tables"]
+
+What = Literal["streams", "equipment", "conditions", "ledger", "alarms"]
+Format = Literal["csv", "parquet"]
+DAY = 86400
+
+_COLUMNS: dict[str, tuple[str, ...]] = {
+    "streams": ("time", "subject", *STREAM_COLUMNS, "flag"),
+    "equipment": ("time", "subject", *EQUIPMENT_COLUMNS, "flag"),
+    "conditions": ("time", "subject", "figure", *CONDITION_COLUMNS, "flag"),
+    "ledger": ("time", *LEDGER_COLUMNS, "flag"),
+    "alarms": ("alarm_id", *(n for n in AlarmRecord.__dataclass_fields__ if n != "alarm_id")),
+}
+_ALARM_TIMES = ("raised", "cleared", "acknowledged", "shelved_until")
+
+
+def columns_of(what: What) -> tuple[str, ...]:
+    """The columns of an export; the unit stands in each name, times are UTC."""
+    return _COLUMNS[what]
+
+
+def export(store: SiteStore, what: What, start: int, end: int, kind: Format, out: BinaryIO) -> int:
+    """Write stored figures to an open file.
+
+    Args:
+        store: the site's part of the store.
+        what: which figures.
+        start: integer UTC seconds.
+        end: integer UTC seconds, not included.
+        kind: CSV has times as ISO 8601 in UTC and nothing where a figure is absent.
+        out: a binary file; is not closed.
+
+    Returns:
+        Rows written.
+
+    Raises:
+        StoreError: the store cannot be read.
+    """
+    rows = 0
+    if kind == "csv":
+        out.write((",".join(columns_of(what)) + "\n").encode())
+        for table in tables(store, what, start, end):
+            text = io.StringIO()
+            table.to_csv(text, index=False, header=False, date_format="%Y-%m-%dT%H:%M:%SZ")
+            out.write(text.getvalue().encode())
+            rows += len(table)
+        return rows
+    writer: parquet.ParquetWriter | None = None
+    try:
+        for table in tables(store, what, start, end):
+            arrow = pa.Table.from_pandas(table, preserve_index=False)
+            if writer is None:
+                writer = parquet.ParquetWriter(out, arrow.schema)
+            writer.write_table(arrow)
+            rows += len(table)
+    finally:
+        if writer is not None:
+            writer.close()
+    return rows
+
+
+def tables(store: SiteStore, what: What, start: int, end: int) -> Iterator[pd.DataFrame]:
+    """Give stored figures in pieces of a day, the last piece at least; columns as `columns_of`."""
+    if what == "alarms":
+        yield _alarms(store, start, end)
+        return
+    first = start
+    while True:
+        last = min(first + DAY, end)
+        frame = _figures(store, what, first, last).reset_index()
+        yield frame[list(columns_of(what))].astype(
+            {name: "str" for name in ("subject", "figure") if name in frame.columns}
+        )
+        first = last
+        if first >= end:
+            return
+
+
+def _figures(store: SiteStore, what: What, start: int, end: int) -> pd.DataFrame:
+    if what == "streams":
+        return store.streams(None, start, end)
+    if what == "equipment":
+        return store.equipment(None, start, end)
+    if what == "ledger":
+        return store.ledger(start, end)
+    return store.conditions(None, None, start, end)
+
+
+def _alarms(store: SiteStore, start: int, end: int) -> pd.DataFrame:
+    records = sorted(store.alarm_history(start, end), key=lambda a: (a.raised, a.alarm_id))
+    frame = pd.DataFrame([vars(record) for record in records], columns=list(columns_of("alarms")))
+    for name in _ALARM_TIMES:
+        frame[name] = pd.to_datetime(frame[name].astype("Int64"), unit="s", utc=True)
+    return frame.astype({"value": "float64", "cost_per_day": "float64", "alarm_id": "int64"})
