@@ -34,7 +34,7 @@ def expansion_chart(view: ExpansionView) -> Chart | None:
     if known.empty:
         return None
     window = _window(view, known)
-    traces = [_dome(view.dome), *(_isobar(table) for _, table in view.isobars)]
+    traces = [_dome(view.dome), *(_isobar(*isobar) for isobar in view.isobars)]
     if view.baseline_points is not None:
         traces += _baseline(view.baseline_points)
     traces += [_ideal(points), _ideal_ends(points), _measured(known)]
@@ -91,12 +91,13 @@ def _dome(dome: pd.DataFrame) -> dict[str, Any]:
     }
 
 
-def _isobar(table: pd.DataFrame) -> dict[str, Any]:
+def _isobar(label: str, table: pd.DataFrame) -> dict[str, Any]:
     return {
         "type": "scatter",
         "mode": "lines",
         "x": _column(table, "entropy"),
         "y": _column(table, "enthalpy"),
+        "name": plotly_text(label),
         "line": {"color": tinted(COLOURS["faint"], 0.8), "width": 1},
         "hoverinfo": "skip",
         "showlegend": False,

@@ -38,6 +38,7 @@ _GAP = "\u202f"  # narrow no-break space, between thousands (ISO 80000-1, 7.3.1)
 _UNIT_GAP = "\u00a0"  # no-break space, between number and unit (ISO 80000-1, 7.1.4)
 _MINUS = "\u2212"
 _MOST_DECIMALS = 5
+_LONGEST_UNIT = 16
 _TOO_LARGE = 1e9
 _MEGA = 20_000.0  # from here on a column in kW or MWh reads better in MW or GWh
 _MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
@@ -98,9 +99,9 @@ def quantity(value: float | None, unit: str, digits: int = 4) -> str:
     return text if text == MISSING or not shown else f"{text}{_UNIT_GAP}{shown}"
 
 
-def signed(value: float | None, digits: int = 3) -> str:
+def signed(value: float | None, digits: int = 3, unit: str = "") -> str:
     """Write a difference: a plus or a minus always stands before it, zero has neither."""
-    text = number(value, digits)
+    text = quantity(value, unit, digits)
     return f"+{text}" if value is not None and text != MISSING and value > 0 else text
 
 
@@ -178,12 +179,12 @@ def energy_column(values: Iterable[float | None]) -> Column:
 def money_column(values: Iterable[float | None], currency: str) -> Column:
     """Write money in whole units of the currency, with four significant digits at most."""
     del values  # money needs no look at the others: it never has decimals on these pages
-    return Column(currency, 1.0, 0)
+    return Column(unit_text(currency), 1.0, 0)
 
 
 def unit_text(unit: str) -> str:
     """Write a unit as a page shows it (``degC`` as °C, a pure number as nothing)."""
-    return _UNITS.get(unit.strip(), unit.strip())
+    return shorten(_UNITS.get(unit.strip(), unit.strip()), _LONGEST_UNIT)
 
 
 def day(time: pd.Timestamp) -> str:

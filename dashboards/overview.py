@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 from dashboards.figures import ledger_trend
 from dashboards.files import OVERVIEW_FILE, write_atomically
 from dashboards.flows import flow_diagram, flow_kinds, ranked_destruction
-from dashboards.formats import percent, power_column
+from dashboards.formats import MISSING, percent, power_column
 from dashboards.render import render_page
 
 if TYPE_CHECKING:
@@ -68,7 +68,7 @@ def _key_figures(ledger: Sequence[LedgerLine]) -> list[tuple[str, str, str, str]
         if key not in lines:
             continue
         line = lines[key]
-        share = line.live_kw / supplied if supplied else float("nan")
-        of = "" if key == "supplied" else f"{percent(share)} of supplied"
+        share = percent(line.live_kw / supplied if supplied else None)
+        of = "" if key == "supplied" or share == MISSING else f"{share} of supplied"
         figures.append((key, line.label, scale.with_unit(line.live_kw), of))
     return figures

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import fields, is_dataclass, replace
 from functools import cache
 from typing import Any
 
@@ -566,3 +566,40 @@ def empty_shift() -> ShiftView:
         quality=(),
         ledger_trend=ledger_trend(hours(0)),
     )
+
+
+HOSTILE = "</script><script>owned=1</script><img src=x onerror=owned=1>\"'&amp;%{x}$x$<b>\u2028"
+
+# What the contract fixes to a few words, or what names files, cannot be free text.
+_FIXED = {
+    PageContext: {"time_zone", "equipment"},
+    LedgerLine: {"key"},
+    FlowLink: {"kind", "source", "target"},
+    EquipmentRow: {"id"},
+    ConditionRow: {"equipment", "state", "worse"},
+    AlarmRow: {"equipment"},
+}
+
+
+def poisoned(view: Any, text: str = HOSTILE) -> Any:
+    """Return the view with every free text in it replaced; a digit keeps a shift's name a name."""
+    if isinstance(view, str):
+        return f"{text}1"
+    if isinstance(view, tuple):
+        return tuple(poisoned(item, text) for item in view)
+    if isinstance(view, dict):
+        return {key: poisoned(item, text) for key, item in view.items()}
+    if isinstance(view, pd.DataFrame):
+        words = [name for name in view.columns if pd.api.types.is_string_dtype(view[name])]
+        return view.assign(**dict.fromkeys(words, f"{text}1"))
+    if not is_dataclass(view) or isinstance(view, type):
+        return view
+    fixed = _FIXED.get(type(view), set())
+    changed = {
+        field.name: poisoned(getattr(view, field.name), text)
+        for field in fields(view)
+        if field.name not in fixed
+    }
+    if isinstance(view, PageContext):
+        changed["equipment"] = tuple((identifier, f"{text}1") for identifier, _ in view.equipment)
+    return replace(view, **changed)
