@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-import pydantic
 import pytest
 
 import connectors
 from monitor.equipment import KINDS
 from monitor.site import models
+
+if TYPE_CHECKING:
+    import pydantic
 
 README = (Path(__file__).parents[3] / "config" / "README.md").read_text(encoding="utf-8")
 
