@@ -7,6 +7,7 @@ there is room for them.
 
 from __future__ import annotations
 
+import contextlib
 import gzip
 import time
 import zlib
@@ -22,6 +23,7 @@ from connectors.tidy import ProblemCount, Rows, join_rows
 if TYPE_CHECKING:
     import io
     import os
+    from collections.abc import Iterator, Sequence
     from pathlib import Path
 
     from connectors.csv_header import Encoding, Header
@@ -201,28 +203,37 @@ class IndexedFile:
             raise
         self._extent = extent
 
-    def rows(self, block: Block) -> Rows:
-        """Return a block's rows, from memory or by parsing it again."""
-        rows = self._cache.get(block)
-        if rows is None:
-            try:
-                raw = self._read(block)
-            except OSError as error:
-                raise unreadable(self.path, error) from error
-            # What is wrong in the block was reported when it was indexed.
-            rows = self._parser().parse(raw, block.line, ProblemCount()).rows
-            self._cache.put(block, rows)
-        return rows
+    def rows(self, blocks: Sequence[Block]) -> Iterator[Rows]:
+        """Yield the rows of blocks, from memory or by parsing them again.
+
+        The file is opened once and read forward: a packed file can only be unpacked from its start.
+        """
+        with contextlib.ExitStack() as stack:
+            opened: list[Export] = []
+            for block in blocks:
+                rows = self._cache.get(block)
+                if rows is None:
+                    try:
+                        if not opened:
+                            opened.append(open_export(self.path))
+                            stack.callback(opened[0].close)
+                        rows = self._parse_again(opened[0], block)
+                    except OSError as error:
+                        raise unreadable(self.path, error) from error
+                    self._cache.put(block, rows)
+                yield rows
+
+    def _parse_again(self, file: Export, block: Block) -> Rows:
+        # What is wrong in the block was reported when it was indexed.
+        unheard = ProblemCount()
+        file.seek(block.offset)
+        raw = read_up_to(file, block.length, self.path.name, unheard)
+        return self._parser().parse(raw, block.line, unheard).rows
 
     def forget_rows(self) -> None:
         """Release what is kept in memory for this file."""
         for block in self.blocks:
             self._cache.drop(block)
-
-    def _read(self, block: Block) -> bytes:
-        with open_export(self.path) as file:
-            file.seek(block.offset)
-            return read_up_to(file, block.length, self.path.name, ProblemCount())
 
     def _parser(self) -> BlockParser:
         if self._parsed_by is None:

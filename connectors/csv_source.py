@@ -131,10 +131,10 @@ class CsvSource:
         parts: list[Rows] = []
         origin: list[int] = []
         for number, file in enumerate(files):
-            for block in file.blocks:
-                if _concerns(block, start, end):
-                    parts.append(_inside(file.rows(block), block, start, end))
-                    origin.append(number)
+            blocks = [block for block in file.blocks if _concerns(block, start, end)]
+            for block, rows in zip(blocks, file.rows(blocks), strict=True):
+                parts.append(_inside(rows, block, start, end))
+                origin.append(number)
         rows = join_rows(parts)
         if not len(rows.doubled_at):
             return rows

@@ -390,15 +390,19 @@ def test_tags_asked_for_later_are_found_in_files_already_indexed(tmp_path):
     assert len(reader.read(["62-FT-002"], DAY).readings) == 2
 
 
-def test_a_cache_too_small_for_the_files_changes_nothing(tmp_path, monkeypatch):
+@pytest.mark.parametrize("packed", [False, True])
+def test_a_cache_too_small_for_the_files_changes_nothing(tmp_path, monkeypatch, packed):
     monkeypatch.setattr(connectors.csv_index, "BLOCK", 512)
     lines = "".join(
         f"2026-01-31 {m // 60:02d}:{m % 60:02d}:00,{tag},{m},Good\n"
         for m in range(600)
         for tag in TAGS
     )
-    write(tmp_path, "time,tag,value,quality\n" + lines)
-    small = CsvSource(CsvOptions(path="*.csv"), tmp_path, cache_limit=2_000)
+    path = write(tmp_path, "time,tag,value,quality\n" + lines)
+    if packed:
+        (tmp_path / "small.csv.gz").write_bytes(gzip.compress(path.read_bytes()))
+    name = "small.csv.gz" if packed else "*.csv"
+    small = CsvSource(CsvOptions(path=name), tmp_path, cache_limit=2_000)
     large = CsvSource(CsvOptions(path="*.csv"), tmp_path)
     for hour in range(10):
         part = window(f"2026-01-31 {hour:02d}:00", f"2026-01-31 {hour + 1:02d}:00")
@@ -527,6 +531,40 @@ def test_a_file_that_may_not_be_read_is_told(tmp_path, monkeypatch):
     monkeypatch.setattr(connectors.csv_index, "open_export", refuse)
     with pytest.raises(ConnectorError, match=r"export\.csv cannot be read \(Permission denied\)"):
         source(tmp_path).read(TAGS, DAY)
+
+
+def test_a_file_taken_away_between_listing_and_opening_is_as_if_not_listed(tmp_path, monkeypatch):
+    write(tmp_path, LONG, "1.csv")
+    write(tmp_path, LONG.replace("06:", "07:"), "2.csv")
+    original = connectors.csv_index.open_export
+
+    def take_away(path):
+        if path.name == "2.csv":
+            path.unlink()
+        return original(path)
+
+    monkeypatch.setattr(connectors.csv_index, "open_export", take_away)
+    result = source(tmp_path).read(TAGS, DAY)
+    assert len(result.readings) == 4
+    assert result.problems == ()
+
+
+def test_a_file_that_fails_while_an_old_block_is_read_again_is_told(tmp_path, monkeypatch):
+    write(tmp_path, LONG)
+    reader = CsvSource(CsvOptions(path="*.csv"), tmp_path, cache_limit=0)
+    original = connectors.csv_index.open_export
+    opened = []
+
+    def fail_at_the_second(path):
+        opened.append(path)
+        if len(opened) == 2:
+            raise OSError(5, "Input/output error")
+        return original(path)
+
+    monkeypatch.setattr(connectors.csv_index, "open_export", fail_at_the_second)
+    with pytest.raises(ConnectorError, match=r"export\.csv cannot be read \(Input/output error\)"):
+        reader.read(TAGS, DAY)
+    assert len(reader.read(TAGS, DAY).readings) == 4
 
 
 @settings(

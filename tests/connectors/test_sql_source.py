@@ -10,6 +10,7 @@ from sqlalchemy import create_engine, text
 from sqlalchemy.engine import URL, make_url
 from sqlalchemy.exc import OperationalError
 
+import connectors.sql_engine
 from connectors import open_source, parse_options
 from connectors.base import ConnectorError, Quality, Window
 from connectors.sql_engine import Database
@@ -298,6 +299,38 @@ def test_nothing_can_be_written_through_the_connection(database, tmp_path):
         with pytest.raises(ConnectorError, match=r"(?i)read.?only"):
             reader.run(lambda c, s=statement: c.execute(text(s)))
     assert reader.run(lambda c: c.execute(text("select count(*) from readings")).scalar()) == 6
+    reader.close()
+
+
+def test_a_session_is_set_read_only_where_the_server_has_only_that(tmp_path):
+    # What MySQL and MariaDB do by SET SESSION, SQLite does by a pragma: the hook is the same.
+    path = tmp_path / "r.sqlite"
+    sqlite3.connect(path).close()
+    engine = create_engine(f"sqlite:///{path}")
+    connectors.sql_engine._on_connect(engine, "PRAGMA query_only = ON")
+    with engine.connect() as connection, pytest.raises(OperationalError, match="readonly"):
+        connection.execute(text("create table t (a int)"))
+    engine.dispose()
+
+
+def test_a_driver_that_is_not_installed_is_told(tmp_path):
+    options = parse_options("sql", {"url": "mysql+absent://u:s3cret@h/d", "table": "t"})
+    with pytest.raises(ConnectorError, match=r"mysql\+absent://u:\*\*\*@h/d: the driver is not"):
+        Database(options, tmp_path)
+
+
+@pytest.mark.postgres
+def test_options_in_the_url_do_not_switch_read_only_off(postgres_url, tmp_path):
+    fill(postgres_url)
+    stated = "-c default_transaction_read_only=off -c application_name=lost"
+    url = make_url(postgres_url).update_query_dict({"options": stated})
+    options = parse_options(
+        "sql", {"url": url.render_as_string(hide_password=False), "table": "readings"}
+    )
+    reader = Database(options, tmp_path)
+    assert reader.run(lambda c: c.execute(text("show application_name")).scalar()) == "lost"
+    with pytest.raises(ConnectorError, match="read-only transaction"):
+        reader.run(lambda c: c.execute(text("delete from readings")))
     reader.close()
 
 
