@@ -25,7 +25,7 @@ from monitor.errors import Issue, LostworkError, SiteFileError
 from monitor.site.models import Reference, SiteFile, Stream, Tag
 from monitor.site.shifts import ShiftCalendar
 from monitor.site.units import PressureDatum, Quantity
-from monitor.thermo.fuels import exergy_ratio
+from monitor.thermo.fuels import FuelError, exergy_ratio
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
@@ -522,8 +522,8 @@ def _check_fuel(stream: Stream) -> Iterator[tuple[str, str]]:
     if stream.exergy_ratio is None:
         try:
             exergy_ratio(stream.fuel)
-        except LookupError as error:
-            yield "fuel", str(error.args[0])
+        except FuelError as error:
+            yield "fuel", str(error)
 
 
 def _check_power(stream: Stream) -> Iterator[tuple[str, str]]:
