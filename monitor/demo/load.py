@@ -65,7 +65,7 @@ def load(plan: DemoPlan, air: Weather) -> Load:
     dispersion *= 1.0 - 0.15 * _weekend(days)
     low_pressure = board + heating
     excess = low_pressure - lag(low_pressure, 3600.0, interval)
-    discharge = np.clip(0.8 + 0.6 * excess, 0.8, 9.0)
+    discharge = np.clip(0.8 + 0.6 * excess, 0.8, 6.5)
     let_down_12 = 2.0 + np.clip(0.15 * excess, -0.8, 4.0) + _wander(plan, "ld12", 0.15, 1200)
     let_down_62 = _let_down_62(plan, days)
     condensing = _condensing(plan, days)

@@ -136,8 +136,8 @@ def destroyed(plant: Plant, machine: Machine, dead: DeadState) -> FloatArray:
 
 def exergy(stream: Truth, dead: DeadState) -> FloatArray:
     """Exergy rate of a stream [W]: m (h - T0 s - g0), or W, or Q (1 - T0 / Tb)."""
-    free = stream.energy - dead.temperature * stream.entropy_rate
-    return free - dead.gibbs * stream.mass_flow + stream.chemical
+    free = stream.energy - dead.temperature * stream.entropy_rate + stream.chemical
+    return free - dead.gibbs * stream.mass_flow if stream.medium == "water" else free
 
 
 def _net(plant: Plant, machine: Machine, name: str, *, water_only: bool = False) -> FloatArray:

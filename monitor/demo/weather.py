@@ -44,7 +44,7 @@ def weather(plan: DemoPlan) -> Weather:
     swing = 4.2 + 1.4 * np.tanh(pressure)
     # The coldest hour is about five in the morning by the sun.
     daily = -swing * np.cos(2 * np.pi * (days - 5.0 / 24))
-    heat = plateau(days, plan.heat_wave_day, HEAT_WAVE_DAYS - 0.8, 0.8)
+    heat = plateau(days, plan.heat_wave_day, HEAT_WAVE_DAYS, 0.4)
     mild = season + 3.0 * np.tanh(fronts / 1.5) + daily
     hot = 22.5 + 1.4 * daily
     celsius = mild + heat * (hot - mild) + gusts

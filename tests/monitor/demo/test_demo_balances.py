@@ -95,7 +95,7 @@ def test_the_section_loses_two_points_whatever_the_load(eventful_plan):
     worn = simulate(plan).conditions["TG1", "eta_s_1"]
     sound = simulate(dataclasses.replace(plan, drift_day=99.0)).conditions["TG1", "eta_s_1"]
     lost = sound - worn
-    assert np.all(lost[: int(0.3 * 1440)] == 0)
+    assert np.all(lost[:430] == 0)
     assert lost[-1] == pytest.approx(0.02, abs=2e-4)
     assert np.all(np.diff(lost) > -2e-4)
 
@@ -121,7 +121,7 @@ def test_a_heat_wave_moves_the_condenser_and_no_machine(eventful_plan):
     for plant in (hot, mild):
         flow = plant.streams["tg1_exhaust"].mass_flow
         curve = 0.80 * (1 - 0.16 * (flow / 21.0 - 1) ** 2)
-        np.testing.assert_allclose(plant.conditions["TG1", "eta_s_2"], curve, atol=2e-3)
+        np.testing.assert_allclose(plant.conditions["TG1", "eta_s_2"], curve, atol=5e-4)
 
 
 def test_events_inside_the_plan_are_in_the_truth(eventful_plant, eventful_plan):

@@ -9,7 +9,7 @@ import pytest
 
 import monitor.demo.files as demo_files
 from monitor.cycle import compute_window
-from monitor.demo import DemoError, copy_site, read_truth, simulate, write_exports, write_truth
+from monitor.demo import DemoError, copy_site, read_truth, write_exports, write_truth
 from monitor.demo.design import DESIGN
 from monitor.demo.files import config_folder, read_tags
 from monitor.demo.layout import MACHINES
