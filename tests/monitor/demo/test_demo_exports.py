@@ -5,6 +5,7 @@ from __future__ import annotations
 import dataclasses
 import datetime as dt
 import sqlite3
+from contextlib import closing
 
 import numpy as np
 import pandas as pd
@@ -79,10 +80,10 @@ def test_a_live_feed_in_odd_portions_writes_the_same_bytes(
     now.pop(database)
     whole.pop(database)
     assert now == whole
-    rows = [
-        sqlite3.connect(folder / database).execute("select * from reading").fetchall()
-        for folder in (tmp_path, exported)
-    ]
+    rows = []
+    for folder in (tmp_path, exported):
+        with closing(sqlite3.connect(folder / database)) as connection:
+            rows.append(connection.execute("select * from reading").fetchall())
     assert rows[0] == rows[1]
 
 
@@ -206,16 +207,15 @@ def test_utilities_are_written_with_semicolons_decimal_commas_units_and_blanks(e
 
 
 def test_the_historian_keys_its_readings_by_a_tag_list(exported):
-    connection = sqlite3.connect(exported / "exports" / "historian.sqlite")
-    names = {row[0] for row in connection.execute("select name from tag_list")}
+    with closing(sqlite3.connect(exported / "exports" / "historian.sqlite")) as connection:
+        names = {row[0] for row in connection.execute("select name from tag_list")}
+        codes = {row[0] for row in connection.execute("select distinct quality from reading")}
+        (blank_but_good,) = connection.execute(
+            "select count(*) from reading where reading is null and quality <> 0"
+        ).fetchone()
     assert "users/FT-7101" in names
-    codes = {row[0] for row in connection.execute("select distinct quality from reading")}
     assert codes == {0, 64, 192}
-    (blank,) = connection.execute(
-        "select count(*) from reading where reading is null and quality <> 0"
-    ).fetchone()
-    assert blank == 0
-    connection.close()
+    assert blank_but_good == 0
 
 
 def _local_times(tmp_path, start):
