@@ -185,6 +185,15 @@ def test_hours_that_a_failed_judgement_left_out_are_caught_up_with(site):
     assert len(points(site)) == 24 * DAYS
 
 
+def test_judging_with_nothing_new_plays_actions_and_leaves_the_chart(site):
+    write(site, cells())
+    judged(site)
+    before = points(site)
+    later = END + 50 * HOUR + 7
+    assert judged(site, start=later, end=later, now=later).state == "drifting"
+    pd.testing.assert_frame_equal(points(site), before, check_exact=True)
+
+
 def test_an_hour_that_is_not_over_is_not_judged(site):
     write(site, cells())
     judged(site, end=START + 500 * HOUR + CELL)
