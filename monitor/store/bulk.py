@@ -118,8 +118,7 @@ def _replace_sqlite(
     )
     changed = driver.total_changes - before
     held = sum(
-        driver.execute(f"select count(*) from {table.name} t where {where}").fetchone()[0]  # noqa: S608
-        for where in scope.conditions("t")
+        driver.execute(_count(table, where)).fetchone()[0] for where in scope.conditions("t")
     )
     removed = _remove_sqlite(driver, table, columns, scope) if held != count else 0
     return Changes(count, changed, removed)
@@ -198,15 +197,36 @@ def _replace_postgres(
         cursor.execute(f"analyze {stage}")
         cursor.execute(_postgres_upsert(table, stage, names))
         changed = cursor.rowcount
-        same = " and ".join(f"s.{name} = t.{name}" for name in _keys(table))
-        removed = 0
+        held = 0
         for where in scope.conditions("t"):
-            cursor.execute(
-                f"delete from {table.name} t where {where} "  # noqa: S608
-                f"and not exists (select from {stage} s where {same})"
-            )
-            removed += cursor.rowcount
+            held += cursor.execute(_count(table, where)).fetchone()[0]
+        removed = _remove_postgres(cursor, table, stage, scope) if held != count else 0
     return Changes(count, changed, removed)
+
+
+def _remove_postgres(
+    cursor: Any,  # noqa: ANN401 - psycopg's own cursor
+    table: sa.Table,
+    stage: str,
+    scope: Scope,
+) -> int:
+    same = " and ".join(f"s.{name} = t.{name}" for name in _keys(table))
+    # A table that grew since it was last analysed looks small to the planner, which would then go
+    # through the stage once a row.
+    cursor.execute("set local enable_nestloop = off")
+    removed = 0
+    for where in scope.conditions("t"):
+        cursor.execute(
+            f"delete from {table.name} t where {where} "  # noqa: S608
+            f"and not exists (select from {stage} s where {same})"
+        )
+        removed += cursor.rowcount
+    cursor.execute("set local enable_nestloop = on")
+    return removed
+
+
+def _count(table: sa.Table, where: str) -> str:
+    return f"select count(*) from {table.name} t where {where}"  # noqa: S608
 
 
 @cache

@@ -19,7 +19,7 @@ from monitor.store.migrate import migrate
 from monitor.store.runs import abandon_running
 from monitor.store.site import SiteStore
 from monitor.store.spans import calendar_key
-from monitor.store.upsert import inserted_id, upsert
+from monitor.store.upsert import inserted_id, pairs, upsert
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Sequence
@@ -210,13 +210,13 @@ def _put_figures(
 ) -> None:
     names, owners = schema.figure_names, schema.subjects
     wanted = dict.fromkeys([*RATED_FIGURES, *(figure for _, figure, *_ in figures)])
-    known = dict(connection.execute(sa.select(names.c.figure, names.c.figure_id)).tuples().all())
+    known = pairs(connection.execute(sa.select(names.c.figure, names.c.figure_id)))
     upsert(connection, names, [{"figure": f} for f in wanted if f not in known], ("figure",))
-    known = dict(connection.execute(sa.select(names.c.figure, names.c.figure_id)).tuples().all())
+    known = pairs(connection.execute(sa.select(names.c.figure, names.c.figure_id)))
     query = sa.select(owners.c.subject, owners.c.subject_id).where(
         owners.c.site_id == site_id, owners.c.kind == "equipment"
     )
-    pieces = dict(connection.execute(query).tuples().all())
+    pieces = pairs(connection.execute(query))
     absent = sorted({equipment for equipment, *_ in figures} - set(pieces))
     if absent:
         raise StoreError(f"figures of '{absent[0]}', which is not among the equipment")

@@ -20,8 +20,7 @@ from monitor.store.batch import (
 from monitor.store.bulk import Scope, fetch
 from monitor.store.engine import reading
 from monitor.store.handle import Instant, Kind, SiteHandle, seconds, utc
-from monitor.store.rolling import Owners, load_figures, load_partials
-from monitor.store.rollup import combine
+from monitor.store.rolling import Owners, load_figures
 from monitor.store.spans import Spans
 
 if TYPE_CHECKING:
@@ -226,21 +225,17 @@ class Reads(SiteHandle):
         """
         first, last = seconds(start), seconds(end)
         ids = self._ids(kind, subject)
-        over = Spans(np.array([first]), np.array([last]))
+        whole_hours = first % _HOUR == 0 and last % _HOUR == 0
         with reading(self.engine, "read means") as connection:
-            if first % _HOUR or last % _HOUR:
-                owners = self._owners_read(kind, ids)
-                figures = load_figures(connection, owners, first, last)
-                rolled = figures.roll(over, self.interval_s)
-                rolled = rolled.where(np.isin(rolled.subject_id, ids))
-            else:
-                rolled = combine(load_partials(connection, "hour", ids, first, last), over)
-        frame = pd.DataFrame({name: vars(rolled)[name] for name in _ROLLUP_COLUMNS[:-1]})
+            means = self._means_of_hours if whole_hours else self._means_of_cells
+            rows = means(connection, kind, ids, first, last)
+        columns = list(_ROLLUP_COLUMNS[:-1])
+        frame = pd.DataFrame(rows[:, 2:], columns=columns).astype({"covered_s": "int64"})
         frame["expected_s"] = last - first
         frame.index = pd.MultiIndex.from_arrays(
             [
-                _named(rolled.subject_id, self._names(kind)),
-                _named(rolled.figure_id, self._figure_names),
+                _named(rows[:, 0], self._names(kind)),
+                _named(rows[:, 1], self._figure_names),
             ],
             names=["subject", "figure"],
         )
@@ -296,6 +291,42 @@ class Reads(SiteHandle):
         with reading(self.engine, "read its figures") as connection:
             rows = [tuple(row) for row in connection.execute(query)]
         return pd.DataFrame(rows, columns=["subject", "figure", "label", "unit", "worse"])
+
+    def _means_of_hours(
+        self, connection: sa.Connection, _kind: Kind, ids: list[int], start: int, end: int
+    ) -> npt.NDArray[np.float64]:
+        """Subject, figure and the roll-up's columns, from the stored hours."""
+        fixed = {"resolution": schema.RESOLUTIONS["hour"]}
+        scope = Scope("subject_id", ids, "start", start, end, fixed)
+        parts = [
+            fetch(
+                connection,
+                "select subject_id, figure_id, sum(mean * weight) / sum(weight), min(minimum), "  # noqa: S608
+                f"max(maximum), sum(weight), sum(covered_s) from rollups t where {where} "
+                "group by subject_id, figure_id",
+                7,
+            )
+            for where in scope.conditions("t")
+        ]
+        return np.concatenate([np.empty((0, 7)), *parts])
+
+    def _means_of_cells(
+        self, connection: sa.Connection, kind: Kind, ids: list[int], start: int, end: int
+    ) -> npt.NDArray[np.float64]:
+        """Subject, figure and the roll-up's columns, from the cells."""
+        owners = Owners(
+            ids if kind == "stream" else [],
+            ids if kind == "equipment" else [],
+            self._ledger_id,
+            self.site_id,
+            self._figures,
+            self.interval_s,
+        )
+        over = Spans(np.array([start]), np.array([end]))
+        rolled = load_figures(connection, owners, start, end).roll(over, self.interval_s)
+        rolled = rolled.where(np.isin(rolled.subject_id, ids))
+        names = ("subject_id", "figure_id", *_ROLLUP_COLUMNS[:-1])
+        return np.stack([vars(rolled)[name].astype(np.float64) for name in names], axis=1)
 
     def _edge(self, which: Literal["min", "max"]) -> pd.Timestamp | None:
         """Ledger, streams or equipment, whichever reaches further: each by its key."""
@@ -382,16 +413,6 @@ class Reads(SiteHandle):
         if time is not None:
             frame[time] = utc(frame[time].astype(np.int64).tolist())
         return frame
-
-    def _owners_read(self, kind: Kind, ids: list[int]) -> Owners:
-        return Owners(
-            ids if kind == "stream" else [],
-            ids if kind == "equipment" else [],
-            self._ledger_id,
-            self.site_id,
-            self._figures,
-            self.interval_s,
-        )
 
 
 def _named(ids: npt.NDArray[Any], names: dict[int, str]) -> pd.Index[Any]:

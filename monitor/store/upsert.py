@@ -10,7 +10,7 @@ from sqlalchemy.dialects import postgresql, sqlite
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
-__all__ = ["inserted_id", "upsert"]
+__all__ = ["inserted_id", "pairs", "upsert"]
 
 
 def upsert(
@@ -44,3 +44,8 @@ def inserted_id(connection: sa.Connection, table: sa.Table, row: Mapping[str, An
     (number,) = table.primary_key.columns
     statement = sa.insert(table).values(dict(row)).returning(number)
     return int(connection.execute(statement).scalar_one())
+
+
+def pairs(result: sa.Result[str, int]) -> dict[str, int]:
+    """Names and their numbers, from a query for both."""
+    return {name: int(number) for name, number in result}

@@ -25,7 +25,7 @@ from monitor.store.errors import StoreError
 from monitor.store.handle import Kind, SiteHandle, rated
 from monitor.store.rolling import Figures, Owners, rebuild, roll_up
 from monitor.store.rollup import Cells, condition_partials
-from monitor.store.upsert import upsert
+from monitor.store.upsert import pairs, upsert
 
 if TYPE_CHECKING:
     from collections.abc import Iterable, Mapping
@@ -281,12 +281,12 @@ class Writes(SiteHandle):
     def _tag_ids(self, connection: sa.Connection, names: list[str]) -> list[int]:
         table = schema.tags
         query = sa.select(table.c.tag, table.c.tag_id).where(table.c.site_id == self.site_id)
-        known: dict[str, int] = dict(connection.execute(query).tuples().all())
+        known: dict[str, int] = pairs(connection.execute(query))
         new = [name for name in names if name not in known]
         if new:
             rows = [{"site_id": self.site_id, "tag": name} for name in new]
             upsert(connection, table, rows, ("site_id", "tag"))
-            known = dict(connection.execute(query).tuples().all())
+            known = pairs(connection.execute(query))
         return [known[name] for name in names]
 
     def _figures_of(self, tables: _Tables, owners: Owners) -> Figures:
