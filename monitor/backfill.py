@@ -36,6 +36,8 @@ if TYPE_CHECKING:
 __all__ = ["Tally", "backfill", "catch_up", "last_complete", "recorded_run", "windows"]
 
 HOUR, DAY = 3600, 86400
+_FEW = 3
+"""Windows that are done sooner than a second process is up."""
 _AHEAD = 2
 """Windows computed ahead of the one being written: more only takes memory."""
 
@@ -101,7 +103,8 @@ def backfill(
         end: integer UTC seconds; the last window ends on the grid at or before it.
         progress: told after each window: windows done, windows in all, the window.
         run_kind: the run's name in the store.
-        workers: 1 computes and writes in turn; 2 computes ahead in a process of its own.
+        workers: 1 computes and writes in turn; 2 computes ahead in a process of its own, when
+            there are enough windows to be worth its start.
 
     Raises:
         WrongUseError: the stretch holds no whole cell.
@@ -113,6 +116,7 @@ def backfill(
     if first >= last:
         raise WrongUseError("the stretch to compute is empty: it must end after it starts")
     cut = windows(first, last)
+    workers = 1 if len(cut) <= _FEW else workers
     source_ids = [source.id for source in site.file.source]
     with recorded_run(site, store, run_kind, first, last) as (run_id, tally):
         with _computed(site, cut, workers) as stream:
