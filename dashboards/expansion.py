@@ -53,7 +53,7 @@ def expansion_chart(view: ExpansionView) -> Chart | None:
             "Dotted lines go straight down to the ideal (isentropic) end of each section; the "
             "further right a measured state lies from it, the more work was lost."
         ),
-        print_height=420,
+        print_height=330,
     )
 
 
@@ -128,7 +128,7 @@ def _isobar_labels(
                 "y": h,
                 "xref": "x",
                 "yref": "y",
-                "text": plotly_text(label),
+                "text": plotly_text(shorten(label, 16)),
                 "showarrow": False,
                 "xanchor": "right",
                 "yanchor": "top" if at_top else "bottom",

@@ -16,6 +16,7 @@ from dashboards.formats import (
     plotly_text,
     power_column,
     quantity,
+    shorten,
     unit_text,
 )
 from dashboards.theme import COLOURS, LEDGER_COLOURS, axis, base_layout, tinted
@@ -234,7 +235,7 @@ def trend_chart(trend: TrendView, identifier: str) -> Chart | None:
     traces += line_traces(
         times,
         _floats(table["value"]),
-        plotly_text(trend.label),
+        plotly_text(shorten(trend.label, 48)),
         trend.unit,
         {"color": COLOURS["blue"], "width": 1.6},
     )

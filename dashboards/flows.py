@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import textwrap
+from collections import Counter
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
@@ -26,10 +27,13 @@ if TYPE_CHECKING:
 
 __all__ = ["flow_diagram", "flow_kinds", "ranked_destruction"]
 
+_LINE = 15  # px that a line of a label takes
+_TALLEST = 1400
 _UNSEEN = "rgba(0,0,0,0)"
 _MOST_BARS = 15
-_LABEL = 36
-_LABEL_WIDTH = 20
+_LABEL = 40
+_LETTER = 6.6  # px, the mean in the widest of the usual fonts
+_PAGE = 1140  # px between the first and the last column
 
 
 def flow_kinds(flows: Sequence[FlowLink]) -> list[tuple[str, str]]:
@@ -55,7 +59,8 @@ def flow_diagram(flows: Sequence[FlowLink], node_names: dict[str, str]) -> Chart
     scale = power_column(flow.kw for flow in links)
     keys = list(dict.fromkeys(key for flow in links for key in (flow.source, flow.target)))
     trace = _sankey(links, keys, node_names, scale)
-    layout = base_layout(min(max(26 * len(keys) + 60, 300), 800), showlegend=False)
+    height = _height(links, trace["node"]["pad"])
+    layout = base_layout(height, showlegend=False)
     layout["margin"] = {"l": 4, "r": 16, "t": 24, "b": 24}
     layout["hovermode"] = "closest"
     largest = sorted(drawable, key=lambda flow: -flow.kw)[:5]
@@ -80,7 +85,7 @@ def flow_diagram(flows: Sequence[FlowLink], node_names: dict[str, str]) -> Chart
         {"data": [trace], "layout": layout},
         f"Exergy flow diagram of {len(drawable)} flows. Largest: {listed}.",
         note=note,
-        print_height=min(max(26 * len(keys) + 60, 300), 580),
+        print_height=max(height - 130, 300),
     )
 
 
@@ -93,6 +98,12 @@ def _sankey(
     # The last column's labels stand on its left, where the column before has its own: a chain of
     # unseen nodes, one longer than the longest way, keeps a column free between the two.
     ghosts = list(range(len(keys), len(keys) + _longest(links) + 1))
+    width = min(max(int(_PAGE / (len(ghosts) - 1) / _LETTER - 1.5), 12), 32)
+    labels = [
+        f"{_wrapped(name, width)}<br>{scale.with_unit(through[key])}"
+        for key, name in zip(keys, names, strict=True)
+    ]
+    lines = max(label.count("<br>") + 1 for label in labels)
     breath = max(through.values()) * scale.factor * 1e-6
     return {
         "type": "sankey",
@@ -100,14 +111,10 @@ def _sankey(
         "valueformat": ",.4~r",
         "valuesuffix": f" {scale.unit}",
         "node": {
-            "label": [
-                f"{_wrapped(name)}<br>{scale.with_unit(through[key])}"
-                for key, name in zip(keys, names, strict=True)
-            ]
-            + [""] * len(ghosts),
+            "label": labels + [""] * len(ghosts),
             "color": [COLOURS["soft"]] * len(keys) + [_UNSEEN] * len(ghosts),
             "line": {"width": 0},
-            "pad": 30,
+            "pad": _LINE * min(lines, 3),
             "thickness": 10,
             "customdata": [plotly_text(name) for name in names] + [""] * len(ghosts),
             "hovertemplate": "%{customdata}<br>%{value}<extra></extra>",
@@ -125,24 +132,45 @@ def _sankey(
     }
 
 
+def _height(links: Sequence[FlowLink], pad: int) -> int:
+    """Return the height at which the fullest column's labels stand clear of each other, px."""
+    fullest = Counter(_columns(links).values()).most_common(1)[0][1]
+    # What the labels leave is for the flows' widths.
+    return min(fullest * pad + max(fullest * 14, 280) + 48, _TALLEST)
+
+
 def _longest(links: Sequence[FlowLink]) -> int:
     """Count the nodes on the longest way through flows without loops."""
-    ahead: dict[str, list[str]] = {}
+    return max(_columns(links).values()) + 1
+
+
+def _columns(links: Sequence[FlowLink]) -> dict[str, int]:
+    """Place nodes in columns: one after the last that feeds it, all that feed none in the last."""
+    feeds: dict[str, list[str]] = {}
     for flow in links:
-        ahead.setdefault(flow.source, []).append(flow.target)
-    known: dict[str, int] = {}
+        feeds.setdefault(flow.target, []).append(flow.source)
+    places: dict[str, int] = {}
 
-    def length(key: str) -> int:
-        if key not in known:
-            known[key] = 1 + max((length(target) for target in ahead.get(key, ())), default=0)
-        return known[key]
+    def place(key: str) -> int:
+        if key not in places:
+            places[key] = max((place(source) + 1 for source in feeds.get(key, ())), default=0)
+        return places[key]
 
-    return max(length(flow.source) for flow in links)
+    last = max(place(flow.target) for flow in links)
+    ends = set(places) - {flow.source for flow in links}
+    return {key: last if key in ends else column for key, column in places.items()}
 
 
-def _wrapped(name: str) -> str:
-    """Break a node's name so that it fits between two columns of nodes."""
-    lines = textwrap.wrap(shorten(name, _LABEL), _LABEL_WIDTH)
+def _wrapped(name: str, width: int) -> str:
+    """Break a node's name to fit between two columns, into lines of much the same length."""
+    short = shorten(name, _LABEL)
+    lines = textwrap.wrap(short, width)
+    longest_word = max((len(word) for word in short.split()), default=0)
+    for narrower in range(width - 1, longest_word - 1, -1):
+        even = textwrap.wrap(short, narrower)
+        if len(even) > len(lines):
+            break
+        lines = even
     return "<br>".join(plotly_text(line) for line in lines)
 
 

@@ -22,9 +22,12 @@ __all__ = ["FirstPage", "first_page", "write_shift"]
 
 # What one A4 page holds; the details hold the rest.
 _SENTENCES = 5
-_SENTENCE = 170
+_SUMMARY = 850  # characters of all sentences together, in the widest of the usual fonts
+_LONGEST_SENTENCE = 320
 _EQUIPMENT = 5
 _ALARMS = 4
+_MESSAGES = 480  # characters of all messages together
+_LONGEST_MESSAGE = 240
 _CONDITIONS = 4
 _TAGS = 4
 
@@ -51,8 +54,11 @@ class FirstPage:
 
     summary: tuple[str, ...]
     sentence: int
+    """The most characters of one sentence."""
     ledger: tuple[Comparison, ...]
     alarms: int
+    message: int
+    """The most characters of one alarm's message."""
     equipment: int
     conditions: tuple[ConditionRow, ...]
     moved: int
@@ -92,11 +98,14 @@ def write_shift(view: ShiftView, folder: Path) -> Path:
 def first_page(view: ShiftView) -> FirstPage:
     """Choose what fits on the first page, the most urgent first."""
     moved = [row for row in ranked_conditions(view.conditions) if _has_moved(row)]
+    sentences = view.summary[:_SENTENCES]
+    alarms = min(len(view.alarms), _ALARMS)
     return FirstPage(
-        summary=view.summary[:_SENTENCES],
-        sentence=_SENTENCE,
+        summary=sentences,
+        sentence=min(_SUMMARY // max(len(sentences), 1), _LONGEST_SENTENCE),
         ledger=tuple(_comparisons(view)),
         alarms=_ALARMS,
+        message=min(_MESSAGES // max(alarms, 1), _LONGEST_MESSAGE),
         equipment=_EQUIPMENT,
         conditions=tuple(moved[:_CONDITIONS]),
         moved=len(moved),

@@ -108,7 +108,8 @@ def base_layout(height: int, **more: Any) -> dict[str, Any]:  # noqa: ANN401 - l
         "font": {"family": FONT, "size": SIZES["small"], "color": COLOURS["ink"]},
         "paper_bgcolor": "rgba(0,0,0,0)",
         "plot_bgcolor": "rgba(0,0,0,0)",
-        "margin": {"l": 56, "r": 16, "t": 34, "b": 36, "pad": 4},
+        # Wide enough for most numbers, so that time axes below one another agree.
+        "margin": {"l": 72, "r": 16, "t": 34, "b": 36, "pad": 4},
         "separators": ".\u202f",
         "showlegend": True,
         "legend": {
