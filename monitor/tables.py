@@ -146,10 +146,7 @@ def ledger_table(
     leaving = [s for s in site.streams if s not in site.consumer]
     used = [s for s in leaving if site.counts_as_used(s)]
     lost = [s for s in leaving if s not in used]
-    columns: dict[str, FloatArray] = {
-        "t0_degc": ambient.live.temperature - 273.15,
-        "p0_bar": ambient.live.pressure / 1e5,
-    }
+    lines: dict[str, FloatArray] = {}
     nothing = np.zeros(len(ambient.flag))
     for name, dead in (("live", ambient.live), ("reference", ambient.reference)):
         accounts = [a.live if name == "live" else a.reference for a in accounted]
@@ -162,8 +159,15 @@ def ledger_table(
             "stored_rate": sum((a.stored_rate for a in accounts), nothing),
             "imbalance": sum((a.unaccounted + a.closure for a in accounts), nothing),
         }
-        columns |= {f"{key}_{name}_kw": value / 1e3 for key, value in crossing.items()}
+        lines |= {f"{key}_{name}_kw": value / 1e3 for key, value in crossing.items()}
+    # A ledger with a hole in it is no ledger: its lines are there together or not at all.
+    whole = np.isfinite(np.stack(list(lines.values()))).all(axis=0)
+    columns = {
+        "t0_degc": ambient.live.temperature - 273.15,
+        "p0_bar": ambient.live.pressure / 1e5,
+    } | {name: np.where(whole, values, np.nan) for name, values in lines.items()}
     own = np.int32(Flag.UNSTEADY | Flag.OFF)
     every = np.bitwise_or.reduce(np.stack([a.flag for a in accounted]), axis=0)
-    flag = np.asarray((every & ~own) | ambient.flag, dtype=np.int32)
+    absent = np.where(whole, np.int32(0), np.int32(Flag.MISSING))
+    flag = np.asarray((every & ~own) | ambient.flag | absent, dtype=np.int32)
     return _stacked((), LEDGER_COLUMNS, [_Block((), columns, flag)], grid)

@@ -57,8 +57,13 @@ class User(Kind):
         return np.asarray(given_up), drawn.only("heat").exergy(dead)
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Share of the steam that comes back as condensate."""
-        if not item.ports.get("condensate"):
+        """Share of the steam that comes back as condensate, where that is more than an assumption.
+
+        When the mass balance gives the condensate and nothing is lost, the share is 100 % by
+        construction and tells nothing.
+        """
+        known = item.ports.get("lost") or "mass" in item.spare
+        if not item.ports.get("condensate") or not known:
             return ()
         return (Figure("condensate_return", "condensate returned", "%", "low", 5.0),)
 

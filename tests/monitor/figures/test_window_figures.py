@@ -143,7 +143,8 @@ def test_a_dead_instrument_makes_its_figures_absent_and_leaves_the_others(site):
     assert _has(turbine["flag"], Flag.BAD).all()
     assert np.isfinite(letdown["destroyed_live_kw"]).all()
     # A ledger with a hole in it is no ledger: absent, not smaller.
-    assert batch.ledger["destroyed_live_kw"].isna().all()
+    assert batch.ledger.filter(like="_kw").isna().all(axis=None)
+    assert np.isfinite(batch.ledger["t0_degc"]).all()
     assert _has(batch.ledger["flag"], Flag.MISSING).all()
 
 
