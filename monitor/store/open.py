@@ -19,7 +19,7 @@ from monitor.store.migrate import migrate
 from monitor.store.runs import abandon_running
 from monitor.store.site import SiteStore
 from monitor.store.spans import calendar_key
-from monitor.store.upsert import inserted_id, pairs, upsert
+from monitor.store.upsert import pairs, upsert
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Sequence
@@ -177,7 +177,9 @@ class Store:
         query = sa.select(table.c.site_id, table.c.interval_s).where(table.c.site == row["site"])
         known = connection.execute(query).first()
         if known is None:
-            return inserted_id(connection, table, {**row, "calendar": ""})
+            # Not a plain insert: another process may register the same site at the same time.
+            upsert(connection, table, [{**row, "calendar": ""}], ("site",))
+            return int(connection.execute(query).one().site_id)
         if known.interval_s != row["interval_s"] and _has_figures(connection, known.site_id):
             raise StoreError(
                 f"{place(self.engine)}: the figures of site '{row['site']}' are every "
