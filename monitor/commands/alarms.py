@@ -25,7 +25,7 @@ __all__ = ["app"]
 
 app = typer.Typer(no_args_is_help=True, help="List, acknowledge or shelve alarms.")
 
-Number = Annotated[int, typer.Argument(help="The alarm's number, from the list.")]
+Number = Annotated[int, typer.Argument(metavar="ID", help="The alarm's number, from the list.")]
 Note = Annotated[str, typer.Option("--note", help="Why; kept with the alarm.")]
 
 

@@ -9,7 +9,7 @@ import typer
 
 __all__ = ["By", "Json", "Site"]
 
-Site = Annotated[Path, typer.Argument(help="The site file (TOML).")]
+Site = Annotated[Path, typer.Argument(metavar="SITE", help="The site file (TOML).")]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON, for a machine.")]
 By = Annotated[
     str, typer.Option("--by", help="Who says so. Left out: the name you are logged in with.")

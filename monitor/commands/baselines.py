@@ -71,8 +71,12 @@ def list_baselines(
 @app.command()
 def fit(
     site: Site,
-    equipment: Annotated[str, typer.Argument(help="One equipment's id; left out: all.")] = "",
-    figure: Annotated[str, typer.Argument(help="One of its figures; left out: all of them.")] = "",
+    equipment: Annotated[
+        str, typer.Argument(metavar="EQUIPMENT", help="One equipment's id; left out: all.")
+    ] = "",
+    figure: Annotated[
+        str, typer.Argument(metavar="FIGURE", help="One of its figures; left out: all of them.")
+    ] = "",
     *,
     as_json: Json = False,
 ) -> None:

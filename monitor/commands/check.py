@@ -21,7 +21,7 @@ __all__ = ["check"]
 
 
 def check(
-    site: Annotated[Path, typer.Argument(help="The site file (TOML).")],
+    site: Annotated[Path, typer.Argument(metavar="SITE", help="The site file (TOML).")],
     *,
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
 ) -> None:

@@ -31,11 +31,12 @@ def add(
     site: Site,
     subject: Annotated[
         str,
-        typer.Argument(help="An equipment's id, a tag's name, or 'site'."),
+        typer.Argument(metavar="EQUIPMENT", help="An equipment's id, a tag's name, or 'site'."),
     ],
     kind: Annotated[
         str,
         typer.Argument(
+            metavar="KIND",
             help="wash, overhaul or calibration (baselines start anew), repair, trip or note.",
         ),
     ],

@@ -28,10 +28,12 @@ _STATE = ("mass_flow_kg_s", "pressure_bar", "temperature_degc", "enthalpy_kj_kg"
 
 def explain(
     site: Site,
-    subject: Annotated[str, typer.Argument(help="A stream, an equipment, or 'ledger'.")],
+    subject: Annotated[
+        str, typer.Argument(metavar="SUBJECT", help="A stream, an equipment, or 'ledger'.")
+    ],
     figure: Annotated[
         str,
-        typer.Argument(help="For example exergy_live_kw, destroyed_live_kw."),
+        typer.Argument(metavar="FIGURE", help="For example exergy_live_kw, destroyed_live_kw."),
     ],
     at_time: Annotated[
         str, typer.Option("--at", help="A time in the grid cell; left out: the newest cell.")

@@ -115,9 +115,7 @@ def test_catching_up_in_steps_gives_the_rows_of_one_backfill(make_plant, lostwor
     stepwise, at_once = make_plant(tmp_path / "a"), make_plant(tmp_path / "b")
     for hour in ("00:01", "03:01", "07:16", "07:31", "15:46", "23:46"):
         lostwork("once", stepwise.path, "--until", f"2026-01-11T{hour}Z")
-    lostwork(
-        "backfill", at_once.path, "--from", "2026-01-10T00:00Z", "--to", "2026-01-11T23:45Z"
-    )
+    lostwork("backfill", at_once.path, "--from", "2026-01-10T00:00Z", "--to", "2026-01-11T23:45Z")
     a, b = figures(stepwise), figures(at_once)
     for table in a:
         pd.testing.assert_frame_equal(a[table], b[table])
