@@ -568,7 +568,7 @@ def empty_shift() -> ShiftView:
     )
 
 
-HOSTILE = "</script><script>owned=1</script><img src=x onerror=owned=1>\"'&amp;%{x}$x$<b>\u2028"
+HOSTILE = "<b></script><script>owned=1</script><img src=x onerror=owned=1>\"'&amp;%{x}$x$\u2028"
 
 # What the contract fixes to a few words, or what names files, cannot be free text.
 _FIXED = {

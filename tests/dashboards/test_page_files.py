@@ -260,3 +260,10 @@ def test_the_package_imports_neither_of_the_others():
 def test_writing_a_page_does_not_load_plotly():
     code = "import sys, dashboards; sys.exit(any(m.split('.')[0] == 'plotly' for m in sys.modules))"
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
+
+
+def test_half_a_character_from_a_broken_export_does_not_stop_a_page(tmp_path):
+    view = page_views.poisoned(page_views.equipment(), "half \ud83d left")
+    page = dashboards.write_equipment(view, tmp_path)
+    # The lone surrogate has no UTF-8 form; a question mark stands for it.
+    assert "half ? left" in page.read_text(encoding="utf-8")
