@@ -59,23 +59,28 @@ def gather(
 
 def extra_destroyed(
     store: SiteStore,
-    subject: str,
+    rule: FigureRule,
     reference: tuple[int, int],
     since: int,
     until: int,
     least_hours: int,
 ) -> float:
-    """Return how much more exergy [kW] is destroyed than at the same load in the reference period.
+    """Return how much more exergy [kW] is destroyed than in the reference period.
 
-    At the reference dead state, mean from ``since`` to ``until``; NaN when it cannot be told.
+    At the same load where the figure follows the load; at the reference dead state; mean from
+    ``since`` to ``until``; NaN when it cannot be told.
     """
     names = ("destroyed_reference_kw", "load_kg_s")
-    rolled = store.rollups("equipment", "hour", reference[0], until, subject=subject, figures=names)
+    rolled = store.rollups(
+        "equipment", "hour", reference[0], until, subject=rule.subject, figures=names
+    )
     wide = rolled.pivot_table(index="start", columns="figure", values="mean", observed=True)
     wide = wide.reindex(columns=list(names))
     hours = wide.set_axis(["value", "load"], axis=1).reset_index(drop=True)
     hours["hour"] = pd.DatetimeIndex(wide.index).as_unit("s").asi8
-    return excess(hours, reference, since, until, least_hours=least_hours)
+    return excess(
+        hours, reference, since, until, least_hours=least_hours, follows_load=rule.follows_load
+    )
 
 
 def _share(flags: np.ndarray, bits: Flag) -> float:

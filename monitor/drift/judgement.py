@@ -262,7 +262,13 @@ def alarm_episodes(
 
 
 def excess(
-    hours: pd.DataFrame, period: tuple[int, int], since: int, until: int, *, least_hours: int
+    hours: pd.DataFrame,
+    period: tuple[int, int],
+    since: int,
+    until: int,
+    *,
+    least_hours: int,
+    follows_load: bool = True,
 ) -> float:
     """Return how far a quantity lies above what it was in a reference period at the same load.
 
@@ -272,13 +278,19 @@ def excess(
         since: the mean is over the hours from here ...
         until: ... to here.
         least_hours: fewest hours to compare with.
+        follows_load: compare at the same load; else with the plain level, which is right where
+            the load itself is what went wrong (a closed valve that passes).
 
     Returns:
         Mean of measured minus expected; NaN when it cannot be told.
     """
     try:
         baseline = _fit(
-            hours, period, follows_load=True, least_hours=least_hours, smallest_change=np.inf
+            hours,
+            period,
+            follows_load=follows_load,
+            least_hours=least_hours,
+            smallest_change=np.inf,
         )
     except BaselineError:
         return float("nan")

@@ -159,7 +159,7 @@ class Raising:
         if self.money is None:
             return None
         extra = extra_destroyed(
-            self.store, self.rule.subject, reference, since, until, self.settings.least_hours
+            self.store, self.rule, reference, since, until, self.settings.least_hours
         )
         if not np.isfinite(extra):
             return None

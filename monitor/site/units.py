@@ -143,7 +143,6 @@ def _registry() -> Any:  # noqa: ANN401 - pint ships no annotations that mypy ac
     import pint  # noqa: PLC0415
 
     registry: Any = pint.UnitRegistry()
-    registry.define("percent = 0.01 = %")
     registry.define("kilopound = 1000 * pound")
     return registry
 
