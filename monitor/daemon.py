@@ -8,6 +8,7 @@ next cycle catches up. Whatever ends the process, the store holds whole windows 
 from __future__ import annotations
 
 import contextlib
+import math
 import os
 import signal
 import threading
@@ -57,10 +58,11 @@ class GridTrigger(BaseTrigger):  # type: ignore[misc]  # no annotations there
 
     def get_next_fire_time(self, previous_fire_time: datetime | None, now: datetime) -> datetime:
         """The next time after ``previous_fire_time`` and not before ``now``."""
-        after = now.timestamp()
-        due = -((self._offset - after) // self._interval) * self._interval + self._offset
-        if previous_fire_time is not None and due <= previous_fire_time.timestamp():
-            due += self._interval
+        cells = math.ceil((now.timestamp() - self._offset) / self._interval)
+        if previous_fire_time is not None:
+            passed = math.floor((previous_fire_time.timestamp() - self._offset) / self._interval)
+            cells = max(cells, passed + 1)
+        due = cells * self._interval + self._offset
         return datetime.fromtimestamp(due, tz=UTC)
 
 

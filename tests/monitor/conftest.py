@@ -200,9 +200,7 @@ class TinyPlant:
 
     def write(self, rows: pd.DataFrame, name: str = "day.csv") -> None:
         (self.folder / "exports").mkdir(exist_ok=True)
-        rows.to_csv(
-            self.folder / "exports" / name, index=False, date_format="%Y-%m-%dT%H:%M:%SZ"
-        )
+        rows.to_csv(self.folder / "exports" / name, index=False, date_format="%Y-%m-%dT%H:%M:%SZ")
 
 
 def plant_readings(
