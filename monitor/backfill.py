@@ -16,8 +16,10 @@ from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
+import pandas as pd
 import structlog
 
+from connectors.base import Window
 from monitor.cycle import compute_window, run_window, store_window
 from monitor.errors import WrongUseError
 from monitor.log import logger
@@ -29,6 +31,7 @@ if TYPE_CHECKING:
     from concurrent.futures import Future
 
     from connectors.base import Connector, Problem
+    from monitor.cycle import ComputedWindow
     from monitor.figures import Computed
     from monitor.site.load import Site
     from monitor.store.site import SiteStore
@@ -117,11 +120,10 @@ def backfill(
         raise WrongUseError("the stretch to compute is empty: it must end after it starts")
     cut = windows(first, last)
     workers = 1 if len(cut) <= _FEW else workers
-    source_ids = [source.id for source in site.file.source]
     with recorded_run(site, store, run_kind, first, last) as (run_id, tally):
         with _computed(site, cut, workers) as stream:
             for computed in stream:
-                store_window(store, source_ids, computed, run_id)
+                store_window(site, store, computed, run_id)
                 tally.add(computed)
                 if progress is not None:
                     progress(tally.windows, len(cut), computed)
@@ -139,8 +141,9 @@ def catch_up(
 ) -> list[Computed]:
     """Compute what came since the last time, and the look-back before it again.
 
-    From the oldest watermark less ``look_back`` to the newest cell that has settled, a UTC day a
-    window at most. An empty store gets its last 24 hours; older ones are for `backfill`.
+    From where the figures end, less ``look_back``, to the newest cell that has settled, a UTC day a
+    window at most. A source that was behind and has delivered since is taken up from where it was.
+    An empty store gets its last 24 hours; older ones are for `backfill`.
 
     Args:
         site: the site.
@@ -157,15 +160,17 @@ def catch_up(
         ConnectorError, StoreError: as `backfill`.
     """
     end = last_complete(site, now)
-    known = store.watermarks()
-    marks = [known[source] for source in sources if source in known]
-    if not marks:
+    newest = store.newest()
+    if newest is None:
         logger().info("the store is empty: taking the last 24 hours; use backfill for older ones")
         start = (end - DAY) // HOUR * HOUR
-    elif min(marks) >= end:
-        return []
     else:
-        start = int(min(marks) - site.file.site.look_back) // HOUR * HOUR
+        reached = int(newest.timestamp()) + store.interval_s
+        late = _late(site, store, sources, min(reached, end))
+        if reached >= end and late is None:
+            return []
+        behind = min(reached, end) if late is None else late
+        start = int(behind - site.file.site.look_back) // HOUR * HOUR
     done: list[Computed] = []
     with recorded_run(site, store, run_kind, start, end) as (run_id, tally):
         for first, last in windows(start, end):
@@ -174,6 +179,25 @@ def catch_up(
             done.append(run_window(site, store, sources, first, last, run_id))
             tally.add(done[-1])
     return done
+
+
+def _late(
+    site: Site, store: SiteStore, sources: Mapping[str, Connector], reached: int
+) -> int | None:
+    """Where a source was, that has delivered readings since from before the figures' end."""
+    marks, found = store.watermarks(), []
+    for source_id, connector in sources.items():
+        mark = marks.get(source_id, reached)
+        if mark >= reached:
+            continue
+        names = {t.historian_name for t in site.used_tags().values() if t.source == source_id}
+        span = Window(
+            *(pd.Timestamp(t, unit="s", tz="UTC").as_unit("us") for t in (mark + 1, reached))
+        )
+        if mark + 1 < reached and len(connector.read(sorted(names), span).readings):
+            logger().info("late readings", source=source_id, since=str(span.start))
+            found.append(mark)
+    return min(found, default=None)
 
 
 @contextmanager
@@ -208,7 +232,9 @@ def _finish(store: SiteStore, run_id: int, status: str, tally: Tally, message: s
 
 
 @contextmanager
-def _computed(site: Site, cut: list[tuple[int, int]], workers: int) -> Iterator[Iterator[Computed]]:
+def _computed(
+    site: Site, cut: list[tuple[int, int]], workers: int
+) -> Iterator[Iterator[ComputedWindow]]:
     """Give computed windows in order, from this process or from one that works ahead."""
     if workers == 1:
         with open_sources(site) as sources:
@@ -223,8 +249,8 @@ def _computed(site: Site, cut: list[tuple[int, int]], workers: int) -> Iterator[
         pool.shutdown(wait=True, cancel_futures=True)
 
 
-def _ahead(pool: ProcessPoolExecutor, cut: list[tuple[int, int]]) -> Iterator[Computed]:
-    waiting: list[Future[Computed]] = []
+def _ahead(pool: ProcessPoolExecutor, cut: list[tuple[int, int]]) -> Iterator[ComputedWindow]:
+    waiting: list[Future[ComputedWindow]] = []
     for window in cut:
         waiting.append(pool.submit(_compute, window))
         if len(waiting) > _AHEAD:
@@ -256,7 +282,7 @@ def _leave_with_parent() -> None:
         os._exit(1)
 
 
-def _compute(window: tuple[int, int]) -> Computed:
+def _compute(window: tuple[int, int]) -> ComputedWindow:
     if _Worker.sources is None:
         # Opened here and not at the start, where an error would only break the pool.
         _Worker.stack = ExitStack()

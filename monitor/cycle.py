@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import pandas as pd
@@ -16,7 +17,7 @@ if TYPE_CHECKING:
     from monitor.site.load import Site
     from monitor.store.site import SiteStore
 
-__all__ = ["compute_window", "read_window", "run_window", "store_window"]
+__all__ = ["ComputedWindow", "compute_window", "read_window", "run_window", "store_window"]
 
 
 def run_window(
@@ -26,7 +27,7 @@ def run_window(
     start: int,
     end: int,
     run_id: int,
-) -> Computed:
+) -> ComputedWindow:
     """Read, compute and store one window, and move the watermarks in the same transaction.
 
     Args:
@@ -42,30 +43,69 @@ def run_window(
         StoreError: the store cannot be written; nothing is half-written.
     """
     computed = compute_window(site, sources, start, end)
-    store_window(store, sources, computed, run_id)
+    store_window(site, store, computed, run_id)
     return computed
 
 
-def compute_window(site: Site, sources: Mapping[str, Connector], start: int, end: int) -> Computed:
+@dataclass(frozen=True)
+class ComputedWindow(Computed):
+    """Figures of one window, and how far each source reached into it.
+
+    Attributes:
+        newest: of each source that was read, the newest reading inside the window (UTC s), None
+            where it has none there.
+    """
+
+    newest: Mapping[str, int | None] = field(default_factory=dict)
+
+
+def compute_window(
+    site: Site, sources: Mapping[str, Connector], start: int, end: int
+) -> ComputedWindow:
     """Read and compute one window; nothing is stored.
 
     Raises:
         ConnectorError: a source cannot be read.
     """
-    return compute(site, read_window(site, sources, start, end), start, end)
+    read = read_window(site, sources, start, end)
+    newest = _newest(site, sources, read.readings, start)
+    return ComputedWindow(**vars(compute(site, read, start, end)), newest=newest)
 
 
-def store_window(store: SiteStore, sources: Iterable[str], computed: Computed, run_id: int) -> None:
+def store_window(site: Site, store: SiteStore, computed: ComputedWindow, run_id: int) -> None:
     """Store one computed window; watermarks move forward with it, and never back.
 
-    A backfill of last month must not send the daemon back to last month.
+    A source that has readings up to the window's end, less the look-back, is used up to there. One
+    that has not (an export that comes once a day) keeps its watermark at its newest reading, so
+    that its late readings are known for what they are. A backfill of last month moves none.
 
     Raises:
         StoreError: the store cannot be written; nothing is half-written.
     """
-    end, known = computed.batch.end, store.watermarks()
-    moved = {source: end for source in sources if known.get(source, end) <= end}
-    store.write(computed.batch, run_id, watermarks=moved)
+    batch, known = computed.batch, store.watermarks()
+    moved: dict[str, int] = {}
+    for source, newest in computed.newest.items():
+        if newest is None:
+            mark = known.get(source, batch.start)
+        elif newest >= batch.end - site.file.site.look_back:
+            mark = batch.end
+        else:
+            mark = newest
+        if known.get(source, mark) <= mark:
+            moved[source] = mark
+    store.write(batch, run_id, watermarks=moved)
+
+
+def _newest(
+    site: Site, sources: Iterable[str], readings: pd.DataFrame, start: int
+) -> dict[str, int | None]:
+    inside = readings[readings["time"] >= pd.Timestamp(start, unit="s", tz="UTC")]
+    last = inside.groupby("tag", observed=True)["time"].max()
+    found: dict[str, int | None] = dict.fromkeys(sources)
+    for tag, time in last.items():
+        source, at = site.tags[str(tag)].source, int(time.timestamp())
+        found[source] = max(found[source] or at, at)
+    return found
 
 
 def read_window(site: Site, sources: Mapping[str, Connector], start: int, end: int) -> ReadResult:

@@ -290,6 +290,8 @@ def run_daemon(
             while not daemon.stop.wait(1.0):
                 pass
             logger().info("ending: the window in hand is finished first")
+            # Without this the scheduler may still hand a job to workers that are gone.
+            scheduler.remove_all_jobs()
             scheduler.shutdown(wait=True)
         daemon.close()
     if daemon.lost_lock is not None:

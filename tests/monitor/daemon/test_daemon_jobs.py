@@ -73,6 +73,63 @@ def test_a_gap_in_the_daemons_life_is_caught_up(plant, drive):
     assert newest(later) == pd.Timestamp("2026-01-11T17:45Z")
 
 
+def with_a_late_export(plant):
+    """Put the let-down's tags into a source of their own, whose file comes when the test says."""
+    plant.edit(
+        'quality_column = "quality"\n',
+        'quality_column = "quality"\n\n[[source]]\nid = "logger"\nkind = "csv"\n'
+        'path = "logger/*.csv"\nquality_column = "quality"\n',
+    )
+    for tag in ("PT-1201", "TT-1201"):
+        plant.edit(f'name = "{tag}"\nsource = "dcs"', f'name = "{tag}"\nsource = "logger"')
+    own = plant.readings["tag"].isin(["PT-1201", "TT-1201"])
+    plant.write(plant.readings[~own])
+    (plant.folder / "logger").mkdir()
+    return plant.readings[own]
+
+
+def deliver(plant, rows, before):
+    rows[rows["time"] < pd.Timestamp(before)].to_csv(
+        plant.folder / "logger" / "all.csv", index=False, date_format="%Y-%m-%dT%H:%M:%SZ"
+    )
+
+
+def test_an_export_that_comes_half_a_day_late_is_computed_when_it_comes(
+    make_plant, drive, stored, tmp_path
+):
+    plant = make_plant(tmp_path / "late")
+    rows = with_a_late_export(plant)
+    deliver(plant, rows, "2026-01-11T00:00Z")
+    driven = drive(plant, "2026-01-11T00:01Z")
+    driven.daemon.cycle()
+    for hour in range(1, 13):
+        driven.clock.set(f"2026-01-11T{hour:02d}:01Z")
+        driven.daemon.cycle()
+    waiting = driven.at.store.runs()[0]
+    # Nothing late has come: the cycle goes back by the look-back of one hour only.
+    assert waiting.window_start == pd.Timestamp("2026-01-11T10:00Z").timestamp()
+    noon = driven.at.store.equipment(
+        "LD62", *(pd.Timestamp(f"2026-01-11T{t}Z") for t in ("03", "12"))
+    )
+    assert noon["destroyed_live_kw"].isna().all()
+    deliver(plant, rows, "2026-01-11T12:00Z")
+    driven.clock.set("2026-01-11T12:16Z")
+    with capture_logs() as lines:
+        driven.daemon.cycle()
+    assert lines[0]["event"] == "late readings"
+    assert lines[0]["source"] == "logger"
+    at_once = make_plant(tmp_path / "once")
+    deliver(at_once, with_a_late_export(at_once), "2026-01-11T12:00Z")
+    with opened(at_once.path) as at:
+        start, end = (
+            int(pd.Timestamp(t).timestamp()) for t in ("2026-01-10T00:00Z", "2026-01-11T12:15Z")
+        )
+        backfill(at.site, at.store, start, end)
+    live, past = stored(plant), stored(at_once)
+    for table in live:
+        pd.testing.assert_frame_equal(live[table], past[table])
+
+
 def test_a_source_that_goes_away_is_told_once_and_when_it_is_back(plant, drive):
     driven = drive(plant, "2026-01-11T12:01Z")
     driven.daemon.cycle()
