@@ -36,6 +36,7 @@ __all__ = [
     "instance_holders",
     "ledger_figures",
     "metadata",
+    "notifications",
     "rollups",
     "runs",
     "sites",
@@ -46,7 +47,7 @@ __all__ = [
     "watermarks",
 ]
 
-REVISIONS = ("0001",)
+REVISIONS = ("0001", "0002")
 """Every schema revision this program knows, oldest first; the last one is what it works with."""
 
 VERSION_TABLE = "lostwork_schema"
@@ -331,6 +332,29 @@ events = sa.Table(
     _text("who"),
     _text("note"),
     sa.Index("events_by_time", "site_id", "time"),
+)
+notifications = sa.Table(
+    "notifications",
+    metadata,
+    _id("notification_id"),
+    _site(),
+    _text("target"),
+    # What happened to what and when, so that it is told to a target once.
+    _text("key"),
+    _text("about"),
+    _text("event"),
+    # When the alarm was raised, or the job began to fail: tells one time it happened from the next.
+    _time("began"),
+    _time("time"),
+    _time("queued"),
+    _text("state"),
+    _count("tries"),
+    _time("due"),
+    _maybe_time("ended"),
+    _text("error"),
+    _text("content"),
+    sa.UniqueConstraint("site_id", "target", "key", name="notifications_once"),
+    sa.Index("notifications_by_state", "site_id", "target", "state"),
 )
 instance_holders = sa.Table(
     "instance_holders",
