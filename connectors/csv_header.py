@@ -145,11 +145,11 @@ def check_columns(header: Header, options: CsvOptions, file: str) -> None:
     Raises:
         HeaderError: a column is absent or there twice.
     """
-    keys = ["time_column"]
+    wanted = [("time_column", name) for name in options.time_columns]
     if options.layout == "long":
-        keys += ["tag_column", "value_column"] + ["quality_column"] * bool(options.quality_column)
-    for key in keys:
-        name = getattr(options, key)
+        keys = ["tag_column", "value_column"] + ["quality_column"] * bool(options.quality_column)
+        wanted += [(key, getattr(options, key)) for key in keys]
+    for key, name in wanted:
         found = header.columns.count(name)
         if found > 1:
             raise HeaderError(f"{file}: column '{name}' ({key}) occurs {found} times in the header")

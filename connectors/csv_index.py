@@ -8,41 +8,33 @@ there is room for them.
 from __future__ import annotations
 
 import contextlib
-import gzip
 import time
-import zlib
 from collections import OrderedDict
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, TypeAlias, cast
+from typing import TYPE_CHECKING, cast
 
 from connectors.base import ConnectorError
+from connectors.csv_files import open_export, read_up_to, unreadable
 from connectors.csv_header import check_columns, detect_encoding, line_end, read_header
 from connectors.csv_parse import BlockParser
 from connectors.tidy import ProblemCount, Rows, join_rows
 
 if TYPE_CHECKING:
-    import io
     import os
     from collections.abc import Iterator, Sequence
     from pathlib import Path
 
+    from connectors.csv_files import Export, ExportFile
     from connectors.csv_header import Encoding, Header
     from connectors.csv_parse import Parsed, Reading
 
 __all__ = [
     "BLOCK",
     "Block",
-    "Export",
     "Extent",
     "IndexedFile",
     "RowCache",
-    "open_export",
-    "read_up_to",
-    "unreadable",
 ]
-
-Export: TypeAlias = "io.BufferedReader | gzip.GzipFile"
-"""An open file, plain or packed."""
 
 BLOCK = 4 << 20
 """[bytes] Small enough that a day's window parses little beside itself."""
@@ -52,9 +44,7 @@ _SETTLED_AFTER = 600.0
 
 _MARK = 1024
 _HEADER_WITHIN = 4 * BLOCK
-_PIECE = 1 << 16
 _TWICE = "column that occurs more than once in the header: the last one is read"
-_DAMAGED = "packed file ends early or is damaged: what follows is not read"
 
 
 @dataclass(eq=False)
@@ -158,14 +148,14 @@ class IndexedFile:
     """One file and the blocks found in it so far.
 
     Args:
-        path: the file.
+        file: the file.
         reading: how its cells are read.
         cache: where parsed rows are kept.
     """
 
-    def __init__(self, path: Path, reading: Reading, cache: RowCache) -> None:
-        self.path, self._reading, self._cache = path, reading, cache
-        self._packed = path.suffix.lower() == ".gz"
+    def __init__(self, file: ExportFile, reading: Reading, cache: RowCache) -> None:
+        self.file, self._reading, self._cache = file, reading, cache
+        self._packed = file.packed
         self._extent: Extent | None = None
         self.blocks: list[Block] = []
         self.error: ConnectorError | None = None
@@ -178,14 +168,14 @@ class IndexedFile:
             ConnectorError: the file cannot be read, or has not the columns it should have.
             FileNotFoundError: the file has gone.
         """
-        stat = _status(self.path)
+        stat = _status(self.file.path)
         extent = Extent.of(stat)
         quiet = time.time() - stat.st_mtime > _SETTLED_AFTER
         if extent == self._extent and not (self._waiting and quiet):
             return
         self.error = None
         try:
-            with open_export(self.path) as file:
+            with open_export(self.file) as file:
                 if not self._goes_on(extent, file):
                     self._forget()
                 self._drop_unfinished()
@@ -195,7 +185,7 @@ class IndexedFile:
             raise
         except OSError as error:
             self._forget()
-            self._extent, self.error = None, unreadable(self.path, error)
+            self._extent, self.error = None, unreadable(self.file, error)
             raise self.error from error
         except ConnectorError as error:
             self._forget()
@@ -215,11 +205,11 @@ class IndexedFile:
                 if rows is None:
                     try:
                         if not opened:
-                            opened.append(open_export(self.path))
+                            opened.append(open_export(self.file))
                             stack.callback(opened[0].close)
                         rows = self._parse_again(opened[0], block)
                     except OSError as error:
-                        raise unreadable(self.path, error) from error
+                        raise unreadable(self.file, error) from error
                     self._cache.put(block, rows)
                 yield rows
 
@@ -227,7 +217,7 @@ class IndexedFile:
         # What is wrong in the block was reported when it was indexed.
         unheard = ProblemCount()
         file.seek(block.offset)
-        raw = read_up_to(file, block.length, self.path.name, unheard)
+        raw = read_up_to(file, block.length, self.file.name, unheard)
         return self._parser().parse(raw, block.line, unheard).rows
 
     def forget_rows(self) -> None:
@@ -237,7 +227,7 @@ class IndexedFile:
 
     def _parser(self) -> BlockParser:
         if self._parsed_by is None:
-            raise ConnectorError(f"{self.path}: the header has not been read yet")
+            raise ConnectorError(f"{self.file}: the header has not been read yet")
         return self._parsed_by
 
     def _forget(self) -> None:
@@ -285,7 +275,7 @@ class IndexedFile:
         at_end = False
         while not at_end:
             wanted = BLOCK if self._packed else min(BLOCK, size - self._end - len(raw))
-            more = read_up_to(file, wanted, self.path.name, problems)
+            more = read_up_to(file, wanted, self.file.name, problems)
             at_end = len(more) < BLOCK
             raw += more
             if self._parsed_by is None:
@@ -304,21 +294,21 @@ class IndexedFile:
 
     def _start(self, raw: bytes, problems: ProblemCount) -> Header | None:
         options = self._reading.options
-        encoding = detect_encoding(options.encoding, raw, str(self.path))
+        encoding = detect_encoding(options.encoding, raw, str(self.file))
         header = read_header(raw, options, encoding)
         if header is None:
             if len(raw) > _HEADER_WITHIN:
                 raise ConnectorError(
-                    f"{self.path}: no header row within {_HEADER_WITHIN >> 20} MB; "
+                    f"{self.file}: no header row within {_HEADER_WITHIN >> 20} MB; "
                     "correct skip_lines or encoding"
                 )
             return None
-        check_columns(header, options, str(self.path))
+        check_columns(header, options, str(self.file))
         twice = {name for name in header.columns if name and header.columns.count(name) > 1}
         example = min(twice, default="")
-        problems.add(self.path.name, "header", _TWICE, len(twice), example=example)
+        problems.add(self.file.name, "header", _TWICE, len(twice), example=example)
         self._encoding = encoding
-        self._parsed_by = BlockParser(self._reading, header, encoding, self.path.name)
+        self._parsed_by = BlockParser(self._reading, header, encoding, self.file.name)
         self._end, self._line = header.body, header.lines + 1
         return header
 
@@ -356,38 +346,6 @@ class IndexedFile:
         if rows[0] is not None and rows[1] is not None:
             self._cache.offer(block, join_rows([rows[0], rows[1]]))
         return block
-
-
-def open_export(path: Path) -> Export:
-    """Open a file for reading, unpacking it by its suffix.
-
-    Raises:
-        OSError: the file has gone, or may not be read.
-    """
-    return gzip.open(path, "rb") if path.suffix.lower() == ".gz" else path.open("rb")
-
-
-def read_up_to(file: Export, size: int, name: str, problems: ProblemCount) -> bytes:
-    """Read ``size`` bytes, fewer only at the end of the file or of what can be unpacked."""
-    if not isinstance(file, gzip.GzipFile):
-        return file.read(size)
-    pieces, left = [], size
-    try:
-        # Piece by piece: one long read would lose what stands before the damage.
-        while left and (piece := file.read1(min(left, _PIECE))):
-            pieces.append(piece)
-            left -= len(piece)
-    except (EOFError, zlib.error, gzip.BadGzipFile) as error:
-        problems.add(name, "", _DAMAGED, 1, example=str(error))
-    return b"".join(pieces)
-
-
-def unreadable(path: Path, error: OSError) -> ConnectorError:
-    """Say that a file cannot be read, and what to do."""
-    return ConnectorError(
-        f"{path} cannot be read ({error.strerror or error}); see that it is there and that the "
-        "account that runs this may read it"
-    )
 
 
 def _status(path: Path) -> os.stat_result:

@@ -8,7 +8,7 @@ from typing import Annotated, Literal
 from pydantic import AfterValidator, BeforeValidator, Field, model_validator
 
 from connectors.quality import QualityOptions
-from connectors.times import check_time_format, check_zone
+from connectors.times import check_time_format, check_zone, is_numeric
 
 __all__ = ["CsvOptions"]
 
@@ -37,6 +37,7 @@ def _one_character(value: object) -> object:
     return named.get(value, value)
 
 
+Header = Annotated[str, Field(min_length=1)]
 Mark = Annotated[str, BeforeValidator(_one_character), Field(min_length=1)]
 
 
@@ -47,13 +48,15 @@ class CsvOptions(QualityOptions):
         min_length=1,
         description="The file, or a pattern with '*' and '**' for many; relative to the site "
         "file's folder; '~' and absolute paths are allowed. Files are taken in the order of their "
-        "names, numbers inside names by size; '.gz' files are unpacked.",
+        "names, numbers inside names by size; '.gz' and '.zip' files are unpacked.",
     )
     layout: Literal["long", "wide"] = Field(
         default="long", description="'long': a row a reading. 'wide': a column a tag."
     )
-    time_column: str = Field(
-        default="time", min_length=1, description="Header of the column of times."
+    time_column: Header | tuple[Header, Header] = Field(
+        default="time",
+        description="Header of the column of times, or a list of two: of dates, then of times of "
+        "day; time_format then reads both with a blank between.",
     )
     tag_column: str = Field(default="tag", description="Header of the tag names (layout 'long').")
     value_column: str = Field(default="value", description="Header of the values (layout 'long').")
@@ -62,8 +65,10 @@ class CsvOptions(QualityOptions):
     )
     time_format: Annotated[str, AfterValidator(check_time_format)] = Field(
         default="iso",
-        description="'iso' (2026-01-31 06:00:00, with or without an offset), 'epoch_s', "
-        "'epoch_ms', 'epoch_us', or a strptime format such as '%d.%m.%Y %H:%M:%S'.",
+        description="'iso' (2026-01-31 06:00:00, with or without an offset); 'day_first' "
+        "(31.1.2026 6:00:00.5) or 'month_first' (1/31/26 6:00 PM), whatever stands between; "
+        "'epoch_s', 'epoch_ms', 'epoch_us'; 'serial_1900' or 'serial_1904', the day numbers of "
+        "spreadsheets; or a strptime format such as '%d-%b-%Y %H:%M:%S'.",
     )
     time_zone: Annotated[str, AfterValidator(check_zone)] = Field(
         default="UTC",
@@ -90,8 +95,15 @@ class CsvOptions(QualityOptions):
         default=0, ge=0, description="Rows after the header that hold no readings (units, texts)."
     )
 
+    @property
+    def time_columns(self) -> tuple[str, ...]:
+        """The headers of the time's columns, one or two."""
+        return (self.time_column,) if isinstance(self.time_column, str) else self.time_column
+
     @model_validator(mode="after")
     def _fits_together(self) -> CsvOptions:
+        if len(self.time_columns) > 1 and is_numeric(self.time_format):
+            raise ValueError(f"time_format '{self.time_format}' is one number, not two columns")
         if self.layout == "wide":
             given = [key for key in _LONG_ONLY if key in self.model_fields_set]
             if given:
@@ -99,8 +111,9 @@ class CsvOptions(QualityOptions):
                     f"{', '.join(given)}: only for layout 'long'; in layout 'wide' the headers are "
                     "the tag names"
                 )
-            return self._marks_differ()
-        columns = [self.time_column, self.tag_column, self.value_column]
+        columns = [*self.time_columns]
+        if self.layout == "long":
+            columns += [self.tag_column, self.value_column]
         columns += [self.quality_column] if self.quality_column else []
         if len(set(columns)) != len(columns) or not all(columns):
             raise ValueError(f"each column needs a header of its own, found {columns}")

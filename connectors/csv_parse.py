@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import pandas as pd
 import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.csv as pacsv
@@ -96,7 +97,7 @@ class Reading:
         return cls(
             options=options,
             book=book,
-            times=TimeReader(options.time_format, options.time_zone),
+            times=TimeReader(options.time_format, options.time_zone, options.decimal),
             numbers=NumberReader(options.decimal, options.thousands, words),
             words=words,
         )
@@ -149,7 +150,7 @@ class BlockParser:
         self._reading, self._header, self._encoding, self._file = reading, header, encoding, file
         self._as_text: set[int] = set()
         options = reading.options
-        self._time = header.position(options.time_column)
+        self._time = tuple(header.position(name) for name in options.time_columns)
         self._long = options.layout == "long"
         if self._long:
             self._tag = header.position(options.tag_column)
@@ -192,7 +193,7 @@ class BlockParser:
         if self._long:
             return (self._value,)
         names = self._header.columns
-        last = {name: at for at, name in enumerate(names) if name and at != self._time}
+        last = {name: at for at, name in enumerate(names) if name and at not in self._time}
         return tuple(sorted(at for name, at in last.items() if self._reading.book.is_wanted(name)))
 
     def _table(self, data: bytes, columns: tuple[int, ...], note: _Note) -> pa.Table:
@@ -215,7 +216,7 @@ class BlockParser:
         self, data: bytes, types: dict[str, Any], chunk: int, *, quote: bool = True
     ) -> tuple[pa.Table, _Refused]:
         refused = _Refused()
-        keys = [self._time]
+        keys = [*self._time]
         if self._long:
             keys += [self._tag] if self._quality is None else [self._tag, self._quality]
         types = {**{_name(at): _DISTINCT for at in keys}, **types}
@@ -243,7 +244,7 @@ class BlockParser:
     def _null_values(self) -> list[str]:
         if not self._long:
             return [""]  # a word must be told from an empty cell
-        words = self._reading.options.bad_words
+        words = self._reading.words.bad_values
         return ["", *{form for w in words for form in (w, w.lower(), w.upper(), w.capitalize())}]
 
     def _parse_long(self, table: pa.Table, lines: int, note: _Note) -> Parsed:
@@ -286,17 +287,28 @@ class BlockParser:
         return Parsed(rows, span, lines)
 
     def _times(self, table: pa.Table, note: _Note) -> tuple[ParsedTimes, npt.NDArray[np.bool_]]:
-        column = table[_name(self._time)].combine_chunks()
-        at = column.indices.to_numpy(zero_copy_only=False)
-        distinct = self._reading.times.read(column.dictionary)
-        times = distinct.take(at)
+        texts, at = self._time_texts(table)
+        times = self._reading.times.read(texts).take(at)
         has_time = times.first != NO_TIME
         if not has_time.all():
             missing = times.in_missing_hour
             for what, rows in ((_MISSING_HOUR, missing), (_NO_TIME, ~has_time & ~missing)):
-                example = str(column.dictionary[at[int(rows.argmax())]]) if rows.any() else ""
+                example = str(texts[at[int(rows.argmax())]]) if rows.any() else ""
                 note.rows(what, rows, example=example)
         return times, has_time
+
+    def _time_texts(self, table: pa.Table) -> tuple[pa.Array, npt.NDArray[np.intp]]:
+        """Return the distinct texts of times, and which of them each row has."""
+        columns = [table[_name(at)].combine_chunks() for at in self._time]
+        ats = [column.indices.to_numpy(zero_copy_only=False) for column in columns]
+        if len(columns) == 1:
+            return columns[0].dictionary, ats[0]
+        date, clock = (pc.utf8_trim(column.dictionary, ' \t"') for column in columns)
+        at, pairs = pd.factorize(ats[0].astype(np.int64) * len(clock) + ats[1])
+        texts = pc.binary_join_element_wise(
+            date.take(pa.array(pairs // len(clock))), clock.take(pa.array(pairs % len(clock))), " "
+        )
+        return texts, at
 
     def _cells(
         self, column: pa.ChunkedArray, has_time: npt.NDArray[np.bool_], note: _Note

@@ -6,16 +6,16 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from connectors.base import ConnectorError
+from connectors.csv_files import open_export, read_up_to, unreadable
 from connectors.csv_header import check_columns, detect_encoding, line_end, read_header
-from connectors.csv_index import BLOCK, open_export, read_up_to, unreadable
+from connectors.csv_index import BLOCK
 from connectors.csv_parse import BlockParser, Reading, TagBook
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Sequence
-    from pathlib import Path
 
+    from connectors.csv_files import Export, ExportFile
     from connectors.csv_header import Encoding
-    from connectors.csv_index import Export
     from connectors.csv_options import CsvOptions
     from connectors.csv_parse import Span
     from connectors.tidy import ProblemCount
@@ -48,11 +48,11 @@ class Look:
     whole: bool
 
 
-def look_at(paths: Sequence[Path], options: CsvOptions, problems: ProblemCount) -> Look:
+def look_at(exports: Sequence[ExportFile], options: CsvOptions, problems: ProblemCount) -> Look:
     """Look at files.
 
     Args:
-        paths: the files, oldest first.
+        exports: the files, oldest first.
         options: how they are written.
         problems: what is passed over is counted here.
 
@@ -65,51 +65,50 @@ def look_at(paths: Sequence[Path], options: CsvOptions, problems: ProblemCount) 
     spans: list[Span] = []
     errors: list[ConnectorError] = []
     size, whole = 0, True
-    for path in reversed(paths):
+    for export in reversed(exports):
         try:
-            length = path.stat().st_size
+            length = export.size or export.path.stat().st_size
             size += length
             short = size > _WHOLE
             whole = whole and not short
-            with open_export(path) as file:
-                found = _FileLook(path, reading, problems).spans(file, length, ends_only=short)
+            with open_export(export) as file:
+                found = _FileLook(export, reading, problems).spans(file, length, ends_only=short)
         except (ConnectorError, OSError) as failed:
-            error = unreadable(path, failed) if isinstance(failed, OSError) else failed
+            error = unreadable(export, failed) if isinstance(failed, OSError) else failed
             errors.append(error)
-            problems.add(str(path), "", f"file passed over: {error}", 1)
+            problems.add(str(export), "", f"file passed over: {error}", 1)
             continue
         spans += [span for span in found if span.first <= span.last]
-    if errors and len(errors) == len(paths):
+    if errors and len(errors) == len(exports):
         raise errors[0]
     return Look(
         tags=tuple(sorted(name for name in book.names if name)),
         first=min((span.first for span in spans), default=1),
         last=max((span.last for span in spans), default=0),
-        files=len(paths),
+        files=len(exports),
         size=size,
         whole=whole,
     )
 
 
 class _FileLook:
-    def __init__(self, path: Path, reading: Reading, problems: ProblemCount) -> None:
-        self._path, self._reading, self._problems = path, reading, problems
-        self._packed = path.suffix.lower() == ".gz"
+    def __init__(self, export: ExportFile, reading: Reading, problems: ProblemCount) -> None:
+        self._export, self._reading, self._problems = export, reading, problems
+        self._packed = export.packed
         self._line = 1
 
     def spans(self, file: Export, size: int, *, ends_only: bool) -> list[Span]:
         """Return the spans of time of the pieces that were read."""
         raw = self._read(file, _END if ends_only else BLOCK)
-        encoding = detect_encoding(self._reading.options.encoding, raw, str(self._path))
+        encoding = detect_encoding(self._reading.options.encoding, raw, str(self._export))
         header = read_header(raw, self._reading.options, encoding)
         if header is None:
             return []
-        check_columns(header, self._reading.options, str(self._path))
-        parser = BlockParser(self._reading, header, encoding, self._path.name)
+        check_columns(header, self._reading.options, str(self._export))
+        parser = BlockParser(self._reading, header, encoding, self._export.name)
         if self._reading.options.layout == "wide":
-            names = (name for name in header.columns if name)
-            time = self._reading.options.time_column
-            self._reading.book.codes([name for name in names if name != time])
+            times = ("", *self._reading.options.time_columns)
+            self._reading.book.codes([name for name in header.columns if name not in times])
         self._line = header.lines + 1
         raw = raw[header.body :]
         if ends_only:
@@ -135,7 +134,7 @@ class _FileLook:
         return parsed.span
 
     def _read(self, file: Export, size: int) -> bytes:
-        return read_up_to(file, size, self._path.name, self._problems)
+        return read_up_to(file, size, self._export.name, self._problems)
 
     def _tail(self, file: Export, size: int, encoding: Encoding) -> bytes:
         """Return whole lines at the end of the file, none when they have been read already."""

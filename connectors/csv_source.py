@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import glob
-import re
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from connectors.base import ConnectorError, Probe, ReadResult
+from connectors.csv_files import ExportFile, by_name, unpack_names
 from connectors.csv_index import Block, IndexedFile, RowCache
 from connectors.csv_options import CsvOptions
 from connectors.csv_parse import Reading, TagBook
@@ -78,13 +78,16 @@ class CsvSource:
             ConnectorError: there is no file, or none that can be understood.
         """
         problems = ProblemCount()
-        look = look_at(self._paths(), self._options, problems)
+        look = look_at(self._exports(), self._options, problems)
         return _as_probe(look, self._options, problems)
 
     def close(self) -> None:
         """Release the memory that parsed rows take; no file is kept open."""
         self._cache.clear()
         self._files.clear()
+
+    def _exports(self) -> list[ExportFile]:
+        return unpack_names(self._paths())
 
     def _paths(self) -> list[Path]:
         try:
@@ -95,7 +98,7 @@ class CsvSource:
         if (self._folder / pattern).is_file():
             return [self._folder / pattern]
         found = glob.glob(str(pattern), root_dir=self._folder, recursive=True)  # noqa: PTH207
-        paths = sorted((self._folder / path for path in found), key=_by_name)
+        paths = sorted((self._folder / path for path in found), key=by_name)
         paths = [path for path in paths if path.is_file()]
         if not paths:
             raise ConnectorError(
@@ -105,21 +108,22 @@ class CsvSource:
         return paths
 
     def _refresh(self, problems: ProblemCount) -> list[IndexedFile]:
-        paths = self._paths()
-        for gone in self._files.keys() - {str(path) for path in paths}:
+        exports = self._exports()
+        for gone in self._files.keys() - {str(export) for export in exports}:
             self._files.pop(gone).forget_rows()
-        for path in paths:
-            file = self._files.get(str(path))
+        for export in exports:
+            name = str(export)
+            file = self._files.get(name)
             if file is None:
-                file = self._files[str(path)] = IndexedFile(path, self._reading, self._cache)
+                file = self._files[name] = IndexedFile(export, self._reading, self._cache)
             try:
                 file.refresh(problems)
             except ConnectorError as error:
-                problems.add(str(path), "", f"{_LEFT_OUT}: {error}", 1)
+                problems.add(name, "", f"{_LEFT_OUT}: {error}", 1)
             except FileNotFoundError:
                 # Taken away between listing and opening: as if it had not been listed.
-                self._files.pop(str(path)).forget_rows()
-        files = [self._files[str(path)] for path in paths if str(path) in self._files]
+                self._files.pop(name).forget_rows()
+        files = [self._files[str(e)] for e in exports if str(e) in self._files]
         errors = [file.error for file in files if file.error is not None]
         if errors and len(errors) == len(files):
             raise errors[-1]
@@ -178,12 +182,6 @@ def _inside(rows: Rows, block: Block, start: int, end: int) -> Rows:
         low, high = np.searchsorted(rows.time, [start, end])
         return rows.between(int(low), int(high))
     return rows.keep((rows.time >= start) & (rows.time < end))
-
-
-def _by_name(path: Path) -> tuple[tuple[int, int, str], ...]:
-    """Sort 'part 10' after 'part 9'."""
-    pieces = re.split(r"(\d+)", str(path))
-    return tuple((1, int(p), p) if p.isdecimal() else (0, 0, p) for p in pieces)
 
 
 def _as_probe(look: Look, options: CsvOptions, problems: ProblemCount) -> Probe:

@@ -66,10 +66,18 @@ class NumberReader:
         value = number.cast(pa.float64()).to_numpy(zero_copy_only=False)
         empty = pc.equal(trimmed, "").to_numpy(zero_copy_only=False)
         words = ~(matched.to_numpy(zero_copy_only=False) | empty)
-        unknown = np.zeros(len(value), dtype=np.bool_)
+        value = np.array(value, dtype=np.float64)
+        unknown = np.isinf(value)  # digits that no number of 64 bits can hold
         if words.any():
             found = trimmed.filter(pa.array(words)).dictionary_encode()
-            no_value = self._words.mean_no_value(found.dictionary.to_pylist())
-            unknown[words] = ~no_value[found.indices.to_numpy(zero_copy_only=False)]
+            distinct = found.dictionary.to_pylist()
+            state, no_value = (
+                self._words.state_numbers(distinct),
+                self._words.mean_no_value(distinct),
+            )
+            at = found.indices.to_numpy(zero_copy_only=False)
+            value[words] = state[at]
+            unknown[words] = ~no_value[at] & np.isnan(state[at])
         example = str(trimmed[int(unknown.argmax())]) if unknown.any() else ""
-        return ParsedNumbers(np.array(value, dtype=np.float64), empty, unknown, example)
+        value[np.isinf(value)] = np.nan
+        return ParsedNumbers(value, empty, unknown, example)

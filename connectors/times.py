@@ -29,6 +29,7 @@ __all__ = [
     "check_time_format",
     "check_zone",
     "from_microseconds",
+    "is_numeric",
     "microseconds",
     "resolve_doubled_hour",
 ]
@@ -47,7 +48,22 @@ _EARLIEST = int(dt.datetime(1900, 1, 1, tzinfo=dt.UTC).timestamp()) * 1_000_000
 _LATEST = int(dt.datetime(2200, 1, 1, tzinfo=dt.UTC).timestamp()) * 1_000_000
 
 _EPOCH_SCALE = {"epoch_s": 1_000_000.0, "epoch_ms": 1_000.0, "epoch_us": 1.0}
+
+# Spreadsheets count days. The calendar of 1900 has a 29 February 1900 that never was, so that from
+# March 1900 on its day 0 is 30 December 1899.
+_SERIAL_START = {"serial_1900": dt.date(1899, 12, 30), "serial_1904": dt.date(1904, 1, 1)}
+_NUMERIC = (*_EPOCH_SCALE, *_SERIAL_START)
+_ORDERS = ("day_first", "month_first")
+_WORDS = ("iso", *_ORDERS, *_NUMERIC)
+# No exponents: 1.76984E+09 is off by hours, and nobody would see it.
 _NUMBER = r"^[+-]?\d+(\.\d*)?$"
+
+_DATE_AND_TIME = (
+    r"^(?P<one>\d{1,2})[./-] ?(?P<two>\d{1,2})[./-] ?(?P<year>\d{4}|\d{2})"
+    r"(?:[ T,]+(?P<hour>\d{1,2}):(?P<minute>\d{2})(?::(?P<second>\d{2})(?:[.,](?P<part>\d{1,9}))?)?"
+    r"(?: ?(?P<half>[AaPp])\.?[Mm]\.?)?)?$"
+)
+_CENTURY_TURNS = 69  # POSIX: two-digit years from 69 on are of the 1900s
 _ENDS_WITH_AN_OFFSET = r"\d[Tt ]\s*\d.*(?:[Zz]|[+-]\d{2}(?::?\d{2})?)$"
 
 
@@ -83,18 +99,24 @@ class TimeReader:
     """Reads one source's times.
 
     Args:
-        time_format: ``iso``, ``epoch_s``, ``epoch_ms``, ``epoch_us`` or a strptime format.
+        time_format: ``iso``, ``day_first``, ``month_first``, ``epoch_s``, ``epoch_ms``,
+            ``epoch_us``, ``serial_1900``, ``serial_1904`` or a strptime format.
         time_zone: IANA name; holds for times that carry no offset of their own.
+        decimal: the decimal mark of times that are numbers.
     """
 
-    def __init__(self, time_format: str, time_zone: str) -> None:
-        self._format = time_format
+    def __init__(self, time_format: str, time_zone: str, decimal: str = ".") -> None:
+        self._format, self._decimal = time_format, decimal
         self._zone = None if time_zone in {"UTC", "Etc/UTC"} else zoneinfo.ZoneInfo(time_zone)
 
     def read(self, texts: pa.Array) -> ParsedTimes:
         """Read distinct texts; what cannot be read becomes `NO_TIME`, never an error."""
         if self._format in _EPOCH_SCALE:
-            return self.universal(_read_epoch(texts, _EPOCH_SCALE[self._format]))
+            return self.universal(_scaled(self._numbers(texts), _EPOCH_SCALE[self._format]))
+        if self._format in _SERIAL_START:
+            return self.local(_serial(self._numbers(texts), _SERIAL_START[self._format]))
+        if self._format in _ORDERS:
+            return self.local(_read_numbered(texts, day_first=self._format == "day_first"))
         if self._format == "iso":
             return self._read_iso(texts)
         parsed = pd.to_datetime(
@@ -131,6 +153,14 @@ class TimeReader:
     def wall_clock(self, time: pd.Timestamp) -> pd.Timestamp:
         """Return the local wall-clock time, without a zone, of a moment."""
         return time.tz_convert(self._zone or "UTC").tz_localize(None)
+
+    def _numbers(self, texts: pa.Array) -> npt.NDArray[np.float64]:
+        """Return texts as numbers, NaN where they are none."""
+        trimmed = pc.utf8_trim(texts, characters=' \t"')
+        if self._decimal != ".":
+            trimmed = pc.replace_substring(trimmed, self._decimal, ".")
+        number = pc.if_else(pc.match_substring_regex(trimmed, _NUMBER), trimmed, None)
+        return np.asarray(number.cast(pa.float64()).to_numpy(zero_copy_only=False), np.float64)
 
     def _read_iso(self, texts: pa.Array) -> ParsedTimes:
         zoned = len(texts) > 0 and str(texts[0]).strip('" ')[-1:] in {"Z", "z"}
@@ -242,15 +272,20 @@ def check_zone(name: str) -> str:
     return name
 
 
+def is_numeric(time_format: str) -> bool:
+    """Say whether times of this format are numbers."""
+    return time_format in _NUMERIC
+
+
 def check_time_format(text: str) -> str:
     """Return a time format that can be read.
 
     Raises:
-        ValueError: neither ``iso``, an ``epoch_`` word nor a strptime format with a full date.
+        ValueError: neither one of the words nor a strptime format with a full date.
     """
-    if text == "iso" or text in _EPOCH_SCALE:
+    if text in _WORDS:
         return text
-    known = f"write 'iso', {', '.join(map(repr, _EPOCH_SCALE))} or such as '%d.%m.%Y %H:%M'"
+    known = f"write {', '.join(map(repr, _WORDS))} or such as '%d.%m.%Y %H:%M'"
     if "%" not in text:
         raise ValueError(f"'{text}' is not a time format; {known}")
     moment = dt.datetime(2026, 11, 23, 13, 0, tzinfo=dt.UTC)
@@ -280,12 +315,60 @@ def _series_microseconds(times: pd.Series[Any]) -> npt.NDArray[np.int64]:
     return pd.DatetimeIndex(times).as_unit("us").asi8
 
 
-def _read_epoch(texts: pa.Array, scale: float) -> npt.NDArray[np.int64]:
-    trimmed = pc.utf8_trim(texts, characters=' \t"')
-    number = pc.if_else(pc.match_substring_regex(trimmed, _NUMBER), trimmed, None)
-    values = number.cast(pa.float64()).to_numpy(zero_copy_only=False) * scale
-    readable = np.abs(values) < float(_LATEST)  # False for NaN
-    return np.where(readable, np.rint(np.where(readable, values, 0.0)), NO_TIME).astype(np.int64)
+def _scaled(values: npt.NDArray[np.float64], scale: float) -> npt.NDArray[np.int64]:
+    time = values * scale
+    readable = np.abs(time) < float(_LATEST)  # False for NaN
+    return np.where(readable, np.rint(np.where(readable, time, 0.0)), NO_TIME).astype(np.int64)
+
+
+def _serial(days: npt.NDArray[np.float64], start: dt.date) -> npt.NDArray[np.int64]:
+    """Return local wall-clock time of day numbers, to the millisecond.
+
+    Five decimals of a day are a second, and spreadsheets write as many as they like: finer than a
+    millisecond is rounding.
+    """
+    offset = (start - dt.date(1970, 1, 1)).days
+    milliseconds = np.rint((days + offset) * (DAY / 1_000))
+    return _scaled(milliseconds, 1_000.0)
+
+
+def _read_numbered(texts: pa.Array, *, day_first: bool) -> npt.NDArray[np.int64]:
+    """Return local wall-clock time of texts such as 31.1.2026 6:00 or 1/31/26 6:00:00.5 PM."""
+    found = pc.extract_regex(pc.utf8_trim(texts, characters=' \t"'), _DATE_AND_TIME)
+    parts = dict(zip((field.name for field in found.type), found.flatten(), strict=True))
+    part = pc.utf8_rpad(pc.utf8_slice_codeunits(parts["part"], 0, 6), width=6, padding="0")
+    half = pc.utf8_lower(parts["half"])
+    year, hour = _whole(parts["year"]), _whole(parts["hour"])
+    short = pc.equal(pc.utf8_length(parts["year"]), 2).fill_null(False).to_numpy(False)
+    year = np.where(short, year + np.where(year < _CENTURY_TURNS, 2000, 1900), year)
+    twelve = pc.is_in(half, pa.array(["a", "p"])).to_numpy(zero_copy_only=False)
+    wrong = twelve & ((hour < 1) | (hour > 12))  # noqa: PLR2004 - a clock's face
+    afternoon = pc.equal(half, "p").fill_null(False).to_numpy(False)
+    hour = np.where(twelve, hour % 12 + 12 * afternoon, hour)
+    one, two = _whole(parts["one"]), _whole(parts["two"])
+    parsed = pd.to_datetime(
+        pd.DataFrame(
+            {
+                "year": year,
+                "month": two if day_first else one,
+                "day": one if day_first else two,
+                "hour": np.where(hour < 24, hour, 0),  # noqa: PLR2004
+            }
+        ),
+        errors="coerce",
+    )
+    minute, second = _whole(parts["minute"]), _whole(parts["second"])
+    wrong |= (hour > 23) | (minute > 59) | (second > 59)  # noqa: PLR2004
+    wrong |= found.is_null().to_numpy(zero_copy_only=False)
+    time = _series_microseconds(parsed)
+    inside = (minute * 60 + second) * 1_000_000 + _whole(part)
+    return np.where(wrong | (time == NO_TIME), NO_TIME, time + inside)
+
+
+def _whole(texts: pa.Array) -> npt.NDArray[np.int64]:
+    """Return digits as numbers, 0 where there are none."""
+    filled = pc.if_else(pc.fill_null(pc.not_equal(texts, ""), False), texts, "0")
+    return np.asarray(filled.cast(pa.int64()).to_numpy(zero_copy_only=False), np.int64)
 
 
 def _plausible(time: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:

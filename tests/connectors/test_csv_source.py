@@ -540,7 +540,7 @@ def test_a_file_taken_away_between_listing_and_opening_is_as_if_not_listed(tmp_p
 
     def take_away(path):
         if path.name == "2.csv":
-            path.unlink()
+            path.path.unlink()
         return original(path)
 
     monkeypatch.setattr(connectors.csv_index, "open_export", take_away)
