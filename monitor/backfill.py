@@ -19,7 +19,7 @@ from typing import TYPE_CHECKING
 import pandas as pd
 import structlog
 
-from connectors.base import Window
+from connectors.base import ConnectorError, Window
 from monitor.cycle import compute_window, run_window, store_window
 from monitor.errors import WrongUseError
 from monitor.log import logger
@@ -36,7 +36,15 @@ if TYPE_CHECKING:
     from monitor.site.load import Site
     from monitor.store.site import SiteStore
 
-__all__ = ["Tally", "backfill", "catch_up", "last_complete", "recorded_run", "windows"]
+__all__ = [
+    "Tally",
+    "backfill",
+    "catch_up",
+    "last_complete",
+    "recorded_run",
+    "recorded_sources",
+    "windows",
+]
 
 HOUR, DAY = 3600, 86400
 _FEW = 3
@@ -212,12 +220,34 @@ def recorded_run(
             yield run_id, tally
     except BaseException as error:
         cause = str(error) or type(error).__name__
+        if isinstance(error, KeyboardInterrupt):
+            cause = "interrupted"
         try:
             _finish(store, run_id, "failed", tally, cause)
         except Exception as second:  # noqa: BLE001 - the first cause is the one to tell
             logger().warning("the failed run could not be recorded", run=run_id, cause=str(second))
         raise
-    _finish(store, run_id, "done", tally, f"{tally.windows} windows")
+    _finish(store, run_id, "done", tally, _windows(tally.windows))
+
+
+@contextmanager
+def recorded_sources(site: Site, store: SiteStore, job: str) -> Iterator[Mapping[str, Connector]]:
+    """Open a site's sources; when one cannot be opened, that is a failed run.
+
+    Raises:
+        ConnectorError: a source cannot be opened.
+    """
+    with ExitStack() as stack:
+        try:
+            sources = stack.enter_context(open_sources(site))
+        except ConnectorError:
+            with recorded_run(site, store, job, None, None):
+                raise
+        yield sources
+
+
+def _windows(count: int) -> str:
+    return "1 window" if count == 1 else f"{count} windows"
 
 
 def _finish(store: SiteStore, run_id: int, status: str, tally: Tally, message: str) -> None:

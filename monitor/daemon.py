@@ -24,11 +24,10 @@ from apscheduler.schedulers.background import BackgroundScheduler
 from apscheduler.triggers.base import BaseTrigger
 
 from connectors.base import ConnectorError
-from monitor.backfill import catch_up, last_complete, recorded_run
+from monitor.backfill import catch_up, last_complete, recorded_sources
 from monitor.housekeeping import keep_house
 from monitor.judging import judge_site, plant_now
 from monitor.log import logger
-from monitor.sources import open_sources
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping
@@ -98,6 +97,7 @@ class Daemon:
         clock: the wall clock, UTC seconds.
         stop: set when the daemon has to end; jobs look at it between windows and pages.
         lock: held for the daemon's life, or None.
+        lost_lock: why the lock is no longer held; the daemon has to end.
     """
 
     site: Site
@@ -105,12 +105,12 @@ class Daemon:
     clock: Callable[[], float] = time.time
     stop: threading.Event = field(default_factory=threading.Event)
     lock: InstanceLock | None = None
-    lost_lock: Exception | None = None
-    _open: ExitStack = field(default_factory=ExitStack)
-    _sources: Mapping[str, Connector] | None = None
-    _stale_from: int | None = None
-    _failing: dict[str, str] = field(default_factory=dict)
-    _told: set[tuple[str, str]] = field(default_factory=set)
+    lost_lock: Exception | None = field(default=None, init=False)
+    _open: ExitStack = field(default_factory=ExitStack, init=False)
+    _sources: Mapping[str, Connector] | None = field(default=None, init=False)
+    _stale_from: int | None = field(default=None, init=False)
+    _failing: dict[str, str] = field(default_factory=dict, init=False)
+    _told: set[tuple[str, str]] = field(default_factory=set, init=False)
 
     def start(self) -> None:
         """What a daemon does first: catch up, judge, draw, and report the last shift."""
@@ -200,11 +200,8 @@ class Daemon:
 
     def _opened(self) -> Mapping[str, Connector]:
         if self._sources is None:
-            try:
-                self._sources = self._open.enter_context(open_sources(self.site))
-            except ConnectorError:
-                with recorded_run(self.site, self.store, "cycle", None, None):
-                    raise
+            opening = recorded_sources(self.site, self.store, "cycle")
+            self._sources = self._open.enter_context(opening)
         return self._sources
 
     def _tell_problems(self, done: list[Computed]) -> None:

@@ -33,7 +33,7 @@ MEANINGS = {
     ExitCode.WRONG_USE: "the command cannot be used like this",
     ExitCode.SITE_FILE: "the site file is wrong",
     ExitCode.SOURCE: "a source cannot be read",
-    ExitCode.STORE: "the store cannot be used",
+    ExitCode.STORE: "the store, or a file to write, cannot be used",
     ExitCode.RUNNING: "another instance is running",
     ExitCode.FAULT: "a fault of the program itself",
     ExitCode.INTERRUPTED: "interrupted",
@@ -80,6 +80,9 @@ def _kinds() -> Iterator[tuple[type[Exception], ExitCode]]:
     from monitor.demo.plan import DemoError  # noqa: PLC0415
 
     yield DemoError, ExitCode.WRONG_USE
+    from dashboards.files import PageError  # noqa: PLC0415
+
+    yield PageError, ExitCode.STORE
     yield LostworkError, ExitCode.FOUND_WRONG
     # A full disk or a folder that may not be written, wherever it shows.
     yield OSError, ExitCode.STORE

@@ -13,6 +13,7 @@ import typer
 
 from monitor.commands.arguments import Site  # noqa: TC001 - typer reads it
 from monitor.commands.group import say
+from monitor.commands.names import count
 from monitor.commands.opening import opened_to_read
 from monitor.commands.times import read_time
 from monitor.errors import WrongUseError
@@ -55,7 +56,7 @@ def export(
             raise WrongUseError("--to must be later than --from")
         with _output(out, kind) as file:
             rows = write(at.store, what, first, last, kind, file)
-    say(f"{rows} rows")
+    say(count(rows, "row"))
 
 
 @contextmanager

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import sys
+import traceback
 from typing import TYPE_CHECKING, Any, NoReturn
 
 import typer
 from typer.core import TyperGroup
 
-from monitor import log
 from monitor.commands.exits import ExitCode, ended_by
 
 if TYPE_CHECKING:
@@ -46,7 +46,7 @@ class CommandGroup(TyperGroup):
 def _end(error: Exception, *, debug: bool) -> NoReturn:
     known = ended_by(error)
     if debug:
-        log.logger().error("the command failed", exc_info=error)
+        traceback.print_exception(error)
     if known is not None:
         fail(known[1], known[0])
     what = f"{type(error).__name__}: {error}".rstrip(": ")

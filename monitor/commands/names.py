@@ -1,4 +1,4 @@
-"""Names on the command line that must be of the site: who is meant, or what is close to it."""
+"""Names on the command line: which one of the site is meant, who acts, how many there are."""
 
 from __future__ import annotations
 
@@ -11,7 +11,7 @@ from monitor.errors import WrongUseError
 if TYPE_CHECKING:
     from collections.abc import Iterable
 
-__all__ = ["known", "who"]
+__all__ = ["count", "known", "who"]
 
 
 def known(name: str, names: Iterable[str], what: str) -> str:
@@ -26,6 +26,11 @@ def known(name: str, names: Iterable[str], what: str) -> str:
     near = difflib.get_close_matches(name, listed, n=1, cutoff=0.5)
     hint = f"did you mean '{near[0]}'?" if near else f"it has {', '.join(listed) or 'none'}"
     raise WrongUseError(f"this site has no {what} '{name}'; {hint}")
+
+
+def count(number: int, thing: str) -> str:
+    """A number of things: ``1 window``, ``2 windows``."""
+    return f"{number} {thing}" if number == 1 else f"{number} {thing}s"
 
 
 def who(by: str) -> str:

@@ -9,6 +9,7 @@ import typer
 
 from monitor.commands.arguments import Json, Site  # noqa: TC001 - typer reads them
 from monitor.commands.group import say, write_json
+from monitor.commands.names import count
 from monitor.commands.opening import opened
 from monitor.commands.progress import Progress
 from monitor.commands.times import local, read_time, utc_text
@@ -39,15 +40,14 @@ def once(
 
     Example: lostwork once site.toml --until "2026-03-01 06:00"
     """
-    from monitor.backfill import Tally, catch_up  # noqa: PLC0415
+    from monitor.backfill import Tally, catch_up, recorded_sources  # noqa: PLC0415
     from monitor.judging import judge_site, plant_now  # noqa: PLC0415
-    from monitor.sources import open_sources  # noqa: PLC0415
 
     with opened(site) as at:
         zone = at.site.file.site.time_zone
         now = read_time(until, zone, int(time.time()), "--until")
         with at.database.instance_lock(at.site.id, "lostwork once"):
-            with open_sources(at.site) as sources:
+            with recorded_sources(at.site, at.store, "once") as sources:
                 done = catch_up(at.site, at.store, sources, now, run_kind="once")
             tally = Tally()
             for computed in done:
@@ -145,18 +145,19 @@ def _report(site: ReadSite, tally: Tally, first: int, last: int, *, as_json: boo
                 "bad": tally.bad,
                 "missing": tally.missing,
                 "passed_over": [
-                    {"where": where, "what": what, "count": count}
-                    for (where, what), count in problems
+                    {"where": where, "what": what, "count": times}
+                    for (where, what), times in problems
                 ],
             }
         )
         return
     zone = site.file.site.time_zone
     typer.echo(
-        f"{local(first, zone)} to {local(last, zone)}: {tally.windows} windows, "
-        f"{tally.readings} readings, {tally.bad} bad, {tally.missing} cells without a value"
+        f"{local(first, zone)} to {local(last, zone)}: {count(tally.windows, 'window')}, "
+        f"{count(tally.readings, 'reading')}, {tally.bad} bad, "
+        f"{count(tally.missing, 'cell')} without a value"
     )
-    for (where, what), count in problems[:_SHOWN_PROBLEMS]:
-        say(f"passed over {count}: {what} ({where})")
+    for (where, what), times in problems[:_SHOWN_PROBLEMS]:
+        say(f"passed over {times}: {what} ({where})")
     if len(problems) > _SHOWN_PROBLEMS:
         say(f"and {len(problems) - _SHOWN_PROBLEMS} other kinds; --json lists them all")

@@ -50,7 +50,7 @@ def status(
 
     For a person, or for a watchdog by its exit code.
 
-    Exit code 1 when the newest figure is too old, no instance runs, or the last run failed.
+    Exit code 1 when the newest figure is too old, there is none, or the last run failed.
 
     Example: lostwork status site.toml --max-lag 30min
     """
@@ -93,10 +93,8 @@ def _status(at: Opened, allowed: int | None) -> _Status:
         unhealthy.append("there are no figures yet")
     elif lag > limit:
         unhealthy.append(f"the newest figure is {_span(lag)} old, more than {_span(limit)}")
-    if holder is None:
-        unhealthy.append("no instance is running")
     if failures:
-        unhealthy.append(f"the last {failures} runs failed: {over[0].message}")
+        unhealthy.append(f"the last run failed ({failures} in a row): {over[0].message}")
     return _Status(
         newest,
         lag,

@@ -164,6 +164,13 @@ def test_a_source_that_fails_half_way_keeps_the_windows_before(plant, lostwork, 
         assert (status, message) == ("failed", "source 'dcs': the historian went away")
 
 
+def test_pages_that_cannot_be_written_are_told(computed, lostwork):
+    (computed.folder / "pages").write_text("a file where the folder should be")
+    ran = lostwork("pages", computed.path)
+    assert (ran.code, ran.out) == (ExitCode.STORE, "")
+    assert "pages" in ran.err
+
+
 def test_an_export_with_an_unreadable_header_is_told(plant, lostwork):
     (plant.folder / "exports" / "day.csv").write_text("when,what\n1,2\n")
     ran = lostwork("once", plant.path)

@@ -247,7 +247,8 @@ def test_status_of_old_figures_is_unhealthy(computed, lostwork):
     ran = lostwork("status", computed.path)
     assert ran.code == 1
     assert "newest figure    2026-01-16 01:00+01:00" in ran.out
-    assert "no instance is running" in ran.out
+    assert "instance         none" in ran.out
+    assert "days old, more than 46 min" in ran.out
 
 
 def test_status_for_a_machine(computed, lostwork):
