@@ -3,7 +3,8 @@
 Mass, energy, entropy and exergy are counted over the ports. Where the readings do not close:
 
 - A mass imbalance is valued as an unaccounted flow that leaves at the mean state of the inlets, so
-  that a bad flow meter does not pass for entropy generation.
+  that a bad flow meter does not pass for entropy generation. Where next to nothing comes in (a
+  vessel discharges), it has the mean state of the outlets: a stagnant pipe's says nothing.
 - An energy residual leaves as heat where the site file says so (``heat_loss = "balance"``);
   otherwise it is an imbalance, stored as it is.
 
@@ -19,15 +20,16 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from monitor.equipment.base import FloatArray, mean_specific
-
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
-    from monitor.equipment.base import Drawn, StreamState
+    from monitor.equipment.base import Drawn, FloatArray, StreamState
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Account", "Balances", "account", "balances", "content_rates"]
+
+# Inlets that carry less than this share of what the outlets carry do not value what is missing.
+_LITTLE = 0.1
 
 
 @dataclass(frozen=True)
@@ -180,14 +182,31 @@ def account(drawn: Drawn, counted: Balances, dead: DeadState) -> Account:
 def _unaccounted_state(
     inlets: Sequence[StreamState], outlets: Sequence[StreamState]
 ) -> tuple[FloatArray, FloatArray] | None:
-    """Enthalpy and entropy that an unaccounted flow is valued at: the mean state of the inlets."""
-    water = [s for s in inlets if s.medium == "water"] or [
-        s for s in outlets if s.medium == "water"
-    ]
+    """Enthalpy and entropy that an unaccounted flow is valued at.
+
+    The flow-weighted mean of the inlets; of the outlets where the inlets carry little beside them;
+    where nothing flows, the plain mean of what has a state.
+    """
+    entering = [s for s in inlets if s.medium == "water"]
+    water = entering + [s for s in outlets if s.medium == "water"]
     if not water:
         return None
-    mean = mean_specific(water)
-    return mean.enthalpy, mean.entropy
+    is_inlet = np.arange(len(water))[:, None] < len(entering)
+    flow = np.maximum(np.stack([s.mass_flow for s in water]), 0.0)
+    enthalpy = np.stack([s.enthalpy for s in water])
+    entropy = np.stack([s.entropy for s in water])
+    into = np.add.reduce(np.where(is_inlet, flow, 0.0))
+    out = np.add.reduce(np.where(is_inlet, 0.0, flow))
+    weight = np.where(is_inlet == (into >= _LITTLE * out), flow, 0.0)
+    idle = into + out == 0
+    weight = np.where(idle, np.isfinite(enthalpy), weight)
+    total = np.add.reduce(weight)
+    # A stream without flow must not spoil the mean with a state that is absent.
+    with np.errstate(invalid="ignore"):
+        return (
+            np.add.reduce(np.where(weight == 0, 0.0, weight * enthalpy)) / total,
+            np.add.reduce(np.where(weight == 0, 0.0, weight * entropy)) / total,
+        )
 
 
 def _sum(states: Sequence[StreamState], name: str, like: FloatArray | None = None) -> FloatArray:

@@ -26,6 +26,11 @@ __all__ = ["Needs", "Plan", "Step", "complete", "plan", "spare_balances"]
 
 Unknown = tuple[Literal["flow", "enthalpy", "rate"], str]
 
+# Two flows are told apart by the enthalpies they carry. Within that of one kelvin of water two
+# thermometers see no difference, and the flows come out as large as one likes; within five, the
+# flows are off by a fifth for each kelvin.
+_INDISTINCT, _HARDLY_DISTINCT = 4.2e3, 21e3  # [J/kg]
+
 
 @dataclass(frozen=True)
 class Needs:
@@ -201,9 +206,13 @@ def _from_energy(
     flag = _flag_of(drawn, (*split.inlets, *split.outlets)) | split.unknown.flag
     if kind == "rate":
         return {stream: with_rate(split.unknown, energy, flag)}
-    flow = split.unknown.mass_flow
+    # A flow within the meters' error has no enthalpy to be found; nothing flows, and what little
+    # the balance leaves is an imbalance. Else every stop would blank the whole site's ledger.
+    still = np.abs(split.unknown.mass_flow) < drawn.item.options.off_below
+    flow = np.where(still, 0.0, split.unknown.mass_flow)
     with np.errstate(divide="ignore", invalid="ignore"):
         enthalpy = np.where(flow > 0, energy / flow, np.nan)
+    flag = _missing_where_nan(flag, np.where(still, 0.0, enthalpy))
     return {stream: with_flow(with_enthalpy(split.unknown, enthalpy), flow, flag)}
 
 
@@ -215,15 +224,13 @@ def _flows_from_both(drawn: Drawn, streams: tuple[str, str]) -> dict[str, Stream
     energy = first.net("energy") - rates.internal_energy - drawn.item.kind.unmeasured_heat(drawn)
     a, b = first.unknown, second.unknown
     # sign_a m_a + sign_b m_b = mass; the same with enthalpies = energy.
-    determinant = b.enthalpy - a.enthalpy
-    with np.errstate(divide="ignore", invalid="ignore"):
-        flow_a = first.sign * (mass * b.enthalpy - energy) / determinant
-        flow_b = second.sign * (energy - mass * a.enthalpy) / determinant
-    flag = _flag_of(drawn, (*first.inlets, *first.outlets)) | a.flag | b.flag
-    return {
-        a.id: with_flow(a, np.where(determinant == 0, np.nan, flow_a), flag),
-        b.id: with_flow(b, np.where(determinant == 0, np.nan, flow_b), flag),
-    }
+    difference = np.abs(b.enthalpy - a.enthalpy)
+    determinant = np.where(difference < _INDISTINCT, np.nan, b.enthalpy - a.enthalpy)
+    flow_a = first.sign * (mass * b.enthalpy - energy) / determinant
+    flow_b = second.sign * (energy - mass * a.enthalpy) / determinant
+    doubtful = np.where(difference < _HARDLY_DISTINCT, np.int32(Flag.UNCERTAIN), np.int32(0))
+    flag = _flag_of(drawn, (*first.inlets, *first.outlets)) | a.flag | b.flag | doubtful
+    return {a.id: with_flow(a, flow_a, flag), b.id: with_flow(b, flow_b, flag)}
 
 
 def _flag_of(drawn: Drawn, states: Sequence[StreamState]) -> FlagArray:
