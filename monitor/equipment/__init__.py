@@ -10,13 +10,20 @@ from typing import TYPE_CHECKING
 
 from monitor.equipment.accumulator import Accumulator
 from monitor.equipment.boiler import Boiler
+from monitor.equipment.closed_feedwater_heater import ClosedFeedwaterHeater
 from monitor.equipment.condenser import Condenser
 from monitor.equipment.control_volume import ControlVolume
+from monitor.equipment.deaerator import Deaerator
+from monitor.equipment.exchanger import Exchanger
+from monitor.equipment.flash_vessel import FlashVessel
 from monitor.equipment.header import Header
 from monitor.equipment.letdown import Letdown
+from monitor.equipment.open_feedwater_heater import OpenFeedwaterHeater
 from monitor.equipment.pump import Pump
+from monitor.equipment.trap_group import TrapGroup
 from monitor.equipment.turbine import Turbine
 from monitor.equipment.user import User
+from monitor.equipment.vent import Vent
 
 if TYPE_CHECKING:
     from monitor.equipment.base import Kind
@@ -26,13 +33,20 @@ __all__ = ["KINDS"]
 _ALL: tuple[Kind, ...] = (
     Accumulator(),
     Boiler(),
+    ClosedFeedwaterHeater(),
     Condenser(),
     ControlVolume(),
+    Deaerator(),
+    Exchanger(),
+    FlashVessel(),
     Header(),
     Letdown(),
+    OpenFeedwaterHeater(),
     Pump(),
+    TrapGroup(),
     Turbine(),
     User(),
+    Vent(),
 )
 
 KINDS: dict[str, Kind] = {kind.name: kind for kind in _ALL}

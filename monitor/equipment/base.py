@@ -8,7 +8,7 @@ same for all kinds and live in `account` and `solve`. Everything is arrays over 
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Annotated, ClassVar, Literal
 
 import numpy as np
@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
     from monitor.flags import FlagArray
-    from monitor.site.models import Reference
+    from monitor.site.models import Reference, Stream
     from monitor.thermo.dead_state import DeadState
 
 __all__ = [
@@ -89,13 +89,25 @@ class Options(BaseModel):
 
 @dataclass(frozen=True)
 class PortSpec:
-    """A port: which way it faces, how many streams it takes, and of which media."""
+    """A port: which way it faces, how many streams it takes, and of which media.
+
+    ``role`` says on which side of fuel and product its exergy counts, for the unit costs of
+    `monitor.economics`: what leaves on the fuel's side is what the fuel brought and was not spent
+    (a turbine's exhaust); what enters on the product's side is what the product was before (a
+    boiler's feed water); a loss is what leaves for nothing. Empty: in is fuel, out is product.
+    """
 
     name: str
     direction: Literal["in", "out"]
     least: int = 1
     most: int | None = 1
     media: frozenset[Medium] = WATER
+    role: Literal["fuel", "product", "loss", ""] = ""
+
+    @property
+    def side(self) -> Literal["fuel", "product", "loss"]:
+        """The role, stated or by direction."""
+        return self.role or ("fuel" if self.direction == "in" else "product")
 
 
 @dataclass(frozen=True)
@@ -178,7 +190,8 @@ class Item:
     """One piece of equipment as the site file has it: its kind, and the ids at each port.
 
     ``spare`` names the balances (``mass``, ``energy``) that no unknown was taken from: only these
-    say anything about the readings.
+    say anything about the readings. ``statements`` is what the site file says of the streams here,
+    so that a figure which would be the same by construction is not listed.
     """
 
     id: str
@@ -187,6 +200,20 @@ class Item:
     ports: Mapping[str, tuple[str, ...]]
     options: Options
     spare: frozenset[str] = frozenset({"mass", "energy"})
+    statements: Mapping[str, Stream] = field(default_factory=dict)
+
+    def differ(self, one: str, other: str, key: Literal["pressure", "temperature"]) -> bool:
+        """Whether the readings of two streams can differ: not from one tag, not both fixed."""
+        first, second = (self.statements.get(s) for s in (one, other))
+        if first is None or second is None:
+            return True
+        a, b = getattr(first, key), getattr(second, key)
+        fixed = a is not None and b is not None and a.tag is None and b.tag is None
+        return a != b and not fixed
+
+    def states(self, stream: str, key: str) -> object:
+        """What the site file says of a stream under a key; None for nothing."""
+        return getattr(self.statements.get(stream), key, None)
 
     def ids(self, direction: Literal["in", "out"]) -> tuple[str, ...]:
         """Stream ids at all ports that face one way, in the order of the kind's ports."""

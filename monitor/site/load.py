@@ -282,7 +282,14 @@ def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Sit
         _check_stream(stream, producer, consumer, issues)
     needs = _needs(streams.values())
     planned = plan(list(items.values()), needs)
-    items = {k: replace(v, spare=spare_balances(v, planned.steps)) for k, v in items.items()}
+    items = {
+        k: replace(
+            v,
+            spare=spare_balances(v, planned.steps),
+            statements={s: streams[s] for s in (*v.ids("in"), *v.ids("out")) if s in streams},
+        )
+        for k, v in items.items()
+    }
     for kind, stream_id in sorted(planned.unsolved):
         issues.append(_unsolved(kind, stream_id, items.values()))
     site = Site(

@@ -9,6 +9,8 @@ import numpy as np
 from monitor.equipment import KINDS
 from monitor.equipment.base import Drawn, Item, Signal, StreamState
 from monitor.equipment.solve import with_flow, with_rate
+from monitor.site.models import Stream
+from monitor.thermo.dead_state import dead_state
 from monitor.thermo.water import state_ph, state_pt, state_px
 
 NO_FLAG = np.zeros(1, dtype=np.int32)
@@ -83,7 +85,16 @@ def fuel(name, flow, *, heating_value, ratio):
     )
 
 
-def drawn(kind_name, ports, *, signals=None, interval=300.0, **options):
+def drawn(
+    kind_name,
+    ports,
+    *,
+    signals=None,
+    interval=300.0,
+    spare=frozenset({"mass", "energy"}),
+    statements=None,
+    **options,
+):
     """One piece of equipment over a window; ports: name -> stream or list of streams."""
     kind = KINDS[kind_name]
     states = {k: tuple(v) if isinstance(v, (list, tuple)) else (v,) for k, v in ports.items()}
@@ -93,6 +104,8 @@ def drawn(kind_name, ports, *, signals=None, interval=300.0, **options):
         kind=kind,
         ports={k: tuple(s.id for s in v) for k, v in states.items()},
         options=kind.options.model_validate(options),
+        spare=frozenset(spare),
+        statements=statements or {},
     )
     signals = signals or {}
     return Drawn(item, states, signals, interval, kind.content(item, signals))
@@ -103,3 +116,19 @@ def signal(edges):
     edges = np.asarray(edges, float)
     mean = (edges[1:] + edges[:-1]) / 2
     return Signal(mean, edges, np.zeros(len(mean), dtype=np.int32))
+
+
+def dead(t_C=15.0, p_bar=1.01325):
+    """A dead state of one cell."""
+    return dead_state(np.atleast_1d(t_C + 273.15), np.atleast_1d(p_bar * 1e5))
+
+
+def figures_of(box, at=None):
+    """Values of the listed condition figures of one cell, by name; none may be missing."""
+    found = box.item.kind.condition(box, at or dead())
+    return {f.name: found[f.name] for f in box.item.kind.figures(box.item)}
+
+
+def stated(**streams):
+    """What a site file would say of some streams: id -> the keys of its table."""
+    return {name: Stream.model_validate({"id": name} | keys) for name, keys in streams.items()}

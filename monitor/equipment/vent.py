@@ -1,0 +1,129 @@
+"""Vent or leak: steam that leaves through a valve or a hole and makes nothing.
+
+The passing flow of a closed valve is its condition, as for a let-down. With the hole's diameter,
+what it would pass choked (`nozzle`) stands beside the flow: the estimate of an unmetered leak, or
+the check of a metered vent. A vent has no product: everything it takes is destroyed in throttling
+or lost to the surroundings.
+Source: Kotas, The Exergy Method of Thermal Plant Analysis (1985), chapter 4.2 (throttling).
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Annotated, cast
+
+import numpy as np
+from pydantic import Field
+
+from monitor.equipment.base import (
+    ConditionFigure,
+    Drawn,
+    Figure,
+    FloatArray,
+    Item,
+    Kind,
+    Options,
+    PortSpec,
+    measured,
+)
+from monitor.equipment.nozzle import Orifice, zeuner_exponent
+from monitor.site.models import Reference
+from monitor.site.units import Quantity
+from monitor.thermo.water import saturation_temperature
+
+if TYPE_CHECKING:
+    from monitor.thermo.dead_state import DeadState
+
+__all__ = ["Vent", "VentOptions"]
+
+
+class VentOptions(Options):
+    """Keys of a vent's table.
+
+    Attributes:
+        position: tag of the valve's position.
+        closed_below: position under which the valve counts as closed [0 to 1].
+        orifice: diameter of the hole [m].
+        discharge_coefficient: flow / isentropic flow through it.
+    """
+
+    position: Reference | None = None
+    closed_below: Annotated[float, measured(Quantity.FRACTION)] = 0.02
+    orifice: Annotated[float, measured(Quantity.LENGTH), Field(gt=0)] | None = None
+    discharge_coefficient: Annotated[float, measured(Quantity.FRACTION), Field(gt=0, le=1)] = 0.7
+
+    def signals(self) -> dict[str, tuple[Reference, Quantity]]:
+        """The valve position, when the site has one."""
+        if self.position is None:
+            return {}
+        return {"position": (self.position, Quantity.FRACTION)}
+
+
+class Vent(Kind):
+    """See the module's docstring."""
+
+    name = "vent"
+    title = "Vent or leak"
+    ports = (
+        PortSpec("inlet", "in"),
+        PortSpec("outlet", "out", role="loss"),
+    )
+    options = VentOptions
+    fuel_and_product = "fuel: exergy of the steam let go; product: none"
+
+    def load(self, drawn: Drawn) -> FloatArray:
+        """Flow of steam let go [kg/s]."""
+        return drawn.only("inlet").mass_flow
+
+    def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
+        """Exergy of the steam let go, and nothing [W]."""
+        let_go = drawn.only("inlet").exergy(dead)
+        return let_go, np.zeros_like(let_go)
+
+    def figures(self, item: Item) -> tuple[Figure, ...]:
+        """Passing flow when closed (with a position), and what the hole would pass (with one)."""
+        options = cast("VentOptions", item.options)
+        passing = Figure(
+            "passing_flow",
+            "passing flow when closed",
+            "t/h",
+            "high",
+            0.5,
+            needs_load=False,
+            follows_load=False,
+        )
+        orifice = Figure(
+            "orifice_flow",
+            "flow that the orifice would pass",
+            "t/h",
+            "high",
+            0.5,
+            judged=False,
+            needs_load=False,
+            follows_load=False,
+        )
+        return ((passing,) if options.position is not None else ()) + (
+            (orifice,) if options.orifice is not None else ()
+        )
+
+    def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
+        """Values of `figures`."""
+        del dead
+        options = cast("VentOptions", drawn.item.options)
+        inlet, outlet = drawn.only("inlet"), drawn.only("outlet")
+        ones, nothing = np.ones_like(inlet.mass_flow), np.zeros_like(inlet.flag)
+        found = {}
+        position = drawn.signals.get("position")
+        if position is not None:
+            closed = position.value < options.closed_below
+            passing = np.where(closed, inlet.mass_flow * 3.6, np.nan)
+            found["passing_flow"] = ConditionFigure(passing, ones, position.flag)
+        if options.orifice is not None:
+            superheat = inlet.temperature - saturation_temperature(inlet.pressure)
+            flow = Orifice(options.orifice, options.discharge_coefficient).flow(
+                inlet.pressure,
+                inlet.volume,
+                zeuner_exponent(inlet.dryness, superheated=superheat),
+                outlet.pressure,
+            )
+            found["orifice_flow"] = ConditionFigure(flow * 3.6, ones, nothing)
+        return found
