@@ -8,19 +8,13 @@ from __future__ import annotations
 
 import datetime as dt
 import zoneinfo
-from typing import Annotated, Any, Literal
+from typing import Annotated, Literal
 
-from pydantic import (
-    AfterValidator,
-    BaseModel,
-    BeforeValidator,
-    ConfigDict,
-    Field,
-    field_validator,
-    model_validator,
-)
+from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
 
-from monitor.site.units import Quantity, Unit, UnitError, parse_unit, quantity, split_number
+from monitor.site.fields import Duration, Identifier, Pressure, Table, Temperature, si
+from monitor.site.tags import Meter, Tag, Uncertainty
+from monitor.site.units import Quantity, Unit, parse_unit, split_number
 
 __all__ = [
     "Alarms",
@@ -29,6 +23,7 @@ __all__ = [
     "DriftFigure",
     "Economics",
     "Equipment",
+    "Meter",
     "Pages",
     "Reference",
     "Shifts",
@@ -40,40 +35,6 @@ __all__ = [
     "Tag",
     "Uncertainty",
 ]
-
-
-class _Table(BaseModel):
-    model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True)
-
-
-def _si(expected: Quantity) -> Any:  # noqa: ANN401 - a validator for an Annotated alias
-    def read(value: object) -> float:
-        if isinstance(value, bool) or not isinstance(value, (str, int, float)):
-            raise UnitError(f"{value!r} is not a number with a unit")
-        if isinstance(value, str):
-            return quantity(value, expected)
-        if expected is Quantity.FRACTION:
-            return float(value)
-        raise UnitError(
-            f"{value!r} has no unit; write it as text, for example '{value} {expected}'"
-        )
-
-    return BeforeValidator(read)
-
-
-Duration = Annotated[float, _si(Quantity.TIME)]
-"""A duration, read from text such as '5 min' into seconds."""
-Pressure = Annotated[float, _si(Quantity.PRESSURE)]
-Temperature = Annotated[float, _si(Quantity.TEMPERATURE)]
-
-
-def _identifier(value: str) -> str:
-    if not value or not all(c.isalnum() or c in "_-" for c in value) or len(value) > 64:  # noqa: PLR2004
-        raise ValueError("use letters, digits, '_' and '-' (64 at most): it names files and rows")
-    return value
-
-
-Identifier = Annotated[str, AfterValidator(_identifier)]
 
 
 class Reference(BaseModel):
@@ -103,21 +64,7 @@ class Reference(BaseModel):
         return {"fixed": split[0] * unit.scale + unit.offset, "unit": unit}
 
 
-class Uncertainty(BaseModel):
-    """A tag's standard uncertainty, as an instrument sheet gives it.
-
-    Attributes:
-        amount: the number; a share (0.0025) of range or reading, or SI for an absolute one.
-        basis: what the number is a share of.
-    """
-
-    model_config = ConfigDict(frozen=True)
-
-    amount: float = Field(ge=0)
-    basis: Literal["range", "reading", "absolute"]
-
-
-class SiteTable(_Table):
+class SiteTable(Table):
     """[site]: who and when."""
 
     id: Identifier
@@ -152,13 +99,13 @@ class SiteTable(_Table):
         return value
 
 
-class Store(_Table):
+class Store(Table):
     """[store]: where figures go; a relative SQLite path is taken from the site file's folder."""
 
     url: str = "sqlite:///lostwork.sqlite"
 
 
-class DeadState(_Table):
+class DeadState(Table):
     """[dead_state]: the live ambient, and the fixed reference beside it."""
 
     temperature: Reference
@@ -178,70 +125,7 @@ class Source(BaseModel):
     kind: str
 
 
-class Tag(_Table):
-    """[[tag]]: one instrument in the historian."""
-
-    name: str = Field(min_length=1)
-    source: Identifier
-    unit: Annotated[Unit, BeforeValidator(lambda v: parse_unit(v) if isinstance(v, str) else v)]
-    source_name: str = ""
-    description: str = ""
-    range: tuple[float, float] | None = None
-    uncertainty: str = ""
-    hold: Duration = 600.0
-
-    @model_validator(mode="after")
-    def _range_is_ordered(self) -> Tag:
-        if self.range is not None and self.range[0] >= self.range[1]:
-            raise ValueError(f"range {list(self.range)}: the low end comes first")
-        return self
-
-    @property
-    def historian_name(self) -> str:
-        """The name the source knows the tag by."""
-        return self.source_name or self.name
-
-    @property
-    def stated_uncertainty(self) -> Uncertainty | None:
-        """The standard uncertainty that the site file states, None when it states none."""
-        return parse_uncertainty(self.uncertainty, self.unit) if self.uncertainty else None
-
-    @model_validator(mode="after")
-    def _uncertainty_reads(self) -> Tag:
-        stated = self.stated_uncertainty
-        if stated is not None and stated.basis == "range" and self.range is None:
-            raise ValueError(f"uncertainty '{self.uncertainty}' needs a range = [low, high]")
-        return self
-
-
-def parse_uncertainty(text: str, unit: Unit) -> Uncertainty:
-    """Read '0.25 % range', '1 % reading' or '1.0 K' into a standard uncertainty.
-
-    Raises:
-        UnitError: it cannot be read, or is in a unit unlike the tag's.
-    """
-    words = text.split()
-    share_of = words[-1] if words else ""
-    number = " ".join(words[:-1]) if share_of in {"range", "reading"} else text
-    try:
-        split = split_number(number)
-        own = None if split is None else parse_unit(split[1])
-    except UnitError:
-        split = own = None
-    if split is None or own is None:
-        raise UnitError(
-            f"'{text}' is not an uncertainty; write '0.25 % range', '1 % reading' or '1.0 K'"
-        )
-    expected = Quantity.FRACTION if number != text else unit.quantity
-    if own.quantity is not expected:
-        raise UnitError(f"uncertainty '{text}' is not in a unit like the tag's '{unit.text}'")
-    amount = split[0] * own.scale
-    if share_of == "range":
-        return Uncertainty(amount=amount, basis="range")
-    return Uncertainty(amount=amount, basis="reading" if share_of == "reading" else "absolute")
-
-
-class Stream(_Table):
+class Stream(Table):
     """[[stream]]: a flow between two pieces of equipment, or across the site's boundary.
 
     Water and steam need enough to fix the state (pressure and temperature; or one of them with a
@@ -262,7 +146,7 @@ class Stream(_Table):
     heat: Literal["balance"] | Reference | None = None
     boundary_temperature: Literal["dead_state"] | Reference = "dead_state"
     fuel: str = ""
-    lower_heating_value: Annotated[float, _si(Quantity.SPECIFIC_ENERGY)] | None = None
+    lower_heating_value: Annotated[float, si(Quantity.SPECIFIC_ENERGY)] | None = None
     exergy_ratio: float | None = Field(default=None, gt=0)
     counts_as: Literal["supplied", "used", "lost", ""] = ""
 
@@ -286,7 +170,7 @@ class Equipment(BaseModel):
         return (at,) if isinstance(at, str) else tuple(at)
 
 
-class Shifts(_Table):
+class Shifts(Table):
     """[shifts]: local start times and the names they are known by."""
 
     starts: tuple[dt.time, ...] = (dt.time(6), dt.time(14), dt.time(22))
@@ -308,7 +192,7 @@ class Shifts(_Table):
         return self
 
 
-class Economics(_Table):
+class Economics(Table):
     """[economics]: what lost work costs, per MWh of exergy destroyed or lost."""
 
     currency: str = "EUR"
@@ -316,7 +200,7 @@ class Economics(_Table):
     co2: float = Field(default=200.0, ge=0, description="kg per MWh of exergy")
 
 
-class DriftFigure(_Table):
+class DriftFigure(Table):
     """[[drift.figure]]: how one condition figure is judged, where it differs from the default."""
 
     equipment: Identifier
@@ -325,7 +209,7 @@ class DriftFigure(_Table):
     judged: bool = True
 
 
-class Drift(_Table):
+class Drift(Table):
     """[drift]: baselines and control charts.
 
     ``false_alarm_every`` is the in-control average run length that the chart's limits are designed
@@ -342,21 +226,21 @@ class Drift(_Table):
     figure: tuple[DriftFigure, ...] = ()
 
 
-class Alarms(_Table):
+class Alarms(Table):
     """[alarms]: how long a limit must be passed, or respected, before an alarm moves."""
 
     on_delay: Duration = 3 * 3600.0
     off_delay: Duration = 12 * 3600.0
 
 
-class Pages(_Table):
+class Pages(Table):
     """[pages]: where the static pages go (from the site file's folder) and what they span."""
 
     folder: str = "pages"
     days: float = Field(default=60.0, gt=0)
 
 
-class SiteFile(_Table):
+class SiteFile(Table):
     """A whole site file, each table checked by itself."""
 
     site: SiteTable

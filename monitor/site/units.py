@@ -18,7 +18,17 @@ if TYPE_CHECKING:
     import numpy as np
     import numpy.typing as npt
 
-__all__ = ["PressureDatum", "Quantity", "Unit", "UnitError", "duration_s", "parse_unit", "quantity"]
+__all__ = [
+    "PressureDatum",
+    "Quantity",
+    "Unit",
+    "UnitError",
+    "difference",
+    "duration_s",
+    "parse_unit",
+    "quantity",
+    "rate",
+]
 
 
 class UnitError(ValueError):
@@ -31,6 +41,10 @@ class Quantity(StrEnum):
     PRESSURE = "Pa"
     TEMPERATURE = "K"
     MASS_FLOW = "kg/s"
+    VOLUME_FLOW = "m^3/s"
+    NORM_VOLUME_FLOW = "Nm3/s"
+    DENSITY = "kg/m^3"
+    NORM_DENSITY = "kg/Nm3"
     POWER = "W"
     FRACTION = "1"
     LENGTH = "m"
@@ -117,6 +131,10 @@ _DIMENSIONS = {
     Quantity.PRESSURE: "[mass] / [length] / [time] ** 2",
     Quantity.TEMPERATURE: "[temperature]",
     Quantity.MASS_FLOW: "[mass] / [time]",
+    Quantity.VOLUME_FLOW: "[length] ** 3 / [time]",
+    Quantity.NORM_VOLUME_FLOW: "[norm_volume] / [time]",
+    Quantity.DENSITY: "[mass] / [length] ** 3",
+    Quantity.NORM_DENSITY: "[mass] / [norm_volume]",
     Quantity.POWER: "[mass] * [length] ** 2 / [time] ** 3",
     Quantity.FRACTION: "[]",
     Quantity.LENGTH: "[length]",
@@ -126,10 +144,13 @@ _DIMENSIONS = {
     Quantity.CONDUCTANCE: "[mass] * [length] ** 2 / [time] ** 3 / [temperature]",
     Quantity.TIME: "[time]",
 }
+# "Nm^3" would be a newton metre cubed.
+_NORM = re.compile(r"\b(?P<prefix>k?)(?P<kind>[NS])m(?:\^3|\*\*3|³)")
 _COMMON = (
     "bar(g)", "bar(a)", "kPa(g)", "kPa(a)", "MPa(a)", "psi(g)", "psi(a)", "mbar(a)", "hPa(a)",
     "mmHg(a)", "mmHg(vac)", "inHg(vac)", "degC", "degF", "K", "t/h", "kg/h", "kg/s", "klb/h",
-    "lb/h", "kW", "MW", "W", "%", "1", "m", "mm", "m^3", "kg", "t", "kJ/kg", "MJ/kg", "kW/K",
+    "lb/h", "m^3/h", "Nm3/h", "kg/m^3", "kg/Nm3", "kW", "MW", "W", "%", "1", "m", "mm",
+    "m^3", "kg", "t", "kJ/kg", "MJ/kg", "kW/K",
 )  # fmt: skip
 # The unit stands behind a space, so that a tag called '62-PT-001' is not read as a number.
 _NUMBER = re.compile(
@@ -144,6 +165,16 @@ def _registry() -> Any:  # noqa: ANN401 - pint ships no annotations that mypy ac
 
     registry: Any = pint.UnitRegistry()
     registry.define("kilopound = 1000 * pound")
+    registry.define("cubic_meter = meter ** 3 = m3")
+    registry.define("gallon_per_minute = gallon / minute = gpm")
+    # A norm volume is an amount of gas, not a volume: it needs a density of its own. ISO 13443 and
+    # DIN 1343: 0 degC for the norm, 15 degC for the standard cubic metre, both at 101.325 kPa; a
+    # standard cubic foot is taken at 60 degF and 101.325 kPa (common practice in US gas).
+    registry.define("norm_cubic_meter = [norm_volume] = Nm3")
+    registry.define("standard_cubic_meter = 273.15 / 288.15 * norm_cubic_meter = Sm3")
+    registry.define(
+        "standard_cubic_foot = 0.028316846592 * 273.15 / 288.7055555555556 * norm_cubic_meter = scf"
+    )
     return registry
 
 
@@ -162,7 +193,7 @@ def parse_unit(text: str) -> Unit:
     match = _DATUM.match(stripped)
     base, datum = (match["base"], match["datum"]) if match else (stripped, None)
     try:
-        unit = _registry().Unit(_SPELLINGS.get(base, base))
+        unit = _registry().Unit(_SPELLINGS.get(base, _NORM.sub(r"\g<prefix>\g<kind>m3", base)))
     except Exception as error:
         near = difflib.get_close_matches(stripped, _COMMON, n=1)
         hint = f"; did you mean '{near[0]}'?" if near else ""
@@ -234,6 +265,53 @@ def quantity(text: str, expected: Quantity, *, barometer: float | None = None) -
     return si
 
 
+def difference(text: str, like: Unit) -> float:
+    """Read a difference such as ``0.2 bar`` or ``0.5 K`` into a unit like the one given.
+
+    Raises:
+        UnitError: no number with a unit, a negative one, or a unit of another quantity.
+    """
+    split = split_number(text)
+    own = None if split is None else _undated(split[1])
+    if split is None or own is None or own.quantity is not like.quantity or split[0] < 0:
+        raise UnitError(f"'{text}' is not an amount in a unit like '{like.text}'")
+    return split[0] * own.scale / like.scale
+
+
+def rate(text: str, like: Unit) -> float:
+    """Read a rate of change such as ``5 bar/min`` or ``2 t/h/min`` into units per second.
+
+    The last ``/`` stands before the time; what stands before it is a unit like the one given.
+
+    Raises:
+        UnitError: it cannot be read, is not positive, or is of another quantity.
+    """
+    amount, slash, time = text.rpartition("/")
+    try:
+        change, per = difference(amount, like), parse_unit(time)
+    except UnitError as error:
+        raise UnitError(_not_a_rate(text, like)) from error
+    if not slash or per.quantity is not Quantity.TIME or change <= 0:
+        raise UnitError(_not_a_rate(text, like))
+    return change / per.scale
+
+
+def _not_a_rate(text: str, like: Unit) -> str:
+    base = _DATUM.match(like.text)
+    return (
+        f"'{text}' is not a rate of change of '{like.text}'; "
+        f"write for example '5 {base['base'] if base else like.text}/min'"
+    )
+
+
+def _undated(text: str) -> Unit:
+    """Read a unit of differences: a pressure may leave its datum out."""
+    try:
+        return parse_unit(text)
+    except UnitError:
+        return parse_unit(f"{text}(d)")
+
+
 def duration_s(text: str) -> float:
     """Read a duration such as ``5 min``, ``2 h`` or ``30 s`` into seconds."""
     return quantity(text, Quantity.TIME)
@@ -243,6 +321,10 @@ _EXAMPLE = {
     Quantity.PRESSURE: "12 bar(a)",
     Quantity.TEMPERATURE: "180 degC",
     Quantity.MASS_FLOW: "40 t/h",
+    Quantity.VOLUME_FLOW: "40 m^3/h",
+    Quantity.NORM_VOLUME_FLOW: "900 Nm3/h",
+    Quantity.DENSITY: "5.69 kg/m^3",
+    Quantity.NORM_DENSITY: "0.8 kg/Nm3",
     Quantity.POWER: "5 MW",
     Quantity.FRACTION: "0.97",
     Quantity.LENGTH: "2.5 m",

@@ -21,6 +21,7 @@ TABLES = [
     models.Store,
     models.DeadState,
     models.Tag,
+    models.Meter,
     models.Stream,
     models.Shifts,
     models.Economics,
