@@ -8,13 +8,19 @@ order, give the same figures to the last bit.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from monitor.equipment.account import Account, Balances, account, balances
+from monitor.equipment.account import (
+    Account,
+    Balances,
+    account,
+    balances,
+    content_uncertainty,
+)
 from monitor.equipment.base import Content, Drawn, FloatArray, Item, Signal, StreamState, sum_flags
 from monitor.equipment.solve import complete
 from monitor.flags import Flag, FlagArray
@@ -30,13 +36,16 @@ if TYPE_CHECKING:
 
     from connectors.base import Problem, ReadResult
     from monitor.site.load import Site
+    from monitor.site.models import Reference
 
 __all__ = ["Accounted", "Ambient", "Computed", "Plant", "compute", "lead_in"]
 
 _HOUR = 3600
-# Without stated uncertainties, destruction below this share of the exergy that comes in is taken
-# for a contradiction of the second law rather than for noise (common practice: meters of 1 %).
-_CONTRADICTION = 0.02
+# Negative destruction beyond this share of the exergy that passes through is taken for a
+# contradiction of the second law rather than for noise (common practice: meters of 1 %). What a
+# vessel holds is differentiated, so the stated uncertainties of its gauges come on top, expanded to
+# leave one cell in seven hundred (normal distribution).
+_CONTRADICTION, _COVERAGE = 0.02, 3.0
 
 
 @dataclass(frozen=True)
@@ -190,11 +199,40 @@ def _accounted(site: Site, drawn: Drawn, ambient: Ambient) -> Accounted:
     load = drawn.item.kind.load(drawn)
     flag = sum_flags((*drawn.facing("in"), *drawn.facing("out")), tuple(drawn.signals.values()))
     flag = np.asarray(flag | ambient.flag | _running(site, drawn.item, load), dtype=np.int32)
-    contradicts = live.destroyed < -_CONTRADICTION * np.abs(live.exergy_in)
+    passing = np.maximum(np.abs(live.exergy_in), np.abs(live.exergy_out))
+    stored = content_uncertainty(drawn, ambient.live, _moved_contents(site, drawn))
+    contradicts = live.destroyed < -(_CONTRADICTION * passing + _COVERAGE * stored)
     flag[contradicts] |= Flag.SECOND_LAW
     absent = ~np.isfinite(live.destroyed) & ((flag & Flag.OUT_OF_REGION) == 0)
     flag[absent] |= Flag.MISSING
     return Accounted(drawn, counted, live, reference, load, flag)
+
+
+def _moved_contents(site: Site, drawn: Drawn) -> list[Content]:
+    """What a vessel would hold with each of its gauges in turn higher by its uncertainty."""
+    item, moved = drawn.item, []
+    for key, (reference, _) in item.options.signals().items() if drawn.content else ():
+        signal = drawn.signals[key]
+        shift = _stated_uncertainty(site, reference, signal.edges)
+        if shift is None:
+            continue
+        signals = {**drawn.signals, key: replace(signal, edges=signal.edges + shift)}
+        content = item.kind.content(item, signals)
+        moved += [] if content is None else [content]
+    return moved
+
+
+def _stated_uncertainty(
+    site: Site, reference: Reference, values: FloatArray
+) -> FloatArray | float | None:
+    """Standard uncertainty of values [SI] as their tag states it; None where it does not."""
+    tag = site.tags.get(reference.tag or "")
+    stated = None if tag is None else tag.stated_uncertainty
+    if tag is None or stated is None:
+        return None
+    if stated.basis == "range" and tag.range is not None:
+        return stated.amount * (tag.range[1] - tag.range[0]) * tag.unit.scale
+    return stated.amount if stated.basis == "absolute" else stated.amount * np.abs(values)
 
 
 def _running(site: Site, item: Item, load: FloatArray) -> FlagArray:

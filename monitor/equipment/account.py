@@ -23,10 +23,17 @@ import numpy as np
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
-    from monitor.equipment.base import Drawn, FloatArray, StreamState
+    from monitor.equipment.base import Content, Drawn, FloatArray, StreamState
     from monitor.thermo.dead_state import DeadState
 
-__all__ = ["Account", "Balances", "account", "balances", "content_rates"]
+__all__ = [
+    "Account",
+    "Balances",
+    "account",
+    "balances",
+    "content_rates",
+    "content_uncertainty",
+]
 
 # Inlets that carry less than this share of what the outlets carry do not value what is missing.
 _LITTLE = 0.1
@@ -177,6 +184,37 @@ def account(drawn: Drawn, counted: Balances, dead: DeadState) -> Account:
         fuel=fuel,
         product=product,
     )
+
+
+def content_uncertainty(drawn: Drawn, dead: DeadState, moved: Sequence[Content]) -> FloatArray:
+    """Standard uncertainty of ``destroyed`` from the gauges of what the vessel holds [W].
+
+    The gauges' errors at the two ends of a cell count as independent: an upper bound, since an
+    offset that stays cancels. First-order propagation, JCGM 100:2008 (GUM), eq. 10.
+
+    Args:
+        drawn: a vessel with its content.
+        dead: the dead state.
+        moved: what the content would be with each gauge in turn higher by its uncertainty.
+    """
+    held = drawn.content
+    T0, options = dead.temperature, drawn.item.options
+    variance = np.zeros_like(T0)
+    if held is None:
+        return variance
+    state = _unaccounted_state(drawn.facing("in"), drawn.facing("out"))
+    h, s = (variance, variance) if state is None else state
+    stated = options.boundary_temperature
+    boundary = T0 if stated is None else stated
+    for other in moved:
+        for end in (slice(None, -1), slice(1, None)):
+            mass = (other.mass - held.mass)[end]
+            generated = (other.entropy - held.entropy)[end] - s * mass
+            if options.heat_loss == "balance":
+                energy = (other.internal_energy - held.internal_energy)[end]
+                generated = generated - (energy - h * mass) / boundary
+            variance = variance + np.square(T0 * generated / drawn.interval)
+    return np.asarray(np.sqrt(variance))
 
 
 def _unaccounted_state(
