@@ -43,10 +43,10 @@ class Boiler(Kind):
     title = "Boiler"
     ports = (
         PortSpec("fuel", "in", most=None, media=frozenset({"fuel"})),
-        PortSpec("feedwater", "in", most=None),
+        PortSpec("feedwater", "in", most=None, role="product"),
         PortSpec("steam", "out", most=None),
         PortSpec("blowdown", "out", least=0, most=None),
-        PortSpec("loss", "out", least=0, most=None, media=frozenset({"heat"})),
+        PortSpec("loss", "out", least=0, most=None, media=frozenset({"heat"}), role="loss"),
     )
     options = BoilerOptions
     fuel_and_product = (

@@ -38,8 +38,8 @@ class Condenser(Kind):
     title = "Condenser"
     ports = (
         PortSpec("steam", "in", most=None),
-        PortSpec("cooling_in", "in"),
-        PortSpec("condensate", "out"),
+        PortSpec("cooling_in", "in", role="product"),
+        PortSpec("condensate", "out", role="fuel"),
         PortSpec("cooling_out", "out"),
     )
     fuel_and_product = (

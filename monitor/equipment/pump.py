@@ -36,7 +36,7 @@ class Pump(Kind):
     name = "pump"
     title = "Pump"
     ports = (
-        PortSpec("inlet", "in"),
+        PortSpec("inlet", "in", role="product"),
         PortSpec("power", "in", media=frozenset({"power"})),
         PortSpec("outlet", "out"),
     )

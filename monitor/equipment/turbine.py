@@ -54,8 +54,8 @@ class Turbine(Kind):
     title = "Steam turbine"
     ports = (
         PortSpec("inlet", "in"),
-        PortSpec("extraction", "out", least=0, most=None),
-        PortSpec("exhaust", "out"),
+        PortSpec("extraction", "out", least=0, most=None, role="fuel"),
+        PortSpec("exhaust", "out", role="fuel"),
         PortSpec("power", "out", media=frozenset({"power"})),
     )
     options = TurbineOptions

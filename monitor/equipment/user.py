@@ -36,8 +36,8 @@ class User(Kind):
     title = "Process user"
     ports = (
         PortSpec("steam", "in", most=None),
-        PortSpec("condensate", "out", least=0, most=None),
-        PortSpec("lost", "out", least=0, most=None),
+        PortSpec("condensate", "out", least=0, most=None, role="fuel"),
+        PortSpec("lost", "out", least=0, most=None, role="loss"),
         PortSpec("heat", "out", media=frozenset({"heat"})),
     )
     fuel_and_product = (

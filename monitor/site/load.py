@@ -460,6 +460,11 @@ def _check_stream(
         issues.append(
             Issue(table, "counts_as", f"'{stream.counts_as}' is for streams that leave the site")
         )
+    issues += [
+        Issue(table, key, "is for streams that enter the site; what they become is computed")
+        for key in ("price", "co2")
+        if produced and getattr(stream, key) is not None
+    ]
     checks = {
         "water": _check_water,
         "fuel": _check_fuel,

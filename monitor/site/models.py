@@ -149,6 +149,12 @@ class Stream(Table):
     lower_heating_value: Annotated[float, si(Quantity.SPECIFIC_ENERGY)] | None = None
     exergy_ratio: float | None = Field(default=None, gt=0)
     counts_as: Literal["supplied", "used", "lost", ""] = ""
+    price: float | None = Field(
+        default=None, ge=0, description="currency per MWh of exergy, for a fuel of heating value"
+    )
+    co2: float | None = Field(
+        default=None, ge=0, description="kg per MWh of exergy, for a fuel of heating value"
+    )
 
 
 class Equipment(BaseModel):

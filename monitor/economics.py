@@ -1,0 +1,273 @@
+"""What exergy costs at each point of the site: unit costs, passed on from stream to stream.
+
+A kW destroyed behind a turbine is dearer than one destroyed in a boiler, since it has been paid for
+on the way. The cost of what enters the site is carried over the site's graph of streams, with no
+cost of capital, by four rules:
+
+- a stream that enters costs its own price (a fuel's price per heating value over its exergy ratio),
+  or the site's flat price;
+- what leaves on the fuel's side of a piece of equipment (a turbine's exhaust, a user's returned
+  condensate) keeps the mean unit cost of the fuel that came in (the F rule);
+- what leaves through a port for losses costs nothing, so the products bear it;
+- the products share one unit cost, from the cost balance: all that comes in, less what leaves on
+  the fuel's side, less what a vessel stores at the fuel's unit cost, is what the products cost
+  (the P rule).
+
+These are linear equations, one a stream, solved together, so loops (condensate back to the boiler)
+need nothing of their own. What is destroyed or lost in a piece of equipment is charged at the unit
+cost of the fuel that it takes. Emissions are passed on in the same way.
+
+Where the rules give no cost (nothing flows, no fuel is spent, a reading is absent) the flat price
+stands in, and `UnitCosts.flat` says for which stream and why.
+
+Source: Bejan, Tsatsaronis, Moran, Thermal Design and Optimization (1996), chapter 8 (exergy
+costing, auxiliary relations, cost of exergy destruction); the F and P rules by that name after
+Lazzaretto and Tsatsaronis, Energy 31, 1257 (2006).
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+
+from monitor.thermo.fuels import exergy_ratio
+
+if TYPE_CHECKING:
+    from collections.abc import Iterable, Mapping
+
+    from monitor.equipment.base import FloatArray, Item
+    from monitor.site.load import Site
+
+__all__ = [
+    "Prices",
+    "UnitCosts",
+    "cost_of_destruction",
+    "cost_of_losses",
+    "fuel_unit_costs",
+    "supplied_emissions",
+    "supplied_prices",
+    "unit_costs",
+]
+
+# Exergy below this share of all that enters the site is nothing: a closed valve's meter.
+_NOTHING = 1e-9
+# Balances that determine the costs worse than this have no single solution.
+_ILL_CONDITIONED = 1e12
+
+
+@dataclass(frozen=True)
+class Prices:
+    """What exergy costs that enters the site, per MWh of exergy.
+
+    Attributes:
+        supplied: by the id of each stream that enters.
+        flat: for whatever the rules give no cost.
+    """
+
+    supplied: Mapping[str, float]
+    flat: float
+
+
+@dataclass(frozen=True)
+class UnitCosts:
+    """Unit cost of every stream, per MWh of exergy.
+
+    Attributes:
+        streams: by stream id.
+        flat: streams that the flat price stands in for, and why.
+    """
+
+    streams: Mapping[str, float]
+    flat: Mapping[str, str]
+
+
+def supplied_prices(site: Site) -> Prices:
+    """Money per MWh of exergy, from the streams' ``price`` and the site's ``exergy_price``."""
+    return _supplied(site, "price", site.file.economics.exergy_price)
+
+
+def supplied_emissions(site: Site) -> Prices:
+    """CO2 in kg per MWh of exergy, from the streams' ``co2`` and the site's."""
+    return _supplied(site, "co2", site.file.economics.co2)
+
+
+def unit_costs(
+    site: Site,
+    rates: Mapping[str, float],
+    prices: Prices,
+    stored: Mapping[str, float] | None = None,
+) -> UnitCosts:
+    """Unit cost of the exergy of every stream.
+
+    Args:
+        site: whose streams and equipment.
+        rates: mean exergy rate of each stream, all in one unit; over a period long enough that
+            what vessels store has come and gone, or with ``stored``. An absent or NaN rate counts
+            as no flow, and a stream without one gets the flat price unless it has its own.
+        prices: of what enters the site.
+        stored: mean rate at which each vessel's exergy rises, by equipment id, in the same unit.
+
+    Returns:
+        The unit costs, per MWh of exergy in the prices' own unit (money, kg of CO2).
+    """
+    known = {s: _positive(rates.get(s, math.nan)) for s in site.streams}
+    entering = sum(known[s] for s in site.streams if s not in site.producer)
+    system = _System(list(site.streams), known, prices, nothing=_NOTHING * entering)
+    for stream in site.streams:
+        if stream not in site.producer:
+            system.price(stream, prices.supplied.get(stream, prices.flat))
+    for item in site.items.values():
+        _rules_of(system, item, (stored or {}).get(item.id, 0.0))
+    for stream in site.producer:
+        if math.isnan(rates.get(stream, math.nan)):
+            system.flat_price(stream, "its exergy rate is absent")
+    return system.solved(kept=[s for s in site.streams if s not in site.producer])
+
+
+def fuel_unit_costs(
+    site: Site, rates: Mapping[str, float], costs: UnitCosts, prices: Prices
+) -> dict[str, float]:
+    """Mean unit cost of the fuel that each piece of equipment takes, per MWh of exergy."""
+    found = {}
+    for item in site.items.values():
+        fuel = {s: _positive(rates.get(s, math.nan)) for s in _at(item, "in", "fuel")}
+        total = sum(fuel.values())
+        found[item.id] = (
+            sum(costs.streams[s] * rate for s, rate in fuel.items()) / total
+            if total > 0
+            else prices.flat
+        )
+    return found
+
+
+def cost_of_destruction(
+    destroyed_kw: Mapping[str, float], fuel_costs: Mapping[str, float]
+) -> dict[str, float]:
+    """Cost of what each piece of equipment destroys, per hour.
+
+    Args:
+        destroyed_kw: exergy destroyed, by equipment id [kW].
+        fuel_costs: from `fuel_unit_costs`, per MWh.
+    """
+    return {item: fuel_costs[item] * kw / 1e3 for item, kw in destroyed_kw.items()}
+
+
+def cost_of_losses(
+    site: Site, rates_kw: Mapping[str, float], fuel_costs: Mapping[str, float], prices: Prices
+) -> dict[str, float]:
+    """Cost of each stream that leaves the site for nothing, per hour.
+
+    It is charged like destruction at its producer: at the unit cost of the fuel that made it.
+    """
+    leaving = (s for s in site.streams if s not in site.consumer and s in rates_kw)
+    found = {}
+    for stream in leaving:
+        if site.counts_as_used(stream):
+            continue
+        unit = fuel_costs.get(site.producer.get(stream, ""), prices.flat)
+        found[stream] = unit * rates_kw[stream] / 1e3
+    return found
+
+
+def _supplied(site: Site, key: Literal["price", "co2"], flat: float) -> Prices:
+    found = {}
+    for stream in site.streams.values():
+        if stream.id in site.producer:
+            continue
+        own = getattr(stream, key)
+        if own is None:
+            found[stream.id] = flat
+        elif stream.medium == "fuel":
+            ratio = stream.exergy_ratio
+            found[stream.id] = own / (exergy_ratio(stream.fuel) if ratio is None else ratio)
+        else:
+            found[stream.id] = own
+    return Prices(found, flat)
+
+
+def _positive(rate: float) -> float:
+    """A rate that can carry cost; less than nothing is an error of readings near the dead state."""
+    return rate if rate > 0 else 0.0
+
+
+def _at(
+    item: Item, direction: Literal["in", "out"], side: Literal["fuel", "product", "loss"]
+) -> list[str]:
+    return [
+        stream
+        for port in item.kind.ports
+        if port.direction == direction and port.side == side
+        for stream in item.ports.get(port.name, ())
+    ]
+
+
+class _System:
+    """One linear equation a stream: unit cost = a sum of unit costs + a number."""
+
+    def __init__(
+        self, streams: list[str], rates: Mapping[str, float], prices: Prices, *, nothing: float
+    ) -> None:
+        self.index = {stream: k for k, stream in enumerate(streams)}
+        self.rates = rates
+        self.prices = prices
+        self.nothing = nothing
+        self.weights: FloatArray = np.zeros((len(streams), len(streams)))
+        self.constants: FloatArray = np.zeros(len(streams))
+        self.flat: dict[str, str] = {}
+
+    def total(self, streams: Iterable[str]) -> float:
+        return sum(self.rates[s] for s in streams)
+
+    def price(self, stream: str, cost: float) -> None:
+        self.weights[self.index[stream]] = 0.0
+        self.constants[self.index[stream]] = cost
+
+    def flat_price(self, stream: str, reason: str) -> None:
+        self.price(stream, self.prices.flat)
+        self.flat[stream] = reason
+
+    def mix(self, stream: str, parts: Mapping[str, float]) -> None:
+        for part, weight in parts.items():
+            self.weights[self.index[stream], self.index[part]] += weight
+
+    def solved(self, kept: Iterable[str]) -> UnitCosts:
+        """Solve; where the balances have no single solution, every stream but ``kept`` is flat."""
+        matrix = np.eye(len(self.index)) - self.weights
+        if np.linalg.cond(matrix) < _ILL_CONDITIONED:
+            costs = np.linalg.solve(matrix, self.constants)
+            return UnitCosts({s: float(costs[k]) for s, k in self.index.items()}, self.flat)
+        supplied = {s: float(self.constants[self.index[s]]) for s in kept}
+        reason = (
+            "the cost balances have no single solution: streams feed one another and none leaves"
+        )
+        made = {s: self.prices.flat for s in self.index if s not in supplied}
+        return UnitCosts(supplied | made, self.flat | dict.fromkeys(made, reason))
+
+
+def _rules_of(system: _System, item: Item, stored: float) -> None:
+    """Write the equations of all streams that leave one piece of equipment."""
+    fuel, before = _at(item, "in", "fuel"), _at(item, "in", "product")
+    kept, products = _at(item, "out", "fuel"), _at(item, "out", "product")
+    brought = system.total(fuel)
+    mean = {s: system.rates[s] / brought for s in fuel} if brought > system.nothing else None
+    for stream in _at(item, "out", "loss"):
+        system.price(stream, 0.0)
+    for stream in kept:
+        if mean is None:
+            system.flat_price(stream, f"'{item.id}' takes no fuel")
+        else:
+            system.mix(stream, mean)
+    made = system.total(products)
+    spent = brought - system.total(kept) - stored
+    for stream in products:
+        if made <= system.nothing:
+            system.flat_price(stream, f"'{item.id}' makes no product")
+        elif mean is None or spent <= system.nothing:
+            system.flat_price(stream, f"'{item.id}' spends no fuel")
+        else:
+            # What is spent of the fuel costs its mean; what the product was before, its own.
+            system.mix(stream, {s: share * spent / made for s, share in mean.items()})
+            system.mix(stream, {s: system.rates[s] / made for s in before})

@@ -1,0 +1,269 @@
+"""Unit costs of exergy, against an example solved by hand and the balance of costs."""
+
+from __future__ import annotations
+
+import math
+
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from monitor.economics import (
+    Prices,
+    cost_of_destruction,
+    cost_of_losses,
+    fuel_unit_costs,
+    supplied_emissions,
+    supplied_prices,
+    unit_costs,
+)
+from monitor.errors import SiteFileError
+from monitor.site.load import load_site
+
+# Gas and feed water make steam, a turbine takes it down to the users, condensate comes back.
+SITE = """
+[site]
+id = "cogeneration"
+name = "A small cogeneration plant"
+[dead_state]
+temperature = "15 degC"
+pressure = "1 bar(a)"
+[economics]
+exergy_price = 50.0
+co2 = 250.0
+[[source]]
+id = "dcs"
+kind = "csv"
+path = "*.csv"
+
+[[stream]]
+id = "gas"
+medium = "fuel"
+flow = "2 kg/s"
+lower_heating_value = "48 MJ/kg"
+exergy_ratio = 1.04
+price = 31.2
+co2 = 202.8
+[[stream]]
+id = "pumping"
+medium = "power"
+power = "500 kW"
+price = 60.0
+[[stream]]
+id = "steam"
+flow = "30 kg/s"
+pressure = "60 bar(a)"
+temperature = "480 degC"
+[[stream]]
+id = "stack"
+medium = "heat"
+heat = "balance"
+boundary_temperature = "130 degC"
+[[stream]]
+id = "exhaust"
+flow = "balance"
+pressure = "4 bar(a)"
+temperature = "190 degC"
+[[stream]]
+id = "electricity"
+medium = "power"
+power = "20 MW"
+[[stream]]
+id = "condensate"
+flow = "30 kg/s"
+pressure = "4 bar(a)"
+temperature = "90 degC"
+[[stream]]
+id = "heating"
+medium = "heat"
+heat = "balance"
+boundary_temperature = "110 degC"
+counts_as = "used"
+[[stream]]
+id = "feed"
+flow = "balance"
+pressure = "80 bar(a)"
+enthalpy = "balance"
+
+[[equipment]]
+id = "boiler"
+kind = "boiler"
+heat_loss = "none"
+ports = { fuel = "gas", feedwater = "feed", steam = "steam", loss = "stack" }
+[[equipment]]
+id = "turbine"
+kind = "turbine"
+ports = { inlet = "steam", exhaust = "exhaust", power = "electricity" }
+[[equipment]]
+id = "user"
+kind = "user"
+ports = { steam = "exhaust", condensate = "condensate", heat = "heating" }
+[[equipment]]
+id = "pump"
+kind = "pump"
+ports = { inlet = "condensate", power = "pumping", outlet = "feed" }
+"""
+
+RATES = {
+    "gas": 100.0, "pumping": 0.5, "steam": 45.0, "stack": 2.0, "exhaust": 20.0,
+    "electricity": 20.0, "condensate": 1.5, "heating": 14.0, "feed": 1.8,
+}  # fmt: skip
+DESTROYED = {"boiler": 54.8, "turbine": 5.0, "user": 4.5, "pump": 0.2}
+
+
+@pytest.fixture(scope="module")
+def site(tmp_path_factory):
+    path = tmp_path_factory.mktemp("economics") / "site.toml"
+    path.write_text(SITE, encoding="utf-8")
+    return load_site(path)
+
+
+def test_unit_costs_meet_the_example_solved_by_hand(site):
+    """Own example. F rule: c(exhaust) = c(condensate) = c(steam) = c.
+
+    Pump: 1.8 c(feed) = 1.5 c + 0.5 * 60. Boiler: 45 c = 100 * 30 + 1.8 c(feed), the stack free.
+    So 43.5 c = 3030 and c = 69.6552. Turbine: 20 c(power) = (45 - 20) c; user: 14 c(heat) =
+    (20 - 1.5) c.
+    """
+    prices = supplied_prices(site)
+    # 31.2 per MWh of heating value is 30 per MWh of exergy at a ratio of 1.04.
+    assert prices.supplied == {"gas": pytest.approx(30.0), "pumping": 60.0}
+    got = unit_costs(site, RATES, prices)
+    c = 3030 / 43.5
+    expected = {
+        "gas": 30.0,
+        "pumping": 60.0,
+        "steam": c,
+        "stack": 0.0,
+        "exhaust": c,
+        "condensate": c,
+        "feed": (1.5 * c + 30.0) / 1.8,
+        "electricity": 25 * c / 20,
+        "heating": 18.5 * c / 14,
+    }
+    assert got.streams == pytest.approx(expected, rel=1e-12)
+    assert got.streams["electricity"] == pytest.approx(87.069, abs=5e-4)
+    assert got.streams["heating"] == pytest.approx(92.044, abs=5e-4)
+    assert got.flat == {}
+
+
+def test_what_is_destroyed_costs_what_its_fuel_costs(site):
+    prices = supplied_prices(site)
+    costs = unit_costs(site, RATES, prices)
+    fuel = fuel_unit_costs(site, RATES, costs, prices)
+    c = 3030 / 43.5
+    assert fuel == pytest.approx({"boiler": 30.0, "turbine": c, "user": c, "pump": 60.0})
+    in_kw = {k: 1000 * v for k, v in DESTROYED.items()}
+    hourly = cost_of_destruction(in_kw, fuel)
+    assert hourly["boiler"] == pytest.approx(54.8 * 30.0)
+    assert hourly["turbine"] == pytest.approx(5.0 * c)
+    lost = cost_of_losses(site, {k: 1000 * v for k, v in RATES.items()}, fuel, prices)
+    assert lost == {"stack": pytest.approx(2.0 * 30.0)}
+
+
+def test_what_comes_in_is_paid_for_by_what_is_used(site):
+    costs = unit_costs(site, RATES, supplied_prices(site)).streams
+    paid = RATES["gas"] * costs["gas"] + RATES["pumping"] * costs["pumping"]
+    used = sum(RATES[s] * costs[s] for s in ("electricity", "heating"))
+    assert used == pytest.approx(paid, rel=1e-12)
+
+
+def test_carbon_is_passed_on_by_the_same_rules(site):
+    emissions = supplied_emissions(site)
+    # 202.8 kg per MWh of heating value at a ratio of 1.04; the site's own for what says nothing.
+    assert emissions.supplied == {"gas": pytest.approx(195.0), "pumping": 250.0}
+    got = unit_costs(site, RATES, emissions).streams
+    c = (100 * 195.0 + 0.5 * 250.0) / 43.5
+    assert got["electricity"] == pytest.approx(25 * c / 20)
+
+
+rate = st.floats(0.5, 1.0)
+
+
+@settings(max_examples=50, deadline=None)
+@given(rate, rate, rate, rate, st.floats(1.0, 100.0), st.floats(0.001, 1000.0))
+def test_costs_close_scale_with_prices_and_know_no_unit_of_rates(site, a, b, c, d, price, unit):
+    rates = {
+        **RATES,
+        "steam": 45 * a,
+        "exhaust": 20 * a * b,
+        "electricity": 20 * a * c,
+        "heating": 14 * d,
+    }
+    prices = Prices({"gas": price, "pumping": 2 * price}, flat=price)
+    got = unit_costs(site, rates, prices).streams
+    paid = 100 * price + 0.5 * 2 * price
+    used = rates["electricity"] * got["electricity"] + rates["heating"] * got["heating"]
+    assert used == pytest.approx(paid, rel=1e-9)
+    assert min(got.values()) >= 0
+    other = unit_costs(site, {k: unit * v for k, v in rates.items()}, prices).streams
+    assert other == pytest.approx(got, rel=1e-9)
+    twice = Prices({"gas": 2 * price, "pumping": 4 * price}, flat=price)
+    double = {k: 2 * v for k, v in got.items()}
+    assert unit_costs(site, rates, twice).streams == pytest.approx(double, rel=1e-9)
+
+
+def test_worse_machines_make_dearer_products(site):
+    prices = supplied_prices(site)
+    worn = {**RATES, "electricity": 19.0}
+    before, after = unit_costs(site, RATES, prices), unit_costs(site, worn, prices)
+    assert after.streams["electricity"] > before.streams["electricity"]
+    assert after.streams["heating"] == pytest.approx(before.streams["heating"])
+
+
+def test_equipment_at_rest_has_the_flat_price_and_says_so(site):
+    still = {**RATES, "electricity": 0.0, "exhaust": 0.0, "heating": 0.0, "condensate": 0.0}
+    got = unit_costs(site, still, supplied_prices(site))
+    assert got.streams["electricity"] == 50.0
+    assert got.flat["electricity"] == "'turbine' makes no product"
+    assert all(math.isfinite(c) for c in got.streams.values())
+
+
+def test_an_absent_rate_is_told_and_leaves_the_rest_priced(site):
+    rates = {**RATES, "condensate": math.nan}
+    got = unit_costs(site, rates, supplied_prices(site))
+    assert got.flat == {"condensate": "its exergy rate is absent"}
+    assert got.streams["condensate"] == 50.0
+    assert got.streams["electricity"] == pytest.approx(25 * (3000 + 30) / 45 / 20)
+    none = unit_costs(site, {}, supplied_prices(site))
+    assert set(none.flat) == set(site.streams) - {"gas", "pumping"}
+    assert none.streams["pumping"] == 60.0
+
+
+def test_what_a_vessel_stores_is_not_paid_for_by_what_leaves_it(site):
+    """As if the turbine held steam back: 2 of its 25 stay inside."""
+    prices = supplied_prices(site)
+    got = unit_costs(site, RATES, prices, stored={"turbine": 2.0}).streams
+    assert got["electricity"] == pytest.approx(23 * got["steam"] / 20)
+
+
+def test_a_loop_that_nothing_leaves_falls_back_to_the_flat_price(tmp_path):
+    text = SITE.split("[[stream]]", maxsplit=1)[0] + _ring()
+    path = tmp_path / "ring.toml"
+    path.write_text(text, encoding="utf-8")
+    ring = load_site(path)
+    got = unit_costs(ring, {"a": 5.0, "b": 5.0, "in": 1.0}, Prices({"in": 20.0}, flat=33.0))
+    assert got.streams == {"a": 33.0, "b": 33.0, "in": 20.0}
+    assert "no single solution" in got.flat["a"]
+    assert "in" not in got.flat
+
+
+def _ring():
+    stream = '[[stream]]\nid = "{}"\npressure = "4 bar(a)"\nphase = "vapour"\nflow = "1 kg/s"\n'
+    box = '[[equipment]]\nid = "{}"\nkind = "header"\nports = {{ inlet = {}, outlet = "{}" }}\n'
+    return "".join(
+        [
+            *(stream.format(s) for s in ("a", "b", "in")),
+            box.format("one", '["a", "in"]', "b"),
+            box.format("two", '"b"', "a"),
+        ]
+    )
+
+
+def test_a_price_belongs_to_what_enters_the_site(tmp_path):
+    path = tmp_path / "site.toml"
+    path.write_text(
+        SITE.replace('id = "steam"\nflow', 'id = "steam"\nprice = 20.0\nflow'), encoding="utf-8"
+    )
+    with pytest.raises(SiteFileError, match=r"'steam', price: is for streams that enter"):
+        load_site(path)
