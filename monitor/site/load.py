@@ -265,7 +265,7 @@ def _keys_at(model: type[pydantic.BaseModel], location: list[Any]) -> list[str]:
         if not models:
             break
         here = models[0]
-    return list(getattr(here, "model_fields", {}))
+    return [field.alias or name for name, field in getattr(here, "model_fields", {}).items()]
 
 
 def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Site:
@@ -274,6 +274,7 @@ def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Sit
     _no_doubles("tag", [t.name for t in file.tag], issues)
     _no_doubles("stream", [s.id for s in file.stream], issues)
     _no_doubles("equipment", [e.id for e in file.equipment], issues)
+    _no_doubles("notify", [n.id for n in file.notify], issues)
     _check_sources(file, issues)
     streams = {s.id: s for s in file.stream}
     items = _items(file, streams, issues)

@@ -13,6 +13,7 @@ from typing import Annotated, Literal
 from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
 
 from monitor.site.fields import Duration, Identifier, Pressure, Table, Temperature, si
+from monitor.site.notify import Notify
 from monitor.site.tags import Meter, Tag, Uncertainty
 from monitor.site.units import Quantity, Unit, parse_unit, split_number
 
@@ -24,6 +25,7 @@ __all__ = [
     "Economics",
     "Equipment",
     "Meter",
+    "Notify",
     "Pages",
     "Reference",
     "Shifts",
@@ -262,3 +264,4 @@ class SiteFile(Table):
     drift: Drift = Drift()
     alarms: Alarms = Alarms()
     pages: Pages = Pages()
+    notify: tuple[Notify, ...] = ()

@@ -29,6 +29,7 @@ TABLES = [
     models.DriftFigure,
     models.Alarms,
     models.Pages,
+    models.Notify,
     models.SiteFile,
     *(kind.options for kind in KINDS.values()),
     *(kind.options for kind in connectors.KINDS.values()),
