@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 from connectors.base import ConnectorError
 from connectors.csv_source import CsvKind
+from connectors.parquet_source import ParquetKind
 from connectors.sql_source import SqlKind
 
 if TYPE_CHECKING:
@@ -19,7 +20,7 @@ if TYPE_CHECKING:
 
 __all__ = ["KINDS", "open_source", "parse_options"]
 
-_ALL: tuple[SourceKind, ...] = (CsvKind(), SqlKind())
+_ALL: tuple[SourceKind, ...] = (CsvKind(), ParquetKind(), SqlKind())
 
 KINDS: Mapping[str, SourceKind] = MappingProxyType({kind.name: kind for kind in _ALL})
 """Every kind of source by its name in the site file."""

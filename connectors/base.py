@@ -8,7 +8,7 @@ source itself states. Nothing here imports ``monitor``.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from enum import IntEnum
+from enum import IntEnum, IntFlag
 from typing import TYPE_CHECKING, Any, Protocol, runtime_checkable
 
 import pandas as pd
@@ -23,6 +23,7 @@ __all__ = [
     "READING_COLUMNS",
     "Connector",
     "ConnectorError",
+    "Mark",
     "Probe",
     "Problem",
     "Quality",
@@ -45,6 +46,15 @@ class Quality(IntEnum):
     GOOD = 0
     UNCERTAIN = 1
     BAD = 2
+
+
+class Mark(IntFlag):
+    """What a source remarks on a reading beside its quality; bits of the ``marks`` column."""
+
+    OUT_OF_ORDER = 1
+    """It stood after readings of later times."""
+    AMBIGUOUS_TIME = 2
+    """Its local time happens twice, and nothing tells which one is meant."""
 
 
 @dataclass(frozen=True)
@@ -78,7 +88,8 @@ class ReadResult:
         readings: one row a reading, sorted by tag and time: ``tag`` (categorical of the names that
             were asked for), ``time`` (datetime64[us, UTC]), ``value`` (float64 in the historian's
             own unit, NaN where the cell held no number), ``quality`` (uint8, see `Quality`). A tag
-            has at most one row a time: the last one written wins.
+            has at most one row a time: the last one written wins. A source that has remarks adds
+            ``marks`` (uint8, see `Mark`).
         problems: what was passed over, with counts.
     """
 

@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import gzip
-import re
 import zipfile
 import zlib
 from dataclasses import dataclass, field
 from typing import IO, TYPE_CHECKING, TypeAlias
 
 from connectors.base import ConnectorError
+from connectors.paths import by_name
 
 if TYPE_CHECKING:
     import io
@@ -21,11 +21,9 @@ if TYPE_CHECKING:
 __all__ = [
     "Export",
     "ExportFile",
-    "by_name",
     "open_export",
     "read_up_to",
     "unpack_names",
-    "unreadable",
 ]
 
 Export: TypeAlias = "io.BufferedReader | gzip.GzipFile | IO[bytes]"
@@ -115,20 +113,6 @@ def read_up_to(file: Export, size: int, name: str, problems: ProblemCount) -> by
     except (EOFError, zlib.error, gzip.BadGzipFile, zipfile.BadZipFile) as error:
         problems.add(name, "", _DAMAGED, 1, example=str(error))
     return b"".join(pieces)
-
-
-def unreadable(file: object, error: OSError) -> ConnectorError:
-    """Say that a file cannot be read, and what to do."""
-    return ConnectorError(
-        f"{file} cannot be read ({error.strerror or error}); see that it is there and that the "
-        "account that runs this may read it"
-    )
-
-
-def by_name(name: object) -> tuple[tuple[int, int, str], ...]:
-    """Sort 'part 10' after 'part 9'."""
-    pieces = re.split(r"(\d+)", str(name))
-    return tuple((1, int(p), p) if p.isdecimal() else (0, 0, p) for p in pieces)
 
 
 def _files_of(path: Path) -> list[ExportFile]:

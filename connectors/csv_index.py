@@ -14,9 +14,10 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, cast
 
 from connectors.base import ConnectorError
-from connectors.csv_files import open_export, read_up_to, unreadable
+from connectors.csv_files import open_export, read_up_to
 from connectors.csv_header import check_columns, detect_encoding, line_end, read_header
 from connectors.csv_parse import BlockParser
+from connectors.paths import unreadable
 from connectors.tidy import ProblemCount, Rows, join_rows
 
 if TYPE_CHECKING:

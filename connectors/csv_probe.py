@@ -6,10 +6,11 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from connectors.base import ConnectorError
-from connectors.csv_files import open_export, read_up_to, unreadable
+from connectors.csv_files import open_export, read_up_to
 from connectors.csv_header import check_columns, detect_encoding, line_end, read_header
 from connectors.csv_index import BLOCK
 from connectors.csv_parse import BlockParser, Reading, TagBook
+from connectors.paths import unreadable
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Sequence

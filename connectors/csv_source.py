@@ -2,23 +2,23 @@
 
 from __future__ import annotations
 
-import glob
-from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from connectors.base import ConnectorError, Probe, ReadResult
-from connectors.csv_files import ExportFile, by_name, unpack_names
+from connectors.csv_files import ExportFile, unpack_names
 from connectors.csv_index import Block, IndexedFile, RowCache
 from connectors.csv_options import CsvOptions
 from connectors.csv_parse import Reading, TagBook
 from connectors.csv_probe import Look, look_at
+from connectors.paths import matching_files
 from connectors.tidy import ProblemCount, Rows, join_rows, settle_doubled_hour, tidy
 from connectors.times import DOUBLED_HOUR_REACH, from_microseconds, microseconds
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
+    from pathlib import Path
 
     import pandas as pd
     from pydantic import BaseModel
@@ -87,25 +87,7 @@ class CsvSource:
         self._files.clear()
 
     def _exports(self) -> list[ExportFile]:
-        return unpack_names(self._paths())
-
-    def _paths(self) -> list[Path]:
-        try:
-            pattern = Path(self._options.path).expanduser()
-        except RuntimeError as error:
-            raise ConnectorError(f"path '{self._options.path}': {error}") from error
-        # Only the pattern is one: a folder may have '[' in its name, and so may a single file.
-        if (self._folder / pattern).is_file():
-            return [self._folder / pattern]
-        found = glob.glob(str(pattern), root_dir=self._folder, recursive=True)  # noqa: PTH207
-        paths = sorted((self._folder / path for path in found), key=by_name)
-        paths = [path for path in paths if path.is_file()]
-        if not paths:
-            raise ConnectorError(
-                f"no file matches {self._folder / pattern}; correct the source's path, or start "
-                "the export that writes there"
-            )
-        return paths
+        return unpack_names(matching_files(self._options.path, self._folder))
 
     def _refresh(self, problems: ProblemCount) -> list[IndexedFile]:
         exports = self._exports()

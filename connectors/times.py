@@ -111,10 +111,8 @@ class TimeReader:
 
     def read(self, texts: pa.Array) -> ParsedTimes:
         """Read distinct texts; what cannot be read becomes `NO_TIME`, never an error."""
-        if self._format in _EPOCH_SCALE:
-            return self.universal(_scaled(self._numbers(texts), _EPOCH_SCALE[self._format]))
-        if self._format in _SERIAL_START:
-            return self.local(_serial(self._numbers(texts), _SERIAL_START[self._format]))
+        if self._format in _NUMERIC:
+            return self.numbers(self._numbers(texts))
         if self._format in _ORDERS:
             return self.local(_read_numbered(texts, day_first=self._format == "day_first"))
         if self._format == "iso":
@@ -125,6 +123,12 @@ class TimeReader:
         if "%z" in self._format:
             return self.universal(_series_microseconds(parsed))
         return self.local(_series_microseconds(parsed))
+
+    def numbers(self, values: npt.NDArray[np.float64]) -> ParsedTimes:
+        """Read numbers; the format is an epoch's or a spreadsheet's."""
+        if self._format in _EPOCH_SCALE:
+            return self.universal(_scaled(values, _EPOCH_SCALE[self._format]))
+        return self.local(_serial(values, _SERIAL_START[self._format]))
 
     def universal(self, time: npt.NDArray[np.int64]) -> ParsedTimes:
         """Take microseconds of UTC as they are, but for those that no reading can have."""

@@ -11,6 +11,8 @@ import zipfile
 from dataclasses import dataclass, field
 
 import pandas as pd
+import pyarrow as pa
+import pyarrow.parquet as pq
 
 from connectors.base import Quality
 
@@ -576,3 +578,79 @@ def _(folder):
         folder, value=lambda v: {None: "Comm Fail", 1.0: "on", 0.0: "off"}.get(v, repr(v))
     )
     return Written({**options, "states": {"On": 1, "Off": 0}}, with_quality=False)
+
+
+# Parquet ----------------------------------------------------------------------------------------
+
+
+def parquet(folder, frame, name="export.parquet", types=None):
+    table = pa.Table.from_pandas(frame, preserve_index=False)
+    for column, kind_of in (types or {}).items():
+        at = table.schema.get_field_index(column)
+        table = table.set_column(at, column, table.column(column).cast(kind_of))
+    pq.write_table(table, folder / name, row_group_size=16)
+
+
+def long_frame(time=lambda t: t, quality=WORDS.get):
+    return pd.DataFrame(
+        [(time(t), tag, v, quality(q)) for t, tag, v, q in READINGS],
+        columns=["time", "tag", "value", "quality"],
+    )
+
+
+def in_parquet(options=LONG, **more):
+    return Written({"path": "*.parquet", **options, **more}, kind="parquet")
+
+
+@kind("parquet with zoned timestamps")
+def _(folder):
+    parquet(folder, long_frame(lambda t: t.tz_convert(ZONE)))
+    return in_parquet()
+
+
+@kind("parquet with timestamps without a zone, nanoseconds, tags as dictionary")
+def _(folder):
+    kinds = {"time": pa.timestamp("ns"), "tag": pa.dictionary(pa.int32(), pa.string())}
+    parquet(folder, long_frame(lambda t: t.tz_localize(None)), types=kinds)
+    return in_parquet()
+
+
+@kind("parquet with local timestamps")
+def _(folder):
+    parquet(folder, long_frame(lambda t: t.tz_convert(ZONE).tz_localize(None)))
+    return in_parquet(time_zone=ZONE)
+
+
+@kind("parquet with times and values as texts")
+def _(folder):
+    frame = long_frame(tenths("%d/%m/%Y %H:%M:%S.#"))
+    frame["value"] = ["gestört" if pd.isna(v) else f" {v}" for v in frame["value"]]
+    parquet(folder, frame)
+    return in_parquet(time_format="day_first", bad_words=["gestört"])
+
+
+@kind("parquet with epoch milliseconds, single precision and coded quality")
+def _(folder):
+    codes = {G: 192, U: 64, B: 0}
+    frame = long_frame(lambda t: round(t.timestamp() * 1e3), codes.get)
+    parquet(folder, frame, types={"value": pa.float32(), "quality": pa.uint16()})
+    return in_parquet(time_format="epoch_ms", quality_kind="opc_classic")
+
+
+@kind("parquet, one tag after the other, files out of order")
+def _(folder):
+    frame = long_frame()
+    for number, tag in enumerate(TAGS):
+        parquet(folder, frame[frame["tag"] == tag], f"{9 - number}.parquet")
+    return in_parquet()
+
+
+@kind("parquet, wide, whole numbers and truths among the columns")
+def _(folder):
+    frame = long_frame().pivot_table("value", "time", "tag", dropna=False).reset_index()
+    frame[TAGS[2]] = frame[TAGS[2]].map({1.0: True, 0.0: False})
+    levels = ["Bad" if pd.isna(v) else str(v) for v in frame[TAGS[1]]]
+    parquet(folder, frame.assign(**{TAGS[1]: levels}))
+    written = in_parquet({"layout": "wide"})
+    written.with_quality = False
+    return written
