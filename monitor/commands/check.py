@@ -12,6 +12,7 @@ from monitor.commands.exits import ExitCode
 from monitor.commands.group import write_json
 from monitor.commands.opening import open_site
 from monitor.commands.tables import Column, print_table
+from monitor.errors import WrongUseError
 
 if TYPE_CHECKING:
     from monitor.check import Line, Verdict
@@ -21,8 +22,17 @@ __all__ = ["check"]
 
 
 def check(
-    site: Annotated[Path, typer.Argument(metavar="SITE", help="The site file (TOML).")],
+    site: Annotated[
+        Path | None, typer.Argument(metavar="SITE", help="The site file (TOML).")
+    ] = None,
     *,
+    sniff: Annotated[
+        Path | None,
+        typer.Option(
+            "--sniff",
+            help="Instead of a site: propose a [[source]] table and tags for this CSV export.",
+        ),
+    ] = None,
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
 ) -> None:
     """Look at a site before anything runs.
@@ -31,10 +41,15 @@ def check(
     says ok, look (worth your eyes) or wrong (figures would be wrong). Ends with exit code 1 when
     anything is wrong, 3 when the site file itself is.
 
-    Example: lostwork check config/demo/site.toml
+    Example: lostwork check site.toml
+
+    Example: lostwork check --sniff exports/day.csv
     """
     from monitor.check import check as look  # noqa: PLC0415
 
+    if sniff is not None or site is None:
+        _propose(site, sniff, as_json=as_json)
+        return
     read = open_site(site)
     lines = look(read)
     count = Counter(line.verdict for line in lines)
@@ -52,6 +67,24 @@ def check(
         _print(read, lines, count)
     if count["wrong"]:
         raise typer.Exit(ExitCode.FOUND_WRONG)
+
+
+def _propose(site: Path | None, export: Path | None, *, as_json: bool) -> None:
+    from monitor.sniff import sniff  # noqa: PLC0415
+
+    if export is None or site is not None:
+        raise WrongUseError("give either a site file, or --sniff EXPORT.csv")
+    found = sniff(export)
+    if as_json:
+        write_json(
+            {
+                "source": found.options,
+                "tags": {tag: found.units.get(tag) for tag in found.probe.tags},
+                "to_settle": found.open_points,
+            }
+        )
+    else:
+        typer.echo(found.toml())
 
 
 def _print(site: Site, lines: list[Line], count: Counter[Verdict]) -> None:

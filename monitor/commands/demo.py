@@ -92,7 +92,9 @@ def demo(
             )
         else:
             _print(at, tally, start, end)
-            typer.echo(f"\nopen {index}")
+            took = ", ".join(f"{what} {spent:.1f} s" for what, spent in stages.seconds.items())
+            typer.echo(f"\ntook {took}")
+            typer.echo(f"open {index}")
 
 
 def _exports(folder: Path, plan: object, stages: _Stages, *, keep: bool) -> Path:

@@ -101,8 +101,8 @@ def backfill(
 ) -> None:
     """Compute a stretch of the past.
 
-    A day at a time; then it is judged. Doing it again gives the same figures; what is done when it
-    is interrupted is kept.
+    A day at a time; then it is judged. Not while another instance runs (exit code 6). Doing it
+    again gives the same figures; what is done when it is interrupted is kept.
 
     Example: lostwork backfill site.toml --from 2026-03-01 --to "2026-04-01 06:00"
     """

@@ -32,6 +32,8 @@ class _Status:
     failures: int
     """Runs that failed since the last one that did not."""
     open_alarms: int
+    behind: dict[str, int]
+    """Sources whose newest reading is before the figures' end, and its time."""
     unhealthy: tuple[str, ...]
 
 
@@ -70,6 +72,7 @@ def status(
                 "last_run": run,
                 "failures": found.failures,
                 "open_alarms": found.open_alarms,
+                "sources_behind": {s: utc_text(mark) for s, mark in found.behind.items()},
             }
         )
     else:
@@ -103,6 +106,7 @@ def _status(at: Opened, allowed: int | None) -> _Status:
         runs[0] if runs else None,
         failures,
         len(at.store.open_alarms()),
+        {s: mark for s, mark in at.store.watermarks().items() if newest and mark < newest},
         tuple(unhealthy),
     )
 
@@ -133,6 +137,7 @@ def _print(found: _Status, zone: str) -> None:
         ),
         ("failures since", str(found.failures)),
         ("open alarms", str(found.open_alarms)),
+        *(("behind", f"source {s}, to {local(t, zone)}") for s, t in found.behind.items()),
         ("health", "; ".join(found.unhealthy) or "good"),
     ]
     for label, text in rows:

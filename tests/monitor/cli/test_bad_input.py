@@ -189,9 +189,9 @@ def test_another_interval_than_the_stored_one_is_refused(computed, lostwork):
     ("given", "said"),
     [
         (("chek",), "No such command"),
-        (("check",), "Missing argument"),
         (("state", "--pressure", "62 bar(a)"), "No such option"),
         (("export", "site.toml", "--from", "2026-01-10", "--format", "xlsx"), "'csv', 'parquet'"),
+        (("once",), "Missing argument"),
         (("backfill", "site.toml"), "Missing option"),
         (("backfill", "site.toml", "--from", "2026-01-10", "--workers", "9"), "equal to 2"),
     ],

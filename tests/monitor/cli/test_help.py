@@ -15,7 +15,7 @@ from monitor.commands.exits import MEANINGS, ExitCode
 PROMISED = {
     "demo", "check", "once", "run", "backfill", "report", "pages", "baseline list",
     "baseline fit", "alarms list", "alarms acknowledge", "alarms shelve", "alarms unshelve",
-    "event add", "event list", "explain", "state", "status", "export",
+    "event add", "event list", "notify test", "notify list", "explain", "state", "status", "export",
 }  # fmt: skip
 
 
@@ -66,6 +66,28 @@ def test_the_top_page_lists_every_command_and_every_exit_code(lostwork):
 
 def test_no_summary_of_a_command_is_cut_short(lostwork):
     assert "..." not in lostwork("--help").out.partition("Commands:")[2]
+
+
+DOCUMENTS = ("README.md", "DEVELOPERS.md", "config/README.md", "config/demo/site.toml")
+
+
+@pytest.mark.parametrize("document", DOCUMENTS)
+def test_documents_name_only_commands_and_options_that_exist(document):
+    path = Path(__file__).parents[3] / document
+    if not path.exists():
+        pytest.skip(f"there is no {document}")
+    names = {name[0] for name in ALL}
+    groups = {name[0] for name in ALL if len(name) > 1}
+    for line in re.findall(r"lostwork ([a-z]+(?: [^`\n#]*)?)[`\n#]", path.read_text()):
+        words = line.split()
+        if words[0] not in names:
+            # Prose: "lostwork is a daemon".
+            assert not re.search(r"--|\.toml", line), line
+            continue
+        name = tuple(words[:2]) if words[0] in groups else (words[0],)
+        assert name in ALL, line
+        known = {o for p in ALL[name].params for o in (*p.opts, *p.secondary_opts)}
+        assert set(re.findall(r"--[a-z0-9-]+", line)) <= known | {"--help"}, line
 
 
 def test_the_version_is_that_of_the_project(lostwork):

@@ -100,11 +100,14 @@ def wait_until(condition, child):
 @pytest.mark.parametrize("way", [signal.SIGINT, signal.SIGKILL])
 def test_a_backfill_that_is_ended_keeps_whole_days_and_leaves_no_process(make_plant, tmp_path, way):
     plant = make_plant(tmp_path / "site", days=60.0)
+    # A shell that runs the tests in the background hands an ignored SIGINT on to children.
+    before = signal.signal(signal.SIGINT, signal.default_int_handler)
     child = subprocess.Popen(
         [*LOSTWORK, "backfill", plant.path, "--from", "2026-01-10T00:00Z", "--to",
          "2026-03-11T00:00Z", "--workers", "2"],
         stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, start_new_session=True,
     )  # fmt: skip
+    signal.signal(signal.SIGINT, before)
     try:
         wait_until(lambda: stored_hours(plant) >= 48, child)
         workers = children_of(child.pid)
