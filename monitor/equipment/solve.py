@@ -8,7 +8,7 @@ come from; `complete` carries the plan out on whole windows.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -206,14 +206,18 @@ def _from_energy(
     flag = _flag_of(drawn, (*split.inlets, *split.outlets)) | split.unknown.flag
     if kind == "rate":
         return {stream: with_rate(split.unknown, energy, flag)}
-    # A flow within the meters' error has no enthalpy to be found; nothing flows, and what little
-    # the balance leaves is an imbalance. Else every stop would blank the whole site's ledger.
-    still = np.abs(split.unknown.mass_flow) < drawn.item.options.off_below
-    flow = np.where(still, 0.0, split.unknown.mass_flow)
+    flow = split.unknown.mass_flow
     with np.errstate(divide="ignore", invalid="ignore"):
         enthalpy = np.where(flow > 0, energy / flow, np.nan)
+    found = with_enthalpy(split.unknown, enthalpy)
+    # A flow within the meters' error that has no possible enthalpy is none, and what little the
+    # balance leaves is an imbalance. Else every stop would blank the whole site's ledger.
+    small = np.abs(flow) < drawn.item.options.off_below
+    known = np.isfinite(energy) & np.isfinite(split.unknown.pressure)
+    still = small & known & np.isnan(found.entropy)
     flag = _missing_where_nan(flag, np.where(still, 0.0, enthalpy))
-    return {stream: with_flow(with_enthalpy(split.unknown, enthalpy), flow, flag)}
+    found = replace(found, flag=np.where(still, split.unknown.flag, found.flag))
+    return {stream: with_flow(found, np.where(still, 0.0, flow), flag)}
 
 
 def _flows_from_both(drawn: Drawn, streams: tuple[str, str]) -> dict[str, StreamState]:

@@ -69,16 +69,31 @@ def test_meters_of_a_stopped_turbine_do_not_blank_the_plant(condensing, live, ta
     assert rows(batch.equipment, "turbine")["destroyed_live_kw"].abs().max() < 100
 
 
+def test_a_stopped_turbine_without_its_power_meter_is_still_missing(condensing):
+    batch = run(condensing, AMBIENT | {"FI": 0.03, "FX": 0.029, "W": np.nan})
+    assert _has(batch.ledger["flag"], Flag.MISSING).all()
+    assert batch.ledger["destroyed_live_kw"].isna().all()
+
+
 def test_a_running_turbine_without_exhaust_keeps_its_figures(condensing):
     """All steam extracted: the exhaust's flow is the meters' error, and no enthalpy comes of it."""
     live, taken = water(60, 460), water(11, 250)
-    power = 50 * (live.h - taken.h)
+    power = 50 * (live.h - taken.h) + 200
     batch = run(condensing, AMBIENT | {"FI": 50.0, "FX": 49.95, "W": power})
     assert last(batch.streams, "wet", "exergy_live_kw") == 0
     assert last(batch.equipment, "turbine", "destroyed_live_kw") == pytest.approx(
         T0 * 50 * (taken.s - live.s), rel=2e-3
     )
     assert left_over(batch.ledger, "live").abs().max() < 1e-6
+
+
+def test_a_small_flow_with_a_possible_enthalpy_keeps_it(condensing):
+    """0.2 kg/s is less than the turbine's own threshold, and yet a fair result of the balance."""
+    live, taken, wet = water(60, 460), water(11, 250), water(0.08, x=0.9)
+    power = 20 * live.h - 19.8 * taken.h - 0.2 * wet.h
+    batch = run(condensing, AMBIENT | {"FI": 20.0, "FX": 19.8, "W": power})
+    assert last(batch.streams, "wet", "mass_flow_kg_s") == pytest.approx(0.2, rel=1e-9)
+    assert last(batch.streams, "wet", "dryness") == pytest.approx(0.9, abs=1e-6)
 
 
 def test_an_exhaust_that_flows_backwards_is_absent_and_says_so(condensing):
