@@ -7,7 +7,7 @@ from typing import Annotated
 import typer
 
 from monitor import log
-from monitor.commands import alarms, baselines, events
+from monitor.commands import alarms, baselines, events, notify
 from monitor.commands.check import check
 from monitor.commands.demo import demo
 from monitor.commands.exits import MEANINGS
@@ -73,6 +73,7 @@ app.command()(pages)
 app.add_typer(baselines.app, name="baseline")
 app.add_typer(alarms.app, name="alarms")
 app.add_typer(events.app, name="event")
+app.add_typer(notify.app, name="notify")
 app.command()(explain)
 app.command()(state)
 app.command()(status)

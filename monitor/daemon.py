@@ -1,8 +1,9 @@
 """The daemon: figures each interval, alarms each hour, pages each quarter hour, shift reports.
 
-All jobs run one after the other in one worker thread, so they never overlap. A job that fails says
-so once, with its cause, and once more when it works again; meanwhile the watermark stays, and the
-next cycle catches up. Whatever ends the process, the store holds whole windows only.
+All jobs but the notifications run one after the other in one worker thread, so they never overlap.
+A job that fails says so once, with its cause, and once more when it works again; meanwhile the
+watermark stays, and the next cycle catches up. Whatever ends the process, the store holds whole
+windows only.
 """
 
 from __future__ import annotations
@@ -28,6 +29,7 @@ from monitor.backfill import catch_up, last_complete, recorded_sources
 from monitor.housekeeping import keep_house
 from monitor.judging import judge_site, plant_now
 from monitor.log import logger
+from monitor.notify.notifier import NOTIFICATIONS, Notifier
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping
@@ -42,7 +44,7 @@ if TYPE_CHECKING:
 
 __all__ = ["Daemon", "GridTrigger", "ShiftTrigger", "last_shift", "run_daemon"]
 
-HOUR, QUARTER, DAY = 3600, 900, 86400
+MINUTE, QUARTER, HOUR, DAY = 60, 900, 3600, 86400
 _HOUSEKEEPING = 3 * HOUR + 17 * 60
 """[s after midnight UTC] When few look and few write."""
 _SEEN = 1000
@@ -111,6 +113,10 @@ class Daemon:
     _stale_from: int | None = field(default=None, init=False)
     _failing: dict[str, str] = field(default_factory=dict, init=False)
     _told: set[tuple[str, str]] = field(default_factory=set, init=False)
+    _notifier: Notifier = field(init=False)
+
+    def __post_init__(self) -> None:
+        self._notifier = Notifier(self.site, self.store, self.clock)
 
     def start(self) -> None:
         """What a daemon does first: catch up, judge, draw, and report the last shift."""
@@ -137,6 +143,14 @@ class Daemon:
         """Keep the store quick and small."""
         self._guarded("housekeeping", lambda: keep_house(self.store, int(self.clock())))
 
+    def notify(self) -> None:
+        """Tell people of alarms and failed jobs; may run beside any other job."""
+        if self.stop.is_set():
+            return
+        # Without a look at the lock, whose connection belongs to the other jobs' thread.
+        with self._told_once(NOTIFICATIONS):
+            self._notifier.run(self.stop.is_set)
+
     def close(self) -> None:
         """Close the sources."""
         self._sources = None
@@ -146,15 +160,22 @@ class Daemon:
         """Run a job; its failure is told once, and so is its recovery."""
         if self.stop.is_set():
             return
-        try:
+        with self._told_once(name):
             if self.lock is not None:
                 self._check_lock(self.lock)
             job()
+
+    @contextlib.contextmanager
+    def _told_once(self, name: str) -> Iterator[None]:
+        try:
+            yield
         except Exception as error:  # noqa: BLE001 - a daemon outlives whatever a job meets
             self._tell_failure(name, error)
+            self._notifier.job_failed(name, self._failing[name])
         else:
             if self._failing.pop(name, None) is not None:
                 logger().info(f"{name} works again", job=name)
+            self._notifier.job_worked(name)
 
     def _check_lock(self, lock: InstanceLock) -> None:
         try:
@@ -299,7 +320,7 @@ def run_daemon(
 def _scheduler(daemon: Daemon) -> Any:  # noqa: ANN401 - the library has no annotations
     scheduler = BackgroundScheduler(
         timezone=UTC,
-        executors={"default": ThreadPoolExecutor(1)},
+        executors={"default": ThreadPoolExecutor(1), NOTIFICATIONS: ThreadPoolExecutor(1)},
         job_defaults={"coalesce": True, "max_instances": 1, "misfire_grace_time": None},
     )
     settle = daemon.site.file.site.settle
@@ -314,6 +335,8 @@ def _scheduler(daemon: Daemon) -> Any:  # noqa: ANN401 - the library has no anno
     scheduler.add_job(daemon.start)
     for job, trigger in jobs:
         scheduler.add_job(job, trigger)
+    # A thread of its own: a mail server that does not answer holds up no figures.
+    scheduler.add_job(daemon.notify, GridTrigger(MINUTE, 30), executor=NOTIFICATIONS)
     return scheduler
 
 
