@@ -12,7 +12,7 @@ from dashboards import series
 from dashboards.embed import Chart
 from dashboards.figures import band_trace, date_axis, has_values, line_traces
 from dashboards.files import DEAD_STATE_FILE, write_atomically
-from dashboards.formats import duration, number, power_column, quantity
+from dashboards.formats import duration, fixed, number, power_column
 from dashboards.render import render_page
 from dashboards.theme import COLOURS, LEDGER_COLOURS, axis, base_layout, tinted
 
@@ -96,8 +96,8 @@ def _ambient_chart(
     )
     known = values[np.isfinite(values)]
     summary = (
-        f"{heading}: lowest {quantity(float(known.min()), unit)}, "
-        f"highest {quantity(float(known.max()), unit)}, reference {quantity(reference, unit)}."
+        f"{heading}: lowest {fixed(float(known.min()), unit, 1)}, "
+        f"highest {fixed(float(known.max()), unit, 1)}, reference {fixed(reference, unit, 1)}."
     )
     note = "Orange spans: the reading is held, or the reference stands in." if held.any() else ""
     return Chart(f"ambient-{name}", {"data": traces, "layout": layout}, summary, heading, note, 200)

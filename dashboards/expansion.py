@@ -34,7 +34,10 @@ def expansion_chart(view: ExpansionView) -> Chart | None:
     if known.empty:
         return None
     window = _window(view, known)
-    traces = [_dome(view.dome), *(_isobar(*isobar) for isobar in view.isobars)]
+    traces = [
+        _dome(_clipped(view.dome, window)),
+        *(_isobar(label, _clipped(line, window)) for label, line in view.isobars),
+    ]
     if view.baseline_points is not None:
         traces += _baseline(view.baseline_points)
     traces += [_ideal(points), _ideal_ends(points), _measured(known)]
@@ -71,12 +74,23 @@ def _window(view: ExpansionView, known: pd.DataFrame) -> tuple[list[float], list
     )
     s_low, s_high = float(np.nanmin(entropy)), float(np.nanmax(entropy))
     h_low, h_high = float(np.nanmin(enthalpy)), float(np.nanmax(enthalpy))
-    wide, tall = max(s_high - s_low, 0.3), max(h_high - h_low, 200.0)
+    wide, tall = max(s_high - s_low, 0.2), max(h_high - h_low, 150.0)
     # Room on the right for the states' labels.
     return (
-        [s_low - 0.6 * wide, s_high + 1.1 * wide],
-        [h_low - 0.18 * tall, h_high + 0.18 * tall],
+        [s_low - 0.25 * wide, s_high + 0.8 * wide],
+        [h_low - 0.15 * tall, h_high + 0.15 * tall],
     )
+
+
+def _clipped(table: pd.DataFrame, window: tuple[list[float], list[float]]) -> pd.DataFrame:
+    """Keep the part of a line that the chart shows, and a point beyond each end of it."""
+    (s_low, s_high), (h_low, h_high) = window
+    entropy, enthalpy = _column(table, "entropy"), _column(table, "enthalpy")
+    inside = (entropy > s_low) & (entropy < s_high) & (enthalpy > h_low) & (enthalpy < h_high)
+    seen = np.flatnonzero(inside)
+    if seen.size == 0:
+        return table.iloc[:0]
+    return table.iloc[max(seen[0] - 1, 0) : seen[-1] + 2]
 
 
 def _dome(dome: pd.DataFrame) -> dict[str, Any]:
@@ -216,10 +230,11 @@ def _measured(known: pd.DataFrame) -> dict[str, Any]:
         "line": {"color": COLOURS["blue"], "width": 2.4},
         "marker": {"size": 9, "color": COLOURS["blue"]},
         "text": [
-            plotly_text(f"  {shorten(str(row.label), 28)}: {_state_words(row)}")
+            plotly_text(f"\u2002\u2002{shorten(str(row.label), 28)}: {_state_words(row)}")
             for row in known.itertuples()
         ],
-        "textposition": "middle right",
+        # The last label stands below the line, clear of the reference period's last state.
+        "textposition": ["middle right"] * (len(known) - 1) + ["bottom right"],
         "textfont": {"size": SIZES["small"], "color": COLOURS["ink"]},
         "hovertemplate": "%{text}<br>%{y:,.4~r} kJ/kg, %{x:.4~r} kJ/(kg K)<extra></extra>",
     }

@@ -48,6 +48,9 @@ _DATE_TICKS = [
     {"dtickrange": ["M1", "M12"], "value": "%b\n%Y"},
     {"dtickrange": ["M12", None], "value": "%Y"},
 ]
+_TAIL = 0.01  # of a trend's values at either end that need not be in the picture
+_ROOM = 0.15  # of the range, above and below
+_SQUEEZED = 1.25  # a whole range so much larger than the robust one squeezes the figure
 _CROWDED = 0.025  # marks closer than this part of the axis share one label
 
 
@@ -239,18 +242,76 @@ def trend_chart(trend: TrendView, identifier: str) -> Chart | None:
         trend.unit,
         {"color": COLOURS["blue"], "width": 1.6},
     )
+    shown, note = _robust_range(trend)
+    more: dict[str, Any] = {} if shown is None else {"range": list(shown)}
+    if shown is not None:
+        traces.append(_outside_marks(times, _floats(table["value"]), shown))
     layout = base_layout(
-        270,
+        250,
         xaxis=date_axis(times),
-        yaxis=axis(title={"text": plotly_text(unit_text(trend.unit)), "standoff": 8}),
+        yaxis=axis(title={"text": plotly_text(unit_text(trend.unit)), "standoff": 8}, **more),
     )
     return Chart(
         identifier,
         {"data": traces, "layout": layout},
         _trend_words(trend),
         heading=_with_unit(trend.title, trend.unit),
-        print_height=220,
+        note=note,
+        print_height=210,
     )
+
+
+def _robust_range(trend: TrendView) -> tuple[tuple[float, float] | None, str]:
+    """Return the range that shows all but a few outliers, and what is said about these.
+
+    A stop or a start of minutes would otherwise press months of a figure into a flat line. None
+    where all values fit a range of much the same size.
+    """
+    values = _floats(trend.data["value"].dropna())
+    framed = [name for name in ("expected", "low", "high") if has_values(trend.data, name)]
+    lines = [values, *(_floats(trend.data[name].dropna()) for name in framed)]
+    low = min(float(np.quantile(line, _TAIL)) for line in lines)
+    high = max(float(np.quantile(line, 1.0 - _TAIL)) for line in lines)
+    margin = _ROOM * (high - low)
+    low, high = low - margin, high + margin
+    if values.max() - values.min() <= _SQUEEZED * (high - low) or high <= low:
+        return None, ""
+    outside = (values < low) | (values > high)
+    far = values[outside]
+    extremes = [far.min()] if far.max() < low else [far.max()]
+    if far.min() < low and far.max() > high:
+        extremes = [far.min(), far.max()]
+    words = " and ".join(quantity(float(value), trend.unit, 3) for value in extremes)
+    share = f"{int(outside.sum())} of {len(values)} values lie outside what is shown"
+    return (low, high), f"{share} (triangles at the edge), as far as {words}."
+
+
+def _outside_marks(
+    times: pd.DatetimeIndex, values: Floats, shown: tuple[float, float]
+) -> dict[str, Any]:
+    low, high = shown
+    outside = (values < low) | (values > high)
+    edge = 0.03 * (high - low)
+    below = values[outside] < low
+    return {
+        "type": "scatter",
+        "mode": "markers",
+        "x": times[outside],
+        "y": np.where(below, low + edge, high - edge),
+        "name": "Outside what is shown",
+        "showlegend": False,
+        "hoverinfo": "skip",
+        "marker": {
+            "size": 7,
+            "symbol": np.where(below, "triangle-down", "triangle-up").tolist(),
+            "color": COLOURS["vermilion"],
+        },
+    }
+
+
+def _opened(label: str) -> str:
+    """Begin with a capital, and leave the rest (UA, HP) alone."""
+    return label[:1].upper() + label[1:]
 
 
 def _with_unit(title: str, unit: str) -> str:
@@ -320,7 +381,7 @@ def residual_chart(view: ResidualView, identifier: str) -> Chart | None:
         identifier,
         {"data": traces, "layout": layout},
         _residual_words(view),
-        heading=_with_unit(f"{view.label}: measured minus expected", view.unit),
+        heading=_with_unit(f"{_opened(view.label)}: measured minus expected", view.unit),
         note=_reference_words(view),
         marks=tuple((name, f"{moment(time)}: {words}") for time, name, words in marks),
     )

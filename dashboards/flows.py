@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import math
 import textwrap
-from collections import Counter
-from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 from dashboards.embed import Chart
+from dashboards.flow_graph import SMALL, columns, flow_graph, through
+from dashboards.flow_layout import flow_layout
 from dashboards.formats import MISSING, Column, money_column, plotly_text, power_column, shorten
 from dashboards.theme import (
     COLOURS,
@@ -23,13 +23,13 @@ from dashboards.theme import (
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
+    from dashboards.flow_graph import FlowGraph
     from dashboards.views import EquipmentRow, FlowLink
 
 __all__ = ["flow_diagram", "flow_kinds", "ranked_destruction"]
 
-_LINE = 15  # px that a line of a label takes
-_TALLEST = 1400
-_UNSEEN = "rgba(0,0,0,0)"
+_MARGIN = 24  # px above and below the flow diagram
+_HOVER = 120
 _MOST_BARS = 15
 _LABEL = 40
 _LETTER = 6.6  # px, the mean in the widest of the usual fonts
@@ -55,13 +55,11 @@ def flow_diagram(flows: Sequence[FlowLink], node_names: dict[str, str]) -> Chart
     drawable = [flow for flow in flows if _drawable(flow)]
     if not drawable:
         return None
-    links, node_names = _unrolled(drawable, node_names)
-    scale = power_column(flow.kw for flow in links)
-    keys = list(dict.fromkeys(key for flow in links for key in (flow.source, flow.target)))
-    trace = _sankey(links, keys, node_names, scale)
-    height = _height(links, trace["node"]["pad"])
+    graph = flow_graph(drawable, node_names)
+    scale = power_column(flow.kw for flow in graph.links)
+    trace, height = _sankey(graph, scale)
     layout = base_layout(height, showlegend=False)
-    layout["margin"] = {"l": 4, "r": 16, "t": 24, "b": 24}
+    layout["margin"] = {"l": 4, "r": 16, "t": _MARGIN, "b": _MARGIN}
     layout["hovermode"] = "closest"
     largest = sorted(drawable, key=lambda flow: -flow.kw)[:5]
     listed = "; ".join(
@@ -69,96 +67,77 @@ def flow_diagram(flows: Sequence[FlowLink], node_names: dict[str, str]) -> Chart
         f"{node_names.get(flow.target, flow.target)} {scale.with_unit(flow.kw)}"
         for flow in largest
     )
-    left_out = len(flows) - len(drawable)
-    note = f"Widths are mean exergy rates in {scale.unit} at the live dead state."
-    if len(links) > len(drawable):
-        note += (
-            " A flow that returns upstream, such as feedwater, leaves on the right and comes back "
-            "on the left."
-        )
-    if left_out:
-        note += (
-            f" {left_out} of {len(flows)} flows are not drawn: no positive mean rate in this span."
-        )
     return Chart(
         "flows",
         {"data": [trace], "layout": layout},
         f"Exergy flow diagram of {len(drawable)} flows. Largest: {listed}.",
-        note=note,
-        print_height=max(height - 130, 300),
+        note=_flow_note(graph, scale, len(flows), len(drawable)),
+        print_height=height,
     )
 
 
-def _sankey(
-    links: Sequence[FlowLink], keys: Sequence[str], node_names: dict[str, str], scale: Column
-) -> dict[str, Any]:
+def _flow_note(graph: FlowGraph, scale: Column, known: int, drawn: int) -> str:
+    notes = [f"Widths are mean exergy rates in {scale.unit} at the live dead state."]
+    if graph.returns:
+        notes.append(
+            "What returns upstream, such as feed water, leaves on the right and comes back on the "
+            "left."
+        )
+    if graph.joined:
+        listed = ", ".join(f"{small} with {host}" for small, host in graph.joined)
+        notes.append(
+            f"Equipment that passes less than {SMALL:.0%} of what is supplied is drawn with its "
+            f"neighbour: {listed}."
+        )
+    if known > drawn:
+        notes.append(
+            f"{known - drawn} of {known} flows are not drawn: no positive mean rate in this span."
+        )
+    return " ".join(notes)
+
+
+def _sankey(graph: FlowGraph, scale: Column) -> tuple[dict[str, Any], int]:
+    """Return the trace and the figure's height, px."""
+    passing, places = through(graph.links), columns(graph.links)
+    keys = list(passing)
     place = {key: position for position, key in enumerate(keys)}
-    names = [node_names.get(key, key) for key in keys]
-    through = _through(links, keys)
-    # The last column's labels stand on its left, where the column before has its own: a chain of
-    # unseen nodes, one longer than the longest way, keeps a column free between the two.
-    ghosts = list(range(len(keys), len(keys) + _longest(links) + 1))
-    width = min(max(int(_PAGE / (len(ghosts) - 1) / _LETTER - 1.5), 12), 32)
-    labels = [
-        f"{_wrapped(name, width)}<br>{scale.with_unit(through[key])}"
+    names = [graph.names.get(key, key) for key in keys]
+    width = int(_PAGE / (max(places.values()) + 1) / _LETTER - 1.5)
+    labels = {
+        key: f"{_wrapped(name, min(max(width, 12), 32))}<br>{scale.with_unit(passing[key])}"
         for key, name in zip(keys, names, strict=True)
-    ]
-    lines = max(label.count("<br>") + 1 for label in labels)
-    breath = max(through.values()) * scale.factor * 1e-6
-    return {
+    }
+    at = flow_layout(graph.links, {key: label.count("<br>") + 1 for key, label in labels.items()})
+    # One order for both ends: at each node flows lie in the order of where they come from or go to.
+    links = sorted(graph.links, key=lambda flow: at.y[flow.source] + at.y[flow.target])
+    trace = {
         "type": "sankey",
         "arrangement": "fixed",
         "valueformat": ",.4~r",
         "valuesuffix": f" {scale.unit}",
         "node": {
-            "label": labels + [""] * len(ghosts),
-            "color": [COLOURS["soft"]] * len(keys) + [_UNSEEN] * len(ghosts),
+            "label": list(labels.values()),
+            "color": [COLOURS["soft"]] * len(keys),
             "line": {"width": 0},
-            "pad": _LINE * min(lines, 3),
+            "pad": at.pad,
             "thickness": 10,
-            "customdata": [plotly_text(name) for name in names] + [""] * len(ghosts),
+            "x": [at.x[key] for key in keys],
+            "y": [at.y[key] for key in keys],
+            "customdata": [plotly_text(name) for name in names],
             "hovertemplate": "%{customdata}<br>%{value}<extra></extra>",
         },
         "link": {
-            "source": [place[flow.source] for flow in links] + ghosts[:-1],
-            "target": [place[flow.target] for flow in links] + ghosts[1:],
-            "value": [flow.kw * scale.factor for flow in links] + [breath] * (len(ghosts) - 1),
-            "color": [tinted(FLOW_COLOURS[flow.kind], 0.55) for flow in links]
-            + [_UNSEEN] * (len(ghosts) - 1),
-            "customdata": [plotly_text(flow.label) for flow in links] + [""] * (len(ghosts) - 1),
+            "sort": "input",
+            "source": [place[flow.source] for flow in links],
+            "target": [place[flow.target] for flow in links],
+            "value": [flow.kw * scale.factor for flow in links],
+            "color": [tinted(FLOW_COLOURS[flow.kind], 0.55) for flow in links],
+            "customdata": [plotly_text(shorten(flow.label, _HOVER)) for flow in links],
             "hovertemplate": "%{customdata}<br>%{value}<extra></extra>",
         },
         "textfont": {"size": SIZES["small"], "color": COLOURS["ink"]},
     }
-
-
-def _height(links: Sequence[FlowLink], pad: int) -> int:
-    """Return the height at which the fullest column's labels stand clear of each other, px."""
-    fullest = Counter(_columns(links).values()).most_common(1)[0][1]
-    # What the labels leave is for the flows' widths.
-    return min(fullest * pad + max(fullest * 14, 280) + 48, _TALLEST)
-
-
-def _longest(links: Sequence[FlowLink]) -> int:
-    """Count the nodes on the longest way through flows without loops."""
-    return max(_columns(links).values()) + 1
-
-
-def _columns(links: Sequence[FlowLink]) -> dict[str, int]:
-    """Place nodes in columns: one after the last that feeds it, all that feed none in the last."""
-    feeds: dict[str, list[str]] = {}
-    for flow in links:
-        feeds.setdefault(flow.target, []).append(flow.source)
-    places: dict[str, int] = {}
-
-    def place(key: str) -> int:
-        if key not in places:
-            places[key] = max((place(source) + 1 for source in feeds.get(key, ())), default=0)
-        return places[key]
-
-    last = max(place(flow.target) for flow in links)
-    ends = set(places) - {flow.source for flow in links}
-    return {key: last if key in ends else column for key, column in places.items()}
+    return trace, math.ceil(at.height) + 2 * _MARGIN
 
 
 def _wrapped(name: str, width: int) -> str:
@@ -172,52 +151,6 @@ def _wrapped(name: str, width: int) -> str:
             break
         lines = even
     return "<br>".join(plotly_text(line) for line in lines)
-
-
-def _unrolled(
-    flows: Sequence[FlowLink], node_names: dict[str, str]
-) -> tuple[list[FlowLink], dict[str, str]]:
-    """Cut every loop at its smallest flow: it goes out to a node of its own, and in from another.
-
-    Water goes round in a steam site, and loops drawn as loops hide the rest.
-    """
-    after: dict[str, set[str]] = {}
-    kept: list[FlowLink] = []
-    cut: list[FlowLink] = []
-    for flow in sorted(flows, key=lambda flow: -flow.kw):
-        if _reaches(after, flow.target, flow.source):
-            cut.append(flow)
-        else:
-            after.setdefault(flow.source, set()).add(flow.target)
-            kept.append(flow)
-    names = dict(node_names)
-    for flow in cut:
-        # A space cannot stand in an identifier, so these meet no node of the site.
-        there, back = f"to {flow.target}", f"from {flow.source}"
-        names[there] = f"to {node_names.get(flow.target, flow.target)}"
-        names[back] = f"from {node_names.get(flow.source, flow.source)}"
-        kept += [replace(flow, target=there), replace(flow, source=back)]
-    return kept, names
-
-
-def _reaches(after: dict[str, set[str]], start: str, goal: str) -> bool:
-    seen, waiting = {start}, [start]
-    while waiting:
-        here = waiting.pop()
-        if here == goal:
-            return True
-        ahead = after.get(here, set()) - seen
-        seen |= ahead
-        waiting += ahead
-    return False
-
-
-def _through(links: Sequence[FlowLink], keys: Sequence[str]) -> dict[str, float]:
-    into, out = dict.fromkeys(keys, 0.0), dict.fromkeys(keys, 0.0)
-    for flow in links:
-        into[flow.target] += flow.kw
-        out[flow.source] += flow.kw
-    return {key: max(into[key], out[key]) for key in keys}
 
 
 def ranked_destruction(rows: Sequence[EquipmentRow], currency: str) -> Chart | None:

@@ -18,6 +18,8 @@ __all__ = [
     "day",
     "duration",
     "energy_column",
+    "fitting",
+    "fixed",
     "moment",
     "money_column",
     "number",
@@ -29,6 +31,7 @@ __all__ = [
     "signed",
     "span",
     "unit_text",
+    "wetness",
 ]
 
 MISSING = "–"
@@ -99,10 +102,46 @@ def quantity(value: float | None, unit: str, digits: int = 4) -> str:
     return text if text == MISSING or not shown else f"{text}{_UNIT_GAP}{shown}"
 
 
+def fixed(value: float | None, unit: str, decimals: int) -> str:
+    """Write a quantity with so many decimals; what rounds to zero is 0, without a sign."""
+    if value is None or not math.isfinite(value):
+        return MISSING
+    text, shown = _fixed(value, decimals), unit_text(unit)
+    if not any(digit in text for digit in "123456789"):
+        text = "0"
+    return f"{text}{_UNIT_GAP}{shown}" if shown else text
+
+
+def fitting(value: float | None, unit: str, smallest: float, *, sign: bool = False) -> str:
+    """Write a quantity with the decimals that show the smallest change that matters.
+
+    Args:
+        value: any number; None, NaN and infinities give a dash.
+        unit: behind it.
+        smallest: the smallest change that matters, in the same unit; without one, three
+            significant digits.
+        sign: put a plus before what is above zero.
+    """
+    if smallest > 0.0 and math.isfinite(smallest):
+        decimals = min(max(math.ceil(0.5 - math.log10(smallest)), 0), _MOST_DECIMALS)
+        text = fixed(value, unit, decimals)
+    else:
+        text = quantity(value, unit, 3)
+    some = any(digit in text.split(_UNIT_GAP)[0] for digit in "123456789")
+    return f"+{text}" if sign and some and value is not None and value > 0 else text
+
+
 def signed(value: float | None, digits: int = 3, unit: str = "") -> str:
     """Write a difference: a plus or a minus always stands before it, zero has neither."""
     text = quantity(value, unit, digits)
     return f"+{text}" if value is not None and text != MISSING and value > 0 else text
+
+
+def wetness(dryness: float | None) -> str:
+    """Write a dryness fraction where steam is wet; beside saturation it says nothing."""
+    if dryness is None or not 0.0 < dryness < 1.0:
+        return MISSING
+    return _fixed(dryness, 3)
 
 
 def percent(share: float | None, decimals: int = 1) -> str:

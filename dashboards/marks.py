@@ -11,7 +11,7 @@ from dashboards.theme import COLOURS
 if TYPE_CHECKING:
     from dashboards.views import ConditionRow, QualityRow
 
-__all__ = ["Bullet", "Segment", "bullet", "quality_segments"]
+__all__ = ["Bullet", "Segment", "bullet", "matters", "quality_segments"]
 
 _REACH = 2.0  # the bullet's scale ends at twice the limit
 
@@ -54,6 +54,18 @@ def bullet(row: ConditionRow) -> Bullet | None:
         worse_high=row.worse in {"high", "both"},
         words=f"residual is {abs(share):.2g} times the limit, {'above' if share > 0 else 'below'}",
     )
+
+
+def matters(row: ConditionRow) -> float:
+    """Return the change that sets a row's digits: the stated smallest, else the limit.
+
+    0 where nobody judges the figure: three significant digits then say more.
+    """
+    if row.state == "not judged":
+        return 0.0
+    if row.smallest_change > 0.0:
+        return row.smallest_change
+    return row.limit if math.isfinite(row.limit) and row.limit > 0.0 else 0.0
 
 
 @dataclass(frozen=True)

@@ -18,6 +18,9 @@ if TYPE_CHECKING:
 
 __all__ = ["ranked_conditions", "write_overview"]
 
+_FIRST_ALARMS = 3
+"""So many stand before the ledger, which then still stands in the first screenful."""
+_FIRST_TAGS = 12
 _ORDER = {"drifting": 0, "steady": 1, "not judged": 2, "no baseline": 3}
 
 
@@ -38,6 +41,8 @@ def write_overview(view: OverviewView, folder: Path) -> Path:
         "overview.html",
         view.context,
         view=view,
+        first_alarms=_FIRST_ALARMS,
+        first_tags=_FIRST_TAGS,
         conditions=ranked_conditions(view.conditions),
         key_figures=_key_figures(view.ledger),
         flows=flow_diagram(view.flows, view.node_names),

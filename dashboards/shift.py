@@ -16,18 +16,18 @@ from dashboards.overview import ranked_conditions
 from dashboards.render import render_page
 
 if TYPE_CHECKING:
-    from dashboards.views import ConditionRow, LedgerLine, ShiftView
+    from collections.abc import Sequence
+
+    from dashboards.views import AlarmRow, ConditionRow, LedgerLine, ShiftView
 
 __all__ = ["FirstPage", "first_page", "write_shift"]
 
 # What one A4 page holds; the details hold the rest.
 _SENTENCES = 5
 _SUMMARY = 850  # characters of all sentences together, in the widest of the usual fonts
-_LONGEST_SENTENCE = 320
 _EQUIPMENT = 5
 _ALARMS = 4
-_MESSAGES = 480  # characters of all messages together
-_LONGEST_MESSAGE = 240
+_MESSAGES = 640  # characters of all messages together
 _CONDITIONS = 4
 _TAGS = 4
 
@@ -53,12 +53,8 @@ class FirstPage:
     """What of the view the first page shows, and how much it leaves to the details."""
 
     summary: tuple[str, ...]
-    sentence: int
-    """The most characters of one sentence."""
     ledger: tuple[Comparison, ...]
-    alarms: int
-    message: int
-    """The most characters of one alarm's message."""
+    alarms: tuple[AlarmRow, ...]
     equipment: int
     conditions: tuple[ConditionRow, ...]
     moved: int
@@ -98,19 +94,25 @@ def write_shift(view: ShiftView, folder: Path) -> Path:
 def first_page(view: ShiftView) -> FirstPage:
     """Choose what fits on the first page, the most urgent first."""
     moved = [row for row in ranked_conditions(view.conditions) if _has_moved(row)]
-    sentences = view.summary[:_SENTENCES]
-    alarms = min(len(view.alarms), _ALARMS)
     return FirstPage(
-        summary=sentences,
-        sentence=min(_SUMMARY // max(len(sentences), 1), _LONGEST_SENTENCE),
+        summary=view.summary[: _whole(view.summary, _SENTENCES, _SUMMARY)],
         ledger=tuple(_comparisons(view)),
-        alarms=_ALARMS,
-        message=min(_MESSAGES // max(alarms, 1), _LONGEST_MESSAGE),
+        alarms=view.alarms[: _whole([a.message for a in view.alarms], _ALARMS, _MESSAGES)],
         equipment=_EQUIPMENT,
         conditions=tuple(moved[:_CONDITIONS]),
         moved=len(moved),
         tags=_TAGS,
     )
+
+
+def _whole(texts: Sequence[str], most: int, characters: int) -> int:
+    """Count the texts that a page has room for whole: a number cut in two misleads."""
+    room = characters
+    for count, text in enumerate(texts[:most]):
+        room -= len(text)
+        if room < 0 and count:
+            return count
+    return min(len(texts), most)
 
 
 def _has_moved(row: ConditionRow) -> bool:

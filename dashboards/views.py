@@ -98,8 +98,8 @@ class EquipmentRow:
     energy_imbalance_kw: float
     running_share: float
     """Part of the span in service, 0 to 1."""
-    flags: str
-    """What the figures rest on, in words."""
+    flags: tuple[tuple[str, float], ...]
+    """What the figures rest on: words, and the part of the span it holds for, 0 to 1."""
 
 
 @dataclass(frozen=True)
@@ -120,6 +120,8 @@ class ConditionRow:
     state: Literal["steady", "drifting", "no baseline", "not judged"]
     since: pd.Timestamp | None
     worse: Literal["low", "high", "both"]
+    smallest_change: float = 0.0
+    """The smallest change that matters, in the figure's unit; 0 where none is stated."""
 
 
 @dataclass(frozen=True)
@@ -136,7 +138,10 @@ class AlarmRow:
     raised: pd.Timestamp
     cleared: pd.Timestamp | None
     message: str
+    """What changed and why it is so, without the equipment's name and the cost beside it."""
     cost_per_day: float | None
+    set_aside: bool = False
+    """Shelved, suppressed by design or out of service: known, and not to be acted on now."""
 
 
 @dataclass(frozen=True)

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from monitor.drift.judgement import FigureRule
     from monitor.drift.verdict import Verdict
 
-__all__ = ["Finding", "finding", "message", "priority"]
+__all__ = ["Finding", "cost_sentence", "finding", "message", "priority"]
 
 _SPAN = 24
 
@@ -90,10 +90,13 @@ def message(
         why = f"Look at the instruments first: {'; '.join(judged.reasons)}."
     sentences = [what, why]
     if cost_per_day is not None and math.isfinite(cost_per_day) and cost_per_day > 0:
-        sentences.append(
-            f"The extra lost work costs about {_three_digits(cost_per_day)} {currency} a day."
-        )
+        sentences.append(cost_sentence(cost_per_day, currency))
     return " ".join(sentences)
+
+
+def cost_sentence(cost_per_day: float, currency: str) -> str:
+    """Say what a finding costs; a page that shows the cost beside the message leaves it out."""
+    return f"The extra lost work costs about {_three_digits(cost_per_day)} {currency} a day."
 
 
 def priority(points: pd.DataFrame) -> str:

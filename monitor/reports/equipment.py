@@ -68,7 +68,7 @@ def _trends(gathered: Gathered, item: Item, rolled: pd.DataFrame) -> tuple[Trend
             data = data.join(framed)
         trends.append(
             TrendView(
-                title=figure.label.capitalize(),
+                title=figure.label[:1].upper() + figure.label[1:],
                 label=figure.label,
                 unit=figure.unit,
                 data=gathered.localised(data),
@@ -97,8 +97,9 @@ def _residuals(gathered: Gathered, item: Item, figure: Figure) -> ResidualView |
         {
             "residual": points["residual"].where(judged),
             "ewma": points["ewma"],
-            "low": -points["limit"],
-            "high": points["limit"],
+            # The limits belong to the baseline and hold between judged hours too.
+            "low": -points["limit"].ffill(),
+            "high": points["limit"].ffill(),
         }
     )
     alarms = gathered.alarms_between(gathered.start, gathered.end, item.id)

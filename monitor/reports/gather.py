@@ -20,6 +20,7 @@ from dashboards.views import (
     PageContext,
     QualityRow,
 )
+from monitor.drift.message import cost_sentence
 from monitor.flags import Flag, describe
 
 if TYPE_CHECKING:
@@ -45,6 +46,13 @@ LEDGER_LABELS: dict[LedgerKey, str] = {
 _COLUMN: dict[LedgerKey, str] = {k: k for k in LEDGER_LABELS} | {"stored": "stored_rate"}
 _PAID: frozenset[LedgerKey] = frozenset({"supplied", "used", "lost", "destroyed"})
 _HOURS_PER_DAY = 24.0
+# As ISA-18.2 names the states, where the store's own word is shorter.
+_STATES = {
+    "unacknowledged": "unacknowledged alarm",
+    "acknowledged": "acknowledged alarm",
+    "returned": "returned to normal, unacknowledged",
+}
+_SET_ASIDE = frozenset({"shelved", "suppressed by design", "out of service"})
 # A flag is worth telling when it holds for more than this share of the cells.
 _WORTH_TELLING = 0.02
 
@@ -162,8 +170,11 @@ class Gathered:
         destroyed = _value(table, "destroyed_live_kw", "mean")
         fuel = _value(table, "fuel_live_kw", "mean")
         product = _value(table, "product_live_kw", "mean")
-        told = sum(bit for bit, share in flags.items() if share > _WORTH_TELLING)
-        running = told & ~(Flag.OFF | Flag.UNSTEADY)
+        told = {
+            bit: share
+            for bit, share in flags.items()
+            if share > _WORTH_TELLING and not bit & (Flag.OFF | Flag.UNSTEADY)
+        }
         return EquipmentRow(
             id=item.id,
             name=item.name,
@@ -178,7 +189,7 @@ class Gathered:
             mass_imbalance_kg_s=_value(table, "mass_imbalance_kg_s", "mean"),
             energy_imbalance_kw=_value(table, "energy_imbalance_kw", "mean"),
             running_share=1.0 - flags.get(Flag.OFF, 0.0),
-            flags=describe(running),
+            flags=tuple((describe(bit), told[bit]) for bit in sorted(told)),
         )
 
     def _flag_shares(self, kind: Literal["stream", "equipment"]) -> dict[str, dict[Flag, float]]:
@@ -236,6 +247,7 @@ class Gathered:
             state=state,
             since=None if alarm is None else self.local(alarm.raised),
             worse=figure.worse,
+            smallest_change=figure.smallest_change,
         )
 
     def _latest(self, equipment: str, figure: str) -> float:
@@ -269,13 +281,22 @@ class Gathered:
             equipment=alarm.subject,
             equipment_name=item.name if item else alarm.subject,
             figure_label=labels.get(alarm.figure, alarm.figure),
-            state=alarm.state,
+            state=_STATES.get(alarm.state, alarm.state),
             priority=alarm.priority,
             raised=self.local(alarm.raised),
             cleared=None if alarm.cleared is None else self.local(alarm.cleared),
-            message=alarm.message,
+            message=self._own_words(alarm, item),
             cost_per_day=alarm.cost_per_day,
+            set_aside=alarm.state in _SET_ASIDE,
         )
+
+    def _own_words(self, alarm: AlarmRecord, item: Item | None) -> str:
+        """The message without what stands beside it on a page: the name and the cost."""
+        text = alarm.message if item is None else alarm.message.removeprefix(f"{item.name}: ")
+        if alarm.cost_per_day is None or not alarm.cost_per_day > 0:
+            return text
+        currency = self.site.file.economics.currency
+        return text.removesuffix(f" {cost_sentence(alarm.cost_per_day, currency)}")
 
     def open_alarms(self) -> tuple[AlarmRow, ...]:
         """Open alarms, the most urgent and newest first."""

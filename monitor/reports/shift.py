@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 
 import dashboards
+from dashboards.formats import energy_column, money_column, percent, power_column, quantity
 from dashboards.views import LedgerLine, ShiftView
 from monitor.reports.gather import Gathered
 
@@ -27,6 +28,8 @@ _WEEK = 7
 # A change of destroyed exergy under this share of the week's mean is not worth a sentence.
 _NOTICEABLE = 0.03
 _POOR = 0.05
+# So many alarms are named in a sentence.
+_NAMED = 3
 
 
 def write_shift_report(
@@ -120,9 +123,10 @@ def _summary(
     if rows and np.isfinite(rows[0].destroyed_kw):
         top = rows[0]
         sentences.append(
-            f"Most of it in {top.name}: {top.destroyed_kw:,.0f} kW, {top.share:.0%} of the site's."
+            f"Most of it in {top.name}: {_power(top.destroyed_kw)}, "
+            f"{percent(top.share, 0)} of the site's."
         )
-    sentences += _alarm_sentences(alarms)
+    sentences += _alarm_sentences(gathered, alarms)
     if quality:
         named = ", ".join(q.tag for q in quality[:3])
         more = f" and {len(quality) - 3} more" if len(quality) > 3 else ""  # noqa: PLR2004
@@ -134,8 +138,9 @@ def _destroyed_sentence(
     gathered: Gathered, now: LedgerLine, previous: tuple[LedgerLine, ...]
 ) -> str:
     currency = gathered.site.file.economics.currency
-    cost = "" if now.cost is None else f", worth {now.cost:,.0f} {currency}"
-    base = f"The site destroyed {now.live_mwh:,.0f} MWh of exergy ({now.live_kw:,.0f} kW){cost}"
+    cost = "" if now.cost is None else f", worth {_money(now.cost, currency)}"
+    energy = energy_column([now.live_mwh]).with_unit(now.live_mwh)
+    base = f"The site destroyed {energy} of exergy ({_power(now.live_kw)}){cost}"
     before = next((line for line in previous if line.key == "destroyed"), None)
     if before is None:
         return f"{base}; there is no week before to compare with."
@@ -148,19 +153,46 @@ def _destroyed_sentence(
         why = "at the fixed reference dead state it is unchanged, so this is the weather"
     else:
         why = (
-            f"{abs(reference):.0%} {'more' if reference > 0 else 'less'} with the weather taken out"
+            f"{percent(abs(reference), 0)} {'more' if reference > 0 else 'less'} with the weather "
+            "taken out"
         )
-    return f"{base}: {abs(live):.0%} {word} than the same shifts of the week before; {why}."
+    return f"{base}: {percent(abs(live), 0)} {word} than the same shifts of the week before; {why}."
 
 
-def _alarm_sentences(alarms: tuple[AlarmRow, ...]) -> list[str]:
+def _power(kw: float) -> str:
+    return power_column([kw]).with_unit(kw)
+
+
+def _money(amount: float, currency: str) -> str:
+    return money_column([amount], currency).with_unit(amount)
+
+
+def _alarm_sentences(gathered: Gathered, alarms: tuple[AlarmRow, ...]) -> list[str]:
+    """Say what is new, and what stands; the list below says why."""
     active = [a for a in alarms if a.cleared is None]
     if not active:
         return ["No alarm is open."]
-    sentences = [a.message for a in active[:3]]
-    if len(active) > 3:  # noqa: PLR2004
-        sentences.append(f"{len(active) - 3} more alarms are open.")
+    start = gathered.context.start
+    new = [a for a in active if a.raised >= start]
+    cost = sum(a.cost_per_day for a in active if a.cost_per_day is not None)
+    worth = (
+        f", {'together ' if len(active) > 1 else ''}about "
+        f"{quantity(cost, gathered.site.file.economics.currency, 2)} a day"
+        if cost > 0
+        else ""
+    )
+    count = "1 alarm is open" if len(active) == 1 else f"{len(active)} alarms are open"
+    sentences = [f"{count}{worth}: {_named(active)}."]
+    if new and len(new) < len(active):
+        sentences.append(f"New in this shift: {_named(new)}.")
+    elif new:
+        sentences[0] = sentences[0].removesuffix(".") + "; new in this shift."
     return sentences
+
+
+def _named(alarms: list[AlarmRow]) -> str:
+    names = "; ".join(f"{a.equipment_name}, {a.figure_label}" for a in alarms[:_NAMED])
+    return names if len(alarms) <= _NAMED else f"{names}; and {len(alarms) - _NAMED} more"
 
 
 def shift_text(view: ShiftView) -> str:
@@ -174,5 +206,20 @@ def shift_text(view: ShiftView) -> str:
     table = [f"{'':{width}}  {'kW':>10}  {'MWh':>9}  {'week before, kW':>15}"]
     for line in view.ledger:
         past = f"{before[line.key].live_kw:15,.0f}" if line.key in before else f"{'-':>15}"
-        table.append(f"{line.label:{width}}  {line.live_kw:10,.0f}  {line.live_mwh:9,.1f}  {past}")
-    return "\n".join([head, "", *view.summary, "", *table])
+        # Adding zero takes the sign from a zero.
+        kw, mwh = round(line.live_kw) + 0 if np.isfinite(line.live_kw) else np.nan, line.live_mwh
+        mwh = round(mwh, 1) + 0.0
+        table.append(f"{line.label:{width}}  {kw:10,.0f}  {mwh:9,.1f}  {past}")
+    alarms = [
+        f"- {a.equipment_name}: {a.message}"
+        + (
+            ""
+            if a.cost_per_day is None
+            else f" {quantity(a.cost_per_day, view.currency, 2)} a day."
+        )
+        for a in view.alarms
+        if a.cleared is None
+    ]
+    text = "\n".join([head, "", *view.summary, *([""] if alarms else []), *alarms, "", *table])
+    # A terminal and what copies from it do better with plain spaces.
+    return text.replace("\u202f", " ").replace("\u00a0", " ")

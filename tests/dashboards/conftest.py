@@ -87,6 +87,8 @@ window.addEventListener("load", function () {
     scripts: document.querySelectorAll("script").length,
     text: document.body.innerText,
     images: document.images.length,
+    ledgerEnds: document.querySelector("#ledger ~ .scroll table")
+      ? box(document.querySelector("#ledger ~ .scroll table")).bottom : 0,
     onScreen: onScreen,
     onPaper: onPaper,
     again: widths(),

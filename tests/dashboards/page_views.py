@@ -168,14 +168,14 @@ def equipment_rows() -> tuple[EquipmentRow, ...]:
             share=kw / sum(_DESTROYED),
             cost_per_day=kw * 0.96,
             psi=0.35 + 0.05 * place,
-            psi_statement="steam out less feedwater in / fuel"
+            psi_statement="fuel: exergy of the fuel burnt; product: exergy gained by the water"
             if kind == "boiler"
-            else "exergy out / exergy in",
+            else "fuel: exergy of all inlets; product: exergy of all outlets",
             closure_kw=0.012,
             mass_imbalance_kg_s=0.0312,
             energy_imbalance_kw=-18.4,
             running_share=1.0 if place % 4 else 0.871,
-            flags="good" if place % 3 else "held value, from a balance",
+            flags=(("held value", 0.04), ("from a balance", 1.0))[: 1 + place % 2],
         )
         for place, ((identifier, name, kind), kw) in enumerate(
             zip(MACHINES, _DESTROYED, strict=True)
@@ -287,7 +287,7 @@ def unknown_overview() -> OverviewView:
         equipment=tuple(
             replace(
                 row, destroyed_kw=NAN, destroyed_reference_kw=NAN, share=NAN, cost_per_day=NAN,
-                psi=NAN, closure_kw=NAN, running_share=NAN, flags="no usable reading",
+                psi=NAN, closure_kw=NAN, running_share=NAN, flags=(("no usable reading", 1.0),),
             )
             for row in equipment_rows()
         ),

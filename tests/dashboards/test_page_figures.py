@@ -18,7 +18,6 @@ from dashboards import dead_state, expansion, figures, flows, marks, series, shi
 from dashboards.embed import figure_json
 from dashboards.overview import ranked_conditions
 from dashboards.theme import COLOURS
-from dashboards.views import FlowLink
 
 
 def charts():
@@ -145,39 +144,6 @@ def test_nothing_to_draw_gives_no_figure():
     assert figures.trend_chart(replace(silent, data=silent.data * np.nan), "t") is None
 
 
-def test_widths_of_the_flow_diagram_are_the_rates():
-    links = (
-        FlowLink("fuel", "boiler", "Fuel", 100.0, "fuel"),
-        FlowLink("boiler", "machine", "Steam", 40.0, "water"),
-        FlowLink("boiler", "destroyed", "Destroyed", 60.0, "destroyed"),
-    )
-    link = flows.flow_diagram(links, {}).figure["data"][0]["link"]
-    seen = [
-        value
-        for value, colour in zip(link["value"], link["color"], strict=True)
-        if colour != "rgba(0,0,0,0)"
-    ]
-    # Drawn from the largest to the smallest, since loops are cut at their smallest flow.
-    assert seen == [100.0, 60.0, 40.0]
-
-
-def test_a_loop_is_cut_at_its_smallest_flow_and_nothing_is_lost():
-    links = (
-        FlowLink("fuel", "boiler", "Fuel", 100.0, "fuel"),
-        FlowLink("boiler", "machine", "Steam", 90.0, "water"),
-        FlowLink("machine", "boiler", "Condensate", 5.0, "water"),
-    )
-    kept, names = flows._unrolled(links, {"boiler": "Boiler", "machine": "Machine"})
-    assert {(flow.source, flow.target, flow.kw) for flow in kept} == {
-        ("fuel", "boiler", 100.0),
-        ("boiler", "machine", 90.0),
-        ("machine", "to boiler", 5.0),
-        ("from machine", "boiler", 5.0),
-    }
-    assert names["to boiler"] == "to Boiler"
-    assert names["from machine"] == "from Machine"
-
-
 def test_flows_that_cannot_be_drawn_are_counted():
     chart = flows.flow_diagram(page_views.flows(), page_views.NODE_NAMES)
     assert "2 of 35 flows are not drawn" in chart.note
@@ -250,3 +216,58 @@ def test_a_shift_is_compared_with_the_same_line_before():
     assert destroyed.change == pytest.approx(46_120 * 0.019)
     alone = shift.first_page(page_views.shift(previous_ledger=()))
     assert all(math.isnan(row.change) for row in alone.ledger)
+
+
+def test_digits_follow_the_smallest_change_that_matters_then_the_limit():
+    drifting = page_views.conditions()[0]
+    assert marks.matters(replace(drifting, smallest_change=0.05)) == 0.05
+    assert marks.matters(drifting) == drifting.limit
+    assert marks.matters(replace(drifting, limit=math.nan)) == 0.0
+    assert marks.matters(replace(drifting, smallest_change=0.05, state="not judged")) == 0.0
+
+
+def spiked(values):
+    trend = page_views.trend(len(values), baseline=False)
+    return replace(trend, data=trend.data.assign(value=values))
+
+
+def test_a_stop_of_minutes_does_not_press_a_trend_flat_and_is_told():
+    values = 80.0 + np.sin(np.arange(720) / 9.0)
+    values[300:303] = [12.0, 5.0, 31.0]
+    chart = figures.trend_chart(spiked(values), "t")
+    low, high = chart.figure["layout"]["yaxis"]["range"]
+    assert 77.0 < low < 79.0
+    assert 81.0 < high < 83.0
+    assert "3 of 720 values lie outside" in chart.note
+    assert "5.00\u00a0%" in chart.note
+    marked = chart.figure["data"][-1]
+    assert marked["marker"]["symbol"] == ["triangle-down"] * 3
+    assert all(low < y < high for y in marked["y"])
+
+
+@given(st.lists(st.floats(-1e4, 1e4), min_size=2, max_size=150))
+def test_every_value_is_shown_or_counted(values):
+    chart = figures.trend_chart(spiked(np.array(values)), "t")
+    shown = chart.figure["layout"]["yaxis"].get("range")
+    if shown is None:
+        assert chart.note == ""
+    else:
+        outside = sum(not shown[0] <= value <= shown[1] for value in values)
+        assert outside > 0
+        assert chart.note.startswith(f"{outside} of {len(values)} ")
+
+
+def test_the_expansion_fills_its_chart_and_lines_end_at_its_edge():
+    chart = expansion.expansion_chart(page_views.expansion())
+    (s_low, s_high), (h_low, h_high) = (
+        chart.figure["layout"][name]["range"] for name in ("xaxis", "yaxis")
+    )
+    points = page_views.expansion().points
+    assert np.ptp(points["enthalpy"]) > 0.6 * (h_high - h_low)
+    assert np.ptp(points["entropy"]) > 0.3 * (s_high - s_low)
+    isobars = [trace for trace in chart.figure["data"] if "bar" in trace["name"]]
+    assert isobars
+    for line in isobars:
+        inside = (line["x"] > s_low) & (line["x"] < s_high) & (line["y"] > h_low)
+        # One point beyond either end carries the line to the edge.
+        assert (~(inside & (line["y"] < h_high))).sum() <= 2

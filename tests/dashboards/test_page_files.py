@@ -19,6 +19,7 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 import dashboards
+from dashboards import ground, shift
 from dashboards.files import equipment_file, shift_file
 
 PACKAGE = Path(dashboards.__file__).parent
@@ -232,6 +233,62 @@ def test_a_page_with_old_figures_says_so(tmp_path):
         context = page_views.context(made=made, newest=newest)
         page = dashboards.write_overview(page_views.overview(context=context), tmp_path)
         assert word in page.read_text(encoding="utf-8")
+
+
+@pytest.mark.parametrize("ahead", [0, 5, 60 * 24 * 220])
+def test_a_page_made_at_or_before_the_newest_figure_stands_and_is_not_stale(tmp_path, ahead):
+    newest = page_views.END
+    context = page_views.context(made=newest - pd.Timedelta(minutes=ahead), newest=newest)
+    text = dashboards.write_overview(page_views.overview(context=context), tmp_path).read_text(
+        encoding="utf-8"
+    )
+    assert "Newest figure 3 Mar 2026 06:00." in text
+    assert "Stale" not in text
+    assert "later" not in text.split("<footer>")[0]
+
+
+def test_an_alarm_says_its_name_and_its_cost_once(tmp_path):
+    alarm = page_views.alarms()[0]
+    page = dashboards.write_overview(page_views.overview(alarms=(alarm,)), tmp_path)
+    item = re.search(r'<ul class="alarms">(.*?)</ul>', page.read_text(encoding="utf-8"), re.DOTALL)
+    assert item[1].count(alarm.equipment_name) == 1
+    assert len(re.findall(r"EUR", item[1])) == 1
+
+
+def test_what_holds_for_all_equipment_is_said_once_and_the_rest_where_it_differs():
+    row = page_views.equipment().row
+    rows = (
+        replace(row, flags=(("ambient below freezing", 0.24), ("from a balance", 1.0))),
+        replace(row, flags=(("ambient below freezing", 0.24), ("uncertain reading", 0.031))),
+        replace(row, flags=(("ambient below freezing", 0.24),)),
+    )
+    shared = ground.shared_ground(rows)
+    assert shared == {"ambient below freezing": "ambient below freezing 24\u00a0%"}
+    assert [ground.ground(row, shared) for row in rows] == [
+        "from a balance",
+        "uncertain reading 3\u00a0%",
+        "nothing else",
+    ]
+    assert ground.ground(replace(row, flags=())) == "good readings"
+    assert ground.shared_ground(rows[:1]) == {}
+
+
+def test_fuel_and_product_are_defined_once_for_a_kind(tmp_path):
+    text = dashboards.write_overview(page_views.overview(), tmp_path).read_text(encoding="utf-8")
+    assert text.count("fuel: exergy of the fuel burnt") == 1
+
+
+def test_no_sentence_of_the_first_page_is_cut(tmp_path):
+    sentence = "The section runs below its baseline since a week, " * 5 + "which costs 1 234 EUR."
+    view = page_views.shift(
+        summary=(sentence, "Short.", sentence, sentence, sentence),
+        alarms=tuple(replace(a, message=sentence) for a in page_views.alarms()),
+    )
+    first = shift.first_page(view)
+    assert first.summary == (sentence, "Short.", sentence, sentence)
+    assert [alarm.message for alarm in first.alarms] == [sentence] * 2
+    text = dashboards.write_shift(view, tmp_path).read_text(encoding="utf-8")
+    assert "…" not in text.split('<div class="details">')[0]
 
 
 def test_no_alarm_is_said_in_words(tmp_path):

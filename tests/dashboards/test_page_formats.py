@@ -69,6 +69,43 @@ def test_a_difference_always_has_its_sign():
     assert formats.signed(-0.25, 2, "K") == f"−0.25{NO_BREAK}K"
 
 
+@pytest.mark.parametrize(
+    ("value", "smallest", "text"),
+    [
+        (0.03584, 0.5, "0"),
+        (81.8163, 0.7, "81.8"),
+        (1323.1, 60.0, f"1{GAP}323"),
+        (-0.2256, 1.5, "−0.2"),
+        (7.40802, 0.0, "7.41"),
+        (7.40802, math.nan, "7.41"),
+        (math.nan, 0.5, "–"),
+        (None, 0.5, "–"),
+    ],
+)
+def test_a_figure_shows_the_digits_that_its_smallest_change_asks_for(value, smallest, text):
+    assert formats.fitting(value, "1", smallest) == text
+
+
+def test_a_fitted_difference_has_a_sign_unless_it_rounds_to_nothing():
+    assert formats.fitting(1.84, "K", 0.5, sign=True) == f"+1.8{NO_BREAK}K"
+    assert formats.fitting(0.01, "K", 0.5, sign=True) == f"0{NO_BREAK}K"
+    assert formats.fitting(-1.84, "K", 0.5, sign=True) == f"−1.8{NO_BREAK}K"
+
+
+def test_a_balance_that_closes_to_rounding_is_zero():
+    # Sums of doubles leave a residue of some 1e-16 of their terms.
+    assert formats.fixed(-6.27e-16, "kg/s", 3) == f"0{NO_BREAK}kg/s"
+    assert formats.fixed(0.16870, "kg/s", 3) == f"0.169{NO_BREAK}kg/s"
+    assert formats.fixed(0.0865, "degC", 1) == f"0.1{NO_BREAK}°C"
+    assert formats.fixed(math.nan, "kW", 1) == "–"
+
+
+def test_dryness_is_written_where_steam_is_wet():
+    assert [formats.wetness(x) for x in (0.0, 0.9134, 1.0, math.nan, None)] == [
+        "–", "0.913", "–", "–", "–",
+    ]  # fmt: skip
+
+
 def test_a_share_is_written_in_per_cent():
     assert formats.percent(0.8234) == f"82.3{NO_BREAK}%"
     assert formats.percent(1.0, 0) == f"100{NO_BREAK}%"

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import re
+
+import mill_flows
 import page_views
 import pytest
 
@@ -12,6 +15,7 @@ pytestmark = pytest.mark.browser
 PAGES = ("overview", "equipment", "dead state", "shift")
 CHARTS = {"overview": 3, "equipment": 4, "dead state": 5, "shift": 1}
 PAPER_WIDTH = 700
+SCREEN_HEIGHT = 900
 
 
 @pytest.fixture(scope="module")
@@ -76,6 +80,42 @@ def test_labels_of_the_flow_diagram_do_not_overlap(full_looks):
     flows = next(c for c in full_looks["overview"].probe["charts"] if c["id"] == "flows")
     assert any("Condenser" in text for text in flows["text"])
     assert flows["crossings"] == 0
+
+
+def test_labels_of_a_whole_mills_flow_diagram_do_not_overlap(browser, tmp_path):
+    dashboards.write_assets(tmp_path)
+    view = page_views.overview(flows=mill_flows.mill_flows(), node_names=mill_flows.NODE_NAMES)
+    look = browser.look(dashboards.write_overview(view, tmp_path))
+    flows = next(c for c in look.probe["charts"] if c["id"] == "flows")
+    shown = " ".join(flows["text"])
+    # A line's break is a tspan's end, so words of two lines join.
+    for words in ("Bark boiler", "Gas boiler", "turbine TG1", "turbine TG2", "Deaerator"):
+        assert words in shown
+    assert (flows["crossings"], flows["cut"]) == (0, [])
+    assert look.console == []
+
+
+@pytest.mark.parametrize("name", PAGES)
+def test_a_page_says_its_language_and_title_and_lets_the_keyboard_skip_the_links(full_pages, name):
+    text = full_pages[name].read_text(encoding="utf-8")
+    assert '<html lang="en">' in text
+    title = re.search(r"<title>([^<]+)</title>", text)[1]
+    assert title.endswith(" · Kivilahti board mill")
+    assert len(title) > len(" · Kivilahti board mill")
+    first_link = re.search(r"<a [^>]*>", text)[0]
+    assert first_link == '<a class="skip" href="#content">'
+    assert '<main id="content">' in text
+
+
+def test_the_first_screenful_of_the_overview_holds_the_tiles_the_alarms_and_the_ledger(
+    browser, tmp_path
+):
+    dashboards.write_assets(tmp_path)
+    many = page_views.overview(alarms=page_views.alarms() * 4)
+    page = dashboards.write_overview(many, tmp_path)
+    probe = browser.look(page).probe
+    assert 0 < probe["ledgerEnds"] <= SCREEN_HEIGHT
+    assert "9 more below" in probe["text"]
 
 
 @pytest.mark.parametrize("name", PAGES)
