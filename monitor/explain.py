@@ -19,8 +19,8 @@ from monitor.errors import WrongUseError
 from monitor.figures import Computed, compute, lead_in
 from monitor.flags import describe
 from monitor.judging import tags_behind, tags_of_stream
-from monitor.readings.condition import condition
 from monitor.readings.grid import Grid
+from monitor.readings.site import condition_site
 from monitor.store.batch import EQUIPMENT_COLUMNS, LEDGER_COLUMNS, STREAM_COLUMNS
 from monitor.store.errors import StoreError
 from monitor.store.handle import SITE_SUBJECT
@@ -271,11 +271,9 @@ def _gridded(
 ) -> Iterator[GridValue]:
     interval = int(site.file.site.interval)
     grid = Grid(hour - lead_in(site), start + interval, interval)
-    chosen = {name: site.tags[name] for name in tags}
-    for name, one in condition(
-        read.readings, chosen, grid, site.file.site.least_coverage
-    ).tags.items():
-        unit = chosen[name].unit
+    conditioned = condition_site(site, read.readings, grid).tags
+    for name in tags:
+        one, unit = conditioned[name], site.tags[name].unit
         value = (float(one.mean[-1]) - unit.offset) / unit.scale
         yield GridValue(name, value, unit.text, describe(int(one.flag[-1])))
 

@@ -24,9 +24,9 @@ from monitor.equipment.account import (
 from monitor.equipment.base import Content, Drawn, FloatArray, Item, Signal, StreamState, sum_flags
 from monitor.equipment.solve import complete
 from monitor.flags import Flag, FlagArray
-from monitor.readings.condition import Conditioned, Gridded, condition
 from monitor.readings.grid import Grid
-from monitor.store.batch import FigureBatch
+from monitor.readings.site import condition_site
+from monitor.store.batch import LEFT_OUT_COLUMNS, FigureBatch
 from monitor.streams import Gauges, signals_of, stream_states, with_enthalpy
 from monitor.tables import condition_table, equipment_table, ledger_table, stream_table
 from monitor.thermo.dead_state import DeadState, dead_state, live_ambient
@@ -35,6 +35,7 @@ if TYPE_CHECKING:
     from collections.abc import Mapping
 
     from connectors.base import Problem, ReadResult
+    from monitor.readings.condition import Conditioned, Gridded
     from monitor.site.load import Site
     from monitor.site.models import Reference
 
@@ -66,10 +67,17 @@ class Computed:
 
 
 def lead_in(site: Site) -> int:
-    """How long before a window its readings begin [s], in whole cells."""
+    """How long before a window its readings begin [s], in whole cells.
+
+    The cells of the steadiness window come before it, and their dead state's mean and hold before
+    them; a stuck value is told by the cells of its time; before the first of all these cells come
+    the readings that its values and their checks rest on.
+    """
     dead, general = site.file.dead_state, site.file.site
-    hold = max((t.hold for t in site.used_tags().values()), default=0.0)
-    before = max(general.steady_window, dead.mean + dead.hold) + hold
+    tags = site.used_tags().values()
+    stuck = max((tag.stuck_seconds for tag in tags), default=0.0)
+    before = max(general.steady_window + dead.mean + dead.hold, stuck)
+    before += max((tag.look_back for tag in tags), default=0.0)
     return math.ceil(before / general.interval + 1) * int(general.interval)
 
 
@@ -87,7 +95,7 @@ def compute(site: Site, read: ReadResult, start: int, end: int) -> Computed:
     interval = int(site.file.site.interval)
     grid = Grid(start, end, interval)
     wide = Grid(start - lead_in(site), end, interval)
-    conditioned = condition(read.readings, site.used_tags(), wide, site.file.site.least_coverage)
+    conditioned = condition_site(site, read.readings, wide)
     steady_cells = math.ceil(site.file.site.steady_window / interval)
     kept = grid.count + steady_cells
     ambient = _ambient(site, conditioned, kept)
@@ -272,7 +280,7 @@ def _figures(
     return Computed(
         batch=batch,
         readings=int(quality["readings"].sum()),
-        bad=int(quality["bad"].sum() + quality["out_of_range"].sum()),
+        bad=int(quality[list(LEFT_OUT_COLUMNS)].to_numpy().sum()),
         missing=int(quality["cells_missing"].sum()),
         problems=problems,
     )

@@ -51,6 +51,16 @@ class Flag(IntFlag):
     """At saturation, the phase is the one the site file states."""
     AMBIGUOUS_TIME = 1 << 15
     """A local time that happens twice could not be resolved."""
+    TOO_FAST = 1 << 16
+    """A reading that moved faster than the tag's rate limit was left out."""
+    SPIKE = 1 << 17
+    """A spike (Hampel identifier) was left out."""
+    STUCK = 1 << 18
+    """The value stands still while its neighbours move; it is used, since none better is known."""
+    OUT_OF_ORDER = 1 << 19
+    """A reading came after ones of later times."""
+    MOISTURE = 1 << 20
+    """The exhaust is wetter than the turbine's stated limit: its last blades erode."""
 
 
 NOT_JUDGED = (
@@ -62,6 +72,7 @@ NOT_JUDGED = (
     | Flag.UNSTEADY
     | Flag.OFF
     | Flag.SECOND_LAW
+    | Flag.STUCK
 )
 """A condition figure with any of these is shown but never judged."""
 
@@ -82,6 +93,11 @@ _WORDS = {
     Flag.SECOND_LAW: "contradicts the second law",
     Flag.SIDE_ASSUMED: "phase as stated",
     Flag.AMBIGUOUS_TIME: "ambiguous local time",
+    Flag.TOO_FAST: "reading that moved too fast left out",
+    Flag.SPIKE: "spike left out",
+    Flag.STUCK: "stuck value",
+    Flag.OUT_OF_ORDER: "reading out of time order",
+    Flag.MOISTURE: "exhaust wetter than its limit",
 }
 
 

@@ -62,12 +62,17 @@ class Held:
         coverage: share of each cell that readings cover, 0 to 1, shape (n,).
         edges: value in force at the cells' ends, NaN where none, shape (n + 1,).
         fresh: number of readings inside each cell, shape (n,).
+        last: last value in force inside each cell, NaN without coverage, shape (n,).
+        low, high: smallest and largest value in force inside each cell, shape (n,).
     """
 
     mean: FloatArray
     coverage: FloatArray
     edges: FloatArray
     fresh: npt.NDArray[np.int64]
+    last: FloatArray
+    low: FloatArray
+    high: FloatArray
 
 
 def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: float) -> Held:
@@ -85,7 +90,8 @@ def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: floa
     count = np.diff(np.searchsorted(seconds, edges, side="left"))
     if len(seconds) == 0:
         empty = np.full(grid.count, np.nan)
-        return Held(empty, np.zeros(grid.count), np.full(grid.count + 1, np.nan), count)
+        edge = np.full(grid.count + 1, np.nan)
+        return Held(empty, np.zeros(grid.count), edge, count, empty, empty, empty)
     until = np.minimum(np.append(seconds[1:], np.inf), seconds + hold)
     # The value in force changes at readings and ends at cell edges; between two such points it is
     # constant. Sums never leave their cell, so that a figure does not depend on the window.
@@ -101,11 +107,13 @@ def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: floa
     # constant exactly, and an expired reading leaves no trace in the last bit.
     value = values[known[:-1]]
     place = np.arange(len(lasted))
-    counting = np.minimum.reduceat(np.where(lasted > 0, place, len(lasted) - 1), first)
-    base = value[counting]
+    counts = lasted > 0
+    base = value[np.minimum.reduceat(np.where(counts, place, len(lasted) - 1), first)]
+    last = value[np.maximum.reduceat(np.where(counts, place, 0), first)]
     above = (value - np.repeat(base, np.diff(np.append(first, len(lasted))))) * lasted
     with np.errstate(divide="ignore", invalid="ignore"):
         mean = np.where(covered > 0, base + np.add.reduceat(above, first) / covered, np.nan)
+    counted = np.where(counts, value, np.nan)
     at = np.maximum(np.searchsorted(seconds, edges, side="right") - 1, 0)
     in_force = (seconds[at] <= edges) & (edges - seconds[at] <= hold)
     return Held(
@@ -113,4 +121,7 @@ def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: floa
         coverage=covered / grid.interval,
         edges=np.where(in_force, values[at], np.nan),
         fresh=count,
+        last=np.where(covered > 0, last, np.nan),
+        low=np.fmin.reduceat(counted, first),
+        high=np.fmax.reduceat(counted, first),
     )

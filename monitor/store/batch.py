@@ -17,6 +17,7 @@ __all__ = [
     "CONDITION_COLUMNS",
     "EQUIPMENT_COLUMNS",
     "LEDGER_COLUMNS",
+    "LEFT_OUT_COLUMNS",
     "QUALITY_COLUMNS",
     "STREAM_COLUMNS",
     "FigureBatch",
@@ -79,10 +80,17 @@ QUALITY_COLUMNS = (
     "uncertain",
     "bad",
     "out_of_range",
+    "too_fast",
+    "spike",
+    "out_of_order",  # counted beside the kinds above, as is the next
+    "ambiguous",
     "cells",
     "cells_missing",
     "cells_held",
+    "cells_stuck",
 )
+LEFT_OUT_COLUMNS = ("bad", "out_of_range", "too_fast", "spike")
+"""Counts of readings that were left out, each for one reason."""
 
 
 @dataclass(frozen=True)

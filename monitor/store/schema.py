@@ -47,7 +47,7 @@ __all__ = [
     "watermarks",
 ]
 
-REVISIONS = ("0001", "0002")
+REVISIONS = ("0001", "0002", "0003")
 """Every schema revision this program knows, oldest first; the last one is what it works with."""
 
 VERSION_TABLE = "lostwork_schema"
