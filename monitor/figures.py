@@ -210,7 +210,13 @@ def _accounted(site: Site, drawn: Drawn, ambient: Ambient) -> Accounted:
     passing = np.maximum(np.abs(live.exergy_in), np.abs(live.exergy_out))
     stored = content_uncertainty(drawn, ambient.live, _moved_contents(site, drawn))
     contradicts = live.destroyed < -(_CONTRADICTION * passing + _COVERAGE * stored)
+    if drawn.content is None:
+        # Out of service, meters about zero show as much below it as above.
+        contradicts &= (flag & Flag.OFF) == 0
     flag[contradicts] |= Flag.SECOND_LAW
+    # A reading that is not needed (a pipe without flow, a valve's position) takes no figure away.
+    whole = np.isfinite(live.closure + live.fuel + live.product)
+    flag[whole] &= ~np.int32(Flag.MISSING)
     absent = ~np.isfinite(live.destroyed) & ((flag & Flag.OUT_OF_REGION) == 0)
     flag[absent] |= Flag.MISSING
     return Accounted(drawn, counted, live, reference, load, flag)
