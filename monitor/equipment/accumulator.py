@@ -1,8 +1,16 @@
 """Wet steam accumulator: a closed vessel of boiling water, charged and discharged.
 
-Liquid and vapour are in equilibrium at the vessel's pressure; with the volume V and the liquid's
-share y of it, m = V [y / v_f + (1 - y) / v_g], and likewise U and S. What is stored is non-flow
+What it holds follows from level and pressure (`saturated_vessel`). What is stored is non-flow
 exergy E = U + p0 V - T0 S - g0 m: never flow exergy, which would count (p - p0) V too much.
+
+Exergy returned / exergy stored belongs to a period, not to a cell: over a shift or a day it is the
+period's product over its fuel (discharged over charged less the rise of what is stored), which the
+roll-ups give as psi. A period of a few full cycles tells the vessel; one with more discharge than
+charge tells how it was run.
+
+While nothing but little flows, what the balance misses is the standing loss. Mass that the gauges
+find or miss is valued as liquid, h_f, so that a level's noise of half a per cent does not pass for
+megawatts: Q = sum m (h - h_f) in - out - (dU - h_f dm) / dt.
 Source: Bejan, Tsatsaronis, Moran (1996), eq. 3.8 (physical exergy of a closed system).
 """
 
@@ -26,6 +34,7 @@ from monitor.equipment.base import (
     measured,
     total,
 )
+from monitor.equipment.saturated_vessel import saturated_content
 from monitor.site.models import Reference
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturated
@@ -75,18 +84,8 @@ class Accumulator(Kind):
 
     def content(self, item: Item, signals: Mapping[str, Signal]) -> Content:
         """Mass, energy and entropy in the vessel at the cells' ends."""
-        options = cast("AccumulatorOptions", item.options)
-        share = signals["level"].edges
-        liquid, vapour = saturated(signals["pressure"].edges)
-        liquid_mass = options.volume * share / liquid.volume
-        vapour_mass = options.volume * (1.0 - share) / vapour.volume
-        return Content(
-            mass=liquid_mass + vapour_mass,
-            internal_energy=liquid_mass * liquid.internal_energy
-            + vapour_mass * vapour.internal_energy,
-            entropy=liquid_mass * liquid.entropy + vapour_mass * vapour.entropy,
-            volume=np.full_like(share, options.volume),
-        )
+        volume = cast("AccumulatorOptions", item.options).volume
+        return saturated_content(volume, signals["level"].edges, signals["pressure"].edges)
 
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow in or out, whichever is larger [kg/s]."""
@@ -110,30 +109,44 @@ class Accumulator(Kind):
         return np.asarray(into - stored / drawn.interval), out
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Standing loss while nothing flows."""
+        """Standing loss while nothing flows, and the same per kelvin above the surroundings."""
         del item
-        return (
+        both = (
+            ("standing_loss", "standing heat loss", "kW", 20.0),
+            ("heat_loss_coefficient", "heat-loss coefficient", "kW/K", 0.2),
+        )
+        return tuple(
             Figure(
-                "standing_loss",
-                "standing heat loss",
-                "kW",
+                name,
+                label,
+                unit,
                 "high",
-                20.0,
+                smallest,
                 judged=False,
                 needs_load=False,
                 follows_load=False,
-            ),
+            )
+            for name, label, unit, smallest in both
         )
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
-        """Values of `figures`: the fall of internal energy where no stream flows."""
-        del dead
+        """Values of `figures`: what the energy balance misses where next to nothing flows."""
         held = drawn.content
         if held is None:
             raise TypeError(f"accumulator '{drawn.item.id}' was drawn without its content")
         idle = np.abs(self.load(drawn)) < drawn.item.options.off_below
-        loss = -np.diff(held.internal_energy) / drawn.interval / 1e3
-        flag = drawn.signals["level"].flag | drawn.signals["pressure"].flag
+        pressure = drawn.signals["pressure"]
+        liquid = saturated(pressure.value)[0]
+        brought = [s.energy - s.mass_flow * liquid.enthalpy for s in drawn.facing("in")]
+        taken = [s.energy - s.mass_flow * liquid.enthalpy for s in drawn.facing("out")]
+        fall = liquid.enthalpy * np.diff(held.mass) - np.diff(held.internal_energy)
+        missed = fall / drawn.interval - total(taken)
+        loss = np.where(idle, total([missed, *brought]), np.nan) / 1e3
+        flag = drawn.signals["level"].flag | pressure.flag
+        ones = np.ones_like(loss)
         return {
-            "standing_loss": ConditionFigure(np.where(idle, loss, np.nan), np.ones_like(loss), flag)
+            "standing_loss": ConditionFigure(loss, ones, flag),
+            "heat_loss_coefficient": ConditionFigure(
+                loss / (liquid.temperature - dead.temperature), ones, flag
+            ),
         }

@@ -1,12 +1,15 @@
 """Boiler: fuel to steam. Fuel exergy is beta * LHV * m (Szargut and Styrylska).
 
 eta = (H_steam + H_blowdown - H_feedwater) / (m_fuel LHV), the direct method; what stack and casing
-take is inside the destroyed exergy unless it is a stream of its own.
+take is inside the destroyed exergy unless it is a stream of its own. The exergetic efficiency
+psi = (E_steam + E_blowdown - E_feedwater) / E_fuel beside it is taken at 15 degC and 1.01325 bar,
+whatever the weather, so that it tells the boiler and not the day.
 Source: Kotas, The Exergy Method of Thermal Plant Analysis (1985), chapter 5 (steam boiler).
 """
 
 from __future__ import annotations
 
+from functools import cache
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -22,12 +25,20 @@ from monitor.equipment.base import (
     PortSpec,
     total,
 )
+from monitor.equipment.heat_transfer import share
 from monitor.flags import Flag
+from monitor.thermo.dead_state import dead_state
 
 if TYPE_CHECKING:
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Boiler", "BoilerOptions"]
+
+
+@cache
+def _standard() -> DeadState:
+    """The dead state of the exergetic efficiency: the standard day, 15 degC and 1 atm."""
+    return dead_state(288.15, 101325.0)
 
 
 class BoilerOptions(Options):
@@ -65,9 +76,27 @@ class Boiler(Kind):
         return total([s.exergy(dead) for s in drawn.at("fuel")]), np.asarray(gained)
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Fuel efficiency by the direct method."""
-        del item
-        return (Figure("fuel_efficiency", "fuel efficiency (direct)", "%", "low", 1.5),)
+        """Fuel and exergetic efficiency, and what blowdown and measured losses take."""
+        losses = item.ports.get("loss", ())
+        # A loss found from the energy balance is 100 % less the efficiency by construction.
+        metered = losses and all(item.states(s, "heat") != "balance" for s in losses)
+        blowdown = Figure(
+            "blowdown_share", "blowdown, share of the feed water", "%", "high", 1.0, judged=False
+        )
+        loss = Figure("loss_share", "measured losses, share of the fuel", "%", "high", 1.0)
+        return (
+            Figure("fuel_efficiency", "fuel efficiency (direct)", "%", "low", 1.5),
+            Figure(
+                "exergetic_efficiency",
+                "exergetic efficiency at 15 degC",
+                "%",
+                "low",
+                1.0,
+                judged=False,
+            ),
+            *((blowdown,) if item.ports.get("blowdown") else ()),
+            *((loss,) if metered else ()),
+        )
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
@@ -80,6 +109,17 @@ class Boiler(Kind):
             efficiency = np.where(burnt > 0, gained / burnt, np.nan)
         impossible = np.nan_to_num(efficiency, nan=0.5) > 1
         flag = np.where(impossible, np.int32(Flag.SECOND_LAW), np.int32(0))
+        weight, nothing = np.maximum(burnt, 0.0), np.zeros_like(flag)
+        spent, made = self.fuel(drawn, _standard())
+        water = total([s.mass_flow for s in drawn.at("feedwater")])
+        off = np.zeros_like(burnt)
+        blown = total([off, *(s.mass_flow for s in drawn.at("blowdown"))])
+        lost = total([off, *(s.energy for s in drawn.at("loss"))])
         return {
-            "fuel_efficiency": ConditionFigure(100.0 * efficiency, np.maximum(burnt, 0.0), flag)
+            "exergetic_efficiency": ConditionFigure(
+                share(made, spent), np.maximum(spent, 0.0), flag
+            ),
+            "blowdown_share": ConditionFigure(share(blown, water), np.maximum(water, 0.0), nothing),
+            "loss_share": ConditionFigure(share(lost, burnt), weight, nothing),
+            "fuel_efficiency": ConditionFigure(100.0 * efficiency, np.maximum(burnt, 0.0), flag),
         }

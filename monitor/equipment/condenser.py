@@ -2,15 +2,19 @@
 
 UA = Q / LMTD with the saturation temperature on the steam side; TTD = T_sat - T_cooling,out.
 The heat is counted on the cooling water's side, where flow and temperatures are measured.
+With a ``design_ua`` the cleanliness factor is UA / UA_design, the design's corrected to the day's
+cooling water: by the square root of its flow (velocity in the tubes) over the design's, and by a
+stated share per kelvin of its inlet temperature.
 Source: Heat Exchange Institute practice for UA and TTD (from memory); Bejan, Tsatsaronis, Moran
 (1996), chapter 3.5: a dissipative component, its product is what the cooling water gains.
 """
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Annotated, cast
 
 import numpy as np
+from pydantic import Field, model_validator
 
 from monitor.equipment.base import (
     ConditionFigure,
@@ -19,16 +23,53 @@ from monitor.equipment.base import (
     FloatArray,
     Item,
     Kind,
+    Options,
     PortSpec,
+    StreamState,
+    measured,
     total,
 )
+from monitor.equipment.heat_transfer import conductance, share
 from monitor.flags import Flag
+from monitor.site.units import Quantity
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
     from monitor.thermo.dead_state import DeadState
 
-__all__ = ["Condenser"]
+__all__ = ["Condenser", "CondenserOptions"]
+
+
+class CondenserOptions(Options):
+    """Keys of a condenser's table.
+
+    Attributes:
+        design_ua: of clean tubes [W/K].
+        design_cooling_flow: at which that holds [kg/s]; None leaves the flow out of it.
+        design_cooling_temperature: of the water in, at which that holds [K].
+        ua_per_kelvin: share by which UA rises per kelvin of it.
+    """
+
+    design_ua: Annotated[float, measured(Quantity.CONDUCTANCE), Field(gt=0)] | None = None
+    design_cooling_flow: Annotated[float, measured(Quantity.MASS_FLOW), Field(gt=0)] | None = None
+    design_cooling_temperature: Annotated[float, measured(Quantity.TEMPERATURE)] | None = None
+    ua_per_kelvin: float = 0.0
+
+    @model_validator(mode="after")
+    def _corrections_have_their_design(self) -> CondenserOptions:
+        if self.ua_per_kelvin and self.design_cooling_temperature is None:
+            raise ValueError("ua_per_kelvin counts from a design_cooling_temperature: give it too")
+        return self
+
+    def expected_ua(self, cooling: StreamState) -> FloatArray:
+        """UA of clean tubes at the day's cooling water [W/K]; NaN without a design."""
+        ua = np.full_like(cooling.temperature, np.nan if self.design_ua is None else self.design_ua)
+        if self.design_cooling_flow is not None:
+            ua = ua * np.sqrt(np.maximum(cooling.mass_flow, 0.0) / self.design_cooling_flow)
+        if self.design_cooling_temperature is not None:
+            warmer = cooling.temperature - self.design_cooling_temperature
+            ua = ua * (1.0 + self.ua_per_kelvin * warmer)
+        return ua
 
 
 class Condenser(Kind):
@@ -42,6 +83,7 @@ class Condenser(Kind):
         PortSpec("condensate", "out", role="fuel"),
         PortSpec("cooling_out", "out"),
     )
+    options = CondenserOptions
     fuel_and_product = (
         "fuel: exergy given up by the steam; product: exergy gained by the cooling water"
     )
@@ -61,11 +103,14 @@ class Condenser(Kind):
         )
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Overall heat transfer and terminal temperature difference."""
-        del item
+        """Overall heat transfer, terminal temperature difference, and cleanliness with a design."""
+        designed = cast("CondenserOptions", item.options).design_ua is not None
+        cleanliness = Figure("cleanliness", "cleanliness factor", "%", "low", 3.0)
         return (
-            Figure("ua", "heat transfer UA", "kW/K", "low", 60.0),
+            # One alarm for one fouling: the cleanliness says the same with less of the weather.
+            Figure("ua", "heat transfer UA", "kW/K", "low", 60.0, judged=not designed),
             Figure("ttd", "terminal temperature difference", "K", "high", 0.5, judged=False),
+            *((cleanliness,) if designed else ()),
         )
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
@@ -76,13 +121,13 @@ class Condenser(Kind):
         approach_in, approach_out = boiling - cold.temperature, boiling - warm.temperature
         duty = warm.mass_flow * (warm.enthalpy - cold.enthalpy)
         crossed = ~((approach_in > approach_out) & (approach_out > 0))
-        with np.errstate(divide="ignore", invalid="ignore"):
-            mean_difference = (approach_in - approach_out) / np.log(approach_in / approach_out)
-            ua = np.where(crossed, np.nan, duty / mean_difference / 1e3)
+        ua = np.where(crossed, np.nan, conductance(duty, approach_in, approach_out))
+        expected = cast("CondenserOptions", drawn.item.options).expected_ua(cold)
         measured = np.isfinite(approach_in) & np.isfinite(approach_out)
         flag = np.where(crossed & measured, np.int32(Flag.SECOND_LAW), np.int32(0))
         ones = np.ones_like(duty)
         return {
-            "ua": ConditionFigure(ua, ones, flag),
+            "ua": ConditionFigure(ua / 1e3, ones, flag),
+            "cleanliness": ConditionFigure(share(ua, expected), ones, flag),
             "ttd": ConditionFigure(approach_out, ones, np.zeros_like(flag)),
         }

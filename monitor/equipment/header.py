@@ -1,7 +1,9 @@
 """Steam header: several inlets and outlets that mix, lose heat and sometimes lose steam.
 
 The energy that the outlets do not carry leaves as heat (``heat_loss = "balance"`` by default); the
-mass that they do not carry is the unaccounted flow: a leak, an open drain, or a flow meter.
+mass that they do not carry is the unaccounted flow: a leak, an open drain, or a flow meter. Where
+inlets and outlets have gauges of their own, the pressure loss gives K = (p_in - p_out) / (m^2 v),
+which flow and density have been taken out of (Darcy: dp = K m^2 v in turbulent flow).
 Source: Bejan, Tsatsaronis, Moran (1996), chapter 3.2 (mass, energy, exergy of a control volume).
 """
 
@@ -72,8 +74,26 @@ class Header(Kind):
         unaccounted = Figure(
             "unaccounted_flow", "unaccounted flow", "t/h", "both", 1.5, follows_load=True
         )
+        loss = Figure(
+            "pressure_loss_coefficient",
+            "pressure-loss coefficient",
+            "1/m^4",
+            "high",
+            0.0,
+            judged=False,
+            follows_load=False,
+        )
         by_balance = item.options.heat_loss == "balance"
-        return ((heat,) if by_balance else ()) + ((unaccounted,) if "mass" in item.spare else ())
+        gauged = any(
+            item.differ(one, other, "pressure")
+            for one in item.ports["inlet"]
+            for other in item.ports["outlet"]
+        )
+        return (
+            *((heat,) if by_balance else ()),
+            *((unaccounted,) if "mass" in item.spare else ()),
+            *((loss,) if gauged else ()),
+        )
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
@@ -91,4 +111,17 @@ class Header(Kind):
                 excess = warmth / flow.sum(axis=0) - dead.temperature
                 coefficient = counted.heat_loss / excess / 1e3
             found["heat_loss_coefficient"] = ConditionFigure(coefficient, ones, nothing)
+        found["pressure_loss_coefficient"] = ConditionFigure(_pressure_loss(drawn), ones, nothing)
         return found
+
+
+def _pressure_loss(drawn: Drawn) -> FloatArray:
+    """K = dp / (m^2 v) [1/m^4] between the flow-weighted pressures; NaN where nothing flows."""
+    inlets, outlets = drawn.at("inlet"), drawn.at("outlet")
+    flow = total([s.mass_flow for s in inlets])
+    out = total([s.mass_flow for s in outlets])
+    with np.errstate(divide="ignore", invalid="ignore"):
+        before = total([s.mass_flow * s.pressure for s in inlets]) / flow
+        after = total([s.mass_flow * s.pressure for s in outlets]) / out
+        volume = total([s.mass_flow * s.volume for s in inlets]) / flow
+        return np.where((flow > 0) & (out > 0), (before - after) / (flow**2 * volume), np.nan)

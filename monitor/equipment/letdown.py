@@ -2,14 +2,21 @@
 
 A valve makes nothing of the pressure it takes away. What a turbine without losses would have made
 between the same states is shown as the work bypassed: m [h1 - h(p2, s1)].
-Source: Kotas, The Exergy Method of Thermal Plant Analysis (1985), chapter 4.2 (throttling).
+
+Flow against position: the flow coefficient Kv = m / [Y sqrt(x p1 rho1)] of a gas, x = dp / p1 held
+at its choked value, Y = 1 - x / (3 F_k x_T), over the share of it that the valve's characteristic
+gives at its position. A sound valve keeps it; a worn or blocked trim does not.
+Source: IEC 60534-2-1 (flow capacity, compressible fluids) and IEC 60534-2-4 (inherent
+characteristics and rangeability), both from memory; Kotas, The Exergy Method of Thermal Plant
+Analysis (1985), chapter 4.2 (throttling).
 """
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING, Annotated, cast
+from typing import TYPE_CHECKING, Annotated, Literal, cast
 
 import numpy as np
+from pydantic import Field
 
 from monitor.equipment.base import (
     ConditionFigure,
@@ -28,9 +35,12 @@ from monitor.site.units import Quantity
 from monitor.thermo.water import state_ps
 
 if TYPE_CHECKING:
+    from monitor.equipment.base import StreamState
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Letdown", "LetdownOptions"]
+
+_STEAM_EXPONENT = 1.3  # superheated steam
 
 
 class LetdownOptions(Options):
@@ -39,10 +49,16 @@ class LetdownOptions(Options):
     Attributes:
         position: tag of the valve's position.
         closed_below: position under which the valve counts as closed [0 to 1].
+        characteristic: how the flow coefficient follows the position.
+        rangeability: largest flow coefficient / smallest, of an equal-percentage valve.
+        choking_ratio: x_T of the valve, dp / p1 at which it chokes [0 to 1].
     """
 
     position: Reference | None = None
     closed_below: Annotated[float, measured(Quantity.FRACTION)] = 0.02
+    characteristic: Literal["linear", "equal_percentage"] = "linear"
+    rangeability: float = Field(default=50.0, gt=1)
+    choking_ratio: Annotated[float, measured(Quantity.FRACTION), Field(gt=0, lt=1)] = 0.7
 
     def signals(self) -> dict[str, tuple[Reference, Quantity]]:
         """The valve position, when the site has one."""
@@ -91,7 +107,15 @@ class Letdown(Kind):
             needs_load=False,
             follows_load=False,
         )
-        return (passing, bypassed)
+        coefficient = Figure(
+            "flow_coefficient",
+            "flow coefficient Kv, valve full open",
+            "m^3/h",
+            "both",
+            0.0,
+            judged=False,
+        )
+        return (passing, bypassed, coefficient)
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
@@ -104,7 +128,33 @@ class Letdown(Kind):
         found = {"work_bypassed": ConditionFigure(work, ones, nothing)}
         position = drawn.signals.get("position")
         if position is not None:
-            closed = position.value < cast("LetdownOptions", drawn.item.options).closed_below
+            options = cast("LetdownOptions", drawn.item.options)
+            closed = position.value < options.closed_below
+            coefficient = np.where(
+                closed, np.nan, _flow_coefficient(inlet, outlet.pressure, position.value, options)
+            )
+            found["flow_coefficient"] = ConditionFigure(
+                coefficient, np.maximum(inlet.mass_flow, 0.0), position.flag
+            )
             passing = np.where(closed, inlet.mass_flow * 3.6, np.nan)
             found["passing_flow"] = ConditionFigure(passing, ones, position.flag)
         return found
+
+
+def _flow_coefficient(
+    inlet: StreamState, behind: FloatArray, position: FloatArray, options: LetdownOptions
+) -> FloatArray:
+    """Kv of the full open valve [m^3/h] from steam flow and position; NaN where nothing can flow.
+
+    Kv is the water flow at 1 bar and 1000 kg/m^3, so in SI m = Kv / 36000 Y sqrt(x p1 rho1).
+    """
+    choked = _STEAM_EXPONENT / 1.4 * options.choking_ratio
+    ratio = np.minimum(1.0 - behind / inlet.pressure, choked)
+    expansion = 1.0 - ratio / (3.0 * choked)
+    share = (
+        position if options.characteristic == "linear" else options.rangeability ** (position - 1.0)
+    )
+    with np.errstate(divide="ignore", invalid="ignore"):
+        root = np.sqrt(ratio * inlet.pressure / inlet.volume)
+        coefficient = 36000.0 * inlet.mass_flow / (expansion * root * share)
+    return np.where(ratio > 0, coefficient, np.nan)

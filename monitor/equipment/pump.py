@@ -1,9 +1,11 @@
-"""Pump: shaft power to pressure. eta_s = [h(p2, s1) - h1] / (h2 - h1) times the drive.
+"""Pump: shaft power to pressure.
 
-Judged on the measured power, since the temperature rise of a good pump is within a thermometer's
-error: eta = m [h(p2, s1) - h1] / W.
+On the measured power eta = m [h(p2, s1) - h1] / W, drive included. On pressure and temperature rise
+(the thermodynamic method) eta_s = [h(p2, s1) - h1] / (h2 - h1), of the pump alone: it needs no flow
+and no power, but thermometers good to some hundredths of a kelvin. Where the power is left to the
+energy balance, the first is the second.
 Source: Moran and Shapiro, Fundamentals of Engineering Thermodynamics, eq. 6.48 (isentropic pump
-efficiency).
+efficiency); ISO 5198 (thermodynamic method; from memory).
 """
 
 from __future__ import annotations
@@ -21,6 +23,7 @@ from monitor.equipment.base import (
     Kind,
     PortSpec,
 )
+from monitor.equipment.heat_transfer import flag_where, share
 from monitor.flags import Flag
 from monitor.thermo.water import state_ps
 
@@ -52,9 +55,20 @@ class Pump(Kind):
         return drawn.only("power").energy, np.asarray(gained)
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Isentropic efficiency on the measured power."""
-        del item
-        return (Figure("eta_s", "isentropic efficiency with drive", "%", "low", 2.0),)
+        """Isentropic efficiency on the power, and on the temperature rise where both are read."""
+        (power,) = item.ports["power"]
+        by_rise = item.states(power, "power") == "balance"
+        label = "isentropic efficiency" if by_rise else "isentropic efficiency with drive"
+        thermodynamic = Figure(
+            "thermodynamic_efficiency",
+            "isentropic efficiency from the temperature rise",
+            "%",
+            "low",
+            2.0,
+            judged=False,
+        )
+        main = Figure("eta_s", label, "%", "low", 2.0)
+        return (main, *((thermodynamic,) if "energy" in item.spare else ()))
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
@@ -66,4 +80,10 @@ class Pump(Kind):
             efficiency = np.where(power > 0, inlet.mass_flow * ideal / power, np.nan)
         impossible = np.nan_to_num(efficiency, nan=0.5) > 1
         flag = np.where(impossible, np.int32(Flag.SECOND_LAW), np.int32(0))
-        return {"eta_s": ConditionFigure(100.0 * efficiency, np.maximum(power, 0.0), flag)}
+        rise = outlet.enthalpy - inlet.enthalpy
+        by_rise = share(ideal, rise)
+        uphill = flag_where(np.nan_to_num(by_rise, nan=50.0) > 100.0)  # noqa: PLR2004 - per cent
+        return {
+            "eta_s": ConditionFigure(100.0 * efficiency, np.maximum(power, 0.0), flag),
+            "thermodynamic_efficiency": ConditionFigure(by_rise, np.maximum(rise, 0.0), uphill),
+        }

@@ -3,16 +3,25 @@
 Section k expands the flow that is left after the extractions before it:
 eta_s = (h_in - h_out) / (h_in - h(p_out, s_in)). A wet exhaust has no temperature that tells its
 enthalpy; its stream says ``enthalpy = "balance"`` and takes it from the shaft power.
+
+Steam admitted between two points of the expansion expands beside the main flow, each from its own
+state: eta_s = [sum(m h)in - m h_out] / sum(m [h - h(p_out, s)]), the sums over main flow and
+inductions. Gland steam that leaks off passes no section; it keeps its exergy as the exhaust does.
+
+A wet section loses about 1 % of efficiency per 1 % of mean moisture (Baumann, from memory), so an
+efficiency with a wet exhaust is compared at like exhaust pressures; drops erode the last blades
+where the exhaust is wetter than ``least_dryness``.
 Source: Moran and Shapiro, Fundamentals of Engineering Thermodynamics, eq. 6.46 (isentropic turbine
 efficiency); Bejan, Tsatsaronis, Moran (1996), table 3.3 (fuel and product of a turbine).
 """
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import TYPE_CHECKING, Annotated, cast
 
 import numpy as np
-from pydantic import Field
+from pydantic import Field, model_validator
 
 from monitor.equipment.base import (
     ConditionFigure,
@@ -32,9 +41,14 @@ from monitor.site.units import Quantity
 from monitor.thermo.water import state_ps
 
 if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    from monitor.equipment.base import Medium
     from monitor.thermo.dead_state import DeadState
 
-__all__ = ["Turbine", "TurbineOptions", "sections"]
+__all__ = ["Section", "Turbine", "TurbineOptions", "sections"]
+
+Share = Annotated[float, measured(Quantity.FRACTION), Field(gt=0, le=1)]
 
 
 class TurbineOptions(Options):
@@ -42,9 +56,30 @@ class TurbineOptions(Options):
 
     Attributes:
         drive_efficiency: measured power / power given by the steam: bearings, gear and generator.
+        mechanical_efficiency, generator_efficiency: the same in two parts, when known so.
+        order: streams of extractions and inductions as the steam meets them.
+        least_dryness: of the exhaust, below which it is flagged [0 to 1].
     """
 
-    drive_efficiency: Annotated[float, measured(Quantity.FRACTION), Field(gt=0, le=1)] = 1.0
+    drive_efficiency: Share = 1.0
+    mechanical_efficiency: Share = 1.0
+    generator_efficiency: Share = 1.0
+    order: tuple[str, ...] = ()
+    least_dryness: Annotated[float, measured(Quantity.FRACTION), Field(ge=0, le=1)] = 0.88
+
+    @model_validator(mode="after")
+    def _said_once(self) -> TurbineOptions:
+        if self.drive_efficiency < 1 and self.parts < 1:
+            raise ValueError(
+                "drive_efficiency is mechanical_efficiency times generator_efficiency: give it, or "
+                "give the two"
+            )
+        return self
+
+    @property
+    def parts(self) -> float:
+        """Mechanical times generator efficiency."""
+        return self.mechanical_efficiency * self.generator_efficiency
 
 
 class Turbine(Kind):
@@ -54,6 +89,8 @@ class Turbine(Kind):
     title = "Steam turbine"
     ports = (
         PortSpec("inlet", "in"),
+        PortSpec("induction", "in", least=0, most=None),
+        PortSpec("leak_off", "out", least=0, most=None, role="fuel"),
         PortSpec("extraction", "out", least=0, most=None, role="fuel"),
         PortSpec("exhaust", "out", role="fuel"),
         PortSpec("power", "out", media=frozenset({"power"})),
@@ -67,14 +104,31 @@ class Turbine(Kind):
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy given up by the steam, and power [W]."""
-        given_up = drawn.only("inlet").exergy(dead) - total(
-            [s.exergy(dead) for s in (*drawn.at("extraction"), drawn.only("exhaust"))]
-        )
-        return np.asarray(given_up), drawn.only("power").energy
+        brought = total([s.exergy(dead) for s in drawn.facing("in")])
+        left = total([s.exergy(dead) for s in drawn.facing("out") if s.medium == "water"])
+        return np.asarray(brought - left), drawn.only("power").energy
 
     def drive_efficiency(self, item: Item) -> float:
         """Measured power / power given by the steam."""
-        return cast("TurbineOptions", item.options).drive_efficiency
+        options = cast("TurbineOptions", item.options)
+        return options.drive_efficiency * options.parts
+
+    def complain(self, item: Item, media: Mapping[str, Medium]) -> list[str]:
+        """An induction needs its place among the extractions."""
+        del media
+        order = cast("TurbineOptions", item.options).order
+        extractions, inductions = (item.ports.get(p, ()) for p in ("extraction", "induction"))
+        if not order and not inductions:
+            return []
+        known = (*extractions, *inductions)
+        if sorted(order) != sorted(known):
+            wanted = ", ".join(known) or "there are none"
+            return [f"order must name each extraction and induction once, as met: {wanted}"]
+        met = tuple(s for s in order if s in extractions)
+        if met != extractions:
+            found, said = ", ".join(met), ", ".join(extractions)
+            return [f"order meets the extractions as {found}, their port as {said}: go downstream"]
+        return []
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Isentropic efficiency of each section, and steam per kWh."""
@@ -95,40 +149,90 @@ class Turbine(Kind):
         steam_rate = Figure(
             "steam_rate", "specific steam consumption", "kg/kWh", "high", 0.1, judged=False
         )
-        return (*per_section, steam_rate)
+        moisture = Figure(
+            "exhaust_moisture", "moisture of the exhaust", "%", "high", 1.0, judged=False
+        )
+        # Only a balance can find an exhaust wet; p and T are stated for a dry one.
+        (exhaust,) = item.ports["exhaust"]
+        wet = item.states(exhaust, "enthalpy") == "balance"
+        return (*per_section, steam_rate, *((moisture,) if wet else ()))
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
         del dead
         figures = {
-            f"eta_s_{number}": _efficiency(start, end, flow)
-            for number, (start, end, flow) in enumerate(sections(drawn), start=1)
+            f"eta_s_{number}": _efficiency(section)
+            for number, section in enumerate(sections(drawn), start=1)
         }
         inlet, power = drawn.only("inlet"), drawn.only("power")
         with np.errstate(divide="ignore", invalid="ignore"):
             rate = np.where(power.energy > 0, inlet.mass_flow / power.energy * 3.6e6, np.nan)
         nothing = np.zeros_like(inlet.flag)
         figures["steam_rate"] = ConditionFigure(rate, np.maximum(power.energy, 0.0), nothing)
+        figures["exhaust_moisture"] = _moisture(drawn)
         return figures
 
 
-def sections(drawn: Drawn) -> list[tuple[StreamState, StreamState, FloatArray]]:
-    """The expansion in order: state before, state after, flow through [kg/s] of each section."""
-    flow = drawn.only("inlet").mass_flow
-    before = drawn.only("inlet")
-    found = []
-    for after in (*drawn.at("extraction"), drawn.only("exhaust")):
-        found.append((before, after, flow))
-        flow = flow - after.mass_flow
-        before = after
+@dataclass(frozen=True)
+class Section:
+    """One stretch of the expansion between two known states.
+
+    Attributes:
+        before, after: the states at its ends.
+        flow: that enters at the first [kg/s].
+        joining: steam admitted on the way.
+    """
+
+    before: StreamState
+    after: StreamState
+    flow: FloatArray
+    joining: tuple[StreamState, ...] = ()
+
+
+def sections(drawn: Drawn) -> list[Section]:
+    """The expansion in order, cut at every extraction; gland steam leaks off before it."""
+    order = cast("TurbineOptions", drawn.item.options).order
+    by_id = {s.id: s for s in (*drawn.at("extraction"), *drawn.at("induction"))}
+    met = [by_id[s] for s in order] if order else list(drawn.at("extraction"))
+    admitted = {s.id for s in drawn.at("induction")}
+    before, flow = drawn.only("inlet"), drawn.only("inlet").mass_flow
+    for leak in drawn.at("leak_off"):
+        flow = flow - leak.mass_flow
+    found: list[Section] = []
+    joining: tuple[StreamState, ...] = ()
+    for state in (*met, drawn.only("exhaust")):
+        if state.id in admitted:
+            joining = (*joining, state)
+            continue
+        found.append(Section(before, state, flow, joining))
+        flow = total([flow, *(s.mass_flow for s in joining)]) - state.mass_flow
+        before, joining = state, ()
     return found
 
 
-def _efficiency(before: StreamState, after: StreamState, flow: FloatArray) -> ConditionFigure:
+def _efficiency(section: Section) -> ConditionFigure:
+    before, after = section.before, section.after
     ideal = state_ps(after.pressure, before.entropy).enthalpy
-    available = before.enthalpy - ideal
+    given, available = before.enthalpy - after.enthalpy, before.enthalpy - ideal
+    weight = section.flow * available
+    if section.joining:
+        given, available = section.flow * given, weight
+        for state in section.joining:
+            end = state_ps(after.pressure, state.entropy).enthalpy
+            given = given + state.mass_flow * (state.enthalpy - after.enthalpy)
+            available = available + state.mass_flow * (state.enthalpy - end)
+        weight = available
     with np.errstate(divide="ignore", invalid="ignore"):
-        efficiency = np.where(available > 0, (before.enthalpy - after.enthalpy) / available, np.nan)
-    impossible = np.nan_to_num(efficiency, nan=0.5)
-    flag = np.where((impossible > 1) | (impossible < 0), np.int32(Flag.SECOND_LAW), np.int32(0))
-    return ConditionFigure(100.0 * efficiency, np.maximum(flow * available, 0.0), flag)
+        efficiency = np.where(available > 0, given / available, np.nan)
+    possible = np.nan_to_num(efficiency, nan=0.5)
+    flag = np.where((possible > 1) | (possible < 0), np.int32(Flag.SECOND_LAW), np.int32(0))
+    return ConditionFigure(100.0 * efficiency, np.maximum(weight, 0.0), flag)
+
+
+def _moisture(drawn: Drawn) -> ConditionFigure:
+    exhaust = drawn.only("exhaust")
+    least = cast("TurbineOptions", drawn.item.options).least_dryness
+    too_wet = np.nan_to_num(exhaust.dryness, nan=1.0) < least
+    flag = np.where(too_wet, np.int32(Flag.MOISTURE), np.int32(0))
+    weight = np.maximum(exhaust.mass_flow, 0.0)
+    return ConditionFigure(100.0 * (1.0 - exhaust.dryness), weight, flag)

@@ -1,7 +1,8 @@
 """Process user: steam in, condensate back or lost, heat delivered at the process temperature.
 
 What leaves through ``lost`` (live steam into the process, condensate to drain) is no product and is
-not given back to the fuel.
+not given back to the fuel. Where the process temperature is known, UA = Q / (T_sat - T_process)
+tells fouling and condensate that backs up, since steam condenses at the saturation temperature.
 
 Source: Bejan, Tsatsaronis, Moran (1996), eq. 3.5 (exergy of heat at a boundary temperature).
 """
@@ -22,6 +23,8 @@ from monitor.equipment.base import (
     PortSpec,
     total,
 )
+from monitor.equipment.heat_transfer import flag_where, share
+from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
     from monitor.thermo.dead_state import DeadState
@@ -57,24 +60,33 @@ class User(Kind):
         return np.asarray(given_up), drawn.only("heat").exergy(dead)
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Share of the steam that comes back as condensate, where that is more than an assumption.
+        """Share of the steam that comes back, and UA, where they are more than assumptions.
 
         When the mass balance gives the condensate and nothing is lost, the share is 100 % by
         construction and tells nothing.
         """
         known = item.ports.get("lost") or "mass" in item.spare
-        if not item.ports.get("condensate") or not known:
-            return ()
-        return (Figure("condensate_return", "condensate returned", "%", "low", 5.0),)
+        returned = Figure("condensate_return", "condensate returned", "%", "low", 5.0)
+        (heat,) = item.ports["heat"]
+        ua = Figure("ua", "heat transfer UA", "kW/K", "low", 0.0, judged=False)
+        return (
+            *((returned,) if item.ports.get("condensate") and known else ()),
+            *((ua,) if item.states(heat, "boundary_temperature") != "dead_state" else ()),
+        )
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
         del dead
-        if not drawn.at("condensate"):
-            return {}
-        steam = self.load(drawn)
-        back = total([s.mass_flow for s in drawn.at("condensate")])
+        steam, heat = self.load(drawn), drawn.only("heat")
+        back = total([np.zeros_like(steam), *(s.mass_flow for s in drawn.at("condensate"))])
+        difference = saturation_temperature(drawn.at("steam")[0].pressure) - heat.temperature
+        uphill = (heat.energy > 0) & (difference <= 0)
         with np.errstate(divide="ignore", invalid="ignore"):
-            share = np.where(steam > 0, 100.0 * back / steam, np.nan)
+            ua = np.where(difference > 0, heat.energy / difference, np.nan)
         nothing = np.zeros_like(drawn.at("steam")[0].flag)
-        return {"condensate_return": ConditionFigure(share, np.maximum(steam, 0.0), nothing)}
+        return {
+            "condensate_return": ConditionFigure(
+                share(back, steam), np.maximum(steam, 0.0), nothing
+            ),
+            "ua": ConditionFigure(ua / 1e3, np.ones_like(ua), flag_where(uphill)),
+        }
