@@ -43,6 +43,7 @@ _MINUS = "\u2212"
 _MOST_DECIMALS = 5
 _LONGEST_UNIT = 16
 _TOO_LARGE = 1e9
+_RESIDUE = 1e-9
 _MEGA = 20_000.0  # from here on a column in kW or MWh reads better in MW or GWh
 _MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
 _DAYS = ("Mon", "Tue", "Wed", "Thu", "Fri", "Sat", "Sun")
@@ -126,7 +127,9 @@ def fitting(value: float | None, unit: str, smallest: float, *, sign: bool = Fal
         decimals = min(max(math.ceil(0.5 - math.log10(smallest)), 0), _MOST_DECIMALS)
         text = fixed(value, unit, decimals)
     else:
-        text = quantity(value, unit, 3)
+        # What sums of doubles leave is no figure.
+        is_residue = value is not None and abs(value) < _RESIDUE
+        text = quantity(0.0 if is_residue else value, unit, 3)
     some = any(digit in text.split(_UNIT_GAP)[0] for digit in "123456789")
     return f"+{text}" if sign and some and value is not None and value > 0 else text
 

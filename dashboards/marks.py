@@ -57,14 +57,12 @@ def bullet(row: ConditionRow) -> Bullet | None:
 
 
 def matters(row: ConditionRow) -> float:
-    """Return the change that sets a row's digits: the stated smallest, else the limit.
+    """Return the change that sets a row's digits: the stated smallest, else the limit, else 0.
 
-    0 where nobody judges the figure: three significant digits then say more.
+    A figure that nobody judges stands alone, without an expected value: a digit more is of use.
     """
-    if row.state == "not judged":
-        return 0.0
     if row.smallest_change > 0.0:
-        return row.smallest_change
+        return row.smallest_change / (10.0 if row.state == "not judged" else 1.0)
     return row.limit if math.isfinite(row.limit) and row.limit > 0.0 else 0.0
 
 

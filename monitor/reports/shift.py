@@ -201,15 +201,14 @@ def shift_text(view: ShiftView) -> str:
         f"{view.context.site_name}, {view.shift_name} shift, "
         f"{view.context.start:%Y-%m-%d %H:%M} to {view.context.end:%H:%M} {view.context.time_zone}"
     )
-    before = {line.key: line for line in view.previous_ledger}
+    before = {line.key: line.live_kw for line in view.previous_ledger}
     width = max(len(line.label) for line in view.ledger)
     table = [f"{'':{width}}  {'kW':>10}  {'MWh':>9}  {'week before, kW':>15}"]
-    for line in view.ledger:
-        past = f"{before[line.key].live_kw:15,.0f}" if line.key in before else f"{'-':>15}"
-        # Adding zero takes the sign from a zero.
-        kw, mwh = round(line.live_kw) + 0 if np.isfinite(line.live_kw) else np.nan, line.live_mwh
-        mwh = round(mwh, 1) + 0.0
-        table.append(f"{line.label:{width}}  {kw:10,.0f}  {mwh:9,.1f}  {past}")
+    table += [
+        f"{line.label:{width}}  {_plain(line.live_kw, 0):>10}  {_plain(line.live_mwh, 1):>9}  "
+        f"{_plain(before.get(line.key, np.nan), 0):>15}"
+        for line in view.ledger
+    ]
     alarms = [
         f"- {a.equipment_name}: {a.message}"
         + (
@@ -223,3 +222,11 @@ def shift_text(view: ShiftView) -> str:
     text = "\n".join([head, "", *view.summary, *([""] if alarms else []), *alarms, "", *table])
     # A terminal and what copies from it do better with plain spaces.
     return text.replace("\u202f", " ").replace("\u00a0", " ")
+
+
+def _plain(value: float, decimals: int) -> str:
+    """A number for a table in a terminal; a dash for none, and no sign before a nought."""
+    if not np.isfinite(value):
+        return "-"
+    # Adding zero takes the sign from a zero.
+    return f"{round(value, decimals) + 0.0:,.{decimals}f}"

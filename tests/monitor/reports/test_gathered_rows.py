@@ -1,0 +1,200 @@
+"""Rows gathered from a real store: ledger, equipment, condition, alarms, data, flows."""
+
+from __future__ import annotations
+
+from collections import defaultdict
+from dataclasses import replace
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from monitor.drift.message import cost_sentence
+from monitor.reports.dead_state import dead_state_view
+from monitor.reports.equipment import equipment_view
+from monitor.reports.expansion import expansion_view
+from monitor.reports.overview import flow_links, node_names, overview_view
+
+SECONDS = 6 * 86400
+DAY = pd.Timedelta(days=1)
+
+
+@pytest.fixture(scope="session")
+def overview(reported):
+    return overview_view(reported.gathered)
+
+
+def test_the_ledger_adds_up_and_its_totals_are_rates_times_time(overview):
+    lines = {line.key: line for line in overview.ledger}
+    for state in ("live_kw", "reference_kw"):
+        rate = {key: getattr(line, state) for key, line in lines.items()}
+        ends = sum(rate[key] for key in ("used", "lost", "destroyed", "stored", "imbalance"))
+        assert rate["supplied"] == pytest.approx(ends, rel=1e-9)
+    for line in lines.values():
+        assert line.live_mwh == pytest.approx(line.live_kw * SECONDS / 3.6e6)
+    # The site file asks 50 EUR for a megawatt-hour.
+    assert lines["destroyed"].cost == pytest.approx(lines["destroyed"].live_mwh * 50.0)
+    assert lines["stored"].cost is None
+    assert lines["imbalance"].co2_t is None
+
+
+def test_the_trend_of_the_ledger_has_the_ledgers_mean(overview):
+    trend = overview.ledger_trend
+    assert len(trend) == 6 * 24
+    assert str(trend.index.tz) == "Europe/Berlin"
+    for line in overview.ledger:
+        assert trend[line.key].mean() == pytest.approx(line.live_kw, rel=1e-9, abs=1e-6)
+
+
+def test_equipment_is_ranked_and_shares_and_costs_follow_from_the_rates(overview):
+    rates = [row.destroyed_kw for row in overview.equipment]
+    assert [row.id for row in overview.equipment] == ["TG1", "LD62", "HDR62"]
+    assert rates == sorted(rates, reverse=True)
+    assert sum(row.share for row in overview.equipment) == pytest.approx(1.0)
+    for row in overview.equipment:
+        assert row.cost_per_day == pytest.approx(row.destroyed_kw * 24 / 1000 * 50.0)
+
+
+def test_a_row_says_what_it_rests_on_and_for_how_long(overview):
+    grounds = {row.id: dict(row.flags) for row in overview.equipment}
+    # The let-down's flow and the exhaust's come from balances, at all times.
+    assert grounds["LD62"]["from a balance"] == 1.0
+    assert "ambient below freezing" not in grounds["TG1"]
+
+
+def test_the_turbine_stands_where_its_readings_put_it(overview):
+    """The export was made with an efficiency of 0.82, and 0.79 after four days."""
+    row = next(row for row in overview.conditions if row.figure == "eta_s_1")
+    assert (row.equipment, row.state, row.worse) == ("TG1", "drifting", "low")
+    assert row.expected == pytest.approx(82.0, abs=0.2)
+    assert row.current == pytest.approx(79.0, abs=0.3)
+    assert row.residual == pytest.approx(-3.0, abs=0.3)
+    assert row.smallest_change > 0
+    assert overview.conditions[0] == row
+    (alarm,) = overview.alarms
+    assert row.since == alarm.raised
+
+
+def test_figures_that_nobody_judges_have_a_value_and_no_limit(overview):
+    row = next(row for row in overview.conditions if row.figure == "steam_rate")
+    assert row.state == "not judged"
+    # 3.6e6 J/kWh over a drop of 0.79 x 663 kJ/kg from 62 bar, 470 degC to 4 bar.
+    assert row.current == pytest.approx(6.87, rel=0.01)
+    assert np.isnan([row.expected, row.residual, row.limit]).all()
+
+
+def test_an_alarm_row_says_neither_the_name_nor_the_cost_that_stand_beside_it(reported, overview):
+    (alarm,) = overview.alarms
+    (record,) = reported.store.open_alarms()
+    assert alarm.message.startswith("isentropic efficiency 79.")
+    said = cost_sentence(record.cost_per_day, "EUR")
+    assert record.message == f"{alarm.equipment_name}: {alarm.message} {said}"
+    assert alarm.cost_per_day == pytest.approx(record.cost_per_day)
+    # The step was put in after four days: 14 January, 01:00 local time.
+    late = alarm.raised - pd.Timestamp("2026-01-14 01:00", tz="Europe/Berlin")
+    assert pd.Timedelta(0) < late < DAY
+
+
+@pytest.mark.parametrize(
+    ("state", "words", "aside"),
+    [
+        ("unacknowledged", "unacknowledged alarm", False),
+        ("acknowledged", "acknowledged alarm", False),
+        ("returned", "returned to normal, unacknowledged", False),
+        ("shelved", "shelved", True),
+        ("suppressed by design", "suppressed by design", True),
+        ("out of service", "out of service", True),
+    ],
+)
+def test_alarm_states_are_named_as_in_isa_18_2(reported, state, words, aside):
+    # State names of ISA-18.2-2016, clause 5 (from memory).
+    (record,) = reported.store.open_alarms()
+    row = reported.gathered.alarm_row(replace(record, state=state))
+    assert (row.state, row.set_aside) == (words, aside)
+
+
+def test_an_alarm_of_equipment_that_left_the_site_file_keeps_its_words(reported):
+    (record,) = reported.store.open_alarms()
+    row = reported.gathered.alarm_row(replace(record, subject="GONE", cost_per_day=None))
+    assert (row.equipment_name, row.figure_label) == ("GONE", "eta_s_1")
+    assert row.message == record.message
+
+
+def test_every_reading_is_counted(reported, overview):
+    counts = {row.tag: row for row in overview.quality}
+    expected = reported.readings.groupby("tag").size()
+    assert {tag: row.readings for tag, row in counts.items()} == expected.to_dict()
+    assert all(row.good == 1.0 and row.missing == 0.0 for row in overview.quality)
+    assert counts["TT-0001"].description == "ambient temperature"
+    assert counts["FT-6201"].unit == "t/h"
+
+
+def test_flows_balance_at_every_piece_of_equipment(reported):
+    into, out = defaultdict(float), defaultdict(float)
+    links = flow_links(reported.gathered)
+    for link in links:
+        into[link.target] += link.kw
+        out[link.source] += link.kw
+    rows = {row.id: row for row in reported.gathered.equipment_rows()}
+    for key, row in rows.items():
+        assert into[key] - out[key] == pytest.approx(row.closure_kw, abs=0.05)
+    names = node_names(reported.gathered)
+    assert {link.source for link in links} | {link.target for link in links} <= set(names)
+    assert names["from:live_steam"] == "live_steam"
+
+
+def test_a_turbines_page_has_its_chart_trends_and_streams(reported, overview):
+    item = reported.site.items["TG1"]
+    row = next(row for row in overview.equipment if row.id == "TG1")
+    view = equipment_view(reported.gathered, item, row, overview.conditions)
+    (chart,) = view.residuals
+    assert chart.alarms == ((overview.alarms[0].raised, overview.alarms[0].message),)
+    # The limits hold between judged hours too, so that their band has no gaps.
+    band = chart.data[["low", "high"]].loc[chart.data["high"].first_valid_index() :]
+    assert band.notna().all().all()
+    assert (band["low"] == -band["high"]).all()
+    efficiency = next(trend for trend in view.trends if trend.unit == "%")
+    assert efficiency.title == "Isentropic efficiency"
+    assert efficiency.data["value"].iloc[:24].mean() == pytest.approx(82.0, abs=0.3)
+    last = reported.readings[
+        (reported.readings["tag"] == "FT-4101")
+        & (reported.readings["time"] >= reported.gathered.end - DAY)
+    ]
+    inlet = view.streams[view.streams["port"] == "inlet"].iloc[0]
+    assert inlet["flow"] == pytest.approx(last["value"].mean(), rel=2e-3)
+    assert inlet["pressure"] == pytest.approx(62.0, abs=0.05)
+    assert inlet["temperature"] == pytest.approx(470.0, abs=0.2)
+
+
+def test_a_label_keeps_its_capitals_in_a_trends_title(reported):
+    item = reported.site.items["HDR62"]
+    (row,) = (row for row in reported.gathered.equipment_rows() if row.id == "HDR62")
+    titles = {trend.title for trend in equipment_view(reported.gathered, item, row, ()).trends}
+    assert "Heat-loss coefficient" in titles
+
+
+def test_only_what_expands_steam_to_power_has_an_expansion_line(reported):
+    line = expansion_view(reported.gathered, reported.site.items["TG1"])
+    assert expansion_view(reported.gathered, reported.site.items["LD62"]) is None
+    assert expansion_view(reported.gathered, reported.site.items["HDR62"]) is None
+    inlet, exhaust = (line.points.iloc[place] for place in (0, -1))
+    assert (inlet["pressure"], exhaust["pressure"]) == pytest.approx((62.0, 4.0), rel=2e-3)
+    drop = inlet["enthalpy"] - exhaust["enthalpy"]
+    assert drop / (inlet["enthalpy"] - exhaust["ideal_enthalpy"]) == pytest.approx(0.79, abs=0.003)
+    before = line.baseline_points.iloc[-1]
+    assert before["enthalpy"] < exhaust["enthalpy"]
+    # Saturated steam at 4 bar(a): 6.895 kJ/(kg K), 2738 kJ/kg (steam tables, from memory).
+    near = (line.dome["enthalpy"] - 2738.1).abs() + 100 * (line.dome["entropy"] - 6.8955).abs()
+    assert near.min() < 5.0
+
+
+def test_the_weathers_weeks_add_up_to_the_ledger(reported, overview):
+    view = dead_state_view(reported.gathered)
+    destroyed = next(line for line in overview.ledger if line.key == "destroyed")
+    assert view.weather_effect["destroyed_live_mwh"].sum() == pytest.approx(destroyed.live_mwh)
+    assert list(view.weather_effect["period"]) == ["week of 05 Jan 2026", "week of 12 Jan 2026"]
+    # The ambient swings by 5 K about 8 degC: no ice, nothing held.
+    assert view.freezing_hours == 0.0
+    assert view.held_hours == 0.0
+    assert view.ambient["temperature"].mean() == pytest.approx(8.0, abs=0.1)
+    assert view.reference_pressure == pytest.approx(1013.25)
