@@ -15,10 +15,10 @@ from sqlalchemy.pool import NullPool
 from connectors.base import ConnectorError
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
+    from collections.abc import Callable, Iterator, Mapping, Sequence
     from pathlib import Path
 
-    from sqlalchemy import Connection, Engine
+    from sqlalchemy import Connection, Engine, Executable
 
     from connectors.sql_options import SqlOptions
 
@@ -29,10 +29,15 @@ T = TypeVar("T")
 _WAITS = (1.0, 4.0)
 """[s] before the second and the third try."""
 
-_READ_ONLY_SESSION = {
-    "mysql": "SET SESSION TRANSACTION READ ONLY",
-    "mariadb": "SET SESSION TRANSACTION READ ONLY",
-}
+_MOST_PARAMETERS = {"sqlite": 900, "postgresql": 10_000, "mysql": 10_000, "mariadb": 10_000}
+"""Well below what each takes: 999 in old SQLite libraries, 65535 in the protocols of the others."""
+
+# SQL Server takes 2100 parameters, Oracle 1000 members of a list.
+_MOST_PARAMETERS |= {"mssql": 2_000, "oracle": 900}
+_FEW_PARAMETERS = 500
+
+_STEPS = 20_000
+"""SQLite's steps between two looks at the clock: some hundred microseconds."""
 
 
 class Database:
@@ -54,11 +59,14 @@ class Database:
         self, options: SqlOptions, folder: Path, sleep: Callable[[float], object] = time.sleep
     ) -> None:
         self._url = make_url(options.url.get_secret_value())
+        self._timeout = options.statement_timeout
+        self._chunk = options.chunk_rows
+        self._deadline = float("inf")
         self._sleep = sleep
         self.dialect = self._url.get_backend_name()
         self._file = folder / str(self._url.database) if self.dialect == "sqlite" else None
         try:
-            self._engine = self._create(options)
+            self._engine = self._create()
         except (ImportError, NoSuchModuleError) as error:
             raise ConnectorError(
                 f"{self.shown}: the driver is not installed ({error}); install it, for PostgreSQL "
@@ -86,6 +94,7 @@ class Database:
             try:
                 with self._engine.connect() as connection:
                     connected = True
+                    self._start_clock()
                     return work(connection)
             except DBAPIError as error:
                 lost = error.connection_invalidated or not connected
@@ -96,46 +105,78 @@ class Database:
                 raise self._refused(error, lost=False) from None
         raise AssertionError("the last try returns or raises")  # pragma: no cover
 
+    @property
+    def most_parameters(self) -> int:
+        """How many tags one statement may name."""
+        return _MOST_PARAMETERS.get(self.dialect, _FEW_PARAMETERS)
+
+    def stream(
+        self, connection: Connection, statement: Executable
+    ) -> Iterator[tuple[Sequence[str], Sequence[Sequence[Any]]]]:
+        """Yield the rows of a statement in chunks, as the columns' names and their cells.
+
+        No more than a chunk is held here, whatever the statement returns.
+        """
+        options = {"stream_results": True, "max_row_buffer": self._chunk}
+        self._start_clock()
+        with connection.execute(statement, execution_options=options) as result:
+            names = list(result.keys())
+            for rows in result.partitions(self._chunk):
+                yield names, list(zip(*rows, strict=True))
+                # As servers do: each fetch has the time of a statement, not all of them together.
+                self._start_clock()
+
     def close(self) -> None:
         """Close the connections."""
         self._engine.dispose()
 
-    def _create(self, options: SqlOptions) -> Engine:
+    def _create(self) -> Engine:
         if self.dialect == "sqlite":
-            return self._create_sqlite(options.statement_timeout)
+            return self._create_sqlite()
         connect: dict[str, Any] = {}
         if self.dialect == "postgresql" and self._url.get_driver_name().startswith("psycopg"):
             stated = self._url.query.get("options", "")
             stated = " ".join(stated) if isinstance(stated, tuple) else stated
-            timeout = int(options.statement_timeout * 1000)
+            timeout = int(self._timeout * 1000)
+            # Times without a zone are compared with times in UTC as if they were UTC too.
             connect["options"] = (
-                f"{stated} -c default_transaction_read_only=on -c statement_timeout={timeout}"
+                f"{stated} -c default_transaction_read_only=on -c statement_timeout={timeout} "
+                "-c timezone=UTC"
             ).strip()
         engine = create_engine(
             self._url, connect_args=connect, pool_size=1, max_overflow=0, pool_pre_ping=True
         )
-        statement = _READ_ONLY_SESSION.get(self.dialect)
-        if statement is not None:
-            _on_connect(engine, statement)
+        prepare = _SESSIONS.get(self.dialect)
+        if prepare is not None:
+            _on_connect(engine, prepare, self._timeout)
         if self.dialect == "postgresql":
             return engine.execution_options(postgresql_readonly=True)
         return engine
 
-    def _create_sqlite(self, timeout: float) -> Engine:
+    def _create_sqlite(self) -> Engine:
         address = f"file:{quote(str(self._file))}?mode=ro"
 
         def connect() -> sqlite3.Connection:
-            # The time-out holds for waiting on a writer; SQLite has none for a statement.
+            # Its own time-out holds for waiting on a writer; it has none for a statement.
             connection = sqlite3.connect(
-                address, uri=True, timeout=timeout, check_same_thread=False
+                address, uri=True, timeout=self._timeout, check_same_thread=False
             )
             connection.execute("PRAGMA query_only = ON")
+            connection.set_progress_handler(self._is_late, _STEPS)
             return connection
 
         return create_engine("sqlite://", creator=connect, poolclass=NullPool)
 
+    def _start_clock(self) -> None:
+        self._deadline = time.monotonic() + self._timeout
+
+    def _is_late(self) -> bool:
+        return time.monotonic() > self._deadline
+
     def _refused(self, error: SQLAlchemyError, *, lost: bool) -> ConnectorError:
         reason = str(getattr(error, "orig", None) or error).strip()
+        if reason == "interrupted":
+            reason = f"canceled, longer than the statement timeout of {self._timeout:g} s"
         password = self._url.password
         if password:
             reason = reason.replace(str(password), "***")
@@ -147,9 +188,41 @@ class Database:
         return ConnectorError(f"{self.shown}: {reason} ({todo})")
 
 
-def _on_connect(engine: Engine, statement: str) -> None:
+def _on_connect(
+    engine: Engine,
+    prepare: Callable[[Any, float], None],
+    timeout: float,
+) -> None:
     @event.listens_for(engine, "connect")
-    def _read_only(connection: Any, _record: Any) -> None:  # noqa: ANN401 - a driver's own types
-        cursor = connection.cursor()
-        cursor.execute(statement)
-        cursor.close()
+    def _prepare(connection: Any, _record: Any) -> None:  # noqa: ANN401 - a driver's own types
+        prepare(connection, timeout)
+
+
+def _prepare_mysql(connection: Any, timeout: float) -> None:  # noqa: ANN401
+    """Make a MySQL or MariaDB session read-only and bound its statements."""
+    cursor = connection.cursor()
+    cursor.execute("SET SESSION TRANSACTION READ ONLY")
+    # TIMESTAMP columns are written in the session's zone, DATETIME columns as they are.
+    cursor.execute("SET SESSION time_zone = '+00:00'")
+    cursor.execute("SELECT VERSION()")
+    if "mariadb" in str(cursor.fetchone()[0]).casefold():
+        cursor.execute(f"SET SESSION max_statement_time = {timeout:.3f}")  # seconds
+    else:
+        cursor.execute(f"SET SESSION max_execution_time = {int(timeout * 1000)}")  # milliseconds
+    cursor.close()
+
+
+def _prepare_mssql(connection: Any, timeout: float) -> None:  # noqa: ANN401
+    connection.timeout = max(1, round(timeout))  # pyodbc: whole seconds, 0 for none
+
+
+def _prepare_oracle(connection: Any, timeout: float) -> None:  # noqa: ANN401
+    connection.call_timeout = int(timeout * 1000)  # oracledb: milliseconds for each round trip
+
+
+_SESSIONS: Mapping[str, Callable[[Any, float], None]] = {
+    "mysql": _prepare_mysql,
+    "mariadb": _prepare_mysql,
+    "mssql": _prepare_mssql,
+    "oracle": _prepare_oracle,
+}

@@ -10,15 +10,16 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import pandas as pd
 import pyarrow as pa
-from sqlalchemy import select
+from sqlalchemy import BigInteger, DateTime, String, select
 
 from connectors.base import ConnectorError
-from connectors.times import DOUBLED_HOUR_REACH, TimeReader
+from connectors.times import DOUBLED_HOUR_REACH, TimeReader, microseconds
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from sqlalchemy import ColumnElement, Connection
+    from sqlalchemy.types import TypeEngine
 
     from connectors.base import Window
     from connectors.sql_options import SqlOptions
@@ -28,7 +29,7 @@ __all__ = ["SqlTimes"]
 
 _REACH = pd.Timedelta(microseconds=DOUBLED_HOUR_REACH)
 _FARTHEST_OFFSET = pd.Timedelta(hours=26)
-_PER_SECOND = {"epoch_s": 1, "epoch_ms": 1_000}
+_PER_SECOND = {"epoch_s": 1, "epoch_ms": 1_000, "epoch_us": 1_000_000}
 _MINUTE = len("2026-01-31T06:00")
 _DATE = len("2026-01-31")
 _ISO = re.compile(r"\d{4}-\d{2}-\d{2}([T ]|$)")
@@ -39,9 +40,9 @@ class SqlTimes:
     """A time column.
 
     Attributes:
-        column: the column.
+        column: the column, None in the site's own query.
         name: its name, for messages.
-        kind: ``zoned``, ``local``, ``text_iso``, ``epoch_s`` or ``epoch_ms``.
+        kind: ``zoned``, ``local``, ``text_iso``, ``epoch_s``, ``epoch_ms`` or ``epoch_us``.
         reader: reads texts and local times.
         zone: the zone of times without an offset.
     """
@@ -57,16 +58,16 @@ class SqlTimes:
         """Describe a column as it was found in the database.
 
         Args:
-            column: the reflected column.
+            column: the reflected column, None in the site's own query.
             options: what the site file says.
             is_text_store: the database keeps times as text whatever the column's type (SQLite).
         """
-        kind: str = options.time_kind
+        kind = options.time_kind.removeprefix("timestamp_")
         if kind == "timestamp":
             zoned = bool(getattr(column.type, "timezone", False)) or "OFFSET" in repr(column.type)
             kind = "zoned" if zoned else "local"
-            if is_text_store:
-                kind = "text_iso"
+        if is_text_store and kind in {"zoned", "local"}:
+            kind = "text_iso"
         return cls(
             column=column,
             name=options.time_column,
@@ -82,19 +83,35 @@ class SqlTimes:
 
         Local times and texts are asked for with a margin: the exact cut is made on UTC afterwards.
         """
+        if self.kind != "text_iso":
+            return self._between(*self.bounds(window))
+        return self._text_between(connection, *self._wall_clock(window))
+
+    def bounds(self, window: Window) -> tuple[Any, Any]:
+        """Return the least time that may be in the window, and the first that cannot.
+
+        Texts are bounded so that they hold however the column writes them: with a blank or a T, in
+        any offset. They bring rows from around the window too.
+        """
         if self.kind == "zoned":
-            return self._between(
-                window.start.tz_convert("UTC").to_pydatetime(),
-                window.end.tz_convert("UTC").to_pydatetime(),
-            )
+            start, end = window.start.tz_convert("UTC"), window.end.tz_convert("UTC")
+            return start.to_pydatetime(), end.to_pydatetime()
         if self.kind in _PER_SECOND:
-            scale = _PER_SECOND[self.kind]
-            bounds = [int(np.ceil(end.timestamp() * scale)) for end in (window.start, window.end)]
-            return self._between(*bounds)
+            scale = 1_000_000 // _PER_SECOND[self.kind]
+            # Rounded up: a reading at a whole unit is inside from there on.
+            return -(-microseconds(window.start) // scale), -(-microseconds(window.end) // scale)
         start, end = self._wall_clock(window)
         if self.kind == "local":
-            return self._between(start.to_pydatetime(), end.to_pydatetime())
-        return self._text_between(connection, start, end)
+            return start.to_pydatetime(), end.to_pydatetime()
+        low, high = start - _FARTHEST_OFFSET, end + _FARTHEST_OFFSET
+        return low.isoformat(sep=" ")[:_MINUTE], high.isoformat(sep="T")[:_MINUTE]
+
+    @property
+    def bound_type(self) -> TypeEngine[Any]:
+        """The type by which bounds are handed to the database."""
+        if self.kind in {"zoned", "local"}:
+            return DateTime(timezone=self.kind == "zoned")
+        return BigInteger() if self.kind in _PER_SECOND else String()
 
     def parse(self, cells: Sequence[Any]) -> ParsedTimes:
         """Read fetched cells; what cannot be read becomes `NO_TIME`."""

@@ -307,7 +307,12 @@ def test_a_session_is_set_read_only_where_the_server_has_only_that(tmp_path):
     path = tmp_path / "r.sqlite"
     sqlite3.connect(path).close()
     engine = create_engine(f"sqlite:///{path}")
-    connectors.sql_engine._on_connect(engine, "PRAGMA query_only = ON")
+
+    def prepare(connection, timeout):
+        assert timeout == 60
+        connection.execute("PRAGMA query_only = ON")
+
+    connectors.sql_engine._on_connect(engine, prepare, 60)
     with engine.connect() as connection, pytest.raises(OperationalError, match="readonly"):
         connection.execute(text("create table t (a int)"))
     engine.dispose()
