@@ -211,6 +211,16 @@ class Item:
         fixed = a is not None and b is not None and a.tag is None and b.tag is None
         return a != b and not fixed
 
+    def any_differ(
+        self, inlets: str, outlets: str, key: Literal["pressure", "temperature"]
+    ) -> bool:
+        """Whether the readings at two ports can differ."""
+        return any(
+            self.differ(one, other, key)
+            for one in self.ports.get(inlets, ())
+            for other in self.ports.get(outlets, ())
+        )
+
     def states(self, stream: str, key: str) -> object:
         """What the site file says of a stream under a key; None for nothing."""
         return getattr(self.statements.get(stream), key, None)

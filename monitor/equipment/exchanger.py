@@ -76,27 +76,17 @@ class Exchanger(Kind):
         )
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """UA, effectiveness, and the two parts of what is destroyed."""
-        del item
+        """UA, effectiveness, and the two parts of what is destroyed where pressures are read."""
+        parts = (
+            ("destroyed_by_temperature", "destroyed by temperature difference"),
+            ("destroyed_by_pressure", "destroyed by pressure drop"),
+        )
+        drops = any(_drops(item, side) for side in ("hot", "cold"))
+        split = tuple(Figure(n, label, "kW", "high", 10.0, judged=False) for n, label in parts)
         return (
             Figure("ua", "heat transfer UA", "kW/K", "low", 5.0),
             Figure("effectiveness", "effectiveness", "%", "low", 2.0, judged=False),
-            Figure(
-                "destroyed_by_temperature",
-                "destroyed by temperature difference",
-                "kW",
-                "high",
-                10.0,
-                judged=False,
-            ),
-            Figure(
-                "destroyed_by_pressure",
-                "destroyed by pressure drop",
-                "kW",
-                "high",
-                10.0,
-                judged=False,
-            ),
+            *(split if drops else ()),
         )
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
@@ -121,6 +111,13 @@ class Exchanger(Kind):
             "destroyed_by_temperature": ConditionFigure(by_temperature / 1e3, ones, nothing),
             "destroyed_by_pressure": ConditionFigure(by_pressure / 1e3, ones, nothing),
         }
+
+
+def _drops(item: Item, side: str) -> bool:
+    """Whether the site file gives a side two pressures, read or fixed."""
+    (one,), (other,) = item.ports[f"{side}_in"], item.ports[f"{side}_out"]
+    before, after = item.states(one, "pressure"), item.states(other, "pressure")
+    return before is None or after is None or before != after
 
 
 def _generated(inlet: StreamState, outlet: StreamState) -> tuple[FloatArray, FloatArray]:

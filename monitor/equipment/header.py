@@ -83,14 +83,11 @@ class Header(Kind):
             judged=False,
             follows_load=False,
         )
+        gauged = item.any_differ("inlet", "outlet", "pressure")
+        cools = gauged or item.any_differ("inlet", "outlet", "temperature")
         by_balance = item.options.heat_loss == "balance"
-        gauged = any(
-            item.differ(one, other, "pressure")
-            for one in item.ports["inlet"]
-            for other in item.ports["outlet"]
-        )
         return (
-            *((heat,) if by_balance else ()),
+            *((heat,) if by_balance and cools else ()),
             *((unaccounted,) if "mass" in item.spare else ()),
             *((loss,) if gauged else ()),
         )

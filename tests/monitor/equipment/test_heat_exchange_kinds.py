@@ -74,6 +74,17 @@ def test_ua_and_effectiveness_know_no_weather(scale, t0, other):
     assert one["effectiveness"].value[0] == pytest.approx(60.0, abs=1.0)
 
 
+def test_an_exchanger_without_a_pressure_drop_read_has_nothing_to_split():
+    box = _superheater(20.0, 15.0, 500.0, 240.0, 0.6)
+    same = {"pressure": "60 bar(a)", "temperature": "T", "flow": "F"}
+    said = stated(hi=same, ho=same, ci=same, co=same)
+    figures = figures_of(drawn("exchanger", box.states, statements=said))
+    assert set(figures) == {"ua", "effectiveness"}
+    said = stated(hi=same, ho=same, ci=same, co=same | {"pressure": "58 bar(a)"})
+    figures = figures_of(drawn("exchanger", box.states, statements=said))
+    assert {"destroyed_by_temperature", "destroyed_by_pressure"} <= set(figures)
+
+
 def test_ua_of_an_exchanger_of_liquid_water_is_that_of_the_textbook_formula():
     """Counterflow, from the definition: Q / LMTD, with the differences 30 K and 20 K."""
     hot_in, hot_out = water("hi", 2.0, p_bar=5, T_C=90), water("ho", 2.0, p_bar=5, T_C=60)
