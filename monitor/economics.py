@@ -156,18 +156,30 @@ def cost_of_destruction(
 
 
 def cost_of_losses(
-    site: Site, rates_kw: Mapping[str, float], fuel_costs: Mapping[str, float], prices: Prices
+    site: Site, rates_kw: Mapping[str, float], costs: UnitCosts, prices: Prices
 ) -> dict[str, float]:
     """Cost of each stream that leaves the site for nothing, per hour.
 
-    It is charged like destruction at its producer: at the unit cost of the fuel that made it.
+    A loss is charged like destruction, at the unit cost of its producer's fuel; what was in the
+    product before the producer added to it (cooling water, feed water) at its own. So a lost
+    product costs what it would if its producer destroyed nothing: that is charged already.
     """
-    leaving = (s for s in site.streams if s not in site.consumer and s in rates_kw)
+    fuel_costs = fuel_unit_costs(site, rates_kw, costs, prices)
     found = {}
-    for stream in leaving:
-        if site.counts_as_used(stream):
+    for stream in site.streams:
+        if stream in site.consumer or stream not in rates_kw or site.counts_as_used(stream):
             continue
-        unit = fuel_costs.get(site.producer.get(stream, ""), prices.flat)
+        item = site.items.get(site.producer.get(stream, ""))
+        unit = prices.flat
+        if item is not None:
+            unit = fuel_costs[item.id]
+            products, before = _at(item, "out", "product"), _at(item, "in", "product")
+            made = sum(_positive(rates_kw.get(s, math.nan)) for s in products)
+            if stream in products and made > 0:
+                cheaper = (
+                    (unit - costs.streams[s]) * _positive(rates_kw.get(s, math.nan)) for s in before
+                )
+                unit -= sum(cheaper) / made
         found[stream] = unit * rates_kw[stream] / 1e3
     return found
 

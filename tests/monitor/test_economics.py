@@ -157,8 +157,36 @@ def test_what_is_destroyed_costs_what_its_fuel_costs(site):
     hourly = cost_of_destruction(in_kw, fuel)
     assert hourly["boiler"] == pytest.approx(54.8 * 30.0)
     assert hourly["turbine"] == pytest.approx(5.0 * c)
-    lost = cost_of_losses(site, {k: 1000 * v for k, v in RATES.items()}, fuel, prices)
+    lost = cost_of_losses(site, {k: 1000 * v for k, v in RATES.items()}, costs, prices)
     assert lost == {"stack": pytest.approx(2.0 * 30.0)}
+
+
+def test_a_lost_product_is_charged_without_what_its_producer_destroys(tmp_path):
+    """Own example: steam of 10 at 100 gives up 9; cooling water of 4 at 40 is lost as 7.
+
+    It costs 4 * 40 + 9 * 100 = 1060; of that 6 * 100 is destruction, so the loss is 460.
+    """
+    stream = '[[stream]]\nid = "{}"\npressure = "1 bar(a)"\nphase = "{}"\nflow = "1 kg/s"\n'
+    text = SITE.split("[[stream]]", maxsplit=1)[0] + "".join(
+        [
+            *(stream.format(s, "liquid") for s in ("cold", "warm", "drain")),
+            stream.format("exhaust", "vapour"),
+            '[[equipment]]\nid = "box"\nkind = "condenser"\n',
+            'ports = { steam = "exhaust", cooling_in = "cold",',
+            ' condensate = "drain", cooling_out = "warm" }\n',
+        ]
+    )
+    path = tmp_path / "site.toml"
+    path.write_text(text, encoding="utf-8")
+    condensing = load_site(path)
+    rates = {"exhaust": 10e3, "drain": 1e3, "cold": 4e3, "warm": 7e3}
+    prices = Prices({"exhaust": 100.0, "cold": 40.0}, flat=50.0)
+    costs = unit_costs(condensing, rates, prices)
+    assert costs.streams["warm"] == pytest.approx(1060 / 7)
+    fuel = fuel_unit_costs(condensing, rates, costs, prices)
+    assert cost_of_destruction({"box": 6e3}, fuel) == {"box": pytest.approx(600.0)}
+    lost = cost_of_losses(condensing, rates, costs, prices)
+    assert lost == {"warm": pytest.approx(460.0), "drain": pytest.approx(100.0)}
 
 
 def test_what_comes_in_is_paid_for_by_what_is_used(site):
