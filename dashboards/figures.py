@@ -222,8 +222,9 @@ def trend_chart(trend: TrendView, identifier: str) -> Chart | None:
     traces: list[dict[str, Any]] = []
     if has_values(table, "low") and has_values(table, "high"):
         low, high = _floats(table["low"]), _floats(table["high"])
-        traces.append(band_trace(times, low, high, "Limits", tinted(COLOURS["faint"], 0.28)))
-    if has_values(table, "minimum") and has_values(table, "maximum"):
+        traces.append(band_trace(times, low, high, "Limits", tinted(COLOURS["faint"], 0.2)))
+    shown, note = _trend_range(trend)
+    if _extremes_fit(table, shown):
         low, high = _floats(table["minimum"]), _floats(table["maximum"])
         shade = tinted(COLOURS["sky"], 0.4)
         traces.append(band_trace(times, low, high, "Lowest to highest", shade))
@@ -242,7 +243,6 @@ def trend_chart(trend: TrendView, identifier: str) -> Chart | None:
         trend.unit,
         {"color": COLOURS["blue"], "width": 1.6},
     )
-    shown, note = _robust_range(trend)
     more: dict[str, Any] = {} if shown is None else {"range": list(shown)}
     if shown is not None:
         traces.append(_outside_marks(times, _floats(table["value"]), shown))
@@ -261,15 +261,31 @@ def trend_chart(trend: TrendView, identifier: str) -> Chart | None:
     )
 
 
-def _robust_range(trend: TrendView) -> tuple[tuple[float, float] | None, str]:
+def _extremes_fit(table: pd.DataFrame, shown: tuple[float, float] | None) -> bool:
+    """Tell whether lowest and highest values frame a line, or would only flood its chart."""
+    if not (has_values(table, "minimum") and has_values(table, "maximum")):
+        return False
+    widths = _floats(table["maximum"]) - _floats(table["minimum"])
+    values = _floats(table["value"])
+    low, high = (np.nanmin(values), np.nanmax(values)) if shown is None else shown
+    return bool(np.nanmedian(widths) <= max(high - low, 0.0)) or high <= low
+
+
+def _trend_range(trend: TrendView) -> tuple[tuple[float, float] | None, str]:
+    framed = [name for name in ("expected", "low", "high") if has_values(trend.data, name)]
+    return _robust_range(trend.data["value"], [trend.data[name] for name in framed], trend.unit)
+
+
+def _robust_range(
+    points: pd.Series, beside: Sequence[pd.Series], unit: str
+) -> tuple[tuple[float, float] | None, str]:
     """Return the range that shows all but a few outliers, and what is said about these.
 
     A stop or a start of minutes would otherwise press months of a figure into a flat line. None
     where all values fit a range of much the same size.
     """
-    values = _floats(trend.data["value"].dropna())
-    framed = [name for name in ("expected", "low", "high") if has_values(trend.data, name)]
-    lines = [values, *(_floats(trend.data[name].dropna()) for name in framed)]
+    values = _floats(points.dropna())
+    lines = [values, *(_floats(line.dropna()) for line in beside)]
     low = min(float(np.quantile(line, _TAIL)) for line in lines)
     high = max(float(np.quantile(line, 1.0 - _TAIL)) for line in lines)
     margin = _ROOM * (high - low)
@@ -281,7 +297,7 @@ def _robust_range(trend: TrendView) -> tuple[tuple[float, float] | None, str]:
     extremes = [far.min()] if far.max() < low else [far.max()]
     if far.min() < low and far.max() > high:
         extremes = [far.min(), far.max()]
-    words = " and ".join(quantity(float(value), trend.unit, 3) for value in extremes)
+    words = " and ".join(quantity(float(value), unit, 3) for value in extremes)
     share = f"{int(outside.sum())} of {len(values)} values lie outside what is shown"
     return (low, high), f"{share} (triangles at the edge), as far as {words}."
 
@@ -360,10 +376,15 @@ def residual_chart(view: ResidualView, identifier: str) -> Chart | None:
     traces += line_traces(times, _floats(table["ewma"]), "EWMA of the residual", view.unit, ewma)
     marks = _marks(view)
     inside = [mark for mark in marks if times.min() <= mark[0] <= times.max()]
+    shown, outside = _residual_range(view)
+    more: dict[str, Any] = {} if shown is None else {"range": list(shown)}
+    if shown is not None:
+        traces.append(_outside_marks(times, _floats(table["residual"]), shown))
     layout = base_layout(
         300,
         xaxis=date_axis(times),
         yaxis=axis(
+            **more,
             title={"text": plotly_text(unit_text(view.unit)), "standoff": 8},
             zeroline=True,
             zerolinecolor=COLOURS["soft"],
@@ -382,9 +403,27 @@ def residual_chart(view: ResidualView, identifier: str) -> Chart | None:
         {"data": traces, "layout": layout},
         _residual_words(view),
         heading=_with_unit(f"{_opened(view.label)}: measured minus expected", view.unit),
-        note=_reference_words(view),
+        note=f"{outside} {_reference_words(view)}".strip(),
         marks=tuple((name, f"{moment(time)}: {words}") for time, name, words in marks),
     )
+
+
+def _residual_range(view: ResidualView) -> tuple[tuple[float, float] | None, str]:
+    """Let single residuals lie outside, but never the smoothed line nor its limits."""
+    if not has_values(view.data, "residual"):
+        return None, ""
+    lines = [view.data[name] for name in ("ewma", "low", "high") if has_values(view.data, name)]
+    shown, words = _robust_range(view.data["residual"], lines, view.unit)
+    if shown is None:
+        return None, ""
+    whole = np.concatenate([_floats(line.dropna()) for line in lines] or [np.array(shown)])
+    low, high = min(shown[0], float(whole.min())), max(shown[1], float(whole.max()))
+    if (low, high) != shown:
+        residuals = _floats(view.data["residual"].dropna())
+        outside = int(((residuals < low) | (residuals > high)).sum())
+        words = f"{outside} of {len(residuals)} residuals lie outside what is shown (triangles)."
+        return ((low, high), words) if outside else (None, "")
+    return shown, words.replace(" values ", " residuals ")
 
 
 def _marks(view: ResidualView) -> list[tuple[pd.Timestamp, str, str]]:

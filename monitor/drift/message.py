@@ -81,7 +81,7 @@ def message(
     at_load = " at this load" if rule.follows_load else ""
     direction = "down" if found.change < 0 else "up"
     what = (
-        f"{rule.subject_name}: {rule.label} {found.measured:.{decimals}f}{unit}, expected "
+        f"{rule.subject_name}: {rule.label} is {found.measured:.{decimals}f}{unit}, expected "
         f"{found.expected:.{decimals}f}{unit}{at_load}: {direction} "
         f"{abs(found.change):.{decimals}f}{change_unit} since about {since.day} {since:%b %H:%M}."
     )

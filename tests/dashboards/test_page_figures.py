@@ -272,3 +272,37 @@ def test_the_expansion_fills_its_chart_and_lines_end_at_its_edge():
         inside = (line["x"] > s_low) & (line["x"] < s_high) & (line["y"] > h_low)
         # One point beyond either end carries the line to the edge.
         assert (~(inside & (line["y"] < h_high))).sum() <= 2
+
+
+def test_a_single_wild_residual_is_marked_and_the_smoothed_line_always_fits():
+    view = page_views.residual()
+    wild = view.data.copy()
+    wild.iloc[300, wild.columns.get_loc("residual")] = 700.0
+    chart = figures.residual_chart(replace(view, data=wild), "r")
+    low, high = chart.figure["layout"]["yaxis"]["range"]
+    assert high < 5.0
+    residuals = wild["residual"].dropna()
+    outside = int(((residuals < low) | (residuals > high)).sum())
+    assert f"{outside} of {len(residuals)} residuals lie outside" in chart.note
+    assert "700" in chart.note
+    smooth = wild["ewma"].dropna()
+    assert low <= min(smooth.min(), wild["low"].min())
+    assert high >= max(smooth.max(), wild["high"].max())
+    assert "range" not in figures.residual_chart(view, "r").figure["layout"]["yaxis"]
+
+
+def test_a_heading_begins_with_a_capital_and_keeps_the_rest():
+    view = replace(page_views.residual(), label="heat transfer UA")
+    assert figures.residual_chart(view, "r").heading.startswith("Heat transfer UA: measured")
+
+
+def test_extremes_that_would_flood_the_chart_are_left_out():
+    trend = page_views.power_trend()
+    names = [trace["name"] for trace in figures.trend_chart(trend, "t").figure["data"]]
+    assert "Lowest to highest" in names
+    wide = trend.data.assign(minimum=-1e6, maximum=1e6)
+    names = [
+        trace["name"]
+        for trace in figures.trend_chart(replace(trend, data=wide), "t").figure["data"]
+    ]
+    assert "Lowest to highest" not in names

@@ -295,7 +295,7 @@ def test_an_alarm_says_what_changed_by_how_much_and_since_when():
         currency="EUR",
     )
     assert text == (
-        "TG1: isentropic efficiency HP–IP 81.9 %, expected 84.0 % at this load: down 2.1 points "
+        "TG1: isentropic efficiency HP–IP is 81.9 %, expected 84.0 % at this load: down 2.1 points "
         "since about 12 Mar 04:00. The live weather is not the cause: the figure does not depend "
         "on it. The extra lost work costs about 1 230 EUR a day."
     )

@@ -119,7 +119,7 @@ def test_an_alarm_of_this_shift_is_called_new(reported):
 def test_the_terminal_gets_plain_spaces_alarms_and_no_minus_nought(late):
     text = shift_text(late)
     assert text.startswith("Mill Race Works, late shift, 2026-01-15 14:00 to 22:00 Europe/Berlin\n")
-    assert "- Turbine TG1: isentropic efficiency 79." in text
+    assert "- Turbine TG1: isentropic efficiency is 79." in text
     assert "180 EUR a day." in text
     assert not set(text) & {"\u202f", "\u00a0"}
     assert not re.search(r"-0(\.0)?\s", text)
