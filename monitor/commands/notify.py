@@ -38,7 +38,7 @@ def send_test(
     Example: lostwork notify test site.toml shift_office
     """
     from monitor.notify.errors import NotifyError  # noqa: PLC0415
-    from monitor.notify.message import test_message  # noqa: PLC0415
+    from monitor.notify.message import trial_message  # noqa: PLC0415
     from monitor.notify.sender import make_senders  # noqa: PLC0415
 
     read = open_site(site)
@@ -52,7 +52,7 @@ def send_test(
     failed = False
     for name in wanted:
         try:
-            note = senders[name].send(test_message(read, tables[name], now), now)
+            note = senders[name].send(trial_message(read, tables[name], now), now)
         except NotifyError as error:
             failed = True
             say(str(error))

@@ -90,7 +90,15 @@ class Mail:
         if notify.tls == "starttls":
             # A server that offers no TLS is an error here, never a reason to go on without.
             client.starttls(context=tls_context(notify, self.folder))
-        if notify.user:
+        if not notify.user:
+            return
+        client.ehlo_or_helo_if_needed()
+        if "PLAIN" in client.esmtp_features.get("auth", "").split():
+            # Only this one: `login` would offer a wrong password once for every mechanism, and
+            # some servers lock an account after a few.
+            client.user, client.password = notify.user, notify.password.get_secret_value()
+            client.auth("PLAIN", client.auth_plain)
+        else:
             client.login(notify.user, notify.password.get_secret_value())
 
     def _fail(self, error: Exception) -> NoReturn:

@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from monitor.site.notify import Notify
     from monitor.store.alarms import AlarmRecord
 
-__all__ = ["Message", "alarm_message", "identity", "job_message", "plain", "test_message"]
+__all__ = ["Message", "alarm_message", "identity", "job_message", "plain", "trial_message"]
 
 VERSION = 1
 """Of the JSON document: grows when a key changes its meaning or goes."""
@@ -167,7 +167,7 @@ def job_message(
     )  # fmt: skip
 
 
-def test_message(site: Site, notify: Notify, time: int) -> Message:
+def trial_message(site: Site, notify: Notify, time: int) -> Message:
     """Say that the way from here to a target works; every one is a message of its own."""
     lines = [
         ("What", f"a test of [[notify]] '{notify.id}'; nothing has happened"),

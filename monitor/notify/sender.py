@@ -85,7 +85,8 @@ def connection_trouble(error: Exception, notify: Notify) -> str:
             f"its certificate is not trusted ({plain(error.verify_message, 200)}); name your "
             "authority's certificates in ca_file"
         )
-    if isinstance(error, TimeoutError):
+    # The mail library puts an error of its own around it.
+    if isinstance(error, TimeoutError) or isinstance(error.__context__, TimeoutError):
         return f"no answer within {notify.timeout:g} s"
     return f"cannot be used ({plain(str(error), 200) or type(error).__name__})"
 
@@ -95,11 +96,15 @@ def deadline(connection: socket.socket | None, seconds: float) -> Iterator[None]
     """Cut a connection after a time, however busy it is.
 
     A socket's own time-out starts anew with every byte that comes; a server that sends one now and
-    then would hold its caller for ever. What waits for the connection fails with an error of its
-    own.
+    then would hold its caller for ever.
+
+    Raises:
+        TimeoutError: in place of whatever error the cut led to.
     """
+    passed = threading.Event()
 
     def cut() -> None:
+        passed.set()
         # It may have been closed in the meantime, which is what is wanted.
         with contextlib.suppress(OSError):
             if connection is not None:
@@ -111,5 +116,9 @@ def deadline(connection: socket.socket | None, seconds: float) -> Iterator[None]
     timer.start()
     try:
         yield
+    except Exception as error:
+        if passed.is_set():
+            raise TimeoutError(f"cut after {seconds:g} s") from error
+        raise
     finally:
         timer.cancel()
