@@ -1,0 +1,124 @@
+"""config/kinds.md: every kind is drawn, every figure is told, and every example computes."""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from connectors.base import Quality, ReadResult
+from monitor.economics import supplied_prices, unit_costs
+from monitor.equipment import KINDS
+from monitor.figures import compute, lead_in
+from monitor.site.load import load_site
+
+PAGE = (Path(__file__).parents[3] / "config" / "kinds.md").read_text(encoding="utf-8")
+SECTIONS = {
+    part.split("\n", 1)[0]: part for part in re.split(r"^## ", PAGE, flags=re.MULTILINE)[1:]
+}
+HEAD = """
+[site]
+id = "page"
+name = "One piece of equipment"
+[dead_state]
+temperature = "TA"
+pressure = "1.01325 bar(a)"
+[[source]]
+id = "dcs"
+kind = "csv"
+path = "*.csv"
+"""
+READ = {"TA": ("degC", 12.0), "PT-1": ("bar(a)", 12.3), "PT-2": ("bar(a)", 12.1),
+        "PT-3": ("bar(a)", 11.9)}  # fmt: skip
+START = 1_770_000_000 // 3600 * 3600
+# What an example's valve, open or closed, leaves without a value.
+ABSENT = {("letdown", "passing_flow")}
+
+
+def _example(kind, folder):
+    (block,) = re.findall(r"```toml\n(.*?)```", SECTIONS[kind], flags=re.DOTALL)
+    tags = "".join(
+        f'[[tag]]\nname = "{name}"\nsource = "dcs"\nunit = "{unit}"\n'
+        for name, (unit, _) in READ.items()
+    )
+    path = folder / "site.toml"
+    path.write_text(HEAD + tags + block, encoding="utf-8")
+    return load_site(path)
+
+
+def _computed(site, ambient=12.0):
+    times = np.arange(START - lead_in(site), START + 3601, 60)
+    names = list(READ)
+    values = [ambient if n == "TA" else READ[n][1] for n in names]
+    table = pd.DataFrame(
+        {
+            "tag": pd.Categorical.from_codes(
+                np.repeat(np.arange(len(names)), len(times)), categories=names
+            ),
+            "time": pd.to_datetime(np.tile(times, len(names)), unit="s", utc=True).as_unit("us"),
+            "value": np.repeat(np.asarray(values, float), len(times)),
+            "quality": np.full(len(names) * len(times), np.uint8(Quality.GOOD)),
+        }
+    )
+    return compute(site, ReadResult(table), START, START + 3600).batch
+
+
+def test_the_page_has_every_kind_in_order():
+    assert list(SECTIONS) == sorted(KINDS)
+
+
+@pytest.mark.parametrize("kind", sorted(KINDS))
+def test_a_kinds_drawing_has_its_ports_and_its_table_its_figures(kind, tmp_path):
+    (drawing,) = re.findall(r"```text\n(.*?)```", SECTIONS[kind], flags=re.DOTALL)
+    for port in KINDS[kind].ports:
+        arrow = rf"--> {port.name}\b" if port.direction == "out" else rf"\b{port.name}\b.* -->"
+        assert re.search(arrow, drawing), port.name
+    assert KINDS[kind].fuel_and_product[1:] in SECTIONS[kind]
+    item = _example(kind, tmp_path).items["it"]
+    told = re.findall(r"^\| `(\w+)` \| (\S+) \|.*\| (.+) \|$", SECTIONS[kind], flags=re.MULTILINE)
+    listed = [
+        (f.name, f.unit, "yes" if f.judged else "shown only") for f in item.kind.figures(item)
+    ]
+    assert sorted(told) == sorted(listed)
+
+
+@pytest.mark.parametrize("kind", sorted(KINDS))
+def test_a_kinds_example_computes_and_contradicts_nothing(kind, tmp_path):
+    site = _example(kind, tmp_path)
+    batch = _computed(site)
+    account = batch.equipment
+    assert np.isfinite(account["destroyed_live_kw"]).all()
+    floor = -1e-9 * account["exergy_in_live_kw"].abs().max()
+    assert account["destroyed_live_kw"].min() >= floor
+    figures = batch.conditions
+    for name, values in figures.groupby("figure", observed=True)["value"]:
+        assert np.isfinite(values).all() or (kind, name) in ABSENT, name
+    rates = batch.streams.groupby("subject", observed=True)["exergy_live_kw"].mean().to_dict()
+    costs = unit_costs(site, rates, supplied_prices(site)).streams
+    assert all(np.isfinite(c) and c >= 0 for c in costs.values())
+
+
+@pytest.mark.parametrize("kind", sorted(KINDS))
+def test_a_kinds_judged_figures_know_no_weather(kind, tmp_path):
+    site = _example(kind, tmp_path)
+    warm, cold = (
+        _computed(site, ambient).conditions.groupby("figure", observed=True)["value"].mean()
+        for ambient in (30.0, -15.0)
+    )
+    item = site.items["it"]
+    for figure in item.kind.figures(item):
+        if figure.judged and (kind, figure.name) not in ABSENT:
+            assert warm[figure.name] == pytest.approx(cold[figure.name], rel=1e-12), figure.name
+
+
+@pytest.mark.parametrize("kind", sorted(KINDS))
+def test_another_ambient_moves_the_live_figures_and_leaves_the_reference(kind, tmp_path):
+    site = _example(kind, tmp_path)
+    warm, cold = (_computed(site, ambient).equipment for ambient in (30.0, -15.0))
+    columns = [c for c in warm.columns if "_reference_" in c]
+    pd.testing.assert_frame_equal(warm[columns], cold[columns], rtol=1e-12)
+    if warm["exergy_in_live_kw"].abs().max() > 0:
+        assert not np.allclose(warm["exergy_in_live_kw"], cold["exergy_in_live_kw"], rtol=1e-3)
