@@ -150,7 +150,10 @@ def _streams(gathered: Gathered, item: Item) -> pd.DataFrame:
         {
             "port": port,
             "stream": gathered.site.streams[stream].name or stream,
-            "flow": mean(stream, "mass_flow_kg_s") * 3.6,
+            # Power and heat have no mass to flow; a nought would read as a stopped stream.
+            "flow": np.nan
+            if gathered.site.streams[stream].medium in {"power", "heat"}
+            else mean(stream, "mass_flow_kg_s") * 3.6,
             "pressure": mean(stream, "pressure_bar"),
             "temperature": mean(stream, "temperature_degc"),
             "dryness": mean(stream, "dryness"),

@@ -162,6 +162,9 @@ def test_a_turbines_page_has_its_chart_trends_and_streams(reported, overview):
     ]
     inlet = view.streams[view.streams["port"] == "inlet"].iloc[0]
     assert inlet["flow"] == pytest.approx(last["value"].mean(), rel=2e-3)
+    power = view.streams[view.streams["port"] == "power"].iloc[0]
+    assert np.isnan(power["flow"])
+    assert power["exergy"] > 5000.0
     assert inlet["pressure"] == pytest.approx(62.0, abs=0.05)
     assert inlet["temperature"] == pytest.approx(470.0, abs=0.2)
 
