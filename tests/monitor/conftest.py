@@ -213,25 +213,32 @@ def plant_readings(
     hours = np.arange(n) * (pd.Timedelta(every) / pd.Timedelta("1h"))
     turbine = 40.0 + 6.0 * np.sin(2 * np.pi * hours / 24) + rng.normal(0, 0.05, n)
     letdown = 5.0 + 0.2 * np.sin(2 * np.pi * hours / 31)
-    inlet = state_pt(62e5, np.full(n, 470.0 + 273.15))
+
+    def gauge(value, spread):
+        # No gauge stands still: one that does is taken for stuck.
+        return value + rng.normal(0, spread, n)
+
+    live, low, middle = gauge(62.0, 2e-4), gauge(4.0, 2e-5), gauge(12.0, 5e-5)
+    warm = gauge(470.0, 2e-3)
+    inlet = state_pt(live * 1e5, warm + 273.15)
     efficiency = 0.82 - 0.03 * (hours > 24 * worse_after_days) + rng.normal(0, 0.0008, n)
-    ideal = state_ps(4e5, inlet.entropy).enthalpy
+    ideal = state_ps(low * 1e5, inlet.entropy).enthalpy
     drop = efficiency * (inlet.enthalpy - ideal)
-    exhaust = state_ph(4e5, inlet.enthalpy - drop)
-    throttled = state_ph(12e5, inlet.enthalpy)
-    barometer = 1013.0
+    exhaust = state_ph(low * 1e5, inlet.enthalpy - drop)
+    throttled = state_ph(middle * 1e5, inlet.enthalpy)
+    barometer = gauge(1013.0, 0.01)
     ambient = 8.0 + 5.0 * np.sin(2 * np.pi * hours / 24)
     values = {
         "TT-0001": ambient,
-        "PT-0001": np.full(n, barometer),
-        "PT-6201": np.full(n, 62.0 - barometer / 1e3),
-        "TT-6201": np.full(n, 470.0),
+        "PT-0001": barometer,
+        "PT-6201": live - barometer / 1e3,
+        "TT-6201": warm,
         "FT-6201": turbine + letdown,
         "FT-4101": turbine,
-        "PT-4103": np.full(n, 4.0 - barometer / 1e3),
+        "PT-4103": low - barometer / 1e3,
         "TT-4103": exhaust.temperature - 273.15,
         "JT-4101": turbine / 3.6 * drop / 1e6,
-        "PT-1201": np.full(n, 12.0 - barometer / 1e3),
+        "PT-1201": middle - barometer / 1e3,
         "TT-1201": throttled.temperature - 273.15,
     }
     wide = pd.DataFrame(values, index=times.rename("time")).round(6)

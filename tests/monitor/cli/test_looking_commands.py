@@ -13,6 +13,8 @@ import pandas as pd
 import pytest
 from iapws import IAPWS97
 
+from monitor.site.load import load_site
+
 NOON = "2026-01-12T12:05Z"
 
 
@@ -290,14 +292,17 @@ def test_status_counts_failed_runs(computed, lostwork):
 
 @pytest.mark.parametrize(
     ("what", "count"),
-    [("streams", 6 * 8), ("equipment", 3 * 8), ("conditions", 4 * 8), ("ledger", 8)],
+    [("streams", 6 * 8), ("equipment", 3 * 8), ("conditions", None), ("ledger", 8)],
 )
 def test_export_as_csv_and_as_parquet_hold_the_same(computed, lostwork, tmp_path, what, count):
     stretch = ("--from", "2026-01-11T00:00Z", "--to", "2026-01-11T02:00Z", "--what", what)
     printed = lostwork("export", computed.path, *stretch, "--format", "csv")
     assert printed.code == 0, printed.err
     rows = list(csv.DictReader(io.StringIO(printed.out)))
-    assert len(rows) == count
+    if count is None:
+        items = load_site(computed.path).items.values()
+        count = 8 * sum(len(item.kind.figures(item)) for item in items)
+    assert len(rows) == count > 0
     out = tmp_path / "figures.parquet"
     lostwork("export", computed.path, *stretch, "--format", "parquet", "--out", out)
     table = pd.read_parquet(out)
