@@ -67,14 +67,15 @@ def spikes(
     values: FloatArray,
     window: float,
     threshold: float,
-    noise: tuple[float, float],
+    least: tuple[float, float],
 ) -> BoolArray:
     """Find spikes by the Hampel identifier on a trailing window.
 
     A reading is off when it lies further than ``threshold`` * S from the median of the readings
-    before it; S is 1.4826 times the median of their absolute deviations from that median, and no
-    smaller than the noise. An off reading is a spike unless the reading before it was off to the
-    same side: a step or a steep ramp loses its first reading and no other.
+    before it, and further than what a spike is at least; S is 1.4826 times the median of their
+    absolute deviations from that median. An off reading is a spike unless the reading before it
+    agrees with it: was off to the same side, or no further from it than what a spike is at least.
+    So a step or a steep ramp loses its first reading and no other.
 
     The window is trailing where the filter is usually centred, so that a verdict stands when later
     readings come. F. R. Hampel, J. Am. Stat. Assoc. 69, 383 (1974); R. K. Pearson, IEEE Trans.
@@ -85,11 +86,11 @@ def spikes(
         values: finite, shape (k,).
         window: the readings before one count for so long [s]; the newest 15 of them at most, and
             with fewer than 5 nothing is said.
-        threshold: in multiples of S.
-        noise: least S: an amount, and a share of the median.
+        threshold: in multiples of S; 3 is usual.
+        least: how far off a spike is at least: an amount, and a share of the median.
     """
     off = np.zeros(len(values), dtype=np.int8)
-    asked = _candidates(values, threshold, noise[0])
+    asked = _candidates(values, least[0])
     if len(asked) == 0:
         return off > 0
     before = asked[:, None] + np.arange(-MOST_READINGS, 0)
@@ -97,23 +98,27 @@ def spikes(
     known = (before >= 0) & (seconds[asked, None] - seconds[inside] <= window)
     middle = _median_of_known(values[inside], known)
     spread = _median_of_known(np.abs(values[inside] - middle[:, None]), known)
-    scale = np.maximum(_SIGMA_PER_MAD * spread, noise[0] + noise[1] * np.abs(middle))
+    smallest = least[0] + least[1] * np.abs(middle)
     above = values[asked] - middle
-    judged = (known.sum(axis=1) >= _LEAST_READINGS) & (np.abs(above) > threshold * scale)
+    limit = np.maximum(threshold * _SIGMA_PER_MAD * spread, smallest)
+    judged = (known.sum(axis=1) >= _LEAST_READINGS) & (np.abs(above) > limit)
     off[asked] = np.where(judged, np.sign(above), 0.0)
-    confirmed = np.zeros(len(values), dtype=np.bool_)
-    confirmed[1:] = (off[1:] == off[:-1]) & (np.diff(seconds) <= window)
-    return np.asarray((off != 0) & ~confirmed)
+    previous = asked - 1  # none of them the first reading: that has none before it to differ from
+    near = np.abs(values[asked] - values[previous]) <= smallest
+    agrees = (near | (off[asked] == off[previous])) & (seconds[asked] - seconds[previous] <= window)
+    found = np.zeros(len(values), dtype=np.bool_)
+    found[asked] = judged & ~agrees
+    return found
 
 
-def _candidates(values: FloatArray, threshold: float, least: float) -> npt.NDArray[np.int64]:
+def _candidates(values: FloatArray, least: float) -> npt.NDArray[np.int64]:
     """Readings far enough from any of those before them to be off at all: few, as a rule."""
     count = len(values)
     low, high = np.full(count, np.inf), np.full(count, -np.inf)
     for back in range(1, min(MOST_READINGS, count - 1) + 1):
         np.minimum(low[back:], values[:-back], out=low[back:])
         np.maximum(high[back:], values[:-back], out=high[back:])
-    return np.flatnonzero(np.maximum(values - low, high - values) > threshold * least)
+    return np.flatnonzero(np.maximum(values - low, high - values) > least)
 
 
 def _median_of_known(values: FloatArray, known: BoolArray) -> FloatArray:

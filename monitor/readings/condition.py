@@ -196,7 +196,9 @@ def _movements(seconds: FloatArray, values: FloatArray, tag: Tag) -> tuple[_Bool
         if tag.fastest is not None:
             fast = too_fast(seconds, values, tag.fastest, tag.hold)
         if tag.spike_seconds > 0:
-            spike = spikes(seconds, values, tag.spike_seconds, tag.spike_threshold, tag.noise)
+            spike = spikes(
+                seconds, values, tag.spike_seconds, tag.spike_threshold, tag.smallest_spike
+            )
     return fast, spike & ~fast
 
 

@@ -29,8 +29,10 @@ _HELD_CONTENT = frozenset({Quantity.LENGTH, Quantity.VOLUME, Quantity.MASS})
 _NEVER_STEPS = frozenset({Quantity.PRESSURE, Quantity.TEMPERATURE})
 _SPIKE_WINDOW = 1800.0
 _STUCK_AFTER = 14400.0
-# Common practice for transmitters of which nothing is stated: a quarter of a percent of range.
-_NOISE_SHARE_OF_RANGE = 0.0025
+# What a spike is at least. A sound plant moves by several percent of range from one minute to the
+# next when a machine trips, and by a few standard uncertainties at any time.
+_SPIKE_SHARE_OF_RANGE = 0.10
+_SPIKE_UNCERTAINTIES = 20.0
 
 
 class Uncertainty(BaseModel):
@@ -119,7 +121,8 @@ class Tag(Table):
     deadband: str = ""
     rate_limit: str = ""
     spike_window: Duration | None = None
-    spike_threshold: float = Field(default=6.0, gt=0)
+    spike_threshold: float = Field(default=3.0, gt=0)
+    spike_least: str = ""
     stuck_after: Duration | None = None
     meter: Meter | None = None
 
@@ -139,10 +142,10 @@ class Tag(Table):
     @model_validator(mode="after")
     def _checks_read(self) -> Tag:
         _ = self.least_movement, self.fastest, self.cut_off
-        if self.spike_window and self.noise == (0.0, 0.0):
+        if self.spike_window and self.smallest_spike == (0.0, 0.0):
             raise ValueError(
-                "spike_window needs to know what is noise: give a deadband, an uncertainty or a "
-                "range"
+                "spike_window needs to know what a spike is at least: give spike_least, a range or "
+                "an uncertainty"
             )
         if self.meter is not None and self.unit.quantity not in FLOWS:
             raise ValueError(f"a meter belongs to a flow, but '{self.unit.text}' is none")
@@ -177,23 +180,23 @@ class Tag(Table):
         return rate(self.rate_limit, self.unit) if self.rate_limit else None
 
     @property
-    def noise(self) -> tuple[float, float]:
-        """What a reading may stray without meaning, in the tag's unit, and as a share of it."""
+    def smallest_spike(self) -> tuple[float, float]:
+        """How far off a spike is at least, in the tag's unit, and as a share of the reading."""
+        if self.spike_least:
+            return difference(self.spike_least, self.unit), 0.0
+        if self.range is not None:
+            return _SPIKE_SHARE_OF_RANGE * (self.range[1] - self.range[0]), 0.0
         stated = self.stated_uncertainty
-        absolute = relative = 0.0
-        if stated is not None and stated.basis == "reading":
-            relative = stated.amount
-        elif stated is not None and stated.basis == "absolute":
-            absolute = stated.amount / self.unit.scale
-        elif self.range is not None:
-            share = _NOISE_SHARE_OF_RANGE if stated is None else stated.amount
-            absolute = share * (self.range[1] - self.range[0])
-        return max(absolute, self.least_movement), relative
+        if stated is None:
+            return 0.0, 0.0
+        if stated.basis == "reading":
+            return 0.0, _SPIKE_UNCERTAINTIES * stated.amount
+        return _SPIKE_UNCERTAINTIES * stated.amount / self.unit.scale, 0.0
 
     @property
     def spike_seconds(self) -> float:
         """Length of the spike filter's window [s]; 0 where readings are not checked for spikes."""
-        if self.noise == (0.0, 0.0):
+        if self.smallest_spike == (0.0, 0.0):
             return 0.0
         if self.spike_window is None:
             return _SPIKE_WINDOW if self.unit.quantity in _NEVER_STEPS else 0.0

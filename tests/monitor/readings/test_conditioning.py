@@ -132,7 +132,7 @@ def test_a_spike_is_left_out_and_counted_and_the_last_good_reading_holds():
     assert counts["good"].tolist() == [59, 60]
 
 
-def test_without_a_notion_of_noise_nothing_is_called_a_spike():
+def test_without_a_notion_of_its_size_nothing_is_called_a_spike():
     values = np.full(120, 150.0)
     values[33] = 190.0
     got, counts = _one(_readings("T", MINUTES, values), _tag())
@@ -162,7 +162,7 @@ def test_a_reading_that_moved_too_fast_is_left_out_and_counted():
 def test_numbers_at_the_ends_of_what_a_float_holds_do_not_stop_the_others():
     values = np.full(120, 80.0)
     values[33], values[34] = 1.7e308, -1.7e308
-    tag = _tag(unit="t/h", rate_limit="10 t/h/min", deadband="1 t/h", spike_window="30 min")
+    tag = _tag(unit="t/h", rate_limit="10 t/h/min", spike_least="9 t/h", spike_window="30 min")
     got, counts = _one(_readings("T", MINUTES, values), tag)
     # There, and to the other end, and back: only the return from a single one is known for one.
     assert counts["too_fast"].sum() == 3
