@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 from connectors.base import ConnectorError
 from connectors.csv_source import CsvKind
 from connectors.parquet_source import ParquetKind
+from connectors.sniff import Sniffed, SniffedTag, sniff
 from connectors.sql_source import SqlKind
 
 if TYPE_CHECKING:
@@ -18,7 +19,7 @@ if TYPE_CHECKING:
 
     from connectors.base import Connector, SourceKind
 
-__all__ = ["KINDS", "open_source", "parse_options"]
+__all__ = ["KINDS", "Sniffed", "SniffedTag", "open_source", "parse_options", "sniff"]
 
 _ALL: tuple[SourceKind, ...] = (CsvKind(), ParquetKind(), SqlKind())
 

@@ -17,6 +17,7 @@ __all__ = [
     "Encoding",
     "Header",
     "HeaderError",
+    "cells_of",
     "check_columns",
     "detect_encoding",
     "line_end",
@@ -131,12 +132,22 @@ def read_header(head: bytes, options: CsvOptions, encoding: Encoding) -> Header 
         if lines <= options.skip_lines or not text.strip() or _is_comment(text, options.comment):
             continue
         if columns is None:
-            columns = tuple(
-                cell.strip() for cell in next(csv.reader([text], delimiter=options.delimiter))
-            )
+            columns = cells_of(text, options.delimiter)
         else:
             rows_left -= 1
     return Header(columns, at, lines)
+
+
+def cells_of(line: str, delimiter: str) -> tuple[str, ...]:
+    """Return a line's cells without blanks around them; a line that is no CSV is cut all the same.
+
+    A carriage return inside a line, or a cell of more than 128 kB, is what the parser refuses.
+    """
+    try:
+        cells = next(csv.reader([line], delimiter=delimiter), [])
+    except csv.Error:
+        cells = line.split(delimiter)
+    return tuple(cell.strip() for cell in cells)
 
 
 def check_columns(header: Header, options: CsvOptions, file: str) -> None:

@@ -522,6 +522,14 @@ def test_characters_that_cp1252_does_not_have_are_counted(tmp_path):
     assert counts(result) == {"characters that the encoding does not have, replaced": 1}
 
 
+def test_a_header_that_is_no_csv_is_cut_all_the_same(tmp_path):
+    write(tmp_path, "time,ta\rg,value\n2026-01-31 06:00,a,1\n")
+    reader = source(tmp_path, tag_column="ta\rg")
+    assert rows(reader.read(["a"], DAY)) == [("a", "06:00", 1, "GOOD")]
+    write(tmp_path, f"time,tag,value,{'x' * 200_000}\n2026-01-31 06:00,a,1,\n")
+    assert rows(source(tmp_path).read(["a"], DAY)) == [("a", "06:00", 1, "GOOD")]
+
+
 def test_a_file_that_may_not_be_read_is_told(tmp_path, monkeypatch):
     write(tmp_path, LONG)
 
