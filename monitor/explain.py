@@ -281,9 +281,11 @@ def _gridded(
 def _steps(site: Site, cell: _Cell, subject: str, figure: str) -> Iterator[Step]:
     if subject in site.streams and figure.startswith("exergy_"):
         yield from _stream_exergy(cell, subject, figure)
-    elif subject in site.items and figure.startswith("destroyed_"):
+    elif subject in site.items and figure in {"destroyed_live_kw", "destroyed_reference_kw"}:
         yield from _destroyed(cell, site.items[subject], figure)
-    elif subject in site.items and figure.startswith("eta_s"):
+    elif subject in site.items and figure == "eta_s":
+        yield from _pumping(cell, site.items[subject])
+    elif subject in site.items and figure.startswith("eta_s_"):
         yield from _isentropic(cell, site.items[subject], figure)
 
 
@@ -378,8 +380,11 @@ def _entropies(cell: _Cell, item: Item) -> str:
 
 def _isentropic(cell: _Cell, item: Item, figure: str) -> Iterator[Step]:
     """eta_s = (h_in - h_out) / (h_in - h(p_out, s_in)), Moran and Shapiro eq. 6.46."""
+    if item.ports.get("induction"):
+        # Its efficiency is that of several expansions side by side: no one line of numbers.
+        return
     line = [*item.ports["inlet"], *item.ports.get("extraction", ()), *item.ports["exhaust"]]
-    number = int(figure.rsplit("_", 1)[1]) if figure != "eta_s" else 1
+    number = int(figure.rsplit("_", 1)[1])
     before, after = (cell.state(s).figures for s in line[number - 1 : number + 1])
     h1, s1, h2 = before["enthalpy_kj_kg"], before["entropy_kj_kgk"], after["enthalpy_kj_kg"]
     p2 = after["pressure_bar"]
@@ -397,6 +402,36 @@ def _isentropic(cell: _Cell, item: Item, figure: str) -> Iterator[Step]:
         "eta_s = (h_in - h_out) / (h_in - h_s)",
         f"({h1:.4f} - {h2:.4f}) / ({h1:.4f} - {ideal:.4f})",
         efficiency,
+        "%",
+        is_figure=True,
+    )
+
+
+def _pumping(cell: _Cell, item: Item) -> Iterator[Step]:
+    """The efficiency m [h(p_out, s_in) - h_in] / W, Moran and Shapiro eq. 6.48, with drive."""
+    before, after, power = (
+        cell.state(item.ports[port][0]).figures for port in ("inlet", "outlet", "power")
+    )
+    h1, s1, m, W = (
+        before["enthalpy_kj_kg"],
+        before["entropy_kj_kgk"],
+        before["mass_flow_kg_s"],
+        power["energy_kw"],
+    )
+    p2 = after["pressure_bar"]
+    ideal = float(state_ps(p2 * 1e5, s1 * 1e3).enthalpy) / 1e3
+    yield Step(
+        "enthalpy after an isentropic compression",
+        f"h_s = h(p = {p2:.4f} bar(a), s = {s1:.6f} kJ/(kg K))",
+        f"from {item.ports['inlet'][0]} to the pressure of {item.ports['outlet'][0]}",
+        ideal,
+        "kJ/kg",
+    )
+    yield Step(
+        "isentropic efficiency with drive",
+        "eta_s = m (h_s - h_in) / W",
+        f"{m:.5f} * ({ideal:.4f} - {h1:.4f}) / {W:.3f}",
+        100 * m * (ideal - h1) / W if W > 0 else math.nan,
         "%",
         is_figure=True,
     )

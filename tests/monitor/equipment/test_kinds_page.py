@@ -12,8 +12,10 @@ import pytest
 from connectors.base import Quality, ReadResult
 from monitor.economics import supplied_prices, unit_costs
 from monitor.equipment import KINDS
+from monitor.explain import explain
 from monitor.figures import compute, lead_in
 from monitor.site.load import load_site
+from monitor.sources import open_sources
 
 PAGE = (Path(__file__).parents[3] / "config" / "kinds.md").read_text(encoding="utf-8")
 SECTIONS = {
@@ -99,6 +101,20 @@ def test_a_kinds_example_computes_and_contradicts_nothing(kind, tmp_path):
     rates = batch.streams.groupby("subject", observed=True)["exergy_live_kw"].mean().to_dict()
     costs = unit_costs(site, rates, supplied_prices(site)).streams
     assert all(np.isfinite(c) and c >= 0 for c in costs.values())
+
+
+@pytest.mark.parametrize("kind", sorted(KINDS))
+def test_each_figure_of_an_example_explains_itself(kind, tmp_path):
+    site = _example(kind, tmp_path)
+    times = pd.to_datetime(np.arange(START - lead_in(site), START + 3601, 60), unit="s", utc=True)
+    rows = [f"{time.isoformat()},{n},{v}" for time in times for n, (_, v) in READ.items()]
+    (tmp_path / "readings.csv").write_text("time,tag,value\n" + "\n".join(rows), encoding="utf-8")
+    with open_sources(site) as sources:
+        for figure in site.items["it"].kind.figures(site.items["it"]):
+            told = explain(site, None, sources, "it", figure.name, START + 1800)
+            assert told.unit == figure.unit
+            steps = [step.value for step in told.steps if step.is_figure]
+            assert all(v == pytest.approx(told.computed, rel=1e-4) for v in steps), figure.name
 
 
 @pytest.mark.parametrize("kind", sorted(KINDS))
