@@ -132,7 +132,7 @@ def test_a_worn_section_is_found_stored_and_explained(site):
     assert alarm.alarm_id == status.alarms[0].alarm_id
     assert alarm.state == "unacknowledged"
     assert STEP < alarm.raised < STEP + 20 * HOUR
-    assert alarm.message.startswith("Turbine 1: isentropic efficiency 81.")
+    assert alarm.message.startswith("Turbine 1: isentropic efficiency is 81.")
     assert "The live weather is not the cause" in alarm.message
     # 100 kW more at the same load: 100 kW x 24 h x 50 EUR / MWh, if the start is dated to the hour.
     assert alarm.cost_per_day == pytest.approx(120.0, rel=0.15)
