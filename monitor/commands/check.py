@@ -30,7 +30,8 @@ def check(
         Path | None,
         typer.Option(
             "--sniff",
-            help="Instead of a site: propose a [[source]] table and tags for this CSV export.",
+            help="Instead of a site: propose a [[source]] table and tags for this export, CSV "
+            "(packed or not) or Parquet.",
         ),
     ] = None,
     as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
@@ -78,8 +79,9 @@ def _propose(site: Path | None, export: Path | None, *, as_json: bool) -> None:
     if as_json:
         write_json(
             {
-                "source": found.options,
-                "tags": {tag: found.units.get(tag) for tag in found.probe.tags},
+                "source": {"kind": found.found.kind, **found.found.options},
+                "tags": found.units,
+                "because": found.found.reasons,
                 "to_settle": found.open_points,
             }
         )

@@ -107,6 +107,15 @@ def test_units_are_proposed_where_the_export_says_them(lostwork, tmp_path):
     assert any("set time_zone" in point for point in told["to_settle"])
 
 
+def test_a_unit_that_a_site_file_does_not_take_is_left_open_with_what_the_export_says(
+    lostwork, tmp_path
+):
+    (tmp_path / "export.csv").write_text(WIDE_LOCAL.replace("bar(g)", "bar"))
+    ran = lostwork("check", "--sniff", tmp_path / "export.csv")
+    assert 'unit = ""  # the export says "bar"' in ran.out
+    assert "# to settle: absolute or gauge: the datum of 1 pressure" in ran.out
+
+
 def test_what_the_export_does_not_say_is_left_to_a_person(lostwork, tmp_path):
     (tmp_path / "export.csv").write_text(AMBIGUOUS)
     ran = lostwork("check", "--sniff", tmp_path / "export.csv")
@@ -125,9 +134,9 @@ def test_a_packed_export_is_looked_into(lostwork, tmp_path):
     ("content", "said"),
     [
         (b"just a letter\nto somebody\n", "no table"),
-        (b"a,b\n1,2\n3,4\n", "no column holds times; the header is a, b"),
-        (b"time,FT-1\n", "there is no row after the header"),
-        (b"", "no table"),
+        (b"a,b\n1,2\n3,4\n", "no column of times"),
+        (b"time,FT-1\n", "no table"),
+        (b"", "is empty"),
     ],
 )
 def test_what_is_no_export_is_told(lostwork, tmp_path, content, said):
@@ -140,7 +149,7 @@ def test_what_is_no_export_is_told(lostwork, tmp_path, content, said):
 def test_an_export_that_is_not_there_is_told(lostwork, tmp_path):
     ran = lostwork("check", "--sniff", tmp_path / "no.csv")
     assert ran.code == 2
-    assert "no.csv: cannot be read" in ran.err
+    assert "no.csv cannot be read" in ran.err
 
 
 def test_check_takes_a_site_or_an_export(lostwork, plant):
