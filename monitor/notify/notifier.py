@@ -135,10 +135,11 @@ class Notifier:
         message = Message.read(entry.content)
         try:
             note = self._senders[notify.id].send(message, now)
-        except NotifyError as error:
+        except Exception as error:  # noqa: BLE001 - as in `deliver`: told, and no other held up
             tries = self._tries.get(key, (0, 0.0))[0] + 1
             self._tries[key] = tries, now + wait_after(notify, tries)
-            return Delivery(notify.id, message.title, "waiting", str(error))
+            fault = None if isinstance(error, NotifyError) else error
+            return Delivery(notify.id, message.title, "waiting", str(error), fault)
         self._told[key] = Entry(**{**vars(entry), "state": "sent", "tries": 1, "ended": now})
         return Delivery(notify.id, message.title, "sent", note)
 

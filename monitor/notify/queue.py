@@ -31,6 +31,7 @@ __all__ = ["JobState", "job_entry", "queue_alarms", "queue_jobs"]
 
 _RANK = {"low": 0, "medium": 1, "high": 2}
 _OPEN = (AlarmState.UNACKNOWLEDGED, AlarmState.ACKNOWLEDGED)
+_OVER = (AlarmState.RETURNED, AlarmState.NORMAL)
 
 
 @dataclass(frozen=True)
@@ -144,14 +145,12 @@ class _Queueing:
             if held.event != "raised":
                 continue
             alarm = _present(self.store, held.about).get(held.began)
-            if alarm is None or alarm.state not in _OPEN or not self._ranks(alarm):
-                continue
-            step = _Step(alarm, held.event, held.time)
-            values = {"content": self._entry(step, "waiting").content}
-            box.change(
-                {held.notification_id: {"state": "waiting", "due": self.now, "queued": self.now}
-                 | values}
-            )  # fmt: skip
+            if alarm is None or alarm.state in _OVER:
+                box.change({held.notification_id: {"state": "superseded", "ended": self.now}})
+            elif alarm.state in _OPEN and self._ranks(alarm):
+                entry = self._entry(_Step(alarm, held.event, held.time), "waiting")
+                names = ("state", "queued", "due", "content")
+                box.change({held.notification_id: {n: getattr(entry, n) for n in names}})
 
     def _withdraw(self, box: Outbox, oldest: int) -> None:
         """Take back what was told of an alarm that later readings have judged away."""

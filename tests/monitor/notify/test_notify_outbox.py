@@ -83,6 +83,18 @@ def test_an_alarm_below_the_least_priority_is_told_when_it_rises(told, web_serve
     assert [(m["priority"], m["message"]) for m in posted(web)] == [("high", "Much worse.")]
 
 
+def test_an_alarm_that_returns_below_the_least_priority_is_never_told(told, web_server, hook_table):
+    web = web_server()
+    at = told(hook_table(web.url, 'least_priority = "high"\n'))
+    number = at.raise_alarm()
+    at.minute()
+    at.return_alarm(number, NOW - 60)
+    at.minute()
+    at.minute()
+    assert at.states() == [("hook", "raised", "superseded"), ("hook", "returned", "below")]
+    assert posted(web) == []
+
+
 def test_an_alarm_that_judging_again_moves_is_not_told_twice(told, web_server, hook_table):
     web = web_server()
     at = told(hook_table(web.url))
@@ -438,6 +450,16 @@ def rename(at, before, after):
         # The view would hold on to the table's name.
         connection.exec_driver_sql("drop view if exists v_notifications")
         connection.exec_driver_sql(f"alter table {before} rename to {after}")
+
+
+def test_a_fault_in_a_sender_while_the_store_is_away_is_told_with_its_cause(told, hook_table):
+    at = told(hook_table("http://127.0.0.1:9/"))
+    notifier = Notifier(at.site, at.store, at, {"hook": Broken()})
+    rename(at, "notifications", "away")
+    notifier.job_failed("cycle", "away")
+    with capture_logs() as lines, pytest.raises(StoreError):
+        notifier.run()
+    assert isinstance(lines[0]["exc_info"], ZeroDivisionError)
 
 
 def test_without_targets_nothing_is_queued(told):
