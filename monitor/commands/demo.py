@@ -138,13 +138,14 @@ def _pages(at: Opened, progress: Progress) -> str:
     from monitor.reports.pages import pages_folder, write_pages  # noqa: PLC0415
     from monitor.reports.shift import write_shift_report  # noqa: PLC0415
 
-    now = pd.Timestamp.now("UTC")
+    newest = at.store.newest()
+    until = plant_now(at.store) if newest is None else newest.timestamp() + at.store.interval_s
+    # The mill lives in simulated time; its pages are made when its data end.
+    now = pd.Timestamp(until, unit="s", tz="UTC")
     count, written = len(at.site.items) + 3, []
     for page in write_pages(at.site, at.store, now):
         written.append(page)
         progress.at(len(written) / count, page.name)
-    newest = at.store.newest()
-    until = plant_now(at.store) if newest is None else newest.timestamp() + at.store.interval_s
     span = last_shift(at.site.calendar, until)
     write_shift_report(at.site, at.store, span, now, pages_folder(at.site))
     return str(written[0])
