@@ -14,6 +14,7 @@ import numpy as np
 from monitor.equipment.base import FloatArray, Signal, StreamState
 from monitor.equipment.solve import with_flow, with_rate
 from monitor.flags import Flag, FlagArray
+from monitor.readings.meters import mass_flow
 from monitor.site.models import Reference
 from monitor.site.units import Quantity
 from monitor.thermo.fuels import exergy_ratio
@@ -243,7 +244,20 @@ def _with_measured_flow(
     if not isinstance(stream.flow, Reference):
         return state
     signal = gauges.signal(stream.flow, site.tags)
-    return with_flow(state, signal.value, signal.flag)
+    flow = _mass_flow(site, stream.flow, signal, 1.0 / state.volume)
+    return with_flow(state, flow, signal.flag)
+
+
+def _mass_flow(
+    site: Site, reference: Reference, signal: Signal, density: FloatArray | float
+) -> FloatArray:
+    """What a flow's reference shows, as a mass flow [kg/s] at this stream's density [kg/m^3]."""
+    tag = site.tags.get(reference.tag or "")
+    unit = reference.unit if tag is None else tag.unit
+    if unit is None:
+        return signal.value
+    meter, stated = (None, None) if tag is None else (tag.meter, tag.metered_density)
+    return mass_flow(signal.value, unit.quantity, meter, stated, density)
 
 
 def _fuel(site: Site, gauges: Gauges, stream: Stream) -> StreamState:
@@ -252,10 +266,12 @@ def _fuel(site: Site, gauges: Gauges, stream: Stream) -> StreamState:
     signal = gauges.signal(stream.flow, site.tags)
     ratio = stream.exergy_ratio
     ratio = exergy_ratio(stream.fuel) if ratio is None else ratio
-    energy = signal.value * stream.lower_heating_value
+    # A fuel's meter needs no state: the site file gives a density where it counts volume.
+    flow = _mass_flow(site, stream.flow, signal, np.nan)
+    energy = flow * stream.lower_heating_value
     return replace(
         _nothing("fuel", gauges.count, stream.id),
-        mass_flow=signal.value,
+        mass_flow=flow,
         energy=energy,
         entropy_rate=np.zeros_like(energy),
         chemical=(ratio - 1.0) * energy,

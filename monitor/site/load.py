@@ -22,8 +22,10 @@ from monitor.equipment import KINDS
 from monitor.equipment.base import Item, Kind, Medium, Options
 from monitor.equipment.solve import Needs, Step, plan, spare_balances
 from monitor.errors import Issue, LostworkError, SiteFileError
-from monitor.site.models import Reference, SiteFile, Stream, Tag
+from monitor.site.flows import flow_complaints, meter_complaints
+from monitor.site.models import Meter, Reference, SiteFile, Stream, Tag
 from monitor.site.shifts import ShiftCalendar
+from monitor.site.tags import FLOWS
 from monitor.site.units import PressureDatum, Quantity
 from monitor.thermo.fuels import FuelError, exergy_ratio
 from monitor.thermo.water import saturation_temperature
@@ -143,10 +145,13 @@ def _with_environment(raw: dict[str, Any], issues: list[Issue]) -> dict[str, Any
     return cast("dict[str, Any]", fill(raw, ""))
 
 
+_RANGE_COLUMNS = ("range_low", "range_high")
+_METER_COLUMNS = tuple(f"meter_{key}" for key in Meter.model_fields)
 _LIST_COLUMNS = (
-    "name", "source", "source_name", "unit", "range_low", "range_high",
-    "uncertainty", "hold", "description",
-)  # fmt: skip
+    *(key for key in Tag.model_fields if key not in {"range", "meter"}),
+    *_RANGE_COLUMNS,
+    *_METER_COLUMNS,
+)
 
 
 def _with_tag_lists(
@@ -187,8 +192,11 @@ def _rows_of(text: str, name: str, issues: list[Issue]) -> Iterator[dict[str, An
         tag: dict[str, Any] = {
             k: v.strip()
             for k, v in row.items()
-            if k in _LIST_COLUMNS and v and v.strip() and not k.startswith("range")
+            if k in _LIST_COLUMNS and v and v.strip() and k not in _RANGE_COLUMNS
         }
+        meter = {k.removeprefix("meter_"): tag.pop(k) for k in _METER_COLUMNS if k in tag}
+        if meter:
+            tag["meter"] = meter
         low, high = (row.get("range_low") or "").strip(), (row.get("range_high") or "").strip()
         if low or high:
             try:
@@ -306,6 +314,12 @@ def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Sit
         calendar=ShiftCalendar.of(file.shifts, file.site.time_zone),
     )
     _check_references(site, issues)
+    for stream in streams.values():
+        table = f"[[stream]] {stream.id!r}"
+        issues += [Issue(table, "flow", text) for text in flow_complaints(stream, site.tags)]
+    for tag in file.tag:
+        table = f"[[tag]] {tag.name!r}"
+        issues += [Issue(table, "meter", text) for text in meter_complaints(tag)]
     for own in file.drift.figure:
         _check_drift_figure(own.equipment, own.figure, items, issues)
     return site
@@ -604,7 +618,10 @@ def _check_references(site: Site, issues: list[Issue]) -> None:
         else:
             issues.append(Issue(table, key, _no_such("tag", reference.tag, site.tags)))
             continue
-        if unit is None or unit.quantity is quantity:
+        metered = (
+            key == "flow" and quantity is Quantity.MASS_FLOW and table.startswith("[[stream]]")
+        )
+        if unit is None or unit.quantity is quantity or (metered and unit.quantity in FLOWS):
             bad_datum = unit is not None and unit.datum is PressureDatum.DIFFERENCE
             if bad_datum:
                 issues.append(Issue(table, key, "is a pressure difference; a pressure is wanted"))
