@@ -405,8 +405,17 @@ def _decoded(data: bytes, note: _Note) -> bytes:
 
 
 def _lines(data: bytes) -> int:
-    blank = len(re.findall(rb"(?m)^\r?\n", data))
-    return _line_ends(data) + (not data.endswith(b"\n")) - blank
+    """Count the lines that hold anything, as the parser ends them: by LF, CR LF or CR alone."""
+    text = np.frombuffer(data, dtype=np.uint8)
+    feeds, returns = text == ord("\n"), text == ord("\r")
+    paired = np.zeros(len(text), dtype=np.bool_)
+    paired[:-1] = returns[:-1] & feeds[1:]
+    ends = np.flatnonzero(feeds | (returns & ~paired))
+    starts = np.concatenate([[0], ends + 1])
+    stops = np.concatenate([ends, [len(text)]])
+    lengths = stops - starts
+    lengths[:-1] -= feeds[ends] & paired[ends - 1] & (ends > 0)
+    return int(np.count_nonzero(lengths))
 
 
 def _line_ends(data: bytes) -> int:

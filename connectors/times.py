@@ -64,6 +64,7 @@ _DATE_AND_TIME = (
     r"(?: ?(?P<half>[AaPp])\.?[Mm]\.?)?)?$"
 )
 _CENTURY_TURNS = 69  # POSIX: two-digit years from 69 on are of the 1900s
+_HAS_A_CLOCK = r"\d[Tt ]\s*\d"
 _ENDS_WITH_AN_OFFSET = r"\d[Tt ]\s*\d.*(?:[Zz]|[+-]\d{2}(?::?\d{2})?)$"
 
 
@@ -117,10 +118,9 @@ class TimeReader:
             return self.local(_read_numbered(texts, day_first=self._format == "day_first"))
         if self._format == "iso":
             return self._read_iso(texts)
-        parsed = pd.to_datetime(
-            _stripped(texts), format=self._format, errors="coerce", utc="%z" in self._format
-        )
-        if "%z" in self._format:
+        zoned = "%z" in self._format or "%Z" in self._format
+        parsed = pd.to_datetime(_stripped(texts), format=self._format, errors="coerce", utc=zoned)
+        if zoned:
             return self.universal(_series_microseconds(parsed))
         return self.local(_series_microseconds(parsed))
 
@@ -178,8 +178,12 @@ class TimeReader:
     def _read_mixed_iso(self, texts: pa.Array) -> ParsedTimes:
         stripped = _stripped(texts).str.replace(r",(?=\d)", ".", regex=True)
         zoned = stripped.str.contains(_ENDS_WITH_AN_OFFSET, regex=True).to_numpy(dtype=np.bool_)
-        with_offset = self.universal(_iso_microseconds(stripped.where(zoned), utc=True))
-        without = self.local(_iso_microseconds(stripped.where(~zoned), utc=False))
+        with_offset = self.universal(_iso_microseconds(stripped.where(zoned)))
+        # With a Z at its end a text that has a damaged offset (06:00-9) is none any more: pandas
+        # would take it for one of nine hours.
+        clock = stripped.str.contains(_HAS_A_CLOCK, regex=True)
+        closed: pd.Series[str] = stripped + np.where(clock, "Z", "T00:00Z")
+        without = self.local(_iso_microseconds(closed.where(~zoned)))
         return ParsedTimes(
             np.where(zoned, with_offset.first, without.first),
             np.where(zoned, with_offset.second, without.second),
@@ -310,8 +314,8 @@ def _stripped(texts: pa.Array) -> pd.Series[Any]:
     return pd.Series(trimmed.to_numpy(zero_copy_only=False), dtype="str")
 
 
-def _iso_microseconds(texts: pd.Series[Any], *, utc: bool) -> npt.NDArray[np.int64]:
-    parsed = pd.to_datetime(texts, format="ISO8601", errors="coerce", utc=utc)
+def _iso_microseconds(texts: pd.Series[Any]) -> npt.NDArray[np.int64]:
+    parsed = pd.to_datetime(texts, format="ISO8601", errors="coerce", utc=True)
     return _series_microseconds(parsed)
 
 
