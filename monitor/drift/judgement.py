@@ -81,6 +81,7 @@ class FigureRule:
         worse: which way is worse.
         smallest_change: smallest change worth a person's time, in ``unit``.
         follows_load: the baseline has the load as regressor.
+        advice: what a person looks at first.
     """
 
     subject: str
@@ -91,6 +92,7 @@ class FigureRule:
     worse: Worse
     smallest_change: float
     follows_load: bool = True
+    advice: str = ""
 
 
 @dataclass(frozen=True)

@@ -64,7 +64,7 @@ def message(
     cost_per_day: float | None = None,
     currency: str = "",
 ) -> str:
-    """Say a finding in two or three sentences: what, why it is so, and what it costs a day.
+    """Say a finding in a few sentences: what, why it is so, what to do, what it costs a day.
 
     Args:
         rule: the figure.
@@ -88,7 +88,7 @@ def message(
     why = "The live weather is not the cause: the figure does not depend on it."
     if judged.cause == "instrument":
         why = f"Look at the instruments first: {'; '.join(judged.reasons)}."
-    sentences = [what, why]
+    sentences = [what, why, *([rule.advice] if rule.advice else [])]
     if cost_per_day is not None and math.isfinite(cost_per_day) and cost_per_day > 0:
         sentences.append(cost_sentence(cost_per_day, currency))
     return " ".join(sentences)

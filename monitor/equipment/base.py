@@ -277,6 +277,7 @@ class Figure:
         judged: False for a figure that is shown but follows weather or operation too much to judge.
         needs_load: the figure means nothing when the equipment is out of service.
         follows_load: the baseline has the load as regressor.
+        advice: what a person looks at first when it drifts.
     """
 
     name: str
@@ -287,6 +288,7 @@ class Figure:
     judged: bool = True
     needs_load: bool = True
     follows_load: bool = True
+    advice: str = ""
 
 
 @dataclass(frozen=True)

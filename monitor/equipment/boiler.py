@@ -83,9 +83,28 @@ class Boiler(Kind):
         blowdown = Figure(
             "blowdown_share", "blowdown, share of the feed water", "%", "high", 1.0, judged=False
         )
-        loss = Figure("loss_share", "measured losses, share of the fuel", "%", "high", 1.0)
+        loss = Figure(
+            "loss_share",
+            "measured losses, share of the fuel",
+            "%",
+            "high",
+            1.0,
+            advice=(
+                "Check flue-gas temperature and oxygen, soot blowing and the casing's insulation."
+            ),
+        )
         return (
-            Figure("fuel_efficiency", "fuel efficiency (direct)", "%", "low", 1.5),
+            Figure(
+                "fuel_efficiency",
+                "fuel efficiency (direct)",
+                "%",
+                "low",
+                1.5,
+                advice=(
+                    "Check the fuel and steam meters against each other, then "
+                    "flue-gas temperature, oxygen and soot blowing."
+                ),
+            ),
             Figure(
                 "exergetic_efficiency",
                 "exergetic efficiency at 15 degC",

@@ -62,11 +62,25 @@ class ClosedFeedwaterHeater(Kind):
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """TTD, drain cooler approach, UA."""
         (drain,) = item.ports["drain"]
-        dca = Figure("dca", "drain cooler approach", "K", "high", 2.0)
+        dca = Figure(
+            "dca",
+            "drain cooler approach",
+            "K",
+            "high",
+            2.0,
+            advice="Check the drain level and its control valve, then for leaking tubes.",
+        )
         # A drain stated as saturated follows the steam's pressure alone.
         stated = item.states(drain, "temperature") is not None or drain not in item.statements
         return (
-            Figure("ttd", "terminal temperature difference", "K", "high", 1.0),
+            Figure(
+                "ttd",
+                "terminal temperature difference",
+                "K",
+                "high",
+                1.0,
+                advice=("Check the venting and the drain level, then for fouled or plugged tubes."),
+            ),
             *((dca,) if stated else ()),
             Figure("ua", "heat transfer UA", "kW/K", "low", 20.0, judged=False),
         )

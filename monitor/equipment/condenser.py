@@ -105,10 +105,31 @@ class Condenser(Kind):
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Overall heat transfer, terminal temperature difference, and cleanliness with a design."""
         designed = cast("CondenserOptions", item.options).design_ua is not None
-        cleanliness = Figure("cleanliness", "cleanliness factor", "%", "low", 3.0)
+        cleanliness = Figure(
+            "cleanliness",
+            "cleanliness factor",
+            "%",
+            "low",
+            3.0,
+            advice=(
+                "Check for air in-leakage and the cooling-water flow, then "
+                "plan a cleaning of the tubes."
+            ),
+        )
         return (
             # One alarm for one fouling: the cleanliness says the same with less of the weather.
-            Figure("ua", "heat transfer UA", "kW/K", "low", 60.0, judged=not designed),
+            Figure(
+                "ua",
+                "heat transfer UA",
+                "kW/K",
+                "low",
+                60.0,
+                judged=not designed,
+                advice=(
+                    "Check for air in-leakage and the cooling-water flow, then "
+                    "plan a cleaning of the tubes."
+                ),
+            ),
             Figure("ttd", "terminal temperature difference", "K", "high", 0.5, judged=False),
             *((cleanliness,) if designed else ()),
         )

@@ -66,7 +66,14 @@ class Deaerator(OpenFeedwaterHeater):
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Those of an open heater, and the vent's share of the feed water."""
-        vent = Figure("vent_share", "vent, share of the feed water", "%", "both", 0.2)
+        vent = Figure(
+            "vent_share",
+            "vent, share of the feed water",
+            "%",
+            "both",
+            0.2,
+            advice=("Check the vent's orifice and valve against the oxygen in the feed water."),
+        )
         return (*super().figures(item), *((vent,) if item.ports.get("vent") else ()))
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:

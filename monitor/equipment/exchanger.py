@@ -84,7 +84,14 @@ class Exchanger(Kind):
         drops = any(_drops(item, side) for side in ("hot", "cold"))
         split = tuple(Figure(n, label, "kW", "high", 10.0, judged=False) for n, label in parts)
         return (
-            Figure("ua", "heat transfer UA", "kW/K", "low", 5.0),
+            Figure(
+                "ua",
+                "heat transfer UA",
+                "kW/K",
+                "low",
+                5.0,
+                advice="Check venting and drainage, then plan a cleaning of the surfaces.",
+            ),
             Figure("effectiveness", "effectiveness", "%", "low", 2.0, judged=False),
             *(split if drops else ()),
         )

@@ -70,7 +70,14 @@ class FlashVessel(Kind):
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Share that flashes, and the recovery where a balance is spare to tell it."""
         flash = Figure("flash_share", "share that flashes", "%", "both", 1.0, judged=False)
-        recovery = Figure("flash_recovery", "flash steam recovered", "%", "low", 5.0)
+        recovery = Figure(
+            "flash_recovery",
+            "flash steam recovered",
+            "%",
+            "low",
+            5.0,
+            advice="Check the level, the drain's valve and the pressure that is held.",
+        )
         spare = "energy" in item.spare and item.options.heat_loss == "none"
         return (flash, *((recovery,) if spare else ()))
 

@@ -72,7 +72,16 @@ class Header(Kind):
             follows_load=False,
         )
         unaccounted = Figure(
-            "unaccounted_flow", "unaccounted flow", "t/h", "both", 1.5, follows_load=True
+            "unaccounted_flow",
+            "unaccounted flow",
+            "t/h",
+            "both",
+            1.5,
+            follows_load=True,
+            advice=(
+                "Look for an open drain, a leak or a lifting safety valve, and "
+                "compare the flow meters at equal load."
+            ),
         )
         loss = Figure(
             "pressure_loss_coefficient",

@@ -106,6 +106,10 @@ class Letdown(Kind):
             0.5,
             needs_load=False,
             follows_load=False,
+            advice=(
+                "Confirm with the downstream thermometer, close the isolating "
+                "valve if operation allows, and have seat and plug looked at."
+            ),
         )
         coefficient = Figure(
             "flow_coefficient",

@@ -73,8 +73,22 @@ class OpenFeedwaterHeater(Kind):
         """TTD where the outlet's temperature is read, and the steam beyond the energy balance."""
         (out,) = item.ports["feedwater"]
         saturated = item.states(out, "phase") is not None or item.states(out, "dryness") is not None
-        ttd = Figure("ttd", "terminal temperature difference", "K", "high", 1.0)
-        excess = Figure("steam_excess", "steam beyond the energy balance", "%", "high", 5.0)
+        ttd = Figure(
+            "ttd",
+            "terminal temperature difference",
+            "K",
+            "high",
+            1.0,
+            advice="Check the steam supply's valve and the venting.",
+        )
+        excess = Figure(
+            "steam_excess",
+            "steam beyond the energy balance",
+            "%",
+            "high",
+            5.0,
+            advice="Check the vent and the steam meter.",
+        )
         spare = "energy" in item.spare and item.options.heat_loss == "none"
         return ((ttd,) if not saturated else ()) + ((excess,) if spare else ())
 

@@ -67,7 +67,16 @@ class Pump(Kind):
             2.0,
             judged=False,
         )
-        main = Figure("eta_s", label, "%", "low", 2.0)
+        main = Figure(
+            "eta_s",
+            label,
+            "%",
+            "low",
+            2.0,
+            advice=(
+                "Check the minimum-flow valve and the flow meter, then wear rings and impeller."
+            ),
+        )
         return (main, *((thermodynamic,) if "energy" in item.spare else ()))
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:

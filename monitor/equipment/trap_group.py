@@ -89,7 +89,14 @@ class TrapGroup(Kind):
         inlets = item.ports["inlet"]
         # Condensate stated as saturated has no blow-through by construction.
         told = any(s not in item.statements or item.states(s, "enthalpy") for s in inlets)
-        share = Figure("blow_through", "blow-through, share of the flow", "%", "high", 1.0)
+        share = Figure(
+            "blow_through",
+            "blow-through, share of the flow",
+            "%",
+            "high",
+            1.0,
+            advice="Have the traps of the group surveyed and the failed ones replaced.",
+        )
         flow = Figure("blow_through_flow", "blow-through", "t/h", "high", 0.2, judged=False)
         expected = Figure(
             "orifice_flow",

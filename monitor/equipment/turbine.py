@@ -143,6 +143,10 @@ class Turbine(Kind):
                 unit="%",
                 worse="low",
                 smallest_change=0.7,
+                advice=(
+                    "Check the section's thermometers and gauges against a "
+                    "reference first; then think of deposits (a wash), seals and blades."
+                ),
             )
             for number in range(1, len(names))
         )

@@ -66,7 +66,14 @@ class User(Kind):
         construction and tells nothing.
         """
         known = item.ports.get("lost") or "mass" in item.spare
-        returned = Figure("condensate_return", "condensate returned", "%", "low", 5.0)
+        returned = Figure(
+            "condensate_return",
+            "condensate returned",
+            "%",
+            "low",
+            5.0,
+            advice=("Look for condensate going to drain, failed traps and stopped return pumps."),
+        )
         (heat,) = item.ports["heat"]
         ua = Figure("ua", "heat transfer UA", "kW/K", "low", 0.0, judged=False)
         return (

@@ -90,6 +90,7 @@ class Vent(Kind):
             0.5,
             needs_load=False,
             follows_load=False,
+            advice=("Have the valve's seat looked at; a lifting safety valve is reported at once."),
         )
         orifice = Figure(
             "orifice_flow",
