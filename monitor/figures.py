@@ -26,6 +26,7 @@ from monitor.equipment.solve import complete
 from monitor.flags import Flag, FlagArray
 from monitor.readings.grid import Grid
 from monitor.readings.site import condition_site
+from monitor.readings.steadiness import just_started, unsteady
 from monitor.store.batch import LEFT_OUT_COLUMNS, FigureBatch
 from monitor.streams import Gauges, signals_of, stream_states, with_enthalpy
 from monitor.tables import condition_table, equipment_table, ledger_table, stream_table
@@ -96,8 +97,7 @@ def compute(site: Site, read: ReadResult, start: int, end: int) -> Computed:
     grid = Grid(start, end, interval)
     wide = Grid(start - lead_in(site), end, interval)
     conditioned = condition_site(site, read.readings, wide)
-    steady_cells = math.ceil(site.file.site.steady_window / interval)
-    kept = grid.count + steady_cells
+    kept = grid.count + _steady_cells(site) - 1
     ambient = _ambient(site, conditioned, kept)
     plant = _plant(site, conditioned, ambient, kept, interval)
     return _figures(site, plant, grid, conditioned, read.problems)
@@ -250,18 +250,26 @@ def _stated_uncertainty(
 
 
 def _running(site: Site, item: Item, load: FloatArray) -> FlagArray:
-    """Out of service, and unsteady: the load's spread over the trailing window is too wide."""
-    cells = math.ceil(site.file.site.steady_window / site.file.site.interval) + 1
-    padded = np.concatenate([np.full(cells - 1, np.nan), load])
-    recent = np.lib.stride_tricks.sliding_window_view(padded, cells)
-    # Missing cells neither help nor harm; fmax and fmin pass over them.
-    spread = np.fmax.reduce(recent, axis=1) - np.fmin.reduce(recent, axis=1)
-    unsteady = spread > site.file.site.steady_limit * np.abs(load)
+    """Out of service, just started, or unsteady: states of the plant, not faults of readings."""
     off = load < item.options.off_below
-    return (
-        np.where(unsteady, np.int32(Flag.UNSTEADY), np.int32(0))
-        | np.where(off, np.int32(Flag.OFF), np.int32(0))
-    ).astype(np.int32)
+    return np.asarray(
+        _bits(off, Flag.OFF)
+        | _bits(just_started(off, _steady_cells(site)), Flag.STARTING)
+        | _bits(_unsteady(site, load) & ~off, Flag.UNSTEADY)
+    )
+
+
+def _unsteady(site: Site, values: FloatArray) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+    general = site.file.site
+    return unsteady(values, _steady_cells(site), general.steady_limit, general.steady_drift)
+
+
+def _steady_cells(site: Site) -> int:
+    return math.ceil(site.file.site.steady_window / site.file.site.interval) + 1
+
+
+def _bits(where: np.ndarray[tuple[int], np.dtype[np.bool_]], flag: Flag) -> FlagArray:
+    return np.where(where, np.int32(flag), np.int32(0))
 
 
 def _figures(
@@ -274,10 +282,17 @@ def _figures(
     accounted = [_accounted(site, d, plant.ambient) for d in plant.drawn.values()]
     quality = conditioned.quality
     quality = quality[(quality["hour"] >= grid.start) & (quality["hour"] < grid.end)]
+    moving = {
+        state.id: _bits(
+            _unsteady(site, state.mass_flow if state.medium == "water" else state.energy),
+            Flag.UNSTEADY,
+        )
+        for state in plant.states.values()
+    }
     batch = FigureBatch(
         start=grid.start,
         end=grid.end,
-        streams=stream_table(plant, grid),
+        streams=stream_table(plant, moving, grid),
         equipment=equipment_table(accounted, grid),
         conditions=condition_table(accounted, plant.ambient, grid),
         ledger=ledger_table(site, plant, accounted, grid),

@@ -61,6 +61,8 @@ class Flag(IntFlag):
     """A reading came after ones of later times."""
     MOISTURE = 1 << 20
     """The exhaust is wetter than the turbine's stated limit: its last blades erode."""
+    STARTING = 1 << 21
+    """The equipment came into service within the steadiness window."""
 
 
 NOT_JUDGED = (
@@ -71,6 +73,7 @@ NOT_JUDGED = (
     | Flag.OUT_OF_REGION
     | Flag.UNSTEADY
     | Flag.OFF
+    | Flag.STARTING
     | Flag.SECOND_LAW
     | Flag.STUCK
 )
@@ -97,6 +100,7 @@ _WORDS = {
     Flag.SPIKE: "spike left out",
     Flag.STUCK: "stuck value",
     Flag.OUT_OF_ORDER: "reading out of time order",
+    Flag.STARTING: "just started",
     Flag.MOISTURE: "exhaust wetter than its limit",
 }
 

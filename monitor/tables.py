@@ -57,8 +57,11 @@ def _stacked(
     return pd.DataFrame(table)
 
 
-def stream_table(plant: Plant, grid: Grid) -> pd.DataFrame:
-    """State, flow and exergy of every stream."""
+def stream_table(plant: Plant, moving: Mapping[str, FlagArray], grid: Grid) -> pd.DataFrame:
+    """State, flow and exergy of every stream, flagged where its rate was moving.
+
+    That is the stream's own steadiness: a machine's is told by its load, whatever a drain does.
+    """
     absent = np.full(len(plant.ambient.flag), np.nan)
     blocks = []
     for state in plant.states.values():
@@ -76,7 +79,7 @@ def stream_table(plant: Plant, grid: Grid) -> pd.DataFrame:
             absent,
         )
         columns = dict(zip(STREAM_COLUMNS, values, strict=True))
-        flag = np.asarray(state.flag | plant.ambient.flag, dtype=np.int32)
+        flag = np.asarray(state.flag | plant.ambient.flag | moving[state.id], dtype=np.int32)
         blocks.append(_Block((state.id,), columns, flag))
     return _stacked(("subject",), STREAM_COLUMNS, blocks, grid)
 
@@ -128,7 +131,7 @@ def _condition_blocks(a: Accounted, ambient: Ambient) -> list[_Block]:
     blocks = []
     for figure in item.kind.figures(item):
         got = values[figure.name]
-        running = np.int32(Flag.OFF | Flag.UNSTEADY)
+        running = np.int32(Flag.OFF | Flag.STARTING | Flag.UNSTEADY)
         flag = np.asarray((a.flag if figure.needs_load else a.flag & ~running) | got.flag)
         absent = np.where(np.isfinite(got.value), np.int32(0), np.int32(Flag.MISSING))
         unknown = np.full_like(a.load, np.nan)
@@ -166,7 +169,7 @@ def ledger_table(
         "t0_degc": ambient.live.temperature - 273.15,
         "p0_bar": ambient.live.pressure / 1e5,
     } | {name: np.where(whole, values, np.nan) for name, values in lines.items()}
-    own = np.int32(Flag.UNSTEADY | Flag.OFF)
+    own = np.int32(Flag.UNSTEADY | Flag.STARTING | Flag.OFF)
     every = np.bitwise_or.reduce(np.stack([a.flag for a in accounted]), axis=0)
     absent = np.where(whole, np.int32(0), np.int32(Flag.MISSING))
     flag = np.asarray((every & ~own) | ambient.flag | absent, dtype=np.int32)

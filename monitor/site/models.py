@@ -78,7 +78,8 @@ class SiteTable(Table):
     least_coverage: float = Field(default=0.5, gt=0, le=1)
     saturation_band: float = Field(default=2.0, ge=0, description="kelvin")
     steady_window: Duration = 1800.0
-    steady_limit: float = Field(default=0.08, gt=0, description="spread of load / mean load")
+    steady_limit: float = Field(default=0.08, gt=0, description="spread of load / load")
+    steady_drift: float = Field(default=0.05, gt=0, description="drift of load / load")
 
     @field_validator("time_zone")
     @classmethod

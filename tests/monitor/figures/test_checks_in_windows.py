@@ -128,3 +128,33 @@ def test_neighbours_share_equipment_and_the_ambient_has_none(site):
     assert "FG" not in beside["PX"]
     assert "TA" not in beside
     assert not any("TA" in others for others in beside.values())
+
+
+def test_an_outage_is_a_state_and_its_end_a_start_and_neither_is_bad_data(tmp_path):
+    """Off from 01:00 to 02:00: out of service, then just started for the steadiness window."""
+    site = load_site(write_site(tmp_path))
+    end = START + 4 * HOUR
+    times = times_of(site, START, end)
+    rng = np.random.default_rng(2)
+    noise = {k: v * (1 + 1e-4 * rng.standard_normal(len(times))) for k, v in STEADY.items()}
+    off = (times >= START + HOUR) & (times < START + 2 * HOUR)
+    stopped = {k: np.where(off, 0.0, noise[k]) for k in ("FT", "FX", "WG")}
+    batch = compute(site, readings(times, noise | stopped), START, end).batch
+    turbine = _one(batch, "turbine")
+    since = (turbine["time"] - START).to_numpy()
+    assert (_has(turbine["flag"], Flag.OFF) == ((since >= HOUR) & (since < 2 * HOUR))).all()
+    starting = (since >= 2 * HOUR) & (since < 2.5 * HOUR)
+    assert (_has(turbine["flag"], Flag.STARTING) == starting).all()
+    assert not _has(turbine["flag"], Flag.UNSTEADY)[since < 2 * HOUR].any()
+    counts = batch.tag_quality[batch.tag_quality["tag"] == "WG"]
+    assert (counts["good"] == counts["readings"]).all()
+
+
+def test_a_drain_that_moves_is_unsteady_itself_and_leaves_its_machine_steady(site):
+    """The extraction swings by half; the turbine's load, its inlet, stands still."""
+    times = times_of(site, START, START + 2 * HOUR)
+    swing = 40.0 + 10.0 * np.sin((times - START) / 600)
+    batch = compute(site, readings(times, {"FX": swing}), START, START + 2 * HOUR).batch
+    assert _has(_one(batch, "extraction", "streams")["flag"], Flag.UNSTEADY).all()
+    assert not _has(_one(batch, "to_turbine", "streams")["flag"], Flag.UNSTEADY).any()
+    assert not _has(_one(batch, "turbine")["flag"], Flag.UNSTEADY).any()
