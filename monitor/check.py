@@ -250,7 +250,11 @@ def _water_words(means: pd.Series[float], superheat: float) -> str:
         return f"{flow}, {state}"
     if abs(superheat) < 0.01:  # noqa: PLR2004 - a hundredth of a kelvin is saturation for anyone
         return f"{flow}, {state}, saturated {'steam' if dryness > 0.5 else 'liquid'}"  # noqa: PLR2004
-    word = f"superheated {superheat:.1f} K" if superheat > 0 else f"liquid, {-superheat:.1f} K from boiling"
+    word = (
+        f"superheated {superheat:.1f} K"
+        if superheat > 0
+        else f"liquid, {-superheat:.1f} K from boiling"
+    )
     return f"{flow}, {state}, {word}"
 
 

@@ -200,14 +200,14 @@ def _by_tx(site: Site, gauges: Gauges, group: Sequence[_Specification]) -> list[
 def _by_p(site: Site, gauges: Gauges, group: Sequence[_Specification]) -> list[StreamState]:
     p, flag = _stacked(site, gauges, (s.pressure for s in group))
     return [
-        replace(_nothing("water", gauges.count), pressure=part, flag=bits)
+        replace(StreamState.absent("water", gauges.count), pressure=part, flag=bits)
         for part, bits in zip(np.split(p, len(group)), np.split(flag, len(group)), strict=True)
     ]
 
 
 def _cut(state: State, flag: FlagArray, count: int) -> list[StreamState]:
     """Cut one stacked batch back into streams of ``count`` cells."""
-    blank = _nothing("water", count)
+    blank = StreamState.absent("water", count)
     parts = []
     for k in range(len(flag) // count):
         cut = slice(k * count, (k + 1) * count)
@@ -270,7 +270,7 @@ def _fuel(site: Site, gauges: Gauges, stream: Stream) -> StreamState:
     flow = _mass_flow(site, stream.flow, signal, np.nan)
     energy = flow * stream.lower_heating_value
     return replace(
-        _nothing("fuel", gauges.count, stream.id),
+        StreamState.absent("fuel", gauges.count, stream.id),
         mass_flow=flow,
         energy=energy,
         entropy_rate=np.zeros_like(energy),
@@ -281,7 +281,7 @@ def _fuel(site: Site, gauges: Gauges, stream: Stream) -> StreamState:
 
 def _energy(site: Site, gauges: Gauges, stream: Stream) -> StreamState:
     """Power or heat; a rate left to a balance stays NaN until then."""
-    blank = _nothing(stream.medium, gauges.count, stream.id)
+    blank = StreamState.absent(stream.medium, gauges.count, stream.id)
     flag = blank.flag
     if stream.medium == "heat":
         boundary = stream.boundary_temperature
@@ -295,27 +295,6 @@ def _energy(site: Site, gauges: Gauges, stream: Stream) -> StreamState:
         return replace(blank, mass_flow=np.zeros(gauges.count), flag=flag)
     signal = gauges.signal(rate, site.tags)
     return with_rate(blank, signal.value, signal.flag | flag)
-
-
-def _nothing(
-    medium: Literal["water", "fuel", "power", "heat"], count: int, stream: str = ""
-) -> StreamState:
-    absent = np.full(count, np.nan)
-    return StreamState(
-        id=stream,
-        medium=medium,
-        mass_flow=absent,
-        pressure=absent,
-        temperature=absent,
-        enthalpy=absent,
-        entropy=absent,
-        volume=absent,
-        dryness=absent,
-        energy=absent,
-        entropy_rate=absent,
-        chemical=np.zeros(count),
-        flag=np.zeros(count, dtype=np.int32),
-    )
 
 
 def _bits(where: np.ndarray[tuple[int], np.dtype[np.bool_]], flag: Flag) -> FlagArray:

@@ -142,6 +142,26 @@ class StreamState:
     flag: FlagArray
     boundary_is_dead: bool = False
 
+    @classmethod
+    def absent(cls, medium: Medium, count: int, stream: str = "") -> StreamState:
+        """A stream of which nothing is known yet: NaN throughout, flag 0."""
+        nan = np.full(count, np.nan)
+        return cls(
+            id=stream,
+            medium=medium,
+            mass_flow=nan,
+            pressure=nan,
+            temperature=nan,
+            enthalpy=nan,
+            entropy=nan,
+            volume=nan,
+            dryness=nan,
+            energy=nan,
+            entropy_rate=nan,
+            chemical=np.zeros(count),
+            flag=np.zeros(count, dtype=np.int32),
+        )
+
     def entropy_at(self, dead: DeadState) -> FloatArray:
         """Entropy rate [W/K]; heat that crosses at the dead state takes that temperature."""
         if self.boundary_is_dead:

@@ -16,25 +16,6 @@ from monitor.thermo.water import state_ph, state_pt, state_px
 NO_FLAG = np.zeros(1, dtype=np.int32)
 
 
-def _blank(name, medium, count):
-    absent = np.full(count, np.nan)
-    return StreamState(
-        id=name,
-        medium=medium,
-        mass_flow=absent,
-        pressure=absent,
-        temperature=absent,
-        enthalpy=absent,
-        entropy=absent,
-        volume=absent,
-        dryness=absent,
-        energy=absent,
-        entropy_rate=absent,
-        chemical=np.zeros(count),
-        flag=np.zeros(count, dtype=np.int32),
-    )
-
-
 def water(name, flow, *, p_bar, T_C=None, x=None, h=None):
     """A stream of water or steam: kg/s, bar absolute, and degC or dryness or J/kg."""
     flow, p = np.broadcast_arrays(np.atleast_1d(np.asarray(flow, float)), np.asarray(p_bar) * 1e5)
@@ -46,7 +27,7 @@ def water(name, flow, *, p_bar, T_C=None, x=None, h=None):
         state = state_pt(p, np.asarray(T_C) + 273.15)
     assert np.all(state.valid), "the test's own state is outside the steam tables"
     blank = replace(
-        _blank(name, "water", len(flow)),
+        StreamState.absent("water", len(flow), name),
         pressure=np.broadcast_to(state.pressure, flow.shape),
         temperature=np.broadcast_to(state.temperature, flow.shape),
         enthalpy=np.broadcast_to(state.enthalpy, flow.shape),
@@ -59,13 +40,13 @@ def water(name, flow, *, p_bar, T_C=None, x=None, h=None):
 
 def power(name, watts):
     watts = np.atleast_1d(np.asarray(watts, float))
-    blank = replace(_blank(name, "power", len(watts)), mass_flow=np.zeros(len(watts)))
+    blank = replace(StreamState.absent("power", len(watts), name), mass_flow=np.zeros(len(watts)))
     return with_rate(blank, watts, np.zeros(len(watts), dtype=np.int32))
 
 
 def heat(name, watts, boundary_C=None):
     watts = np.atleast_1d(np.asarray(watts, float))
-    blank = replace(_blank(name, "heat", len(watts)), mass_flow=np.zeros(len(watts)))
+    blank = replace(StreamState.absent("heat", len(watts), name), mass_flow=np.zeros(len(watts)))
     if boundary_C is None:
         blank = replace(blank, boundary_is_dead=True)
     else:
@@ -77,7 +58,7 @@ def fuel(name, flow, *, heating_value, ratio):
     flow = np.atleast_1d(np.asarray(flow, float))
     energy = flow * heating_value
     return replace(
-        _blank(name, "fuel", len(flow)),
+        StreamState.absent("fuel", len(flow), name),
         mass_flow=flow,
         energy=energy,
         entropy_rate=np.zeros_like(energy),
