@@ -45,6 +45,7 @@ _SETTLED_AFTER = 600.0
 
 _MARK = 1024
 _HEADER_WITHIN = 4 * BLOCK
+_LINE_WITHIN = 16 * BLOCK
 _TWICE = "column that occurs more than once in the header: the last one is read"
 
 
@@ -288,6 +289,11 @@ class IndexedFile:
             if cut:
                 self._add(raw[:cut], problems)
             raw = raw[cut:]
+            if len(raw) > _LINE_WITHIN:
+                raise ConnectorError(
+                    f"{self.file}: no line ends within {_LINE_WITHIN >> 20} MB after line "
+                    f"{self._line - 1}; correct encoding, or export it again"
+                )
         self._waiting = bool(raw) and not quiet
         if raw and quiet and self._parsed_by is not None:
             self._unfinished = self._block(raw, problems)

@@ -215,6 +215,18 @@ class BlockParser:
     def _read(
         self, data: bytes, types: dict[str, Any], chunk: int, *, quote: bool = True
     ) -> tuple[pa.Table, _Refused]:
+        try:
+            return self._parse_text(data, types, chunk, quote=quote, threads=True)
+        except pa.ArrowInvalid:
+            raise
+        except pa.ArrowException:
+            # "A chunk failed converting for an unknown reason": seen once in many thousand blocks,
+            # on a busy machine, never without threads.
+            return self._parse_text(data, types, chunk, quote=quote, threads=False)
+
+    def _parse_text(
+        self, data: bytes, types: dict[str, Any], chunk: int, *, quote: bool, threads: bool
+    ) -> tuple[pa.Table, _Refused]:
         refused = _Refused()
         keys = [*self._time]
         if self._long:
@@ -226,6 +238,7 @@ class BlockParser:
             read_options=pacsv.ReadOptions(
                 column_names=[_name(at) for at in range(len(self._header.columns))],
                 block_size=chunk,
+                use_threads=threads,
             ),
             parse_options=pacsv.ParseOptions(
                 delimiter=options.delimiter,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import sqlite3
 import time
+from operator import itemgetter
 from typing import TYPE_CHECKING, Any, TypeVar
 from urllib.parse import quote
 
@@ -18,7 +19,7 @@ if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping, Sequence
     from pathlib import Path
 
-    from sqlalchemy import Connection, Engine, Executable
+    from sqlalchemy import Connection, CursorResult, Engine, Executable
 
     from connectors.sql_options import SqlOptions
 
@@ -117,14 +118,26 @@ class Database:
 
         No more than a chunk is held here, whatever the statement returns.
         """
-        options = {"stream_results": True, "max_row_buffer": self._chunk}
+        options: dict[str, Any] = {}
+        if self.dialect != "sqlite":
+            options = {"stream_results": True, "max_row_buffer": self._chunk}
         self._start_clock()
         with connection.execute(statement, execution_options=options) as result:
             names = list(result.keys())
-            for rows in result.partitions(self._chunk):
-                yield names, list(zip(*rows, strict=True))
+            for rows in self._chunks(result):
+                # Not zip(*rows): an iterator for each of many rows keeps the collector busy.
+                yield names, [list(map(itemgetter(at), rows)) for at in range(len(names))]
                 # As servers do: each fetch has the time of a statement, not all of them together.
                 self._start_clock()
+
+    def _chunks(self, result: CursorResult[Any]) -> Iterator[Sequence[Any]]:
+        cursor = result.cursor
+        if cursor is None or self.dialect != "sqlite":
+            yield from result.partitions(self._chunk)
+            return
+        # Its driver reads as it goes and gives cells as they are: no row need be made twice.
+        while rows := cursor.fetchmany(self._chunk):
+            yield rows
 
     def close(self) -> None:
         """Close the connections."""

@@ -8,6 +8,8 @@ from pathlib import Path
 
 import numpy as np
 import pandas as pd
+import pyarrow as pa
+import pyarrow.csv as pacsv
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
@@ -52,7 +54,7 @@ def rows(result):
     table = result.readings
     return [
         (str(tag), f"{t:%H:%M}", None if np.isnan(v) else v, Quality(q).name)
-        for tag, t, v, q in table.itertuples(index=False)
+        for tag, t, v, q in table[list(READING_COLUMNS)].itertuples(index=False)
     ]
 
 
@@ -520,6 +522,24 @@ def test_characters_that_cp1252_does_not_have_are_counted(tmp_path):
     result = source(tmp_path, encoding="cp1252").read(["a\ufffd"], DAY)
     assert rows(result) == [("a\ufffd", "06:00", 1, "GOOD")]
     assert counts(result) == {"characters that the encoding does not have, replaced": 1}
+
+
+def test_a_parser_that_fails_among_threads_is_asked_again_without(tmp_path, monkeypatch):
+    write(tmp_path, LONG + "2026-01-31 06:02:00,62-PT-001\n")
+    original, asked = pacsv.read_csv, []
+
+    def fail_among_threads(data, *, read_options, parse_options, convert_options):
+        asked.append(read_options.use_threads)
+        found = original(data, read_options, parse_options, convert_options)
+        if read_options.use_threads:
+            raise pa.ArrowException("Unknown error: a chunk failed converting")
+        return found
+
+    monkeypatch.setattr(pacsv, "read_csv", fail_among_threads)
+    result = source(tmp_path, quality_column="quality").read(TAGS, DAY)
+    assert rows(result) == EXPECTED
+    assert counts(result) == {"row dropped": 1}
+    assert asked == [True, False]
 
 
 def test_a_header_that_is_no_csv_is_cut_all_the_same(tmp_path):

@@ -17,7 +17,7 @@ from hypothesis import strategies as st
 
 import connectors.csv_index
 from connectors import open_source
-from connectors.base import Quality, Window
+from connectors.base import Mark, Quality, Window
 from connectors.times import TimeReader, resolve_doubled_hour
 
 ZONE = zoneinfo.ZoneInfo("Europe/Vienna")
@@ -129,6 +129,8 @@ def test_a_pass_that_the_order_does_not_tell_is_uncertain_and_counted(tmp_path):
         assert list(result.readings.loc[uncertain, "time"]) == list(
             pd.date_range(AUTUMN, periods=6, freq="10min")
         )
+        marked = result.readings["marks"] == Mark.AMBIGUOUS_TIME
+        assert (marked == uncertain).all()
         (problem,) = result.problems
         assert problem.count == 6
         assert "comes twice" in problem.what

@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 
 import connectors.parquet_file
 from connectors import open_source
-from connectors.base import ConnectorError, Quality, Window
+from connectors.base import READING_COLUMNS, ConnectorError, Quality, Window
 
 DAY = Window(pd.Timestamp("2026-01-31", tz="UTC"), pd.Timestamp("2026-02-01", tz="UTC"))
 MINUTES = pd.date_range("2026-01-31 06:00", periods=60, freq="min", tz="UTC")
@@ -41,7 +41,7 @@ def write_minutes(folder, **more):
 def rows(result):
     return [
         (str(tag), f"{t:%H:%M}", None if np.isnan(v) else v, Quality(q).name)
-        for tag, t, v, q in result.readings.itertuples(index=False)
+        for tag, t, v, q in result.readings[list(READING_COLUMNS)].itertuples(index=False)
     ]
 
 

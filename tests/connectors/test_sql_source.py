@@ -12,7 +12,7 @@ from sqlalchemy.exc import OperationalError
 
 import connectors.sql_engine
 from connectors import open_source, parse_options
-from connectors.base import ConnectorError, Quality, Window
+from connectors.base import READING_COLUMNS, ConnectorError, Quality, Window
 from connectors.sql_engine import Database
 from connectors.sql_source import SqlSource
 
@@ -42,7 +42,7 @@ def window(start, end):
 def rows(result):
     return [
         (str(tag), f"{t:%H:%M}", None if np.isnan(v) else v, Quality(q).name)
-        for tag, t, v, q in result.readings.itertuples(index=False)
+        for tag, t, v, q in result.readings[list(READING_COLUMNS)].itertuples(index=False)
     ]
 
 
