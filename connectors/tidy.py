@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
-from connectors.base import Problem, Quality
+from connectors.base import Mark, Problem, Quality
 from connectors.times import from_microseconds, resolve_doubled_hour
 
 if TYPE_CHECKING:
@@ -136,7 +136,7 @@ def settle_doubled_hour(
 
     Returns:
         The rows with their times settled, and the positions of those whose pass the order does not
-        tell: these count as the first pass and are at best uncertain.
+        tell: these count as the first pass, are at best uncertain, and keep their candidate.
     """
     at = rows.doubled_at
     if not len(at):
@@ -147,14 +147,16 @@ def settle_doubled_hour(
     time[at[later]] = rows.doubled_second[later]
     unsettled = at[passes < 0]
     quality[unsettled] = np.maximum(quality[unsettled], np.uint8(Quality.UNCERTAIN))
-    return Rows(rows.tag, time, rows.value, quality, at[:0], at[:0]), unsettled
+    second = rows.doubled_second[passes < 0]
+    return Rows(rows.tag, time, rows.value, quality, unsettled, second), unsettled
 
 
 def tidy(rows: Rows, tags: Sequence[str]) -> tuple[pd.DataFrame, int]:
     """Sort readings by tag and time, and keep the last one written of each tag and time.
 
     Args:
-        rows: settled rows whose tag is the position in ``tags``.
+        rows: settled rows whose tag is the position in ``tags``; one that still has a second
+            candidate time is marked as ambiguous.
         tags: the names asked for, distinct and sorted.
 
     Returns:
@@ -172,12 +174,18 @@ def tidy(rows: Rows, tags: Sequence[str]) -> tuple[pd.DataFrame, int]:
     replaced = int(len(last) - last.sum())
     if replaced:
         order, tag, time = order[last], tag[last], time[last]
+    marks: dict[str, npt.NDArray[np.uint8]] = {}
+    if len(rows.doubled_at):
+        ambiguous = np.zeros(len(rows), dtype=np.uint8)
+        ambiguous[rows.doubled_at] = Mark.AMBIGUOUS_TIME
+        marks["marks"] = ambiguous[order]
     table = pd.DataFrame(
         {
             "tag": pd.Categorical.from_codes(tag, categories=pd.Index(list(tags), dtype="str")),
             "time": from_microseconds(time),
             "value": rows.value[order],
             "quality": rows.quality[order],
+            **marks,
         },
         copy=False,
     )

@@ -129,7 +129,7 @@ def test_a_pass_that_the_order_does_not_tell_is_uncertain_and_counted(tmp_path):
         assert list(result.readings.loc[uncertain, "time"]) == list(
             pd.date_range(AUTUMN, periods=6, freq="10min")
         )
-        marked = result.readings["marks"] == Mark.AMBIGUOUS_TIME
+        marked = result.readings["marks"].to_numpy() == int(Mark.AMBIGUOUS_TIME)
         assert (marked == uncertain).all()
         (problem,) = result.problems
         assert problem.count == 6

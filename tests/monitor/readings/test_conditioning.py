@@ -272,3 +272,17 @@ def test_a_valve_may_stand_where_it_stands():
     readings = _readings("T", MINUTES, STILL)
     got = condition(readings, {"T": _tag(unit="%")}, GRID, 0.5, {"T": ("T",)})
     assert got.quality["cells_stuck"].sum() == 0
+
+
+def test_rows_of_a_source_without_remarks_may_stand_beside_those_of_one_with():
+    """As the cycle joins them: a column that only one source has is empty for the other."""
+    marked = _readings("T", MINUTES, np.full(120, 150.0)).assign(marks=np.uint8(0))
+    marked.loc[7, "marks"] = int(Mark.AMBIGUOUS_TIME)
+    plain = _readings("N", MINUTES, np.full(120, 40.0))
+    both = pd.concat([plain, marked], ignore_index=True)
+    both["tag"] = both["tag"].astype(pd.CategoricalDtype(["N", "T"]))
+    got = condition(both, {"T": _tag(), "N": _tag()}, GRID, 0.5)
+    assert got.quality.groupby("tag", observed=True)["ambiguous"].sum().to_dict() == {
+        "T": 1,
+        "N": 0,
+    }
