@@ -115,6 +115,11 @@ class SqlTimes:
 
     def parse(self, cells: Sequence[Any]) -> ParsedTimes:
         """Read fetched cells; what cannot be read becomes `NO_TIME`."""
+        if self.kind in _PER_SECOND:
+            try:
+                return self.reader.numbers(np.array(cells, dtype=np.float64))  # None becomes NaN
+            except (TypeError, ValueError):
+                pass  # texts among the numbers: read one by one below
         codes, distinct = pd.factorize(pd.Series(cells, dtype=object), use_na_sentinel=False)
         at = codes.astype(np.int32)
         if self.kind in {"zoned", "local"}:
