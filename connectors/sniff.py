@@ -85,8 +85,9 @@ class Sniffed:
 
     def tag_list(self, source: str = "export") -> str:
         """Return the tag list as CSV, as ``tag_lists`` in a site file takes it."""
-        text = io.StringIO()
-        writer = csv.writer(text, lineterminator="\n")
+        text = io.StringIO(newline="")
+        # RFC 4180's line ends: with others, a carriage return in a name would not be quoted.
+        writer = csv.writer(text, lineterminator="\r\n")
         writer.writerow(["name", "source", "unit", "description"])
         writer.writerows([tag.name, source, tag.unit, tag.description] for tag in self.tags)
         return text.getvalue()

@@ -10,7 +10,7 @@ import tomllib
 import awkward
 import pandas as pd
 import pytest
-from hypothesis import HealthCheck, given, settings
+from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
 
 from connectors import open_source, sniff
@@ -79,7 +79,7 @@ def test_units_and_texts_below_the_header_go_into_the_tag_list(tmp_path):
     head += ';Frischdampf;vor "TG1";;\n;bar ü;°C;;t/h\n'
     rows = "".join(f"31.01.2026 06:{n:02d};41,{n};500,5;1,5;12\n" for n in range(30))
     found = sniff(write(tmp_path, head + rows, encoding="cp1252"))
-    assert list(csv.DictReader(io.StringIO(found.tag_list("dcs")))) == [
+    assert list(csv.DictReader(io.StringIO(found.tag_list("dcs"), newline=""))) == [
         {"name": "FT 3", "source": "dcs", "unit": "t/h", "description": ""},
         {"name": "PT 1", "source": "dcs", "unit": "bar(g)", "description": "Frischdampf"},
         {"name": "Strom [MW]", "source": "dcs", "unit": "MW", "description": ""},
@@ -192,6 +192,7 @@ HOSTILE = ['"]]\n[store]', "a\nid = 'x'", "\x1b[31m", "\u2028x\x7f", '"""', "</s
 @settings(
     max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture]
 )
+@example(names=["\x1b[31m", "0\r0"])
 @given(names=st.lists(st.sampled_from(HOSTILE) | st.text(max_size=8), min_size=2, max_size=4))
 def test_names_in_a_file_never_become_keys_of_the_proposal(tmp_path_factory, names):
     folder = tmp_path_factory.mktemp("hostile")
@@ -208,7 +209,7 @@ def test_names_in_a_file_never_become_keys_of_the_proposal(tmp_path_factory, nam
     table = tomllib.loads(found.source_table())
     assert table.keys() == {"source"}
     assert table["source"] == [{"id": "export", "kind": "csv", **found.options}]
-    rows = list(csv.reader(io.StringIO(found.tag_list())))
+    rows = list(csv.reader(io.StringIO(found.tag_list(), newline="")))
     assert [row[0] for row in rows[1:]] == [tag.name for tag in found.tags]
 
 
