@@ -3,7 +3,7 @@
 All jobs but the notifications run one after the other in one worker thread, so they never overlap.
 A job that fails says so once, with its cause, and once more when it works again; meanwhile the
 watermark stays, and the next cycle catches up. Whatever ends the process, the store holds whole
-windows only.
+windows only. The site file is read again when it has changed.
 """
 
 from __future__ import annotations
@@ -11,6 +11,7 @@ from __future__ import annotations
 import contextlib
 import math
 import os
+import re
 import signal
 import threading
 import time
@@ -20,16 +21,24 @@ from datetime import UTC, datetime
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
+import sqlalchemy as sa
 from apscheduler.executors.pool import ThreadPoolExecutor
 from apscheduler.schedulers.background import BackgroundScheduler
 from apscheduler.triggers.base import BaseTrigger
 
 from connectors.base import ConnectorError
 from monitor.backfill import catch_up, last_complete, recorded_sources
+from monitor.errors import LostworkError
+from monitor.health import EVERY, Health, heartbeat_path, tell_systemd
+from monitor.holding import SiteLock, wait_for_lock
 from monitor.housekeeping import keep_house
 from monitor.judging import judge_site, plant_now
 from monitor.log import logger
 from monitor.notify.notifier import NOTIFICATIONS, Notifier
+from monitor.reloading import SiteWatch
+from monitor.store import schema
+from monitor.store.engine import reading
+from monitor.store.errors import InstanceRunning
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping
@@ -38,17 +47,31 @@ if TYPE_CHECKING:
     from monitor.figures import Computed
     from monitor.site.load import Site
     from monitor.site.shifts import ShiftCalendar, Span
-    from monitor.store.lock import InstanceLock
     from monitor.store.open import Store
     from monitor.store.site import SiteStore
 
-__all__ = ["Daemon", "GridTrigger", "ShiftTrigger", "last_shift", "run_daemon"]
+__all__ = ["Daemon", "GridTrigger", "ShiftTrigger", "last_shifts", "run_daemon"]
 
 MINUTE, QUARTER, HOUR, DAY = 60, 900, 3600, 86400
 _HOUSEKEEPING = 3 * HOUR + 17 * 60
 """[s after midnight UTC] When few look and few write."""
+_SHIFTS = 9
+"""So many shifts are reported that were missed: three days of three."""
+_JUDGED_RUNS = 200
+"""Runs that a new process looks back over for figures that were not judged."""
+_CLOCK_SLACK = 60.0
+"""[s] A clock that is set back by less is being kept right."""
 _SEEN = 1000
 """Problems of sources that are remembered, so that each is told once."""
+
+
+_STANDBY = 5.0
+"""[s] Between two looks of a standby, at most; far below two cycles of a minute."""
+_NUMBER = re.compile(r"\d+")
+
+
+class ClockSetBackError(LostworkError):
+    """The wall clock shows a time that was passed before."""
 
 
 class GridTrigger(BaseTrigger):  # type: ignore[misc]  # no annotations there
@@ -83,10 +106,10 @@ class ShiftTrigger(BaseTrigger):  # type: ignore[misc]  # as above
         return datetime.fromtimestamp(end + self._offset, tz=UTC)
 
 
-def last_shift(calendar: ShiftCalendar, until: float) -> Span:
-    """The newest shift that is over at a time (UTC seconds)."""
-    spans = calendar.spans(int(until) - 3 * DAY, int(until) + 1)
-    return [span for span in spans if span.end <= until][-1]
+def last_shifts(calendar: ShiftCalendar, until: float, most: int = 1) -> list[Span]:
+    """The newest shifts that are over at a time (UTC seconds), the oldest first."""
+    spans = calendar.spans(int(until) - (2 + most) * DAY, int(until) + 1)
+    return [span for span in spans if span.end <= until][-most:]
 
 
 @dataclass
@@ -99,24 +122,42 @@ class Daemon:
         clock: the wall clock, UTC seconds.
         stop: set when the daemon has to end; jobs look at it between windows and pages.
         lock: held for the daemon's life, or None.
-        lost_lock: why the lock is no longer held; the daemon has to end.
+        database: the store that ``store`` is a part of; without it the site file is read once.
+        lost_lock: another instance has the lock; the daemon has to end.
+        health: how the jobs are doing.
+        reloaded: called after a changed site file was taken up.
     """
 
     site: Site
     store: SiteStore
     clock: Callable[[], float] = time.time
     stop: threading.Event = field(default_factory=threading.Event)
-    lock: InstanceLock | None = None
+    lock: SiteLock | None = None
+    database: Store | None = None
     lost_lock: Exception | None = field(default=None, init=False)
+    health: Health = field(init=False)
+    reloaded: Callable[[], None] | None = field(default=None, init=False)
     _open: ExitStack = field(default_factory=ExitStack, init=False)
     _sources: Mapping[str, Connector] | None = field(default=None, init=False)
     _stale_from: int | None = field(default=None, init=False)
+    _judged: bool = field(default=False, init=False)
+    _unreported: int | None = field(default=None, init=False)
+    _latest: float = field(default=0.0, init=False)
+    _watch: SiteWatch = field(init=False)
     _failing: dict[str, str] = field(default_factory=dict, init=False)
     _told: set[tuple[str, str]] = field(default_factory=set, init=False)
     _notifier: Notifier = field(init=False)
 
     def __post_init__(self) -> None:
         self._notifier = Notifier(self.site, self.store, self.clock)
+        self._watch = SiteWatch(self.site)
+        daemon = self.site.file.daemon
+        self.health = Health(
+            self.site.id,
+            self.clock,
+            heartbeat_path(self.site.folder, daemon.heartbeat),
+            heartbeat_path(self.site.folder, daemon.metrics),
+        )
 
     def start(self) -> None:
         """What a daemon does first: catch up, judge, draw, and report the last shift."""
@@ -136,8 +177,14 @@ class Daemon:
         self._guarded("pages", self._pages)
 
     def shift_report(self) -> None:
-        """Write the report of the last shift that is over."""
-        self._guarded("shift report", self._shift_report)
+        """Write the reports of shifts that are over and are not reported as they stand now."""
+        self._guarded("shift report", self._shift_reports)
+
+    def beat(self) -> None:
+        """Show that the daemon lives, and look at the clock; may run beside any other job."""
+        with self._told_once("clock"):
+            self._look_at_clock()
+        self.health.beat()
 
     def housekeeping(self) -> None:
         """Keep the store quick and small."""
@@ -163,7 +210,10 @@ class Daemon:
         with self._told_once(name):
             if self.lock is not None:
                 self._check_lock(self.lock)
+            if name == "cycle":
+                self._reload()
             job()
+        self.health.beat()
 
     @contextlib.contextmanager
     def _told_once(self, name: str) -> Iterator[None]:
@@ -176,19 +226,56 @@ class Daemon:
             if self._failing.pop(name, None) is not None:
                 logger().info(f"{name} works again", job=name)
             self._notifier.job_worked(name)
+            self.health.worked(name)
 
-    def _check_lock(self, lock: InstanceLock) -> None:
+    def _check_lock(self, lock: SiteLock) -> None:
         try:
             lock.check()
-        except Exception as error:
-            # Another instance may have begun: two writers are worse than none.
+        except InstanceRunning as error:
+            # Another instance has begun: two writers are worse than none.
             self.lost_lock = error
             self.stop.set()
             raise
 
+    def _look_at_clock(self) -> None:
+        now = self.clock()
+        if now < self._latest - _CLOCK_SLACK:
+            raise ClockSetBackError(
+                "the clock was set back; new figures wait until it has passed "
+                f"{_utc(int(self._latest))} again"
+            )
+        self._latest = max(self._latest, now)
+
+    def _reload(self) -> None:
+        """Take a changed site file up; one that cannot be used is told, and the old one stays."""
+        if self.database is None or not self._watch.changed():
+            return
+        with self._told_once("site file"):
+            site = self._watch.load()
+            if site is None:
+                return
+            # Registering first: whatever fails here leaves everything as it was.
+            store = self._registered(site)
+            told = site.file.notify != self.site.file.notify
+            self.close()
+            self.site, self.store = site, store
+            if told:
+                self._notifier = Notifier(site, store, self.clock)
+            logger().info("site file read again", hash=site.hash[:12])
+            if self.reloaded is not None:
+                self.reloaded()
+
+    def _registered(self, site: Site) -> SiteStore:
+        from monitor.commands.opening import register  # noqa: PLC0415 - commands import this
+
+        assert self.database is not None  # noqa: S101 - asked by `_reload`
+        return register(site, self.database)
+
     def _tell_failure(self, name: str, error: Exception) -> None:
         cause = str(error) or type(error).__name__
-        if self._failing.get(name) == cause:
+        self.health.failed(name, cause)
+        # Times, ports and process numbers in it do not make it another cause.
+        if _NUMBER.sub("#", self._failing.get(name, "")) == _NUMBER.sub("#", cause):
             logger().debug(f"{name} still fails", job=name, cause=cause)
             return
         self._failing[name] = cause
@@ -207,7 +294,9 @@ class Daemon:
         if not done:
             return
         first = done[0].batch.start
-        self._stale_from = first if self._stale_from is None else min(first, self._stale_from)
+        self._stale_from = _earliest(first, self._stale_from)
+        self._unreported = _earliest(first, self._unreported)
+        self.health.stored(done[-1].batch.end, sum(c.readings for c in done), len(done))
         self._tell_problems(done)
         logger().info(
             "figures stored",
@@ -244,10 +333,12 @@ class Daemon:
             return
         end = int(newest.timestamp()) + self.store.interval_s
         start = end if self._stale_from is None else self._stale_from
+        if not self._judged:
+            start = min(start, self._not_judged(end))
         statuses = judge_site(
             self.site, self.store, start, end, plant_now(self.store, self.clock())
         )
-        self._stale_from = None
+        self._stale_from, self._judged = None, True
         for status in statuses:
             for action, reason in status.refused:
                 logger().warning(
@@ -257,6 +348,11 @@ class Daemon:
         drifting = [f"{s.subject}.{s.figure}" for s in statuses if s.state == "drifting"]
         logger().info("judged", figures=len(statuses), drifting=",".join(drifting) or "none")
 
+    def _not_judged(self, end: int) -> int:
+        """From where a process that died may have left figures that it computed and not judged."""
+        windows = (run.window_start for run in self.store.runs(_JUDGED_RUNS))
+        return min((start for start in windows if start is not None), default=end)
+
     def _pages(self) -> None:
         from monitor.reports.pages import write_pages  # noqa: PLC0415 - plotly takes a second
 
@@ -264,15 +360,37 @@ class Daemon:
             if self.stop.is_set():
                 return
 
-    def _shift_report(self) -> None:
+    def _shift_reports(self) -> None:
+        from dashboards.files import shift_file  # noqa: PLC0415 - plotly takes a second
         from monitor.reports.pages import pages_folder  # noqa: PLC0415 - as above
         from monitor.reports.shift import write_shift_report  # noqa: PLC0415
 
         if self.store.newest() is None:
             return
-        span = last_shift(self.site.calendar, last_complete(self.site, self.clock()))
-        path = write_shift_report(self.site, self.store, span, self._now(), pages_folder(self.site))
-        logger().info("shift report written", shift=span.name, day=str(span.day), path=str(path))
+        folder, zone = pages_folder(self.site), self.site.file.site.time_zone
+        spans = last_shifts(self.site.calendar, last_complete(self.site, self.clock()), _SHIFTS)
+        begun = self._first_figure()
+        for span in spans:
+            local = pd.Timestamp(span.start, unit="s", tz="UTC").tz_convert(zone)
+            there = (folder / shift_file(local, span.name)).exists()
+            new = self._unreported is not None and span.end > self._unreported
+            # Of a store that has just begun, what was whole; the last one always.
+            early = span.start < begun and span is not spans[-1]
+            if self.stop.is_set() or early or (there and not new):
+                continue
+            path = write_shift_report(self.site, self.store, span, self._now(), folder)
+            logger().info(
+                "shift report written", shift=span.name, day=str(span.day), path=str(path)
+            )
+        if not self.stop.is_set():
+            self._unreported = None
+
+    def _first_figure(self) -> int:
+        """Start of the oldest figures: what lies before it is no shift of this daemon."""
+        table = schema.ledger_figures
+        query = sa.select(sa.func.min(table.c.time)).where(table.c.site_id == self.store.site_id)
+        with reading(self.store.engine, "read its first figure") as connection:
+            return int(connection.execute(query).scalar() or 0)
 
     def _now(self) -> pd.Timestamp:
         return pd.Timestamp(self.clock(), unit="s", tz="UTC")
@@ -285,6 +403,7 @@ def run_daemon(
     *,
     clock: Callable[[], float] = time.time,
     stop: threading.Event | None = None,
+    standby: bool = False,
 ) -> None:
     """Run until a signal comes, or ``stop`` is set.
 
@@ -294,27 +413,63 @@ def run_daemon(
         store: the site's part of it.
         clock: the wall clock, UTC seconds.
         stop: ends the daemon when it is set.
+        standby: while another instance runs, wait for it to go instead of refusing.
 
     Raises:
         InstanceRunning: another instance computes this site; the message says who.
-        StoreError: the lock on the site was lost.
+        StoreError: the lock cannot be tried.
     """
-    with database.instance_lock(site.id, "lostwork run") as lock:
-        daemon = Daemon(site, store, clock, stop or threading.Event(), lock)
+    lock = SiteLock(database, site.id, "lostwork run")
+    daemon = Daemon(site, store, clock, stop or threading.Event(), lock, database)
+    with _signals(daemon.stop), contextlib.ExitStack() as ends:
+        ends.callback(lock.release)
+        if standby:
+            tell_systemd("READY=1\nSTATUS=standing by")
+            if not wait_for_lock(lock, daemon.stop, _STANDBY):
+                return
+        else:
+            lock.check()
+        ends.callback(daemon.close)
         scheduler = _scheduler(daemon)
-        with _signals(daemon.stop):
-            scheduler.start()
-            logger().info("running", site=site.id, interval_s=store.interval_s, process=os.getpid())
-            while not daemon.stop.wait(1.0):
-                pass
-            logger().info("ending: the window in hand is finished first")
-            # Without this the scheduler may still hand a job to workers that are gone.
-            scheduler.remove_all_jobs()
-            scheduler.shutdown(wait=True)
-        daemon.close()
+        scheduler.start()
+        logger().info("running", site=site.id, interval_s=store.interval_s, process=os.getpid())
+        tell_systemd("READY=1\nSTATUS=running")
+        _beat_until_stopped(daemon, scheduler)
+        tell_systemd("STOPPING=1")
+        logger().info("ending: the window in hand is finished first")
+        # Without this the scheduler may still hand a job to workers that are gone.
+        scheduler.remove_all_jobs()
+        scheduler.shutdown(wait=True)
+        daemon.health.end()
     if daemon.lost_lock is not None:
         raise daemon.lost_lock
     logger().info("ended")
+
+
+def _beat_until_stopped(daemon: Daemon, scheduler: Any) -> None:  # noqa: ANN401 - as below
+    beaten = -EVERY
+    while not daemon.stop.wait(1.0):
+        if time.monotonic() - beaten < EVERY:
+            continue
+        beaten = time.monotonic()
+        daemon.health.due(
+            {job.id: job.next_run_time.timestamp() for job in scheduler.get_jobs()
+             if job.id in _NAMES.values() and job.next_run_time}
+        )  # fmt: skip
+        daemon.beat()
+        # This thread alone is no sign of life: the scheduler's has to be there too.
+        if scheduler.running:
+            tell_systemd("WATCHDOG=1")
+
+
+_NAMES = {
+    "cycle": "cycle",
+    "judge": "judgement",
+    "pages": "pages",
+    "shift_report": "shift report",
+    "housekeeping": "housekeeping",
+}
+"""The daemon's jobs, and what they are called in the log."""
 
 
 def _scheduler(daemon: Daemon) -> Any:  # noqa: ANN401 - the library has no annotations
@@ -323,21 +478,31 @@ def _scheduler(daemon: Daemon) -> Any:  # noqa: ANN401 - the library has no anno
         executors={"default": ThreadPoolExecutor(1), NOTIFICATIONS: ThreadPoolExecutor(1)},
         job_defaults={"coalesce": True, "max_instances": 1, "misfire_grace_time": None},
     )
-    settle = daemon.site.file.site.settle
-    jobs: tuple[tuple[Callable[[], None], BaseTrigger], ...] = (
-        (daemon.cycle, GridTrigger(daemon.store.interval_s, settle)),
-        # A second apart, so that at a full hour the figures come first and the report last.
-        (daemon.judge, GridTrigger(HOUR, settle + 1)),
-        (daemon.pages, GridTrigger(QUARTER, settle + 2)),
-        (daemon.shift_report, ShiftTrigger(daemon.site.calendar, settle + 3)),
-        (daemon.housekeeping, GridTrigger(DAY, _HOUSEKEEPING)),
-    )
     scheduler.add_job(daemon.start)
-    for job, trigger in jobs:
-        scheduler.add_job(job, trigger)
+    for method, trigger in _triggers(daemon).items():
+        scheduler.add_job(getattr(daemon, method), trigger, id=_NAMES[method])
     # A thread of its own: a mail server that does not answer holds up no figures.
     scheduler.add_job(daemon.notify, GridTrigger(MINUTE, 30), executor=NOTIFICATIONS)
+
+    def reschedule() -> None:
+        for method, trigger in _triggers(daemon).items():
+            scheduler.reschedule_job(_NAMES[method], trigger=trigger)
+
+    daemon.reloaded = reschedule
     return scheduler
+
+
+def _triggers(daemon: Daemon) -> dict[str, BaseTrigger]:
+    """When each job is due, by the site file in force."""
+    settle = daemon.site.file.site.settle
+    return {
+        "cycle": GridTrigger(daemon.store.interval_s, settle),
+        # A second apart, so that at a full hour the figures come first and the report last.
+        "judge": GridTrigger(HOUR, settle + 1),
+        "pages": GridTrigger(QUARTER, settle + 2),
+        "shift_report": ShiftTrigger(daemon.site.calendar, settle + 3),
+        "housekeeping": GridTrigger(DAY, _HOUSEKEEPING),
+    }
 
 
 @contextlib.contextmanager
@@ -373,3 +538,7 @@ def _expected() -> tuple[type[Exception], ...]:
 
 def _utc(seconds: int) -> str:
     return datetime.fromtimestamp(seconds, tz=UTC).strftime("%Y-%m-%dT%H:%M:%SZ")
+
+
+def _earliest(time: int, known: int | None) -> int:
+    return time if known is None else min(time, known)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from dataclasses import asdict, dataclass
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
@@ -13,6 +13,7 @@ from monitor.commands.exits import ExitCode
 from monitor.commands.group import write_json
 from monitor.commands.opening import Opened, opened_to_read
 from monitor.commands.times import duration_seconds, local, utc_text
+from monitor.health import heartbeat_path, read_heartbeat
 
 if TYPE_CHECKING:
     from monitor.store.runs import Run
@@ -20,6 +21,8 @@ if TYPE_CHECKING:
 __all__ = ["status"]
 
 _LOOKED_AT = 50
+_SILENT = 120
+"""[s] A daemon writes its heartbeat many times in this."""
 
 
 @dataclass(frozen=True)
@@ -34,6 +37,8 @@ class _Status:
     open_alarms: int
     behind: dict[str, int]
     """Sources whose newest reading is before the figures' end, and its time."""
+    beat: dict[str, Any] | None
+    """The heartbeat of the daemon that runs."""
     unhealthy: tuple[str, ...]
 
 
@@ -52,7 +57,8 @@ def status(
 
     For a person, or for a watchdog by its exit code.
 
-    Exit code 1 when the newest figure is too old, there is none, or the last run failed.
+    Exit code 1 when the newest figure is too old, there is none, the last run failed, or a job of
+    the daemon fails. The jobs are those of the heartbeat file (see [daemon] in config/README.md).
 
     Example: lostwork status site.toml --max-lag 30min
     """
@@ -72,6 +78,7 @@ def status(
                 "last_run": run,
                 "failures": found.failures,
                 "open_alarms": found.open_alarms,
+                "heartbeat": found.beat,
                 "sources_behind": {s: utc_text(mark) for s, mark in found.behind.items()},
             }
         )
@@ -91,6 +98,11 @@ def _status(at: Opened, allowed: int | None) -> _Status:
     over = [run for run in runs if run.status != "running"]
     failures = next((n for n, run in enumerate(over) if run.status == "done"), len(over))
     holder = _holder(at)
+    beat = (
+        None
+        if holder is None
+        else read_heartbeat(heartbeat_path(at.site.folder, at.site.file.daemon.heartbeat))
+    )
     unhealthy = []
     if lag is None or newest is None:
         unhealthy.append("there are no figures yet")
@@ -98,6 +110,9 @@ def _status(at: Opened, allowed: int | None) -> _Status:
         unhealthy.append(f"the newest figure is {_span(lag)} old, more than {_span(limit)}")
     if failures:
         unhealthy.append(f"the last run failed ({failures} in a row): {over[0].message}")
+    unhealthy += _faults(beat)
+    if beat is not None and time.time() - beat["time"] > _SILENT:
+        unhealthy.append(f"no sign of life for {_span(int(time.time() - beat['time']))}")
     return _Status(
         newest,
         lag,
@@ -107,8 +122,30 @@ def _status(at: Opened, allowed: int | None) -> _Status:
         failures,
         len(at.store.open_alarms()),
         {s: mark for s, mark in at.store.watermarks().items() if newest and mark < newest},
+        beat,
         tuple(unhealthy),
     )
+
+
+def _faults(beat: dict[str, Any] | None) -> list[str]:
+    """What lasts of the faults that a daemon has told."""
+    jobs = {} if beat is None else beat["jobs"]
+    return [f"{name} fails: {job['cause']}" for name, job in jobs.items() if job["failing_since"]]
+
+
+def _job_rows(beat: dict[str, Any] | None, zone: str) -> list[tuple[str, str]]:
+    jobs = {} if beat is None else beat["jobs"]
+
+    def at(seconds: float | None) -> str:
+        return "-" if seconds is None else local(int(seconds), zone)
+
+    rows = []
+    for name, job in jobs.items():
+        text = f"last {at(job['last'])}, next {at(job['next'])}"
+        if job["failing_since"]:
+            text += f", fails since {at(job['failing_since'])}: {job['cause']}"
+        rows.append((name, text))
+    return rows
 
 
 def _holder(at: Opened) -> str | None:
@@ -137,6 +174,7 @@ def _print(found: _Status, zone: str) -> None:
         ),
         ("failures since", str(found.failures)),
         ("open alarms", str(found.open_alarms)),
+        *_job_rows(found.beat, zone),
         *(("behind", f"source {s}, to {local(t, zone)}") for s, t in found.behind.items()),
         ("health", "; ".join(found.unhealthy) or "good"),
     ]

@@ -19,6 +19,7 @@ from monitor.site.units import Quantity, Unit, parse_unit, split_number
 
 __all__ = [
     "Alarms",
+    "Daemon",
     "DeadState",
     "Drift",
     "DriftFigure",
@@ -249,6 +250,13 @@ class Pages(Table):
     days: float = Field(default=60.0, gt=0)
 
 
+class Daemon(Table):
+    """[daemon]: files that say how it is doing, from the site file's folder; "" for none."""
+
+    heartbeat: str = "lostwork-heartbeat.json"
+    metrics: str = ""
+
+
 class SiteFile(Table):
     """A whole site file, each table checked by itself."""
 
@@ -265,4 +273,5 @@ class SiteFile(Table):
     drift: Drift = Drift()
     alarms: Alarms = Alarms()
     pages: Pages = Pages()
+    daemon: Daemon = Daemon()
     notify: tuple[Notify, ...] = ()

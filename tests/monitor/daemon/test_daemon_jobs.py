@@ -211,8 +211,12 @@ def test_the_first_thing_is_to_catch_up_judge_draw_and_report(plant, drive):
     pages = plant.folder / "pages"
     assert (pages / "index.html").is_file()
     assert (pages / "equipment-TG1.html").is_file()
-    # 15:05 in Berlin: the early shift, to 14:00, is the last that is over.
-    assert [p.name for p in pages.glob("shift-2*")] == ["shift-2026-01-11-early.html"]
+    # 15:05 in Berlin: the early shift, to 14:00, is the last that is over. The figures begin at
+    # 15:00 the day before, so the night between is the only other that is whole.
+    assert sorted(p.name for p in pages.glob("shift-2*")) == [
+        "shift-2026-01-10-night.html",
+        "shift-2026-01-11-early.html",
+    ]
 
 
 def test_alarms_are_raised_as_the_hours_go_by(make_plant, drive, tmp_path):
@@ -275,17 +279,21 @@ def test_a_daemon_that_lost_its_lock_ends(plant):
         raise StoreError("the connection that holds the lock broke")
 
     with opened(plant.path) as at:
-        daemon_lock = InstanceLock("me", lost)
 
         class Losing:
-            """A store whose lock breaks at once."""
+            """A store whose lock breaks at once, and is another's then."""
+
+            taken = 0
 
             def instance_lock(self, _site, _owner):
                 from contextlib import nullcontext  # noqa: PLC0415
 
-                return nullcontext(daemon_lock)
+                self.taken += 1
+                if self.taken > 1:
+                    raise InstanceRunning("already being computed by the standby")
+                return nullcontext(InstanceLock("me", lost))
 
-        with pytest.raises(StoreError, match="holds the lock broke"):
+        with pytest.raises(InstanceRunning, match="computed by the standby"):
             run_daemon(at.site, Losing(), at.store, clock=plant.end.timestamp)
         assert at.store.newest() is None
 

@@ -9,7 +9,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from monitor.daemon import GridTrigger, ShiftTrigger, last_shift
+from monitor.daemon import GridTrigger, ShiftTrigger, last_shifts
 from monitor.site.shifts import ShiftCalendar
 
 UTC = dt.UTC
@@ -85,7 +85,7 @@ def test_the_night_in_which_the_clock_goes_back_is_reported_once():
 
 
 def test_the_last_shift_is_the_one_that_is_over():
-    before = last_shift(SHIFTS, at("2026-01-10T04:59:59").timestamp())
-    after = last_shift(SHIFTS, at("2026-01-10T05:00:00").timestamp())
+    before = last_shifts(SHIFTS, at("2026-01-10T04:59:59").timestamp())[-1]
+    after = last_shifts(SHIFTS, at("2026-01-10T05:00:00").timestamp())[-1]
     assert (before.name, str(before.day)) == ("late", "2026-01-09")
     assert (after.name, str(after.day)) == ("night", "2026-01-09")

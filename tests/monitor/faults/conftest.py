@@ -27,6 +27,12 @@ TABLES: dict[str, list[str]] = {
     "alarms": ["alarm_id"],
     "alarm_transitions": ["alarm_id", "recorded"],
 }
+# A transaction that came to nothing leaves gaps in PostgreSQL's numbers, so rows go by name.
+NAMES = {
+    "subject_id": "select subject_id as id, kind || ' ' || subject as name from subjects",
+    "figure_id": "select figure_id as id, figure as name from figure_names",
+    "tag_id": "select tag_id as id, tag as name from tags",
+}
 
 
 @pytest.fixture
@@ -36,12 +42,15 @@ def whole_store() -> Callable[..., dict[str, pd.DataFrame]]:
     def read(plant, store: str = "sqlite:///figures.sqlite") -> dict[str, pd.DataFrame]:
         engine = make_engine(store, plant.folder)
         with engine.connect() as connection:
-            found = {
-                table: _sorted(
-                    pd.read_sql_query(f"select * from {table}", connection).drop(columns=dealt)
-                )
-                for table, dealt in TABLES.items()
+            names = {
+                column: pd.read_sql_query(query, connection, index_col="id")["name"]
+                for column, query in NAMES.items()
             }
+            found = {}
+            for table, dealt in TABLES.items():
+                rows = pd.read_sql_query(f"select * from {table}", connection)
+                known = {c: rows[c].map(names[c]) for c in names if c in rows}
+                found[table] = _sorted(rows.assign(**known).drop(columns=dealt))
         engine.dispose()
         return found
 

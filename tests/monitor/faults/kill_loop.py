@@ -23,6 +23,7 @@ from contextlib import contextmanager
 from pathlib import Path
 
 import alembic.command
+import numpy as np
 import psycopg
 import sqlalchemy as sa
 
@@ -31,8 +32,10 @@ import monitor.store.open
 from monitor.backfill import backfill
 from monitor.commands.opening import open_site, opened
 from monitor.daemon import Daemon
+from monitor.drift.charts import ewma_limit_width
 from monitor.judging import judge_site, plant_now
 from monitor.store.errors import InstanceRunning
+from monitor.thermo.water import state_pt
 
 OPENING, COMPUTING, WRITING = 1, 2, 3
 DOING = mmap.mmap(-1, 1)
@@ -167,10 +170,21 @@ def disturbed(work, kills, longest, dice, hit):
     attempt(work, None)
 
 
+def warm_up(path):
+    """Do once what takes each new process seconds: units, the steam tables, a chart's limits.
+
+    Nothing here starts a thread, which a fork would lose.
+    """
+    drift = open_site(path).file.drift
+    state_pt(np.array([1e6]), np.array([500.0]))
+    for side in ("low", "high", "both"):
+        ewma_limit_width(drift.weight, drift.false_alarm_every / 3600, side)
+
+
 def main():
     path = Path(sys.argv[1])
     seed, in_backfill, in_live, start, end, live_end = map(int, sys.argv[2:])
-    open_site(path)
+    warm_up(path)
     dice, hit = random.Random(seed), {}  # noqa: S311 - moments, not secrets
     disturbed(lambda: past(path, start, end), in_backfill, 0.6, dice, hit)
     disturbed(lambda: live(path, live_end), in_live, 0.4, dice, hit)

@@ -29,6 +29,7 @@ TABLES = [
     models.DriftFigure,
     models.Alarms,
     models.Pages,
+    models.Daemon,
     models.Notify,
     models.SiteFile,
     *(kind.options for kind in KINDS.values()),

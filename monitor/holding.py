@@ -1,0 +1,77 @@
+"""A site's lock over the years: waited for by a standby, taken again when the store was away."""
+
+from __future__ import annotations
+
+from contextlib import ExitStack
+from typing import TYPE_CHECKING
+
+from monitor.log import logger
+from monitor.store.errors import InstanceRunning, StoreError
+
+if TYPE_CHECKING:
+    import threading
+
+    from monitor.store.lock import InstanceLock
+    from monitor.store.open import Store
+
+__all__ = ["SiteLock", "wait_for_lock"]
+
+
+class SiteLock:
+    """A site's lock that outlives its connection: PostgreSQL may be restarted under it."""
+
+    def __init__(self, database: Store, site: str, owner: str) -> None:
+        self._database, self._site, self._owner = database, site, owner
+        self._stack = ExitStack()
+        self._held: InstanceLock | None = None
+
+    def check(self) -> None:
+        """See that the lock is held, and take it again when its connection broke.
+
+        Raises:
+            InstanceRunning: another instance has it.
+            StoreError: the store is away; ask again later.
+        """
+        if self._held is not None:
+            try:
+                self._held.check()
+            except StoreError:
+                self.release()
+            else:
+                return
+        self._held = self._stack.enter_context(
+            self._database.instance_lock(self._site, self._owner)
+        )
+
+    def release(self) -> None:
+        """Let go of it; harmless when it is not held."""
+        self._held = None
+        self._stack.close()
+
+
+def wait_for_lock(lock: SiteLock, stop: threading.Event, every: float) -> bool:
+    """Stand by until the instance that runs is gone.
+
+    Args:
+        lock: of the site.
+        stop: ends the wait.
+        every: seconds between two tries.
+
+    Returns:
+        Whether the lock is held; False when the wait was ended.
+    """
+    told = ""
+    while not stop.is_set():
+        try:
+            lock.check()
+        except (InstanceRunning, StoreError) as error:
+            # Who runs changes seldom, and a store that is away may come back.
+            if str(error) != told:
+                told = str(error)
+                logger().info("standing by", cause=told)
+        else:
+            if told:
+                logger().info("taking over")
+            return True
+        stop.wait(every)
+    return False
