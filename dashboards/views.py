@@ -165,11 +165,13 @@ class QualityRow:
     good: float
     uncertain: float
     bad: float
-    """Called bad by the historian or outside the instrument's range."""
+    """Left out: called bad by the historian, out of range, too fast, or a spike."""
     missing: float
     """Grid cells without any usable reading, as a share of all cells."""
     held: float
     """Grid cells bridged with a held value, as a share of all cells."""
+    stuck: float = 0.0
+    """Grid cells whose value stands still while its neighbours move, as a share of all cells."""
 
 
 @dataclass(frozen=True)

@@ -17,7 +17,7 @@ if TYPE_CHECKING:
 
 __all__ = ["extra_destroyed", "gather"]
 
-_DOUBTFUL = Flag.UNCERTAIN | Flag.BAD | Flag.OUT_OF_RANGE
+_DOUBTFUL = Flag.UNCERTAIN | Flag.BAD | Flag.OUT_OF_RANGE | Flag.TOO_FAST | Flag.SPIKE | Flag.STUCK
 
 
 def gather(

@@ -22,6 +22,7 @@ from dashboards.views import (
 )
 from monitor.drift.message import cost_sentence
 from monitor.flags import Flag, describe
+from monitor.store.batch import LEFT_OUT_COLUMNS
 
 if TYPE_CHECKING:
     from monitor.equipment.base import Figure, Item
@@ -173,7 +174,7 @@ class Gathered:
         told = {
             bit: share
             for bit, share in flags.items()
-            if share > _WORTH_TELLING and not bit & (Flag.OFF | Flag.UNSTEADY)
+            if share > _WORTH_TELLING and not bit & (Flag.OFF | Flag.UNSTEADY | Flag.STARTING)
         }
         return EquipmentRow(
             id=item.id,
@@ -333,7 +334,9 @@ class Gathered:
             self._quality_row({str(k): v for k, v in row.items()})
             for row in totals.to_dict("records")
         ]
-        return tuple(sorted(rows, key=lambda r: (-(r.bad + r.missing + r.uncertain), r.tag)))
+        return tuple(
+            sorted(rows, key=lambda r: (-(r.bad + r.missing + r.uncertain + r.stuck), r.tag))
+        )
 
     def _quality_row(self, row: dict[str, object]) -> QualityRow:
         counts = {k: int(cast("int", v)) for k, v in row.items() if k != "tag"}
@@ -347,9 +350,10 @@ class Gathered:
             readings=counts["readings"],
             good=counts["good"] / readings,
             uncertain=counts["uncertain"] / readings,
-            bad=(counts["bad"] + counts["out_of_range"]) / readings,
+            bad=sum(counts[name] for name in LEFT_OUT_COLUMNS) / readings,
             missing=counts["cells_missing"] / cells,
             held=counts["cells_held"] / cells,
+            stuck=counts["cells_stuck"] / cells,
         )
 
 

@@ -74,7 +74,7 @@ def shift_view(site: Site, store: SiteStore, span: Span, now: pd.Timestamp) -> S
 
 
 def _worth_a_look(row: QualityRow) -> bool:
-    return row.bad + row.missing + row.uncertain > _POOR
+    return row.bad + row.missing + row.uncertain + row.stuck > _POOR
 
 
 def _previous(gathered: Gathered, span: Span) -> tuple[LedgerLine, ...]:
