@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from collections.abc import Iterator, Mapping
 
     from connectors.base import Connector
+    from monitor.equipment.base import Item
     from monitor.site.load import Site
     from monitor.site.models import Tag
     from monitor.store.batch import FigureBatch
@@ -32,6 +33,7 @@ if TYPE_CHECKING:
 __all__ = ["Line", "Verdict", "check"]
 
 Verdict = Literal["ok", "look", "wrong"]
+_VERDICTS: tuple[Verdict, ...] = ("ok", "look", "wrong")
 HOUR, DAY = 3600, 86400
 
 _SHOWN = ("mass_flow_kg_s", "pressure_bar", "temperature_degc", "dryness")
@@ -40,6 +42,12 @@ LEAST_GOOD = 0.9
 """Share of good readings under which a tag is worth a look."""
 IMBALANCE_LOOK, IMBALANCE_WRONG = 0.03, 0.15
 """Shares of what goes in: meters of 1 to 2 % explain the first, nothing but an error the second."""
+RISE_LOOK, RISE_WRONG = 0.03, 0.15
+"""Rises of absolute pressure where none can be: two gauges explain less than the first."""
+FLOWING = 0.1
+"""[kg/s] Above it a stream runs; one at rest may stand at any pressure."""
+_PRESSURE_FALLS = frozenset({"flash_vessel", "header", "letdown", "trap_group", "turbine", "vent"})
+"""Kinds in which nothing leaves above what enters; a pump may hide in the return of a user."""
 
 
 @dataclass(frozen=True)
@@ -283,6 +291,9 @@ def _judge_stream(
 
 def _equipment(site: Site, batch: FigureBatch) -> Iterator[Line]:
     streams = batch.streams.groupby("subject")[["mass_flow_kg_s", "energy_kw"]].mean().abs()
+    running = batch.streams[batch.streams["mass_flow_kg_s"] > FLOWING]
+    medians = running.groupby("subject")["pressure_bar"].median().dropna()
+    bar = {str(stream): float(value) for stream, value in medians.items()}
     for item_id, cells in batch.equipment.groupby("subject", sort=False):
         item = site.items[str(item_id)]
         means = cells.drop(columns=["subject", "time", "flag"]).mean()
@@ -301,6 +312,9 @@ def _equipment(site: Site, batch: FigureBatch) -> Iterator[Line]:
         figures: dict[str, float | int | str | None] = {k: _number(v) for k, v in shares.items()}
         figures |= {"destroyed_live_kw": _number(destroyed), "exergy_in_live_kw": _number(entered)}
         verdict, reason = _judge_equipment(shares, destroyed, entered)
+        risen = _judge_pressure(item, bar)
+        if _VERDICTS.index(risen[0]) >= _VERDICTS.index(verdict):
+            verdict, reason = risen
         yield Line("equipment", item.id, verdict, found, reason, figures)
 
 
@@ -322,6 +336,20 @@ def _judge_equipment(
                 f"{_percent(size)} more {word} goes {kind}; a meter, or a missing stream",
             )
     return "ok", ""
+
+
+def _judge_pressure(item: Item, bar: Mapping[str, float]) -> tuple[Verdict, str]:
+    """Whether a stream leaves at a higher pressure than anything enters, which needs a pump."""
+    if item.kind.name not in _PRESSURE_FALLS:
+        return "ok", ""
+    entering = max((bar[i] for i in item.ids("in") if i in bar), default=float("inf"))
+    outlet = max((i for i in item.ids("out") if i in bar), key=lambda i: bar[i], default=None)
+    if outlet is None or bar[outlet] <= (1 + RISE_LOOK) * entering:
+        return "ok", ""
+    return "wrong" if bar[outlet] > (1 + RISE_WRONG) * entering else "look", (
+        f"'{outlet}' leaves at {bar[outlet]:.4g} bar(a), above the {entering:.4g} bar(a) of what "
+        "enters; correct the unit (gauge for absolute?), the tag, or the streams"
+    )
 
 
 def _share(part: float, whole: float) -> float:

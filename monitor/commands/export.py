@@ -74,5 +74,11 @@ def _output(out: str, kind: str) -> Iterator[BinaryIO]:
         with part.open("wb") as file:
             yield file
         part.replace(path)
+    except OSError as error:
+        if error.filename != str(part):
+            raise
+        # The person named the file, not the part that stands in for it.
+        said = f"cannot be written ({error.strerror}); name a file in a folder that takes it"
+        raise OSError(error.errno, said, str(path)) from error
     finally:
         part.unlink(missing_ok=True)

@@ -65,6 +65,28 @@ def test_check_says_when_a_unit_must_be_wrong(plant, lostwork):
     assert "is the unit right?" in lines(ran)["tag", "PT-6201"]["reason"]
 
 
+def test_check_says_when_steam_seems_to_flow_uphill(plant, lostwork):
+    unit = 'name = "PT-1201"\nsource = "dcs"\nunit = "{}"'
+    plant.edit(unit.format("bar(g)"), unit.format("MPa(g)"))
+    ran = lostwork("check", plant.path, "--json")
+    assert ran.code == 1
+    line = lines(ran)["equipment", "LD62"]
+    assert line["verdict"] == "wrong"
+    assert "'reduced' leaves at 1" in line["reason"]
+    assert "above the 62 bar(a) of what enters; correct the unit" in line["reason"]
+
+
+@pytest.mark.parametrize(("bar", "verdict"), [(60, "ok"), (63, "ok"), (66, "look"), (73, "wrong")])
+def test_check_allows_for_two_gauges_that_differ(plant, lostwork, bar, verdict):
+    # The header's inlet stays at 62 bar(a); what a pair of gauges explains is not told.
+    plant.edit(
+        'flow = "FT-4101"\npressure = "PT-6201"', f'flow = "FT-4101"\npressure = "{bar} bar(a)"'
+    )
+    line = lines(lostwork("check", plant.path, "--json"))["equipment", "HDR62"]
+    assert line["verdict"] == verdict
+    assert line["reason"].startswith("'to_turbine' leaves at") == (verdict != "ok")
+
+
 def test_check_looks_twice_at_steam_near_saturation_without_a_phase(plant, lostwork):
     rows = plant.readings.copy()
     boiling = IAPWS97(P=0.4, x=0).T - 273.15
@@ -334,10 +356,12 @@ def test_export_of_nothing_is_a_table_without_rows(computed, lostwork, tmp_path)
 
 
 def test_an_export_that_cannot_be_written_leaves_nothing(computed, lostwork, tmp_path):
-    ran = lostwork("export", computed.path, "--from", "2026-01-11", "--out", tmp_path / "no" / "x")
-    assert ran.code == 5
-    assert "No such file or directory" in ran.err
-    assert list(tmp_path.glob("**/*.part")) == []
+    for out in (tmp_path / "no" / "x", tmp_path):  # a folder that is not there; no file at all
+        ran = lostwork("export", computed.path, "--from", "2026-01-11", "--out", out)
+        assert ran.code == 5
+        assert f"lostwork: {out}: cannot be written (" in ran.err
+        assert ".part" not in ran.err
+        assert list(tmp_path.parent.glob("**/*.part")) == []
 
 
 def test_an_export_that_ends_before_it_begins_is_refused(computed, lostwork):
