@@ -211,13 +211,18 @@ def _units_to_settle(tags: Sequence[SniffedTag]) -> list[str]:
     points = []
     without = [tag.name for tag in tags if not tag.unit]
     if without:
-        count = "1 tag" if len(without) == 1 else f"{len(without)} tags"
-        points.append(f"the unit of {count}, for example 'bar(g)' or 'degC'")
+        points.append(f"the unit of {_named(without)}, for example 'bar(g)' or 'degC'")
     pressures = [tag.name for tag in tags if needs_datum(tag.unit)]
     if pressures:
-        count = "1 pressure" if len(pressures) == 1 else f"{len(pressures)} pressures"
-        points.append(f"absolute or gauge: the datum of {count}, for example 'bar(g)'")
+        named = _named(pressures)
+        points.append(f"absolute or gauge: the datum of {named}, for example 'bar(g)'")
     return points
+
+
+def _named(names: Sequence[str]) -> str:
+    """Name the first few of the tags, and count the others."""
+    shown = ", ".join(repr(name) for name in names[:3])
+    return shown if len(names) <= 3 else f"{shown} and {len(names) - 3} more"  # noqa: PLR2004
 
 
 def _is_parquet(path: Path) -> bool:

@@ -6,18 +6,23 @@
 from __future__ import annotations
 
 import json
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import connectors
 from connectors.base import ConnectorError
+from connectors.sniff_units import needs_datum
 from monitor.errors import WrongUseError
 from monitor.site.units import UnitError, parse_unit
 
 if TYPE_CHECKING:
+    from collections.abc import Iterable, Iterator
     from pathlib import Path
 
 __all__ = ["Proposal", "sniff"]
+
+_SHOWN = 3
+"""Tags that a point names before it counts the others."""
 
 
 @dataclass(frozen=True)
@@ -60,7 +65,19 @@ def sniff(path: Path) -> Proposal:
     except ConnectorError as error:
         raise WrongUseError(str(error)) from error
     units = {tag.name: _unit(tag.unit) for tag in found.tags}
-    return Proposal(found, units, found.open_points)
+    # As it was named: that is right in a site file beside which the command was given.
+    options = found.options | {"path": path.as_posix()}
+    points = (*found.open_points, *_unknown(found.tags))
+    return Proposal(replace(found, options=options, open_points=points), units, points)
+
+
+def _unknown(tags: Iterable[connectors.SniffedTag]) -> Iterator[str]:
+    """Say which of the export's units a site file does not take, beside those without a datum."""
+    odd = [tag for tag in tags if tag.unit and not needs_datum(tag.unit) and not _unit(tag.unit)]
+    if odd:
+        shown = ", ".join(f"{tag.name!r} ({tag.unit})" for tag in odd[:_SHOWN])
+        more = f" and {len(odd) - _SHOWN} more" if len(odd) > _SHOWN else ""
+        yield f"no unit of a site file: that of {shown}{more}; write another, or leave the tag out"
 
 
 def _unit(text: str) -> str:

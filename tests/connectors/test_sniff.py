@@ -105,9 +105,7 @@ def test_a_column_of_units_beside_the_tags_goes_into_the_tag_list(tmp_path):
     rows = long_rows(tags=("PT-1",), more=",bar") + long_rows(tags=("TT-2",), more=",DEG C")
     found = sniff(write(tmp_path, "time,tag,value,EU\n" + rows))
     assert [(tag.name, tag.unit) for tag in found.tags] == [("PT-1", "bar"), ("TT-2", "degC")]
-    assert found.open_points == (
-        "absolute or gauge: the datum of 1 pressure, for example 'bar(g)'",
-    )
+    assert found.open_points == ("absolute or gauge: the datum of 'PT-1', for example 'bar(g)'",)
 
 
 def test_what_the_file_does_not_say_is_named(tmp_path):
@@ -122,7 +120,7 @@ def test_what_the_file_does_not_say_is_named(tmp_path):
     assert "set time_zone" in points
     assert "quality is written as 3, 7: say in quality_good" in points
     assert "words in the values' place: 'Open' (12): add those" in points
-    assert "the unit of 1 tag" in points
+    assert "the unit of 'V-1', for example" in points
     assert "36 × quality word is in no list" in points
     for point in found.open_points:
         assert f"# to settle: {point}" in found.source_table()

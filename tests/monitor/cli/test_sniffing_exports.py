@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import gzip
 import tomllib
+from contextlib import closing
 
 import pandas as pd
 import pytest
@@ -113,14 +114,39 @@ def test_a_unit_that_a_site_file_does_not_take_is_left_open_with_what_the_export
     (tmp_path / "export.csv").write_text(WIDE_LOCAL.replace("bar(g)", "bar"))
     ran = lostwork("check", "--sniff", tmp_path / "export.csv")
     assert 'unit = ""  # the export says "bar"' in ran.out
-    assert "# to settle: absolute or gauge: the datum of 1 pressure" in ran.out
+    assert "# to settle: absolute or gauge: the datum of 'Druck Süd'" in ran.out
+
+
+def test_a_unit_that_nothing_here_measures_is_named_with_its_tag(lostwork, tmp_path):
+    (tmp_path / "export.csv").write_text(WIDE_LOCAL.replace("bar(g)", "pH"))
+    ran = lostwork("check", "--sniff", tmp_path / "export.csv")
+    assert "# to settle: no unit of a site file: that of 'Druck Süd' (pH);" in ran.out
+
+
+def test_a_vacuum_gauge_is_taken_for_one(lostwork, tmp_path):
+    (tmp_path / "export.csv").write_text(WIDE_LOCAL.replace("bar(g)", "mbar vac"))
+    told = lostwork("check", "--sniff", tmp_path / "export.csv", "--json").json()
+    assert told["tags"]["Druck Süd"] == "mbar(vac)"
+
+
+def test_the_proposed_path_is_right_in_a_site_file_where_the_command_was_given(
+    lostwork, tmp_path, monkeypatch
+):
+    (tmp_path / "exports").mkdir()
+    (tmp_path / "exports" / "day.csv").write_text(LONG)
+    monkeypatch.chdir(tmp_path)
+    table = tomllib.loads(lostwork("check", "--sniff", "exports/day.csv").out)["source"][0]
+    assert table["path"] == "exports/day.csv"
+    options = {key: value for key, value in table.items() if key not in {"id", "kind"}}
+    with closing(connectors.open_source("csv", options, tmp_path)) as source:
+        assert source.probe().tags == ("62-PT-001", "62-TT-001")
 
 
 def test_what_the_export_does_not_say_is_left_to_a_person(lostwork, tmp_path):
     (tmp_path / "export.csv").write_text(AMBIGUOUS)
     ran = lostwork("check", "--sniff", tmp_path / "export.csv")
     assert "# to settle: day or month first?" in ran.out
-    assert "# to settle: the unit of 1 tag," in ran.out
+    assert "# to settle: the unit of 'FT-1', for example" in ran.out
     assert 'unit = ""' in ran.out
 
 
