@@ -20,7 +20,7 @@ from monitor.errors import Issue, SiteFileError
 from monitor.site.flows import flow_complaints, meter_complaints
 from monitor.site.issues import issue_of, no_such, option_issue, unique
 from monitor.site.models import Reference, SiteFile, Stream, Tag
-from monitor.site.raw import read_toml, with_environment, with_tag_lists
+from monitor.site.raw import TAG_LISTS, read_toml, with_environment, with_tag_lists
 from monitor.site.shifts import ShiftCalendar
 from monitor.site.statements import check_stream
 from monitor.site.tags import FLOWS
@@ -325,13 +325,16 @@ def _references(site: Site) -> Iterator[tuple[str, str, Reference, Quantity]]:
 
 
 def _check_references(site: Site, issues: list[Issue]) -> None:
+    # A list that is not read would make a mistake of every reference to its tags.
+    all_known = not any(issue.table == TAG_LISTS for issue in issues)
     for table, key, reference, quantity in _references(site):
         if reference.tag is None:
             unit = reference.unit
         elif reference.tag in site.tags:
             unit = site.tags[reference.tag].unit
         else:
-            issues.append(Issue(table, key, no_such("tag", reference.tag, site.tags)))
+            if all_known:
+                issues.append(Issue(table, key, no_such("tag", reference.tag, site.tags)))
             continue
         metered = (
             key == "flow" and quantity is Quantity.MASS_FLOW and table.startswith("[[stream]]")
@@ -344,9 +347,10 @@ def _check_references(site: Site, issues: list[Issue]) -> None:
         found = unit.quantity.name.lower().replace("_", " ")
         wanted = quantity.name.lower().replace("_", " ")
         what = f"tag '{reference.tag}'" if reference.tag else "the fixed value"
-        issues.append(
-            Issue(table, key, f"{what} is in '{unit.text}', a {found}; a {wanted} is wanted")
-        )
+        said = f"{what} is in '{unit.text}', a {found}; a {wanted} is wanted"
+        if not reference.tag and unit.text == "1":
+            said = f"{what} has no unit; write that of a {wanted} after it, with a space between"
+        issues.append(Issue(table, key, said))
     barometer = site.file.dead_state.pressure
     gauge = site.tags.get(barometer.tag or "")
     if gauge is not None and gauge.unit.datum is PressureDatum.GAUGE:

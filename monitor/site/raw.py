@@ -16,8 +16,10 @@ if TYPE_CHECKING:
     from collections.abc import Iterator
     from pathlib import Path
 
-__all__ = ["read_toml", "with_environment", "with_tag_lists"]
+__all__ = ["TAG_LISTS", "read_toml", "with_environment", "with_tag_lists"]
 
+TAG_LISTS = "tag_lists"
+"""The table of an issue with a whole list: what tags it holds is then not known."""
 _VARIABLE = re.compile(r"\$\{([A-Za-z_][A-Za-z0-9_]*)\}")
 
 
@@ -82,7 +84,8 @@ def with_tag_lists(
             content = file.read_bytes()
             text = content.decode("utf-8-sig")
         except (OSError, UnicodeDecodeError) as error:
-            issues.append(Issue("tag_lists", str(name), f"cannot be read: {error}"))
+            said = error.strerror if isinstance(error, OSError) else f"{error}; save it as UTF-8"
+            issues.append(Issue(TAG_LISTS, str(name), f"cannot be read ({said})"))
             continue
         digest.update(content)
         tags += _rows_of(text, str(name), issues)
@@ -96,13 +99,11 @@ def _rows_of(text: str, name: str, issues: list[Issue]) -> Iterator[dict[str, An
     reader = csv.DictReader(text.splitlines(), delimiter=delimiter)
     unknown = sorted(set(reader.fieldnames or ()) - set(_LIST_COLUMNS))
     if unknown or "name" not in (reader.fieldnames or ()):
-        issues.append(
-            Issue(
-                f"tag list {name}",
-                ", ".join(unknown),
-                f"the header row must be made of {', '.join(_LIST_COLUMNS)}",
-            )
+        wrong = (
+            f"{', '.join(map(repr, unknown))} in the header row" if unknown else "no 'name' there"
         )
+        said = f"{wrong}; the header row must be made of {', '.join(_LIST_COLUMNS)}"
+        issues.append(Issue(TAG_LISTS, name, said))
         return
     for row in reader:
         tag: dict[str, Any] = {

@@ -209,7 +209,7 @@ def test_a_tag_list_from_a_spreadsheet_adds_tags(site_of, tmp_path):
 def test_a_tag_list_with_a_wrong_column_says_which(site_of, tmp_path):
     (tmp_path / "tags.csv").write_text("name,source,units\nTA,dcs,degC\n", encoding="utf-8")
     told = _told(site_of('tag_lists = ["tags.csv"]\n', HEAD, TAGS, PLANT))
-    assert "tag list tags.csv, units" in told
+    assert "tag_lists, tags.csv: 'units' in the header row" in told
 
 
 def test_a_secret_comes_from_the_environment_and_its_absence_is_told(site_of, monkeypatch):
@@ -227,6 +227,33 @@ def test_a_file_that_is_no_toml_and_one_that_is_not_there_get_a_sentence(tmp_pat
         load_site(broken)
     with pytest.raises(LostworkError, match="cannot be read"):
         load_site(tmp_path / "none.toml")
+
+
+@pytest.mark.parametrize(
+    ("content", "said"),
+    [
+        (None, "cannot be read (No such file or directory)"),
+        ("name,source,unit\nTA,dcs,degC\n".encode("utf-16"), "save it as UTF-8"),
+        (b"name,source,unitt\nTA,dcs,degC\n", "'unitt' in the header row"),
+        (b"", "no 'name' there; the header row must be made of name,"),
+    ],
+)
+def test_a_list_that_cannot_be_read_is_one_mistake_not_one_a_tag(site_of, tmp_path, content, said):
+    if content is not None:
+        (tmp_path / "tags.csv").write_bytes(content)
+    told = _told(site_of('tag_lists = ["tags.csv"]\n', HEAD, PLANT))
+    assert "tag_lists, tags.csv: " in told
+    assert said in told
+    assert "is not a tag of this file" not in told
+    # What does not hang on the list is told in one go with it.
+    told = _told(site_of('tag_lists = ["tags.csv"]\n', HEAD, PLANT.replace("letdown", "let_down")))
+    assert said in told
+    assert "'let_down' is not one of" in told
+
+
+def test_a_fixed_value_without_a_unit_is_told_so(site_of):
+    told = _told(site_of(HEAD, TAGS, PLANT.replace('"250 degC"', '"250"')))
+    assert "the fixed value has no unit; write that of a temperature after it" in told
 
 
 def test_a_change_of_the_tag_list_changes_the_provenance(site_of, tmp_path):
