@@ -133,7 +133,7 @@ def _clear(folder: Path, *, keep: bool) -> None:
 def _pages(at: Opened, progress: Progress) -> str:
     import pandas as pd  # noqa: PLC0415
 
-    from monitor.daemon import last_shift  # noqa: PLC0415
+    from monitor.daemon import last_shifts  # noqa: PLC0415
     from monitor.judging import plant_now  # noqa: PLC0415
     from monitor.reports.pages import pages_folder, write_pages  # noqa: PLC0415
     from monitor.reports.shift import write_shift_report  # noqa: PLC0415
@@ -146,7 +146,7 @@ def _pages(at: Opened, progress: Progress) -> str:
     for page in write_pages(at.site, at.store, now):
         written.append(page)
         progress.at(len(written) / count, page.name)
-    span = last_shift(at.site.calendar, until)
+    (span,) = last_shifts(at.site.calendar, until)
     write_shift_report(at.site, at.store, span, now, pages_folder(at.site))
     return str(written[0])
 
