@@ -1,4 +1,4 @@
-"""Look at a site before anything runs: every source, tag, stream and balance, over its newest day.
+"""Look at a site before anything runs: store, sources, tags, streams, balances of the newest day.
 
 Nothing is written. The figures are those of the daemon: the same readings, states and balances.
 """
@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 import pandas as pd
+import sqlalchemy as sa
 
 import connectors
 from connectors.base import ConnectorError, Probe, Quality
@@ -19,6 +20,8 @@ from monitor.cycle import read_window
 from monitor.figures import compute
 from monitor.flags import Flag, describe
 from monitor.readings.condition import RANGE_ABOVE, RANGE_BELOW
+from monitor.store.engine import is_sqlite, make_engine, place, reading, sqlite_path
+from monitor.store.errors import StoreError
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
@@ -55,7 +58,7 @@ class Line:
     """What was found about one thing.
 
     Attributes:
-        kind: source, tag, stream or equipment.
+        kind: store, source, tag, stream or equipment.
         subject: its id or name.
         verdict: ``ok``, ``look`` (worth a person's eyes) or ``wrong`` (figures would be wrong).
         found: a few words with numbers and units.
@@ -63,7 +66,7 @@ class Line:
         figures: the numbers, for a machine.
     """
 
-    kind: Literal["source", "tag", "stream", "equipment"]
+    kind: Literal["store", "source", "tag", "stream", "equipment"]
     subject: str
     verdict: Verdict
     found: str
@@ -78,10 +81,10 @@ def check(site: Site) -> list[Line]:
         site: a site file that loads.
 
     Returns:
-        Lines in the order sources, tags, streams, equipment. A source that cannot be read is a
-        line of its own; what hangs on it is then told as far as it goes.
+        Lines in the order store, sources, tags, streams, equipment. A source that cannot be read is
+        a line of its own; what hangs on it is then told as far as it goes.
     """
-    lines: list[Line] = []
+    lines = [_store(site)]
     probes: dict[str, Probe] = {}
     with ExitStack() as stack:
         opened: dict[str, Connector] = {}
@@ -98,6 +101,22 @@ def check(site: Site) -> list[Line]:
         if not ends:
             return lines + [_source(i, probe, 0) for i, probe in probes.items()]
         return lines + list(_look(site, opened, probes, max(ends)))
+
+
+def _store(site: Site) -> Line:
+    """Reach the store, without making one: the first run does that."""
+    try:
+        engine = make_engine(site.file.store.url, site.folder)
+        if is_sqlite(engine) and not sqlite_path(engine).exists():
+            return Line("store", site.id, "ok", f"{place(engine)}; the first run makes it")
+        try:
+            with reading(engine, "check it") as connection:
+                connection.execute(sa.select(1))
+        finally:
+            engine.dispose()
+    except StoreError as error:
+        return Line("store", site.id, "wrong", "cannot be used", str(error))
+    return Line("store", site.id, "ok", place(engine))
 
 
 def _look(
