@@ -12,6 +12,7 @@ from monitor.commands.names import who
 from monitor.commands.opening import opened, opened_to_read
 from monitor.commands.tables import Column, print_table
 from monitor.commands.times import duration_seconds, local, utc_text
+from monitor.errors import WrongUseError
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -99,9 +100,13 @@ def _act(
     from monitor.drift.alarms import Alarm, AlarmState, act  # noqa: PLC0415
     from monitor.judging import judge_site, plant_now, rules_of  # noqa: PLC0415
     from monitor.store.alarms import AlarmAction, AlarmTransition  # noqa: PLC0415
+    from monitor.store.errors import NoSuchAlarm  # noqa: PLC0415
 
     with opened(path) as at:
-        record = at.store.alarm(number)
+        try:
+            record = at.store.alarm(number)
+        except NoSuchAlarm as error:
+            raise WrongUseError(f"{error}; 'lostwork alarms list {path}' shows them") from error
         name, now = who(by), plant_now(at.store)
         until = None if seconds is None else now + seconds
         before = Alarm(AlarmState(record.state), record.cleared is None, record.shelved_until)

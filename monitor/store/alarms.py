@@ -15,7 +15,7 @@ import sqlalchemy as sa
 
 from monitor.store import schema
 from monitor.store.engine import reading, writing
-from monitor.store.errors import StoreError
+from monitor.store.errors import NoSuchAlarm, StoreError
 from monitor.store.handle import Instant, SiteHandle, seconds
 from monitor.store.upsert import upsert
 
@@ -130,7 +130,7 @@ class Alarms(SiteHandle):
         """Append a step and set the alarm's state; a step that is stored already adds nothing.
 
         Raises:
-            StoreError: the site has no such alarm.
+            NoSuchAlarm: the site has no such alarm.
         """
         table = schema.alarms
         with writing(self.engine, "record an alarm's step") as connection:
@@ -143,7 +143,7 @@ class Alarms(SiteHandle):
             if any(_same(transition, step) for step in known):
                 return
             if connection.execute(change).rowcount != 1:
-                raise StoreError(f"site '{self.site}' has no alarm {alarm_id}")
+                raise NoSuchAlarm(f"site '{self.site}' has no alarm {alarm_id}")
             self._append(connection, alarm_id, [transition], first=len(known))
 
     def replace_alarms(
@@ -205,11 +205,11 @@ class Alarms(SiteHandle):
         """One alarm.
 
         Raises:
-            StoreError: the site has no such alarm.
+            NoSuchAlarm: the site has no such alarm.
         """
         found = self._alarms(schema.alarms.c.alarm_id == alarm_id)
         if not found:
-            raise StoreError(f"site '{self.site}' has no alarm {alarm_id}")
+            raise NoSuchAlarm(f"site '{self.site}' has no alarm {alarm_id}")
         return found[0]
 
     def alarm_transitions(self, alarm_id: int) -> list[AlarmTransition]:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from monitor.errors import LostworkError
 
-__all__ = ["InstanceRunning", "StoreError"]
+__all__ = ["InstanceRunning", "NoSuchAlarm", "StoreError"]
 
 
 class StoreError(LostworkError):
@@ -16,3 +16,7 @@ class StoreError(LostworkError):
 
 class InstanceRunning(StoreError):  # noqa: N818 - a state of the plant, not a fault
     """Another process holds this site's lock; the message names it."""
+
+
+class NoSuchAlarm(StoreError):  # noqa: N818 - the store is well; the number is not one of its
+    """The site has no alarm of this number."""

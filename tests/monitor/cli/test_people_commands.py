@@ -69,8 +69,9 @@ def test_a_duration_that_is_none_is_refused(computed, lostwork, alarm, duration)
 
 def test_an_alarm_that_is_not_there_is_named(computed, lostwork):
     ran = lostwork("alarms", "acknowledge", computed.path, 999)
-    assert ran.code == 5
+    assert ran.code == 2
     assert "no alarm 999" in ran.err
+    assert "'lostwork alarms list " in ran.err
 
 
 def test_a_wash_ends_the_alarm_and_starts_the_baseline_anew(computed, lostwork, alarm):
