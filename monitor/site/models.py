@@ -40,6 +40,9 @@ __all__ = [
 ]
 
 
+_LEAST_KEPT = 35 * 86400
+
+
 class Reference(BaseModel):
     """A value that is either read from a tag or stated as a fixed number with a unit.
 
@@ -104,9 +107,25 @@ class SiteTable(Table):
 
 
 class Store(Table):
-    """[store]: where figures go; a relative SQLite path is taken from the site file's folder."""
+    """[store]: where figures go; a relative SQLite path is taken from the site file's folder.
+
+    What is not kept for a while is kept for ever. Roll-ups by shift, day and month always are.
+    """
 
     url: str = "sqlite:///lostwork.sqlite"
+    keep_cells: Duration | None = None
+    keep_hours: Duration | None = None
+    keep_drift: Duration | None = None
+
+    @model_validator(mode="after")
+    def _long_enough(self) -> Store:
+        cells, hours, drift = self.keep_cells, self.keep_hours, self.keep_drift
+        kept = [k for k in (cells, hours, drift) if k is not None]
+        if kept and min(kept) < _LEAST_KEPT:
+            raise ValueError("keep figures for 35 days at least: a month is made of its days")
+        if hours is not None and (cells is None or hours < cells):
+            raise ValueError("keep_hours must be as long as keep_cells at least")
+        return self
 
 
 class DeadState(Table):

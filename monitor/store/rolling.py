@@ -30,7 +30,10 @@ if TYPE_CHECKING:
 __all__ = ["Figures", "Owners", "load_figures", "load_partials", "rebuild", "roll_up"]
 
 _PARTIAL_COLUMNS = "subject_id, figure_id, start, mean, minimum, maximum, weight, covered_s"
-_REBUILD_S = 7 * 86400
+_DAY = 86400
+_REBUILD_S = 7 * _DAY
+_LONGEST_DAY_S = 26 * 3600
+"""How far before its first figure a day can start, and more."""
 
 
 @dataclass(frozen=True)
@@ -257,13 +260,29 @@ def _rows(
 
 
 def rebuild(connection: sa.Connection, owners: Owners, calendar: Calendar) -> None:
-    """Make all roll-ups of these owners anew from their figures."""
-    resolutions = ", ".join(str(number) for number in schema.RESOLUTIONS.values())
-    for owned in listed_ids("subject_id", owners.subjects):
-        # The resolution leads the key: naming all of them finds the rows without a scan.
-        connection.exec_driver_sql(
-            f"delete from rollups where resolution in ({resolutions}) and {owned}"  # noqa: S608
-        )
+    """Make the roll-ups of these owners anew from their figures.
+
+    Where figures have expired (`monitor.store.retention`), what was rolled up from them cannot be
+    made again, and stays as it is.
+    """
+    ends = _extent(connection, owners)
+    if ends is None:
+        _drop_rollups(connection, owners, 0)
+        return
+    start, last = ends
+    if _days_before(connection, owners, start - _LONGEST_DAY_S):
+        start = (start // _DAY + 1) * _DAY
+        _drop_rollups(connection, owners, start)
+    else:
+        _drop_rollups(connection, owners, 0)
+    for first in range(start, last, _REBUILD_S):
+        end = min(first + _REBUILD_S, last)
+        figures = load_figures(connection, owners, first, end)
+        roll_up(connection, owners, calendar, figures, first, end)
+
+
+def _extent(connection: sa.Connection, owners: Owners) -> tuple[int, int] | None:
+    """From the full hour of the oldest figure to the end of the newest."""
     tables = {
         "stream_figures": ("subject_id", owners.streams),
         "equipment_figures": ("subject_id", owners.equipment),
@@ -277,9 +296,31 @@ def rebuild(connection: sa.Connection, owners: Owners, calendar: Calendar) -> No
     ]
     known = np.array([t for t in chain.from_iterable(e[0] for e in ends) if not np.isnan(t)])
     if not len(known):
-        return
-    first, last = int(known.min()) // 3600 * 3600, int(known.max()) + owners.interval_s
-    for start in range(first, last, _REBUILD_S):
-        end = min(start + _REBUILD_S, last)
-        figures = load_figures(connection, owners, start, end)
-        roll_up(connection, owners, calendar, figures, start, end)
+        return None
+    return int(known.min()) // 3600 * 3600, int(known.max()) + owners.interval_s
+
+
+def _drop_rollups(connection: sa.Connection, owners: Owners, start: int) -> None:
+    resolutions = ", ".join(str(number) for number in schema.RESOLUTIONS.values())
+    for owned in listed_ids("subject_id", owners.subjects):
+        # The resolution leads the key: naming all of them finds the rows without a scan.
+        connection.exec_driver_sql(
+            f"delete from rollups where resolution in ({resolutions}) and {owned} "  # noqa: S608
+            f"and start >= {start}"
+        )
+
+
+def _days_before(connection: sa.Connection, owners: Owners, time: int) -> bool:
+    """Whether there are days too old to be of any figure that is left."""
+    day = schema.RESOLUTIONS["day"]
+    return any(
+        len(
+            fetch(
+                connection,
+                f"select 1 from rollups where resolution = {day} and {owned} and start < {time} "  # noqa: S608
+                "limit 1",
+                1,
+            )
+        )
+        for owned in listed_ids("subject_id", owners.subjects)
+    )
