@@ -1,17 +1,15 @@
 """Many windows, one after the other: what a site missed, or a stretch of its past.
 
-Each window is a transaction of its own, so whatever ends the work, what is done is kept whole. With
-two processes one reads and computes ahead while the other writes; the figures are the same.
+Each window is a transaction of its own, so whatever ends the work, what is done is kept whole.
+Other processes, here or on a cluster, may read and compute ahead; this one writes, and the figures
+are the same.
 """
 
 from __future__ import annotations
 
+import datetime as dt
 import itertools
-import multiprocessing
-import os
-import signal
-import threading
-from concurrent.futures import ProcessPoolExecutor
+import time
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
@@ -20,15 +18,16 @@ import pandas as pd
 import structlog
 
 from connectors.base import ConnectorError, Window
+from monitor.ahead import on_cluster, on_processes
 from monitor.cycle import compute_window, run_window, store_window
 from monitor.errors import WrongUseError
 from monitor.log import logger
 from monitor.sources import open_sources
+from monitor.store.retention import Keep, oldest_writable
 from monitor.version import version
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping
-    from concurrent.futures import Future
 
     from connectors.base import Connector, Problem
     from monitor.cycle import ComputedWindow
@@ -40,6 +39,7 @@ __all__ = [
     "Tally",
     "backfill",
     "catch_up",
+    "kept",
     "last_complete",
     "recorded_run",
     "recorded_sources",
@@ -48,9 +48,7 @@ __all__ = [
 
 HOUR, DAY = 3600, 86400
 _FEW = 3
-"""Windows that are done sooner than a second process is up."""
-_AHEAD = 2
-"""Windows computed ahead of the one being written: more only takes memory."""
+"""So many windows are done sooner than another process is up."""
 
 
 @dataclass
@@ -95,6 +93,12 @@ def last_complete(site: Site, now: float) -> int:
     return int((now - general.settle) // general.interval * general.interval)
 
 
+def kept(site: Site) -> Keep:
+    """How long the site file says that figures are kept."""
+    store = site.file.store
+    return Keep(store.keep_cells, store.keep_hours, store.keep_drift)
+
+
 def backfill(
     site: Site,
     store: SiteStore,
@@ -104,6 +108,7 @@ def backfill(
     progress: Callable[[int, int, Computed], None] | None = None,
     run_kind: str = "backfill",
     workers: int = 1,
+    cluster: str = "",
 ) -> Tally:
     """Compute a stretch of time, a UTC day a window.
 
@@ -114,22 +119,30 @@ def backfill(
         end: integer UTC seconds; the last window ends on the grid at or before it.
         progress: told after each window: windows done, windows in all, the window.
         run_kind: the run's name in the store.
-        workers: 1 computes and writes in turn; 2 computes ahead in a process of its own, when
-            there are enough windows to be worth its start.
+        workers: processes on this machine. 1 computes and writes in turn; with more, one writes and
+            the others compute ahead, when there are enough windows to be worth their start.
+        cluster: address of a Dask scheduler whose workers compute instead.
 
     Raises:
-        WrongUseError: the stretch holds no whole cell.
+        WrongUseError: the stretch holds no whole cell, or begins where figures have expired.
         ConnectorError: a source cannot be read; windows before that are kept.
         StoreError: the store cannot be written; windows before that are kept.
+        WorkersError: the other processes cannot be used; windows before that are kept.
     """
     interval = int(site.file.site.interval)
     first, last = start // HOUR * HOUR, end // interval * interval
     if first >= last:
         raise WrongUseError("the stretch to compute is empty: it must end after it starts")
+    oldest = oldest_writable(kept(site), time.time())
+    if oldest is not None and first < oldest:
+        since = dt.datetime.fromtimestamp(oldest, dt.UTC)
+        raise WrongUseError(
+            f"figures from before {since:%Y-%m-%d} have expired; begin there or later, or set "
+            "[store] keep_cells to a longer time"
+        )
     cut = windows(first, last)
-    workers = 1 if len(cut) <= _FEW else workers
     with recorded_run(site, store, run_kind, first, last) as (run_id, tally):
-        with _computed(site, cut, workers) as stream:
+        with _computed(site, cut, workers, cluster) as stream:
             for computed in stream:
                 store_window(site, store, computed, run_id)
                 tally.add(computed)
@@ -179,6 +192,8 @@ def catch_up(
             return []
         behind = min(reached, end) if late is None else late
         start = int(behind - site.file.site.look_back) // HOUR * HOUR
+        # What came so late that its time has expired stays out, as with `backfill`.
+        start = max(start, oldest_writable(kept(site), now) or start)
     done: list[Computed] = []
     with recorded_run(site, store, run_kind, start, end) as (run_id, tally):
         for first, last in windows(start, end):
@@ -263,58 +278,15 @@ def _finish(store: SiteStore, run_id: int, status: str, tally: Tally, message: s
 
 @contextmanager
 def _computed(
-    site: Site, cut: list[tuple[int, int]], workers: int
+    site: Site, cut: list[tuple[int, int]], workers: int, cluster: str
 ) -> Iterator[Iterator[ComputedWindow]]:
-    """Give computed windows in order, from this process or from one that works ahead."""
-    if workers == 1:
+    """Give computed windows in order, from this process or from others that work ahead."""
+    if cluster:
+        with on_cluster(site, cut, cluster) as stream:
+            yield stream
+    elif workers > 1 and len(cut) > _FEW:
+        with on_processes(site, cut, workers - 1) as stream:
+            yield stream
+    else:
         with open_sources(site) as sources:
             yield (compute_window(site, sources, first, last) for first, last in cut)
-        return
-    pool = ProcessPoolExecutor(
-        1, mp_context=multiprocessing.get_context("spawn"), initializer=_start, initargs=(site,)
-    )
-    try:
-        yield _ahead(pool, cut)
-    finally:
-        pool.shutdown(wait=True, cancel_futures=True)
-
-
-def _ahead(pool: ProcessPoolExecutor, cut: list[tuple[int, int]]) -> Iterator[ComputedWindow]:
-    waiting: list[Future[ComputedWindow]] = []
-    for window in cut:
-        waiting.append(pool.submit(_compute, window))
-        if len(waiting) > _AHEAD:
-            yield waiting.pop(0).result()
-    for future in waiting:
-        yield future.result()
-
-
-class _Worker:
-    """What the computing process keeps between windows: the site, and its open sources."""
-
-    site: Site
-    stack: ExitStack
-    sources: Mapping[str, Connector] | None = None
-
-
-def _start(site: Site) -> None:
-    # Ctrl-C reaches every process of a terminal; the writing one decides what happens.
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
-    # A writer that was killed tells nobody; without this the process would wait for it for ever.
-    threading.Thread(target=_leave_with_parent, daemon=True).start()
-    _Worker.site = site
-
-
-def _leave_with_parent() -> None:
-    parent = multiprocessing.parent_process()
-    if parent is not None:
-        parent.join()
-        os._exit(1)
-
-
-def _compute(window: tuple[int, int]) -> ComputedWindow:
-    if _Worker.sources is None:
-        # Opened here and not at the start, where an error would only break the pool.
-        _Worker.stack = ExitStack()
-        _Worker.sources = _Worker.stack.enter_context(open_sources(_Worker.site))
-    return compute_window(_Worker.site, _Worker.sources, *window)

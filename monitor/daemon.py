@@ -27,7 +27,7 @@ from apscheduler.schedulers.background import BackgroundScheduler
 from apscheduler.triggers.base import BaseTrigger
 
 from connectors.base import ConnectorError
-from monitor.backfill import catch_up, last_complete, recorded_sources
+from monitor.backfill import catch_up, kept, last_complete, recorded_sources
 from monitor.errors import LostworkError
 from monitor.health import EVERY, Health, heartbeat_path, tell_systemd
 from monitor.holding import SiteLock, wait_for_lock
@@ -188,7 +188,9 @@ class Daemon:
 
     def housekeeping(self) -> None:
         """Keep the store quick and small."""
-        self._guarded("housekeeping", lambda: keep_house(self.store, int(self.clock())))
+        self._guarded(
+            "housekeeping", lambda: keep_house(self.store, int(self.clock()), kept(self.site))
+        )
 
     def notify(self) -> None:
         """Tell people of alarms and failed jobs; may run beside any other job."""

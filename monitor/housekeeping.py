@@ -6,10 +6,13 @@ from typing import TYPE_CHECKING
 
 import sqlalchemy as sa
 
+from monitor.log import logger
 from monitor.store import schema
 from monitor.store.engine import is_sqlite, reading, writing
+from monitor.store.retention import apply_retention
 
 if TYPE_CHECKING:
+    from monitor.store.retention import Keep
     from monitor.store.site import SiteStore
 
 __all__ = ["keep_house"]
@@ -18,14 +21,15 @@ DAY = 86400
 _FAILED_RUNS_KEPT = 90 * DAY
 
 
-def keep_house(store: SiteStore, now: int) -> int:
-    """Drop old runs that stored nothing, empty SQLite's log file, refresh its statistics.
+def keep_house(store: SiteStore, now: int, keep: Keep | None = None) -> int:
+    """Drop what has expired and old runs that stored nothing; keep SQLite quick.
 
     A run that stored figures is their provenance and stays as long as they do.
 
     Args:
         store: the site's part of the store.
         now: integer UTC seconds.
+        keep: how long figures are kept; left out: for ever.
 
     Returns:
         Runs dropped.
@@ -33,6 +37,9 @@ def keep_house(store: SiteStore, now: int) -> int:
     Raises:
         StoreError: the database refuses.
     """
+    if keep is not None:
+        for name, count in apply_retention(store, keep, now).items():
+            logger().info("expired rows dropped", table=name, rows=count)
     table = schema.runs
     old = sa.delete(table).where(
         table.c.site_id == store.site_id,

@@ -23,6 +23,7 @@ class ExitCode(IntEnum):
     SOURCE = 4
     STORE = 5
     RUNNING = 6
+    WORKERS = 7
     FAULT = 70
     INTERRUPTED = 130
 
@@ -35,6 +36,7 @@ MEANINGS = {
     ExitCode.SOURCE: "a source cannot be read",
     ExitCode.STORE: "the store, or a file to write, cannot be used",
     ExitCode.RUNNING: "another instance is running",
+    ExitCode.WORKERS: "the processes that compute cannot be used",
     ExitCode.FAULT: "a fault of the program itself",
     ExitCode.INTERRUPTED: "interrupted",
 }
@@ -66,6 +68,10 @@ def _kinds() -> Iterator[tuple[type[Exception], ExitCode]]:
 
     yield InstanceRunning, ExitCode.RUNNING
     yield StoreError, ExitCode.STORE
+
+    from monitor.ahead import WorkersError  # noqa: PLC0415
+
+    yield WorkersError, ExitCode.WORKERS
 
     from sqlalchemy.exc import SQLAlchemyError  # noqa: PLC0415
 

@@ -62,19 +62,28 @@ def once(
                 typer.echo("nothing new")
 
 
-def run(site: Site) -> None:
+def run(
+    site: Site,
+    *,
+    standby: Annotated[
+        bool,
+        typer.Option("--standby", help="While another instance runs, wait and take over from it."),
+    ] = False,
+) -> None:
     """Run as a daemon, until it is stopped.
 
     Figures each interval, alarms each hour, pages and shift reports as they come due.
 
-    Log lines go to stderr (--log-json for a machine). SIGTERM and Ctrl-C finish the window in hand.
+    The site file is read again when it changes. Log lines go to stderr (--log-json for a machine);
+    how the daemon is doing is told by 'lostwork status' and the files of [daemon]. SIGTERM and
+    Ctrl-C finish the window in hand.
 
     Example: lostwork run site.toml
     """
     from monitor.daemon import run_daemon  # noqa: PLC0415
 
     with opened(site) as at:
-        run_daemon(at.site, at.database, at.store)
+        run_daemon(at.site, at.database, at.store, standby=standby)
 
 
 def backfill(
@@ -93,9 +102,19 @@ def backfill(
     workers: Annotated[
         int,
         typer.Option(
-            "--workers", min=1, max=2, help="2: read and compute ahead in a second process."
+            "--workers",
+            min=1,
+            max=64,
+            help="Processes: with 2 or more one writes, the others read and compute ahead.",
         ),
     ] = 2,
+    cluster: Annotated[
+        str,
+        typer.Option(
+            "--cluster",
+            help="Compute on a Dask cluster instead: its scheduler's address, tcp://host:8786.",
+        ),
+    ] = "",
     *,
     as_json: Json = False,
 ) -> None:
@@ -121,6 +140,7 @@ def backfill(
                     first,
                     last,
                     workers=workers,
+                    cluster=cluster,
                     progress=lambda n, of, c: progress.at(n / of, local(c.batch.end, zone)),
                 )
             newest = max(last, _newest_end(at.store))

@@ -193,7 +193,7 @@ def test_another_interval_than_the_stored_one_is_refused(computed, lostwork):
         (("export", "site.toml", "--from", "2026-01-10", "--format", "xlsx"), "'csv', 'parquet'"),
         (("once",), "Missing argument"),
         (("backfill", "site.toml"), "Missing option"),
-        (("backfill", "site.toml", "--from", "2026-01-10", "--workers", "9"), "equal to 2"),
+        (("backfill", "site.toml", "--from", "2026-01-10", "--workers", "0"), "equal to 1"),
     ],
 )
 def test_wrong_use_ends_with_two(lostwork, given, said):
