@@ -51,6 +51,8 @@ FLOWING = 0.1
 """[kg/s] Above it a stream runs; one at rest may stand at any pressure."""
 _PRESSURE_FALLS = frozenset({"flash_vessel", "header", "letdown", "trap_group", "turbine", "vent"})
 """Kinds in which nothing leaves above what enters; a pump may hide in the return of a user."""
+_WATER_PORTS = frozenset({"blowdown", "condensate", "cooling_in", "cooling_out", "drain", "spray"})
+_STEAM_PORTS = frozenset({"exhaust", "extraction", "steam"})
 
 
 @dataclass(frozen=True)
@@ -313,6 +315,8 @@ def _equipment(site: Site, batch: FigureBatch) -> Iterator[Line]:
     running = batch.streams[batch.streams["mass_flow_kg_s"] > FLOWING]
     medians = running.groupby("subject")["pressure_bar"].median().dropna()
     bar = {str(stream): float(value) for stream, value in medians.items()}
+    wet = running.groupby("subject")["dryness"].median().dropna()
+    dryness = {str(stream): float(value) for stream, value in wet.items()}
     for item_id, cells in batch.equipment.groupby("subject", sort=False):
         item = site.items[str(item_id)]
         means = cells.drop(columns=["subject", "time", "flag"]).mean()
@@ -331,9 +335,9 @@ def _equipment(site: Site, batch: FigureBatch) -> Iterator[Line]:
         figures: dict[str, float | int | str | None] = {k: _number(v) for k, v in shares.items()}
         figures |= {"destroyed_live_kw": _number(destroyed), "exergy_in_live_kw": _number(entered)}
         verdict, reason = _judge_equipment(shares, destroyed, entered)
-        risen = _judge_pressure(item, bar)
-        if _VERDICTS.index(risen[0]) >= _VERDICTS.index(verdict):
-            verdict, reason = risen
+        for told in (_judge_phase(item, dryness), _judge_pressure(item, bar)):
+            if told[0] != "ok" and _VERDICTS.index(told[0]) >= _VERDICTS.index(verdict):
+                verdict, reason = told
         yield Line("equipment", item.id, verdict, found, reason, figures)
 
 
@@ -354,6 +358,18 @@ def _judge_equipment(
                 verdict,
                 f"{_percent(size)} more {word} goes {kind}; a meter, or a missing stream",
             )
+    return "ok", ""
+
+
+def _judge_phase(item: Item, dryness: Mapping[str, float]) -> tuple[Verdict, str]:
+    """Whether steam runs where water should, or water where steam should."""
+    for port, streams in item.ports.items():
+        for stream in streams:
+            half = 0.5
+            if port in _WATER_PORTS and dryness.get(stream, 0.0) > half:
+                return "wrong", f"'{stream}' at port {port} is steam; correct its p and T, or tags"
+            if port in _STEAM_PORTS and dryness.get(stream, 1.0) < half:
+                return "wrong", f"'{stream}' at port {port} is water; correct its p and T, or tags"
     return "ok", ""
 
 

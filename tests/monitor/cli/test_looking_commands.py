@@ -102,6 +102,41 @@ def test_check_says_when_steam_seems_to_flow_uphill(plant, lostwork):
     assert "above the 62 bar(a) of what enters; correct the unit" in line["reason"]
 
 
+def test_check_says_when_water_runs_where_steam_should(plant, lostwork):
+    # 30 degC in place of the exhaust's own gauge: liquid at any pressure of that header.
+    plant.edit('temperature = "TT-4103"', 'temperature = "30 degC"')
+    ran = lostwork("check", plant.path, "--json")
+    assert ran.code == 1
+    line = lines(ran)["equipment", "TG1"]
+    assert line["verdict"] == "wrong"
+    assert line["reason"].startswith("'exhaust' at port exhaust is water")
+
+
+@pytest.mark.parametrize(("degc", "verdict"), [(92, "ok"), (160, "wrong")])
+def test_check_says_when_steam_runs_where_condensate_should(plant, lostwork, degc, verdict):
+    # Water boils at 111 degC at 1.5 bar (steam tables, from memory).
+    plant.edit('temperature = "TT-4103"\ncounts_as = "used"', 'temperature = "TT-4103"')
+    user = f"""
+[[stream]]
+id = "back"
+flow = "balance"
+pressure = "1.5 bar(a)"
+temperature = "{degc} degC"
+[[stream]]
+id = "heat"
+medium = "heat"
+heat = "balance"
+[[equipment]]
+id = "USER"
+kind = "user"
+ports = {{ steam = "exhaust", condensate = "back", heat = "heat" }}
+"""
+    plant.edit("[economics]", user + "[economics]")
+    line = lines(lostwork("check", plant.path, "--json"))["equipment", "USER"]
+    assert line["verdict"] == verdict
+    assert line["reason"].startswith("'back' at port condensate is steam") == (verdict == "wrong")
+
+
 @pytest.mark.parametrize(("bar", "verdict"), [(60, "ok"), (63, "ok"), (66, "look"), (73, "wrong")])
 def test_check_allows_for_two_gauges_that_differ(plant, lostwork, bar, verdict):
     # The header's inlet stays at 62 bar(a); what a pair of gauges explains is not told.
