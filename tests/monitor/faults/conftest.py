@@ -1,16 +1,29 @@
-"""Everything that a site's store holds, as tables to compare row by row."""
+"""Everything that a site's store holds, as tables to compare row by row; a daemon to disturb."""
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+import json
+from contextlib import ExitStack
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 import pytest
+import structlog
+from structlog.testing import capture_logs
+from typer.testing import CliRunner
 
+from monitor import log
+from monitor.cli import app
+from monitor.commands.opening import opened
+from monitor.daemon import Daemon
+from monitor.holding import SiteLock
 from monitor.store.engine import make_engine
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
+    from collections.abc import Callable, Iterator
+
+    from monitor.commands.opening import Opened
 
 # Numbers that the store deals out, and the wall clock's times of writing: nobody's figures.
 _RUN = ["run_id"]
@@ -59,3 +72,69 @@ def whole_store() -> Callable[..., dict[str, pd.DataFrame]]:
 
 def _sorted(table: pd.DataFrame) -> pd.DataFrame:
     return table.sort_values(list(table.columns), ignore_index=True)
+
+
+@dataclass
+class Watched:
+    """A daemon under a clock that the test moves, with its lock and its log."""
+
+    plant: Any
+    at: Opened
+    daemon: Daemon
+    now: float
+    lines: list[dict[str, Any]]
+
+    def follow(self, until: str) -> None:
+        """Live up to a time, a cycle each interval and a judgement each hour."""
+        settle = self.at.site.file.site.settle
+        while self.now < pd.Timestamp(until).timestamp():
+            self.now += self.at.store.interval_s
+            self.daemon.beat()
+            self.daemon.cycle()
+            if (self.now - settle) % 3600 == 0:
+                self.daemon.judge()
+
+    def told(self, job: str) -> list[str]:
+        """Levels of the lines that a job's fault gave, in order."""
+        begun = f"{job} failed"
+        return [
+            line["log_level"]
+            for line in self.lines
+            if line["event"] in {begun, f"{job} works again"}
+        ]
+
+    def status(self) -> dict[str, Any]:
+        """What ``lostwork status`` says at this moment."""
+        before = structlog.get_config()
+        ran = CliRunner().invoke(app, ["status", str(self.plant.path), "--json"])
+        # The command has sent the log elsewhere.
+        structlog.configure(**before)
+        assert ran.exit_code == 1, ran.output
+        return dict(json.loads(ran.stdout))
+
+
+ONE_FAULT = ["error", "info"]
+"""Told once when it begins, and once when it ends."""
+BEGIN = "2026-01-11T00:01:00Z"
+
+
+@pytest.fixture
+def watch() -> Iterator[Callable[..., Watched]]:
+    """Start to watch a plant a day after its readings begin."""
+    with ExitStack() as stack:
+
+        def start(plant, begin: str = BEGIN) -> Watched:
+            log.configure()
+            lines = stack.enter_context(capture_logs())
+            at = stack.enter_context(opened(plant.path))
+            lock = SiteLock(at.database, at.site.id, "lostwork run")
+            stack.callback(lock.release)
+            found = Watched(plant, at, None, pd.Timestamp(begin).timestamp(), lines)
+            found.daemon = Daemon(
+                at.site, at.store, lambda: found.now, lock=lock, database=at.database
+            )
+            stack.callback(found.daemon.close)
+            found.daemon.cycle()
+            return found
+
+        yield start
