@@ -30,6 +30,7 @@ __all__ = [
     "shorten",
     "signed",
     "span",
+    "unit_of_change",
     "unit_text",
     "wetness",
 ]
@@ -111,6 +112,11 @@ def fixed(value: float | None, unit: str, decimals: int) -> str:
     if not any(digit in text for digit in "123456789"):
         text = "0"
     return f"{text}{_UNIT_GAP}{shown}" if shown else text
+
+
+def unit_of_change(unit: str) -> str:
+    """The unit of a difference: two percentages differ by points."""
+    return "points" if unit == "%" else unit
 
 
 def fitting(value: float | None, unit: str, smallest: float, *, sign: bool = False) -> str:

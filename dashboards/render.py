@@ -47,6 +47,7 @@ def environment() -> Environment:
         signed=formats.signed,
         fixed=formats.fixed,
         fitting=formats.fitting,
+        unit_of_change=formats.unit_of_change,
         matters=matters,
         wetness=formats.wetness,
         percent=formats.percent,

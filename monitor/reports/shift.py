@@ -28,6 +28,8 @@ _WEEK = 7
 # A change of destroyed exergy under this share of the week's mean is not worth a sentence.
 _NOTICEABLE = 0.03
 _POOR = 0.05
+# A shift of which less has figures is no measure for another.
+_MOST = 0.75
 # So many alarms are named in a sentence.
 _NAMED = 3
 
@@ -51,7 +53,8 @@ def shift_view(site: Site, store: SiteStore, span: Span, now: pd.Timestamp) -> S
     end = pd.Timestamp(span.end, unit="s", tz="UTC")
     gathered = Gathered(site, store, start, end, now)
     ledger = gathered.ledger(start, end)
-    previous = _previous(gathered, span)
+    before = _shifts_before(gathered, span)
+    previous = tuple(_mean_line(lines) for lines in zip(*before, strict=True))
     rows = gathered.equipment_rows()
     alarms = gathered.alarms_between(start, end)
     quality = tuple(q for q in gathered.quality(start, end) if _worth_a_look(q))
@@ -60,7 +63,7 @@ def shift_view(site: Site, store: SiteStore, span: Span, now: pd.Timestamp) -> S
     return ShiftView(
         context=gathered.context,
         shift_name=span.name,
-        summary=_summary(gathered, ledger, previous, rows, alarms, quality),
+        summary=_summary(gathered, ledger, (previous, len(before)), rows, alarms, quality),
         ledger=ledger,
         previous_ledger=previous,
         equipment=rows,
@@ -77,18 +80,19 @@ def _worth_a_look(row: QualityRow) -> bool:
     return row.bad + row.missing + row.uncertain + row.stuck > _POOR
 
 
-def _previous(gathered: Gathered, span: Span) -> tuple[LedgerLine, ...]:
-    """Mean ledger of the same shift on the seven days before."""
+def _shifts_before(gathered: Gathered, span: Span) -> list[tuple[LedgerLine, ...]]:
+    """Ledgers of the same shift on the seven days before, where most of it has figures."""
     spans = gathered.site.calendar.spans(span.start - (_WEEK + 1) * 86400, span.start)
     same = [s for s in spans if s.name == span.name][-_WEEK:]
-    ledgers = [
-        gathered.ledger(
-            pd.Timestamp(s.start, unit="s", tz="UTC"), pd.Timestamp(s.end, unit="s", tz="UTC")
-        )
-        for s in same
-    ]
-    known = [lines for lines in ledgers if np.isfinite(lines[0].live_kw)]
-    return tuple(_mean_line(lines) for lines in zip(*known, strict=True))
+    found = []
+    for one in same:
+        start = pd.Timestamp(one.start, unit="s", tz="UTC")
+        lines = gathered.ledger(start, pd.Timestamp(one.end, unit="s", tz="UTC"))
+        supplied = lines[0]
+        hours = supplied.live_mwh * 1e3 / supplied.live_kw if supplied.live_kw else np.nan
+        if hours >= _MOST * (one.end - one.start) / 3600.0:
+            found.append(lines)
+    return found
 
 
 def _mean_line(lines: Sequence[LedgerLine]) -> LedgerLine:
@@ -111,7 +115,7 @@ def _mean_line(lines: Sequence[LedgerLine]) -> LedgerLine:
 def _summary(
     gathered: Gathered,
     ledger: tuple[LedgerLine, ...],
-    previous: tuple[LedgerLine, ...],
+    previous: tuple[tuple[LedgerLine, ...], int],
     rows: tuple[EquipmentRow, ...],
     alarms: tuple[AlarmRow, ...],
     quality: tuple[QualityRow, ...],
@@ -135,19 +139,21 @@ def _summary(
 
 
 def _destroyed_sentence(
-    gathered: Gathered, now: LedgerLine, previous: tuple[LedgerLine, ...]
+    gathered: Gathered, now: LedgerLine, previous: tuple[tuple[LedgerLine, ...], int]
 ) -> str:
+    lines, count = previous
     currency = gathered.site.file.economics.currency
     cost = "" if now.cost is None else f", worth {_money(now.cost, currency)}"
     energy = energy_column([now.live_mwh]).with_unit(now.live_mwh)
     base = f"The site destroyed {energy} of exergy ({_power(now.live_kw)}){cost}"
-    before = next((line for line in previous if line.key == "destroyed"), None)
+    before = next((line for line in lines if line.key == "destroyed"), None)
     if before is None:
-        return f"{base}; there is no week before to compare with."
+        return f"{base}; no shift of that name in the week before has figures to compare with."
+    same = f"the {count} same shifts" if count > 1 else "the one same shift"
     live = now.live_kw / before.live_kw - 1.0
     reference = now.reference_kw / before.reference_kw - 1.0
     if abs(live) < _NOTICEABLE:
-        return f"{base}: as in the same shifts of the week before."
+        return f"{base}: as in {same} of the week before."
     word = "more" if live > 0 else "less"
     if abs(reference) < _NOTICEABLE:
         why = "at the fixed reference dead state it is unchanged, so this is the weather"
@@ -156,7 +162,7 @@ def _destroyed_sentence(
             f"{percent(abs(reference), 0)} {'more' if reference > 0 else 'less'} with the weather "
             "taken out"
         )
-    return f"{base}: {percent(abs(live), 0)} {word} than the same shifts of the week before; {why}."
+    return f"{base}: {percent(abs(live), 0)} {word} than {same} of the week before; {why}."
 
 
 def _power(kw: float) -> str:

@@ -173,3 +173,8 @@ def test_a_text_for_a_figure_has_no_tag_or_placeholder_and_reads_back_the_same(t
     assert not set(inert) & set("<>$")
     assert "%{" not in inert
     assert html.unescape(inert).replace("\u200b", "") == text
+
+
+def test_two_percentages_differ_by_points_and_everything_else_by_its_unit():
+    assert formats.unit_of_change("%") == "points"
+    assert formats.unit_of_change("t/h") == "t/h"

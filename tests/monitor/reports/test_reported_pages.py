@@ -100,7 +100,7 @@ def test_the_summary_says_what_changed_what_it_costs_and_what_stands(late):
     plain = [sentence.replace("\u202f", " ").replace("\u00a0", " ") for sentence in late.summary]
     assert re.match(
         r"The site destroyed [\d.]+ MWh of exergy \([\d ]+ kW\), worth \d+ EUR: "
-        r"\d+ % more than the same shifts of the week before; "
+        r"\d+ % more than the 5 same shifts of the week before; "
         r"\d+ % more with the weather taken out\.$",
         plain[0],
     )
