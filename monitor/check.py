@@ -369,7 +369,9 @@ def _judge_phase(item: Item, dryness: Mapping[str, float]) -> tuple[Verdict, str
             if port in _WATER_PORTS and dryness.get(stream, 0.0) > half:
                 return "wrong", f"'{stream}' at port {port} is steam; correct its p and T, or tags"
             if port in _STEAM_PORTS and dryness.get(stream, 1.0) < half:
-                return "wrong", f"'{stream}' at port {port} is water; correct its p and T, or tags"
+                # A user may be heated by hot water; nothing else takes it at its steam port.
+                verdict: Verdict = "look" if item.kind.name == "user" else "wrong"
+                return verdict, f"'{stream}' at port {port} is water; correct its p and T, or tags"
     return "ok", ""
 
 
