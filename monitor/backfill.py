@@ -164,7 +164,8 @@ def catch_up(
 
     From where the figures end, less ``look_back``, to the newest cell that has settled, a UTC day a
     window at most. A source that was behind and has delivered since is taken up from where it was.
-    An empty store gets its last 24 hours; older ones are for `backfill`.
+    An empty store gets its last 24 hours; older ones are for `backfill`. Of a long gap without any
+    reading the first and the last window are stored, so that it shows, and not months of nothing.
 
     Args:
         site: the site.
@@ -196,11 +197,22 @@ def catch_up(
         start = max(start, oldest_writable(kept(site), now) or start)
     done: list[Computed] = []
     with recorded_run(site, store, run_kind, start, end) as (run_id, tally):
-        for first, last in windows(start, end):
+        cut, skipped = windows(start, end), 0
+        for first, last in cut:
             if stop():
                 break
-            done.append(run_window(site, store, sources, first, last, run_id))
-            tally.add(done[-1])
+            if done and not done[-1].readings and (first, last) != cut[-1]:
+                computed = compute_window(site, sources, first, last)
+                if not computed.readings:
+                    skipped += 1
+                    continue
+                store_window(site, store, computed, run_id)
+            else:
+                computed = run_window(site, store, sources, first, last, run_id)
+            done.append(computed)
+            tally.add(computed)
+    if skipped:
+        logger().info("days without any reading were not stored", days=skipped)
     return done
 
 

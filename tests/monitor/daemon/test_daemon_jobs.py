@@ -73,6 +73,26 @@ def test_a_gap_in_the_daemons_life_is_caught_up(plant, drive):
     assert newest(later) == pd.Timestamp("2026-01-11T17:45Z")
 
 
+def test_a_month_without_a_reading_is_not_filled_with_nothing(make_plant, drive, tmp_path):
+    plant = make_plant(tmp_path / "site", days=40.0, every="30min", interval=60)
+    rows = plant.readings
+    gap = (rows["time"] >= "2026-01-12T00:00Z") & (rows["time"] < "2026-02-15T00:00Z")
+    plant.write(rows[~gap])
+    drive(plant, "2026-01-11T12:01Z").daemon.cycle()
+    driven = drive(plant, "2026-02-15T06:01Z")
+    with capture_logs() as lines:
+        driven.daemon.cycle()
+    # Of 34 empty days the first is kept.
+    assert [line["days"] for line in lines if "days" in line] == [33]
+    assert newest(driven) == pd.Timestamp("2026-02-15T05:00Z")
+    found = driven.at.store.ledger(plant.start, pd.Timestamp("2026-02-15T06:00Z"))
+    days = found.index.normalize().unique()
+    assert list(days.strftime("%m-%d")) == ["01-10", "01-11", "01-12", "02-15"]
+    with capture_logs() as lines:
+        driven.daemon.cycle()
+    assert lines == []
+
+
 def with_a_late_export(plant):
     """Put the let-down's tags into a source of their own, whose file comes when the test says."""
     plant.edit(
