@@ -59,6 +59,10 @@ def demo(
     keep: Annotated[
         bool, typer.Option("--keep", help="Keep the exports that are in the folder.")
     ] = False,
+    truth: Annotated[
+        bool,
+        typer.Option("--truth", help="Write what truly happened too (160 MB); nothing reads it."),
+    ] = False,
     as_json: Annotated[bool, typer.Option("--json", help="Print the summary as JSON.")] = False,
 ) -> None:
     """Show it all on a simulated board mill.
@@ -71,9 +75,11 @@ def demo(
     from monitor.demo.plan import DemoPlan  # noqa: PLC0415
     from monitor.judging import judge_site, plant_now  # noqa: PLC0415
 
+    if truth and keep:
+        raise WrongUseError("--truth comes from a new simulation; leave out --keep")
     stages = _Stages()
     plan = DemoPlan(days=days, seed=seed)
-    path = _exports(folder, plan, stages, keep=keep)
+    path = _exports(folder, plan, stages, keep=keep, truth=truth)
     start = int(plan.start.timestamp())
     end = start + int(days * 86400)
     with opened(path) as at, at.database.instance_lock(at.site.id, "lostwork demo"):
@@ -97,11 +103,12 @@ def demo(
             typer.echo(f"open {index}")
 
 
-def _exports(folder: Path, plan: object, stages: _Stages, *, keep: bool) -> Path:
+def _exports(folder: Path, plan: object, stages: _Stages, *, keep: bool, truth: bool) -> Path:
     from monitor.demo.feed import write_exports  # noqa: PLC0415
     from monitor.demo.files import copy_site  # noqa: PLC0415
     from monitor.demo.plan import DemoPlan  # noqa: PLC0415
     from monitor.demo.simulate import simulate  # noqa: PLC0415
+    from monitor.demo.truth import write_truth  # noqa: PLC0415
 
     if not isinstance(plan, DemoPlan):
         raise TypeError("a demo is made from a DemoPlan")
@@ -113,6 +120,9 @@ def _exports(folder: Path, plan: object, stages: _Stages, *, keep: bool) -> Path
         plant = simulate(plan)
     with stages.stage("exports") as progress:
         write_exports(plant, plan, folder, progress=progress.at)
+    if truth:
+        with stages.stage("truth"):
+            write_truth(plant, folder)
     return path
 
 
@@ -126,7 +136,7 @@ def _clear(folder: Path, *, keep: bool) -> None:
         )
     for old in folder.glob(f"{_MARK}*"):
         old.unlink()
-    for name in ("pages",) if keep else ("pages", "exports"):
+    for name in ("pages",) if keep else ("pages", "exports", "truth"):
         shutil.rmtree(folder / name, ignore_errors=True)
 
 

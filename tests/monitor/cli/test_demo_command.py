@@ -10,8 +10,9 @@ import pytest
 @pytest.mark.slow
 def test_the_demo_runs_through_and_says_what_it_found(lostwork, tmp_path):
     folder = tmp_path / "demo"
-    ran = lostwork("demo", "--folder", folder, "--days", "2", "--seed", "7", "--json")
+    ran = lostwork("demo", "--folder", folder, "--days", "2", "--seed", "7", "--truth", "--json")
     assert ran.code == 0, ran.err
+    assert (folder / "truth" / "events.csv").is_file()
     told = ran.json()
     assert told["readings"] > 100_000
     ledger = told["ledger_kw"]
@@ -20,7 +21,9 @@ def test_the_demo_runs_through_and_says_what_it_found(lostwork, tmp_path):
     assert ledger["supplied"] == pytest.approx(spent, rel=1e-6)
     assert told["closure_share"] > 0.98
     assert sum(e["share"] for e in told["equipment"]) == pytest.approx(1)
-    assert set(told["seconds"]) == {"simulation", "exports", "figures", "drift", "pages"}
+    assert set(told["seconds"]) == {
+        "simulation", "exports", "truth", "figures", "drift", "pages",
+    }  # fmt: skip
     assert (folder / "pages" / "index.html").is_file()
     assert list((folder / "pages").glob("shift-*.html"))
     again = lostwork("demo", "--folder", folder, "--days", "2", "--keep")
@@ -37,3 +40,9 @@ def test_the_demo_does_not_touch_a_folder_that_holds_something_else(lostwork, tm
     assert "holds something that is not a demo" in ran.err
     assert (tmp_path / "thesis.txt").read_text() == "years of work"
     assert [p.name for p in tmp_path.iterdir()] == ["thesis.txt"]
+
+
+def test_the_truth_of_kept_exports_is_not_made_up(lostwork, tmp_path):
+    ran = lostwork("demo", "--folder", tmp_path / "demo", "--truth", "--keep")
+    assert ran.code == 2
+    assert "leave out --keep" in ran.err
