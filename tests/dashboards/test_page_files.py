@@ -324,3 +324,13 @@ def test_half_a_character_from_a_broken_export_does_not_stop_a_page(tmp_path):
     page = dashboards.write_equipment(page_views.equipment(row=row), tmp_path)
     # The lone surrogate has no UTF-8 form; a question mark stands for it.
     assert "half ? left" in page.read_text(encoding="utf-8")
+
+
+def test_a_ledger_with_holes_says_how_much_of_the_span_it_rests_on(tmp_path):
+    whole = dashboards.write_overview(page_views.overview(), tmp_path).read_text("utf-8")
+    assert "gave figures for" not in whole
+    lines = tuple(replace(x, live_mwh=x.live_kw * 0.36) for x in page_views.ledger())
+    half = dashboards.write_overview(page_views.overview(ledger=lines), tmp_path)
+    assert "the readings gave figures for 360 of 720 h" in half.read_text("utf-8").replace(
+        "\u202f", ""
+    )
