@@ -101,12 +101,19 @@ def _print(found: Explanation, zone: str) -> None:
     ]
     columns = [Column(h, right=h in _STATE) for h in ("stream", *_STATE, "rests on")]
     print_table(columns, states)
-    if found.steps:
+    absent = math.isnan(found.computed)
+    # Steps on absent values would be a formula full of nothing.
+    steps = () if absent else found.steps
+    if steps:
         _section("step by step")
-    for number, step in enumerate(found.steps, start=1):
+    for number, step in enumerate(steps, start=1):
         typer.echo(f"{number}. {step.gives}: {step.formula}")
         typer.echo(f"   {step.numbers} = {_digits(step.value)} {step.unit}")
     _section("the figure")
+    if absent:
+        typer.echo(f"There is none in this cell: {found.rests_on}. See what is absent above.")
+        if found.agrees:
+            return
     for label, value in (
         ("computed now", found.computed),
         ("stored", found.stored),

@@ -257,6 +257,13 @@ def test_explain_says_when_the_stored_figure_is_another(computed, lostwork):
     assert "NO: compute that time again" in ran.out
 
 
+def test_explain_of_a_cell_without_readings_says_that_there_is_no_figure(computed, lostwork):
+    ran = lostwork("explain", computed.path, "TG1", "eta_s_1", "--at", "2025-06-01T12:00Z")
+    assert ran.code == 0
+    assert "There is none in this cell: no usable reading" in ran.out
+    assert "nan" not in ran.out
+
+
 def test_explain_of_a_name_that_is_not_there_suggests_one(computed, lostwork):
     ran = lostwork("explain", computed.path, "TG2", "eta_s_1")
     assert (ran.code, ran.out) == (2, "")
