@@ -47,7 +47,8 @@ def status(
     allowed: Annotated[
         str,
         typer.Option(
-            "--max-lag", help="Figures older than this are unhealthy; left out: 3 intervals."
+            "--max-lag",
+            help="Figures or sources older than this are unhealthy; left out: 3 intervals.",
         ),
     ] = "",
     *,
@@ -57,8 +58,9 @@ def status(
 
     For a person, or for a watchdog by its exit code.
 
-    Exit code 1 when the newest figure is too old, there is none, the last run failed, or a job of
-    the daemon fails. The jobs are those of the heartbeat file (see [daemon] in config/README.md).
+    Exit code 1 when the newest figure is too old, there is none, a source has fallen silent, the
+    last run failed, or a job of the daemon fails. The jobs are those of the heartbeat file (see
+    [daemon] in config/README.md).
 
     Example: lostwork status site.toml --max-lag 30min
     """
@@ -108,6 +110,8 @@ def _status(at: Opened, allowed: int | None) -> _Status:
         unhealthy.append("there are no figures yet")
     elif lag > limit:
         unhealthy.append(f"the newest figure is {_span(lag)} old, more than {_span(limit)}")
+    else:
+        unhealthy += _silent_sources(at, newest, limit)
     if failures:
         unhealthy.append(f"the last run failed ({failures} in a row): {over[0].message}")
     unhealthy += _faults(beat)
@@ -125,6 +129,15 @@ def _status(at: Opened, allowed: int | None) -> _Status:
         beat,
         tuple(unhealthy),
     )
+
+
+def _silent_sources(at: Opened, newest: int, limit: int) -> list[str]:
+    """Sources whose readings ended long before the figures, which are there but empty since."""
+    return [
+        f"source {source} has given no reading since {local(mark, at.site.file.site.time_zone)}"
+        for source, mark in at.store.watermarks().items()
+        if mark < newest and time.time() - mark > limit
+    ]
 
 
 def _faults(beat: dict[str, Any] | None) -> list[str]:

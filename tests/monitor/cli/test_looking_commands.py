@@ -367,6 +367,14 @@ def test_status_is_good_while_an_instance_keeps_up(make_plant, lostwork, tmp_pat
         assert "already being computed by this very process" in second.err
 
 
+def test_a_source_that_fell_silent_is_unhealthy_although_empty_figures_go_on(computed, lostwork):
+    assert lostwork("once", computed.path).code == 0
+    ran = lostwork("status", computed.path)
+    assert ran.code == 1
+    assert "days old" not in ran.out
+    assert "has given no reading since 2026-01-16" in ran.out
+
+
 def test_status_counts_failed_runs(computed, lostwork):
     for export in (computed.folder / "exports").iterdir():
         export.unlink()
