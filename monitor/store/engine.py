@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import sqlite3
+import time
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
 __all__ = ["is_sqlite", "make_engine", "place", "reading", "sqlite_path", "writing"]
 
 _BUSY_MS = 30_000
+_RETRY_S = 0.02
 _CONNECT_S = 10
 _WRITE = "lostwork_write"
 _POSTGRES_READ = {"isolation_level": "REPEATABLE READ", "postgresql_readonly": True}
@@ -143,15 +145,34 @@ def _sqlite_engine(path: Path) -> sa.Engine:
 def _prepare_sqlite(connection: Any, _record: object) -> None:  # noqa: ANN401 - the driver's own
     # Transactions are begun below, where reads and writes are told apart.
     connection.isolation_level = None
+    connection.execute(f"pragma busy_timeout = {_BUSY_MS}")
+    _use_write_ahead_log(connection)
     for pragma in (
-        f"busy_timeout = {_BUSY_MS}",
-        "journal_mode = wal",
         "synchronous = normal",
         "foreign_keys = on",
         "temp_store = memory",
         "cache_size = -65536",
     ):
         connection.execute(f"pragma {pragma}")
+
+
+def _use_write_ahead_log(connection: sqlite3.Connection) -> None:
+    """Switch a file to its write-ahead log, which lasts; whoever opens a new file first does it.
+
+    Two that switch at the same instant hold a read lock each and want the write lock: SQLite then
+    refuses one at once, busy timeout or not, since waiting could never end.
+    """
+    patience = time.monotonic() + _BUSY_MS / 1000
+    while True:
+        try:
+            connection.execute("pragma journal_mode = wal")
+        except sqlite3.OperationalError as error:
+            busy = error.sqlite_errorcode & 0xFF == sqlite3.SQLITE_BUSY
+            if not busy or time.monotonic() > patience:
+                raise
+            time.sleep(_RETRY_S)
+        else:
+            return
 
 
 def _begin_sqlite(connection: sa.Connection) -> None:

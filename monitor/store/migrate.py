@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 from pathlib import Path
 
 import sqlalchemy as sa
@@ -15,6 +16,9 @@ __all__ = ["migrate"]
 _LOCK_CLASS = 0x6C6F7374
 """First half of the advisory locks' key on PostgreSQL ("lost" in ASCII)."""
 _MIGRATION_LOCK = -1
+
+# Alembic keeps the migration under way in a global: one thread at a time, whatever the database.
+_alembic = threading.Lock()
 
 
 def migrate(engine: sa.Engine) -> None:
@@ -60,4 +64,5 @@ def _upgrade(connection: sa.Connection) -> None:
     config.set_main_option("script_location", str(Path(__file__).parent / "migrations"))
     config.set_main_option("path_separator", "os")
     config.attributes["connection"] = connection
-    command.upgrade(config, "head")
+    with _alembic:
+        command.upgrade(config, "head")

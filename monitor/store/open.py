@@ -211,7 +211,8 @@ def _put_figures(
     connection: sa.Connection, site_id: int, figures: Sequence[tuple[str, str, str, str, str]]
 ) -> None:
     names, owners = schema.figure_names, schema.subjects
-    wanted = dict.fromkeys([*RATED_FIGURES, *(figure for _, figure, *_ in figures)])
+    # In one order for all sites: two that register at once must not wait for each other in turn.
+    wanted = sorted({*RATED_FIGURES, *(figure for _, figure, *_ in figures)})
     known = pairs(connection.execute(sa.select(names.c.figure, names.c.figure_id)))
     upsert(connection, names, [{"figure": f} for f in wanted if f not in known], ("figure",))
     known = pairs(connection.execute(sa.select(names.c.figure, names.c.figure_id)))
