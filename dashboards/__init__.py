@@ -7,6 +7,7 @@ and the style that they share beside them.
 from __future__ import annotations
 
 from dashboards.assets import write_assets
+from dashboards.costs import write_costs
 from dashboards.dead_state import write_dead_state
 from dashboards.equipment import write_equipment
 from dashboards.files import PageError
@@ -16,6 +17,7 @@ from dashboards.shift import write_shift
 __all__ = [
     "PageError",
     "write_assets",
+    "write_costs",
     "write_dead_state",
     "write_equipment",
     "write_overview",

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 __all__ = [
+    "COSTS_FILE",
     "DEAD_STATE_FILE",
     "LATEST_SHIFT_FILE",
     "OVERVIEW_FILE",
@@ -23,6 +24,7 @@ __all__ = [
 ]
 
 OVERVIEW_FILE = "index.html"
+COSTS_FILE = "costs.html"
 DEAD_STATE_FILE = "dead-state.html"
 LATEST_SHIFT_FILE = "shift-latest.html"
 

@@ -8,7 +8,13 @@ import pandas as pd
 from jinja2 import Environment, PackageLoader, StrictUndefined
 
 from dashboards import formats, theme
-from dashboards.files import DEAD_STATE_FILE, LATEST_SHIFT_FILE, OVERVIEW_FILE, equipment_file
+from dashboards.files import (
+    COSTS_FILE,
+    DEAD_STATE_FILE,
+    LATEST_SHIFT_FILE,
+    OVERVIEW_FILE,
+    equipment_file,
+)
 from dashboards.ground import ground, shared_ground, statements
 from dashboards.marks import bullet, matters, quality_segments
 
@@ -27,6 +33,7 @@ _CAUTION = (
 _LINKS = (
     (OVERVIEW_FILE, "Overview"),
     (LATEST_SHIFT_FILE, "Shift report"),
+    (COSTS_FILE, "Costs"),
     (DEAD_STATE_FILE, "Dead state"),
 )
 _MANY_LINKS = 14

@@ -16,6 +16,8 @@ if TYPE_CHECKING:
 __all__ = [
     "AlarmRow",
     "ConditionRow",
+    "CostRow",
+    "CostsView",
     "DeadStateView",
     "EquipmentRow",
     "EquipmentView",
@@ -23,11 +25,13 @@ __all__ = [
     "ExpansionView",
     "FlowLink",
     "LedgerLine",
+    "LossRow",
     "OverviewView",
     "PageContext",
     "QualityRow",
     "ResidualView",
     "ShiftView",
+    "StreamCostRow",
     "TrendView",
 ]
 
@@ -89,6 +93,7 @@ class EquipmentRow:
     share: float
     """Part of the site's destroyed exergy, 0 to 1."""
     cost_per_day: float
+    """At the unit cost of the exergy that it takes as its fuel, in the site's currency."""
     psi: float
     """Exergetic efficiency, 0 to 1."""
     psi_statement: str
@@ -254,6 +259,77 @@ class EquipmentView:
     streams: pd.DataFrame
     """Means over the last day: columns ``port``, ``stream``, ``flow`` t/h, ``pressure`` bar(a),
     ``temperature`` degC, ``dryness``, ``exergy`` kW, ``flags`` (words)."""
+    currency: str
+
+
+@dataclass(frozen=True)
+class CostRow:
+    """What one piece of equipment's destruction costs, by the chain that supplies it."""
+
+    id: str
+    name: str
+    destroyed_kw: float
+    """Mean over the span at the live dead state."""
+    unit_cost: float
+    """Cost of the exergy that it takes as its fuel, in the site's currency per MWh."""
+    cost_per_day: float
+    flat_per_day: float
+    """The same destruction at the site's one exergy price."""
+    fuel_kw: float
+    """Fuel that the chain burns for what is destroyed here, by its lower heating value."""
+    co2_t_per_day: float
+    avoidable_kw: float
+    """Destroyed beyond the best demonstrated at like load in the reference period."""
+    avoidable_per_day: float
+    compared: float
+    """Part of the hours in service that could be compared with the reference period, 0 to 1."""
+
+
+@dataclass(frozen=True)
+class LossRow:
+    """One stream that leaves the site for nothing."""
+
+    name: str
+    exergy_kw: float
+    cost_per_day: float
+    co2_t_per_day: float
+
+
+@dataclass(frozen=True)
+class StreamCostRow:
+    """Unit cost of one stream's exergy."""
+
+    name: str
+    exergy_kw: float
+    unit_cost: float
+    """In the site's currency per MWh of exergy."""
+    per_tonne: float
+    """In the site's currency per tonne; NaN for what has no mass flow."""
+    co2: float
+    """kg per MWh of exergy."""
+    fuel: float
+    """MWh of fuel (lower heating value) per MWh of exergy."""
+    note: str
+    """Why the site's flat price stands in; empty where the rules gave a cost."""
+
+
+@dataclass(frozen=True)
+class CostsView:
+    """The page of costs."""
+
+    context: PageContext
+    equipment: tuple[CostRow, ...]
+    """The dearest first."""
+    losses: tuple[LossRow, ...]
+    """The dearest first."""
+    streams: tuple[StreamCostRow, ...]
+    """In the order of the site file."""
+    supplied_per_day: float
+    """What all that enters costs."""
+    flat_price: float
+    """The site's one price, currency per MWh of exergy."""
+    reference: tuple[pd.Timestamp, pd.Timestamp] | None
+    """The reference period that the best was demonstrated in; None while there is none."""
     currency: str
 
 

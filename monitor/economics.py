@@ -40,14 +40,15 @@ if TYPE_CHECKING:
 
     from monitor.equipment.base import FloatArray, Item
     from monitor.site.load import Site
+    from monitor.site.models import Stream
 
 __all__ = [
     "Prices",
     "UnitCosts",
-    "cost_of_destruction",
     "cost_of_losses",
     "fuel_unit_costs",
     "supplied_emissions",
+    "supplied_fuel",
     "supplied_prices",
     "unit_costs",
 ]
@@ -92,6 +93,15 @@ def supplied_prices(site: Site) -> Prices:
 def supplied_emissions(site: Site) -> Prices:
     """CO2 in kg per MWh of exergy, from the streams' ``co2`` and the site's."""
     return _supplied(site, "co2", site.file.economics.co2)
+
+
+def supplied_fuel(site: Site) -> Prices:
+    """MWh of fuel, by its lower heating value, per MWh of exergy: nothing but fuel has any.
+
+    There is no flat value to stand in, since a site may take no fuel at all.
+    """
+    streams = [s for s in site.streams.values() if s.id not in site.producer]
+    return Prices({s.id: 1.0 / _ratio(s) if s.medium == "fuel" else 0.0 for s in streams}, 0.0)
 
 
 def unit_costs(
@@ -143,18 +153,6 @@ def fuel_unit_costs(
     return found
 
 
-def cost_of_destruction(
-    destroyed_kw: Mapping[str, float], fuel_costs: Mapping[str, float]
-) -> dict[str, float]:
-    """Cost of what each piece of equipment destroys, per hour.
-
-    Args:
-        destroyed_kw: exergy destroyed, by equipment id [kW].
-        fuel_costs: from `fuel_unit_costs`, per MWh.
-    """
-    return {item: fuel_costs[item] * kw / 1e3 for item, kw in destroyed_kw.items()}
-
-
 def cost_of_losses(
     site: Site, rates_kw: Mapping[str, float], costs: UnitCosts, prices: Prices
 ) -> dict[str, float]:
@@ -193,11 +191,15 @@ def _supplied(site: Site, key: Literal["price", "co2"], flat: float) -> Prices:
         if own is None:
             found[stream.id] = flat
         elif stream.medium == "fuel":
-            ratio = stream.exergy_ratio
-            found[stream.id] = own / (exergy_ratio(stream.fuel) if ratio is None else ratio)
+            found[stream.id] = own / _ratio(stream)
         else:
             found[stream.id] = own
     return Prices(found, flat)
+
+
+def _ratio(fuel: Stream) -> float:
+    """Exergy per lower heating value of a stream of fuel."""
+    return exergy_ratio(fuel.fuel) if fuel.exergy_ratio is None else fuel.exergy_ratio
 
 
 def _positive(rate: float) -> float:

@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import time
+from functools import cache
 from typing import TYPE_CHECKING
 
+from monitor.costing import span_costs
 from monitor.drift.judge import judge
 from monitor.drift.raising import Money
 from monitor.drift.rules import figure_rules, settings_of
 from monitor.site.models import Reference
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Callable, Iterator, Mapping
 
     from monitor.drift.judge import FigureStatus
     from monitor.drift.judgement import FigureRule
@@ -40,7 +42,7 @@ def judge_site(
         now: when baselines are made, and up to when shelvings have run; see `plant_now`.
         only: these figures; all that the site judges when left out.
     """
-    drift, alarms, economics = site.file.drift, site.file.alarms, site.file.economics
+    drift, alarms = site.file.drift, site.file.alarms
     return judge(
         store,
         rules_of(site) if only is None else only,
@@ -48,9 +50,19 @@ def judge_site(
         start,
         end,
         now,
-        money=Money(economics.exergy_price, economics.currency),
+        money=Money(_unit_costs(site, store), site.file.economics.currency),
         tags=tags_behind(site),
     )
+
+
+def _unit_costs(site: Site, store: SiteStore) -> Callable[[str, tuple[int, int]], float]:
+    """Unit costs along the chain, computed when an alarm first asks for a reference period."""
+
+    @cache
+    def over(reference: tuple[int, int]) -> Mapping[str, float]:
+        return span_costs(site, store, *reference).money.equipment
+
+    return lambda subject, reference: over(reference)[subject]
 
 
 def rules_of(site: Site) -> tuple[FigureRule, ...]:

@@ -193,9 +193,12 @@ def _closure(ledger: dict[str, float]) -> float:
 
 
 def _equipment(at: Opened, start: int, end: int) -> list[dict[str, object]]:
+    from monitor.costing import span_costs  # noqa: PLC0415
+
     means = at.store.means("equipment", start, end)["mean"]
     destroyed = {i: float(means.get((i, "destroyed_live_kw"), 0.0)) for i in at.site.items}
-    total, price = sum(destroyed.values()), at.site.file.economics.exergy_price
+    total = sum(destroyed.values())
+    unit_costs = span_costs(at.site, at.store, start, end).money.equipment
     ranked = sorted(destroyed.items(), key=lambda item: -item[1])
     return [
         {
@@ -203,7 +206,7 @@ def _equipment(at: Opened, start: int, end: int) -> list[dict[str, object]]:
             "name": at.site.items[item].name,
             "destroyed_kw": kw,
             "share": kw / total,
-            "cost_per_day": kw * 24 / 1000 * price,
+            "cost_per_day": kw * 24 / 1000 * unit_costs[item],
         }
         for item, kw in ranked
     ]

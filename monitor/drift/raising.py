@@ -15,7 +15,7 @@ from monitor.drift.verdict import verdict
 from monitor.store.alarms import AlarmRecord, AlarmTransition
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Callable, Sequence
 
     import pandas as pd
 
@@ -31,9 +31,15 @@ _LOOK_BACK = 24 * HOUR
 
 @dataclass(frozen=True)
 class Money:
-    """What lost work costs: per MWh of exergy, in the site's currency."""
+    """What lost work costs, in the site's currency.
 
-    exergy_price: float
+    Attributes:
+        unit_cost: of a MWh destroyed in a piece of equipment, by its id, over a reference period
+            (integer UTC seconds). A fixed period, so that an alarm's cost stays what it was.
+        currency: for people.
+    """
+
+    unit_cost: Callable[[str, tuple[int, int]], float]
     currency: str
 
 
@@ -163,7 +169,7 @@ class Raising:
         )
         if not np.isfinite(extra):
             return None
-        return max(extra, 0.0) / 1000 * 24 * self.money.exergy_price
+        return max(extra, 0.0) / 1000 * 24 * self.money.unit_cost(self.rule.subject, reference)
 
 
 def _as_stored(steps: Sequence[Transition]) -> list[AlarmTransition]:

@@ -20,6 +20,7 @@ from dashboards.views import (
     PageContext,
     QualityRow,
 )
+from monitor.costing import SpanCosts, span_costs
 from monitor.drift.message import cost_sentence
 from monitor.flags import Flag, describe
 from monitor.store.batch import LEFT_OUT_COLUMNS
@@ -108,8 +109,13 @@ class Gathered:
             equipment=tuple((i.id, i.name) for i in self.site.items.values()),
         )
 
+    @cached_property
+    def costs(self) -> SpanCosts:
+        """What exergy costs at each point of the site over the span."""
+        return span_costs(self.site, self.store, self.start, self.end)
+
     def cost(self, mwh: float) -> float:
-        """What so much exergy costs, in the site's currency."""
+        """What so much exergy costs at the site's flat price, in its currency."""
         return mwh * self.site.file.economics.exergy_price
 
     def ledger(self, start: pd.Timestamp, end: pd.Timestamp) -> tuple[LedgerLine, ...]:
@@ -183,7 +189,7 @@ class Gathered:
             destroyed_kw=destroyed,
             destroyed_reference_kw=_value(table, "destroyed_reference_kw", "mean"),
             share=destroyed / total if total > 0 else np.nan,
-            cost_per_day=self.cost(destroyed * _HOURS_PER_DAY / 1e3),
+            cost_per_day=destroyed * _HOURS_PER_DAY / 1e3 * self.costs.money.equipment[item.id],
             psi=product / fuel if fuel > 0 else np.nan,
             psi_statement=item.kind.fuel_and_product,
             closure_kw=_value(table, "closure_live_kw", "mean"),

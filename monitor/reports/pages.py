@@ -8,6 +8,7 @@ import pandas as pd
 
 import dashboards
 from monitor.errors import LostworkError
+from monitor.reports.costs import costs_view
 from monitor.reports.dead_state import dead_state_view
 from monitor.reports.equipment import equipment_view
 from monitor.reports.gather import Gathered
@@ -46,7 +47,7 @@ def page_span(site: Site, store: SiteStore) -> tuple[pd.Timestamp, pd.Timestamp]
 
 
 def write_pages(site: Site, store: SiteStore, now: pd.Timestamp) -> Iterator[Path]:
-    """Write the overview, a page a piece of equipment, and the dead-state page.
+    """Write the overview, a page a piece of equipment, costs and the dead state.
 
     Yields:
         Each page's path once it stands in the folder, the overview first.
@@ -65,4 +66,5 @@ def write_pages(site: Site, store: SiteStore, now: pd.Timestamp) -> Iterator[Pat
     for item in gathered.items:
         own = tuple(c for c in overview.conditions if c.equipment == item.id)
         yield dashboards.write_equipment(equipment_view(gathered, item, rows[item.id], own), folder)
+    yield dashboards.write_costs(costs_view(gathered), folder)
     yield dashboards.write_dead_state(dead_state_view(gathered), folder)

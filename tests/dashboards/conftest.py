@@ -174,11 +174,12 @@ def browser(tmp_path_factory):
     return Browser(program, tmp_path_factory.mktemp("profile"))
 
 
-def _written(folder: Path, overview, equipment, dead_state, shift) -> dict[str, Path]:
+def _written(folder: Path, overview, equipment, costs, dead_state, shift) -> dict[str, Path]:
     dashboards.write_assets(folder)
     return {
         "overview": dashboards.write_overview(overview, folder),
         "equipment": dashboards.write_equipment(equipment, folder),
+        "costs": dashboards.write_costs(costs, folder),
         "dead state": dashboards.write_dead_state(dead_state, folder),
         "shift": dashboards.write_shift(shift, folder),
     }
@@ -190,6 +191,7 @@ def full_pages(tmp_path_factory):
         tmp_path_factory.mktemp("full"),
         page_views.overview(),
         page_views.equipment(),
+        page_views.costs(),
         page_views.dead_state(),
         page_views.shift(),
     )
@@ -201,6 +203,7 @@ def empty_pages(tmp_path_factory):
         tmp_path_factory.mktemp("empty"),
         page_views.empty_overview(),
         page_views.young_equipment(),
+        page_views.empty_costs(),
         page_views.empty_dead_state(),
         page_views.empty_shift(),
     )
@@ -212,6 +215,7 @@ def hostile_pages(tmp_path_factory):
         tmp_path_factory.mktemp("hostile"),
         page_views.poisoned(page_views.overview()),
         page_views.poisoned(page_views.equipment()),
+        page_views.poisoned(page_views.costs()),
         page_views.poisoned(page_views.dead_state()),
         page_views.poisoned(page_views.shift()),
     )

@@ -13,6 +13,8 @@ from CoolProp.CoolProp import PropsSI
 from dashboards.views import (
     AlarmRow,
     ConditionRow,
+    CostRow,
+    CostsView,
     DeadStateView,
     EquipmentRow,
     EquipmentView,
@@ -20,11 +22,13 @@ from dashboards.views import (
     ExpansionView,
     FlowLink,
     LedgerLine,
+    LossRow,
     OverviewView,
     PageContext,
     QualityRow,
     ResidualView,
     ShiftView,
+    StreamCostRow,
     TrendView,
 )
 
@@ -462,6 +466,51 @@ def young_equipment() -> EquipmentView:
     )
 
 
+def costs(**changes: Any) -> CostsView:
+    rates = (26_900.0, 13_800.0, 2_400.0, 650.0, 210.0, -6.0, NAN)
+    machines = [MACHINES[place] for place in (0, 1, 2, 3, 4, 11, 8)]
+    made = CostsView(
+        context=context(),
+        equipment=tuple(
+            CostRow(
+                id=identifier,
+                name=name,
+                destroyed_kw=kw,
+                unit_cost=18.0 + 9.0 * place,
+                cost_per_day=kw * 0.024 * (18.0 + 9.0 * place),
+                flat_per_day=kw * 0.96,
+                fuel_kw=kw * (0.9 + 0.3 * place),
+                co2_t_per_day=kw * 0.004,
+                avoidable_kw=NAN if place == 1 else 0.03 * kw,
+                avoidable_per_day=NAN if place == 1 else 0.03 * kw * 0.4,
+                compared=0.0 if place == 1 else 0.98,
+            )
+            for place, ((identifier, name, _), kw) in enumerate(zip(machines, rates, strict=True))
+        ),
+        losses=(
+            LossRow("Flue gas of boiler 1", 3_600.0, 1_555.0, 17.3),
+            LossRow("Blowdown", 41.0, NAN, 0.0),
+        ),
+        streams=(
+            StreamCostRow("Bark", 52_300.0, 18.0, 38.5, 0.0, 0.87, ""),
+            StreamCostRow("Live steam 1", 23_150.0, 44.1, 17.3, 0.0, 2.1, ""),
+            StreamCostRow("Power", 14_800.0, 58.2, NAN, 0.0, 2.7, ""),
+            StreamCostRow("Vent", 0.0, 40.0, NAN, 200.0, 0.0, "'vent' makes no product"),
+        ),
+        supplied_per_day=41_300.0,
+        flat_price=40.0,
+        reference=(START, START + pd.Timedelta(days=14)),
+        currency="EUR",
+    )
+    return replace(made, **changes)
+
+
+def empty_costs() -> CostsView:
+    return costs(
+        equipment=(), losses=(), streams=(), supplied_per_day=0.0, reference=None, flat_price=0.0
+    )
+
+
 def dead_state(**changes: Any) -> DeadStateView:
     index = hours()
     count = len(index)
@@ -576,6 +625,7 @@ _FIXED = {
     LedgerLine: {"key"},
     FlowLink: {"kind", "source", "target"},
     EquipmentRow: {"id"},
+    CostRow: {"id"},
     ConditionRow: {"equipment", "state", "worse"},
     AlarmRow: {"equipment"},
 }

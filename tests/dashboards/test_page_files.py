@@ -57,6 +57,7 @@ def test_every_page_has_its_name(full_pages):
     assert {name: page.name for name, page in full_pages.items()} == {
         "overview": "index.html",
         "equipment": "equipment-TG-1.html",
+        "costs": "costs.html",
         "dead state": "dead-state.html",
         "shift": "shift-2026-03-02-night.html",
     }

@@ -12,8 +12,8 @@ import dashboards
 
 pytestmark = pytest.mark.browser
 
-PAGES = ("overview", "equipment", "dead state", "shift")
-CHARTS = {"overview": 3, "equipment": 4, "dead state": 5, "shift": 1}
+PAGES = ("overview", "equipment", "costs", "dead state", "shift")
+CHARTS = {"overview": 3, "equipment": 4, "costs": 1, "dead state": 5, "shift": 1}
 PAPER_WIDTH = 700
 SCREEN_HEIGHT = 900
 

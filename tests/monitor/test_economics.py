@@ -10,10 +10,10 @@ from hypothesis import strategies as st
 
 from monitor.economics import (
     Prices,
-    cost_of_destruction,
     cost_of_losses,
     fuel_unit_costs,
     supplied_emissions,
+    supplied_fuel,
     supplied_prices,
     unit_costs,
 )
@@ -153,10 +153,6 @@ def test_what_is_destroyed_costs_what_its_fuel_costs(site):
     fuel = fuel_unit_costs(site, RATES, costs, prices)
     c = 3030 / 43.5
     assert fuel == pytest.approx({"boiler": 30.0, "turbine": c, "user": c, "pump": 60.0})
-    in_kw = {k: 1000 * v for k, v in DESTROYED.items()}
-    hourly = cost_of_destruction(in_kw, fuel)
-    assert hourly["boiler"] == pytest.approx(54.8 * 30.0)
-    assert hourly["turbine"] == pytest.approx(5.0 * c)
     lost = cost_of_losses(site, {k: 1000 * v for k, v in RATES.items()}, costs, prices)
     assert lost == {"stack": pytest.approx(2.0 * 30.0)}
 
@@ -184,7 +180,7 @@ def test_a_lost_product_is_charged_without_what_its_producer_destroys(tmp_path):
     costs = unit_costs(condensing, rates, prices)
     assert costs.streams["warm"] == pytest.approx(1060 / 7)
     fuel = fuel_unit_costs(condensing, rates, costs, prices)
-    assert cost_of_destruction({"box": 6e3}, fuel) == {"box": pytest.approx(600.0)}
+    assert 6 * fuel["box"] == pytest.approx(600.0)
     lost = cost_of_losses(condensing, rates, costs, prices)
     assert lost == {"warm": pytest.approx(460.0), "drain": pytest.approx(100.0)}
 
@@ -194,6 +190,15 @@ def test_what_comes_in_is_paid_for_by_what_is_used(site):
     paid = RATES["gas"] * costs["gas"] + RATES["pumping"] * costs["pumping"]
     used = sum(RATES[s] * costs[s] for s in ("electricity", "heating"))
     assert used == pytest.approx(paid, rel=1e-12)
+
+
+def test_fuel_is_counted_where_it_is_burnt_and_carried_on_like_money(site):
+    """All that leaves as used carries the fuel of the site, and power from outside carries none."""
+    supplied = supplied_fuel(site)
+    assert supplied.supplied == {"gas": pytest.approx(1 / 1.04), "pumping": 0.0}
+    carried = unit_costs(site, RATES, supplied).streams
+    burnt = RATES["gas"] / 1.04
+    assert sum(RATES[s] * carried[s] for s in ("electricity", "heating")) == pytest.approx(burnt)
 
 
 def test_carbon_is_passed_on_by_the_same_rules(site):

@@ -46,7 +46,7 @@ SETTINGS = Settings(
     on_delay=3 * HOUR,
     off_delay=12 * HOUR,
 )
-MONEY = Money(exergy_price=50.0, currency="EUR")
+MONEY = Money(unit_cost=lambda _subject, _reference: 50.0, currency="EUR")
 
 
 def cells(loss=2.5, flag=0):

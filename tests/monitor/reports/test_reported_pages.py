@@ -50,6 +50,7 @@ def test_a_page_for_the_site_each_machine_the_weather_and_the_shift(reported):
         "equipment-HDR62.html",
         "equipment-TG1.html",
         "equipment-LD62.html",
+        "costs.html",
         "dead-state.html",
         "shift-2026-01-15-late.html",
     ]
