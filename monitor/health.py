@@ -1,7 +1,8 @@
 """How the daemon is doing, for whoever watches it: files that are replaced whole, and systemd.
 
-The heartbeat is a small JSON file that tells of every job and of every fault that lasts. It does
-not need the store, so that ``lostwork status`` can say that the store is what is missing. The
+The heartbeat is a small JSON file that tells of every job and of every fault that lasts. It needs
+no store, so that ``lostwork status`` can say that the store is what is missing. The store keeps the
+same, for those who look from elsewhere or when the daemon has died (`monitor.store.jobs`). The
 metrics are the same in the OpenMetrics text format (version 1.0), for a collector that reads files.
 """
 
@@ -15,35 +16,18 @@ from dataclasses import asdict, dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 from monitor.log import logger
+from monitor.store.jobs import DaemonState, JobHealth
+from monitor.version import version
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Mapping
     from pathlib import Path
 
-__all__ = ["Health", "JobHealth", "heartbeat_path", "read_heartbeat", "tell_systemd"]
+__all__ = ["Health", "heartbeat_path", "read_heartbeat", "tell_systemd"]
 
 EVERY = 15.0
 """[s] Between two beats when nothing happens."""
 _PREFIX = "lostwork"
-
-
-@dataclass(frozen=True)
-class JobHealth:
-    """One job, or one thing that can go wrong beside the jobs; times in UTC seconds.
-
-    Attributes:
-        last: when it last did its work, None when it has not yet.
-        next: when it is due, None when it is not scheduled.
-        failing_since: when its fault began, None while there is none.
-        cause: what is wrong, in words.
-        failures: how often it has failed since the daemon started.
-    """
-
-    last: float | None = None
-    next: float | None = None
-    failing_since: float | None = None
-    cause: str = ""
-    failures: int = 0
 
 
 @dataclass
@@ -58,6 +42,7 @@ class Health:
         jobs: by name.
         newest: end of the newest figures, UTC seconds.
         readings, windows: read and stored since the daemon started.
+        started: when this daemon began, by its clock.
     """
 
     site: str
@@ -68,8 +53,31 @@ class Health:
     newest: int | None = None
     readings: int = 0
     windows: int = 0
+    started: float = field(default=0.0, init=False)
     _guard: threading.Lock = field(default_factory=threading.Lock, init=False, repr=False)
     _unwritable: set[str] = field(default_factory=set, init=False, repr=False)
+
+    def __post_init__(self) -> None:
+        self.started = self.clock()
+
+    def remember(self, known: DaemonState) -> None:
+        """Take over from the daemon before this one when each job last did its work."""
+        with self._guard:
+            for name, job in known.jobs.items():
+                if job.last is not None:
+                    self.jobs.setdefault(name, JobHealth(last=job.last))
+
+    def state(self, *, ended: bool = False) -> DaemonState:
+        """What the store keeps of it."""
+        now = self.clock()
+        with self._guard:
+            jobs = dict(self.jobs)
+        if ended:
+            jobs = {name: replace(job, next=None) for name, job in jobs.items()}
+        return DaemonState(
+            os.getpid(), socket.gethostname(), version(), self.started, now,
+            now if ended else None, jobs,
+        )  # fmt: skip
 
     def worked(self, name: str) -> None:
         """Note that a job did its work."""

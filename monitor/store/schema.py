@@ -28,12 +28,14 @@ __all__ = [
     "alarms",
     "baselines",
     "condition_figures",
+    "daemons",
     "drift_points",
     "equipment_figures",
     "events",
     "figure_names",
     "figures",
     "instance_holders",
+    "jobs",
     "ledger_figures",
     "metadata",
     "notifications",
@@ -47,7 +49,7 @@ __all__ = [
     "watermarks",
 ]
 
-REVISIONS = ("0001", "0002", "0003")
+REVISIONS = ("0001", "0002", "0003", "0004")
 """Every schema revision this program knows, oldest first; the last one is what it works with."""
 
 VERSION_TABLE = "lostwork_schema"
@@ -88,6 +90,12 @@ def _number(name: str) -> sa.Column[float]:
 
 def _site() -> sa.Column[int]:
     return sa.Column("site_id", sa.Integer, sa.ForeignKey("sites.site_id"), nullable=False)
+
+
+def _site_key() -> sa.Column[int]:
+    return sa.Column(
+        "site_id", sa.Integer, sa.ForeignKey("sites.site_id"), primary_key=True, autoincrement=False
+    )
 
 
 sites = sa.Table(
@@ -356,11 +364,28 @@ notifications = sa.Table(
     sa.UniqueConstraint("site_id", "target", "key", name="notifications_once"),
     sa.Index("notifications_by_state", "site_id", "target", "state"),
 )
-instance_holders = sa.Table(
-    "instance_holders",
+instance_holders = sa.Table("instance_holders", metadata, _site_key(), _text("holder"))
+daemons = sa.Table(
+    "daemons",
     metadata,
-    sa.Column(
-        "site_id", sa.Integer, sa.ForeignKey("sites.site_id"), primary_key=True, autoincrement=False
-    ),
-    _text("holder"),
+    _site_key(),
+    _count("process"),
+    _text("host"),
+    _text("version"),
+    _time("started"),
+    _time("seen"),
+    # None while it runs, and when it died.
+    _maybe_time("ended"),
+)
+jobs = sa.Table(
+    "jobs",
+    metadata,
+    _site_key(),
+    sa.Column("job", sa.Text, primary_key=True),
+    _maybe_time("last"),
+    _maybe_time("next"),
+    _maybe_time("failing_since"),
+    _text("cause"),
+    _count("failures"),
+    sqlite_with_rowid=False,
 )

@@ -7,6 +7,7 @@ import sqlalchemy as sa
 from store_samples import at, window
 
 from monitor.store.alarms import AlarmRecord
+from monitor.store.jobs import DaemonState, JobHealth
 
 START = at("2025-03-30T01:00:00")
 
@@ -54,3 +55,13 @@ def test_tag_quality_is_summed_by_day(rows, site):
     assert rows(
         "select site, tag, day_utc, good from v_tag_quality_by_day where tag = '62-FT-001'"
     ) == [("mill", "62-FT-001", "2025-03-30", total)]
+
+
+def test_jobs_read_in_words(rows, site):
+    job = JobHealth(START, START + 900, START - 60, "the historian is away", 3)
+    site.keep_daemon(DaemonState(17, "north", "1.0", START, START, jobs={"cycle": job}))
+    columns = "site, job, last_utc, failing_since_utc, cause, host, seen_utc"
+    assert rows(f"select {columns} from v_jobs") == [
+        ("mill", "cycle", "2025-03-30T01:00:00Z", "2025-03-30T00:59:00Z", "the historian is away",
+         "north", "2025-03-30T01:00:00Z")
+    ]  # fmt: skip
