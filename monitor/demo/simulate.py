@@ -20,14 +20,18 @@ if TYPE_CHECKING:
 __all__ = ["simulate"]
 
 
-def simulate(plan: DemoPlan) -> Plant:
+def simulate(plan: DemoPlan, at: Given | None = None) -> Plant:
     """Simulate the demo plant over a plan.
+
+    Args:
+        plan: the span.
+        at: weather, load and the machines' state at its readings; the plan's own by default.
 
     Returns:
         True states at every reading. Mass and energy close at every reading for every machine; the
         accumulator's content is stated at both ends of every interval.
     """
-    at = given(plan)
+    at = given(plan) if at is None else at
     network = run_network(at)
     streams = {
         **_boiler_streams(at, network),

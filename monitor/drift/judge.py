@@ -9,7 +9,9 @@ way the same figures and events give the same points and alarms.
 
 from __future__ import annotations
 
+import functools
 import json
+import operator
 from dataclasses import asdict, dataclass, field
 from typing import TYPE_CHECKING, Any, Literal
 
@@ -122,6 +124,16 @@ class _Loads:
 
     store: SiteStore
     known: dict[tuple[str, int, int], pd.Series[float]] = field(default_factory=dict)
+
+    def of(self, rule: FigureRule, start: int, end: int) -> pd.Series[float]:
+        """The load that a figure follows: its equipment's, or the sum of its own streams."""
+        if not rule.load_streams:
+            return self.read(rule.subject, start, end)
+        flows = (
+            sign * self.store.streams(stream, start, end)["mass_flow_kg_s"]
+            for sign, stream in rule.load_streams
+        )
+        return functools.reduce(operator.add, flows)
 
     def read(self, subject: str, start: int, end: int) -> pd.Series[float]:
         key = (subject, start, end)
@@ -242,7 +254,7 @@ class _FigureJudge:
     def _hours(self, start: int, end: int) -> pd.DataFrame:
         rule = self.rule
         cells = self.store.conditions(rule.subject, rule.figure, start, end)
-        load = self.loads.read(rule.subject, start, end).reindex(cells.index)
+        load = self.loads.of(rule, start, end).reindex(cells.index)
         return hourly_means(
             _seconds(cells.index),
             cells["value"].to_numpy(dtype=np.float64),
@@ -277,6 +289,8 @@ class _FigureJudge:
             "smallest_change": self.rule.smallest_change,
             "follows_load": self.rule.follows_load,
         }
+        if self.rule.load_streams:
+            asked["load_streams"] = self.rule.load_streams
         # Delays move alarms, which are found again each time, and not the chart.
         del asked["on_delay"], asked["off_delay"]
         loaded: dict[str, Any] = json.loads(json.dumps(asked))

@@ -81,6 +81,7 @@ class FigureRule:
         worse: which way is worse.
         smallest_change: smallest change worth a person's time, in ``unit``.
         follows_load: the baseline has the load as regressor.
+        load_streams: signed streams whose flows are that load; empty for the equipment's own.
         advice: what a person looks at first.
     """
 
@@ -92,6 +93,7 @@ class FigureRule:
     worse: Worse
     smallest_change: float
     follows_load: bool = True
+    load_streams: tuple[tuple[float, str], ...] = ()
     advice: str = ""
 
 

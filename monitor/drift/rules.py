@@ -37,6 +37,7 @@ def figure_rules(items: Iterable[Item], drift: Drift) -> tuple[FigureRule, ...]:
                     worse=figure.worse,
                     smallest_change=figure.smallest_change if smallest is None else smallest,
                     follows_load=figure.follows_load,
+                    load_streams=figure.load_streams,
                     advice=figure.advice,
                 )
             )

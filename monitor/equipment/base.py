@@ -297,6 +297,8 @@ class Figure:
         judged: False for a figure that is shown but follows weather or operation too much to judge.
         needs_load: the figure means nothing when the equipment is out of service.
         follows_load: the baseline has the load as regressor.
+        load_streams: streams with the sign they count with, whose flows add up to the load that
+            this figure follows; empty for the equipment's own.
         advice: what a person looks at first when it drifts.
     """
 
@@ -308,6 +310,7 @@ class Figure:
     judged: bool = True
     needs_load: bool = True
     follows_load: bool = True
+    load_streams: tuple[tuple[float, str], ...] = ()
     advice: str = ""
 
 

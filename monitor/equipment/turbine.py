@@ -143,6 +143,7 @@ class Turbine(Kind):
                 unit="%",
                 worse="low",
                 smallest_change=0.7,
+                load_streams=_flow_of_section(item, number),
                 advice=(
                     "Check the section's thermometers and gauges against a "
                     "reference first; then think of deposits (a wash), seals and blades."
@@ -175,6 +176,24 @@ class Turbine(Kind):
         figures["steam_rate"] = ConditionFigure(rate, np.maximum(power.energy, 0.0), nothing)
         figures["exhaust_moisture"] = _moisture(drawn)
         return figures
+
+
+def _flow_of_section(item: Item, number: int) -> tuple[tuple[float, str], ...]:
+    """Streams whose flows add up to a section's own: its efficiency follows that, no other.
+
+    Empty where it is the turbine's load.
+    """
+    order = cast("TurbineOptions", item.options).order or item.ports.get("extraction", ())
+    admitted = item.ports.get("induction", ())
+    flows = [(1.0, s) for s in item.ports["inlet"]]
+    flows += [(-1.0, s) for s in item.ports.get("leak_off", ())]
+    passed = 1
+    for stream in order:
+        if passed == number:
+            break
+        flows.append((1.0 if stream in admitted else -1.0, stream))
+        passed += stream not in admitted
+    return tuple(flows) if len(flows) > 1 else ()
 
 
 @dataclass(frozen=True)

@@ -131,3 +131,22 @@ def test_an_exhaust_wetter_than_its_limit_is_flagged(x, flagged):
     assert bool(moisture.flag[0] & Flag.MOISTURE) is flagged
     dry = stated(out={"pressure": "P", "temperature": "T", "flow": "balance"})
     assert "exhaust_moisture" not in figures_of(drawn("turbine", ports, statements=dry))
+
+
+def test_a_sections_efficiency_follows_its_own_flow():
+    ports = {
+        "inlet": water("in", 30.0, p_bar=62.0, T_C=470.0),
+        "leak_off": water("gl", 0.5, p_bar=60.0, T_C=455.0),
+        "extraction": [water("x1", 8.0, p_bar=12.0, T_C=280.0), water("x2", 4, p_bar=4, T_C=180)],
+        "induction": water("lp", 3.0, p_bar=6.0, T_C=190.0),
+        "exhaust": water("out", 20.5, p_bar=1.0, T_C=120.0),
+        "power": power("w", 1e7),
+    }
+    item = drawn("turbine", ports, order=["x1", "lp", "x2"]).item
+    loads = {f.name: f.load_streams for f in item.kind.figures(item)}
+    first = ((1.0, "in"), (-1.0, "gl"))
+    assert loads["eta_s_1"] == first
+    assert loads["eta_s_2"] == (*first, (-1.0, "x1"))
+    assert loads["eta_s_3"] == (*first, (-1.0, "x1"), (1.0, "lp"), (-1.0, "x2"))
+    plain = drawn("turbine", {k: ports[k] for k in ("inlet", "exhaust", "power")}).item
+    assert all(f.load_streams == () for f in plain.kind.figures(plain))
