@@ -27,7 +27,7 @@ if TYPE_CHECKING:
     from monitor.readings.grid import Grid
     from monitor.site.load import Site
 
-__all__ = ["condition_table", "equipment_table", "ledger_table", "stream_table"]
+__all__ = ["condition_table", "crossing", "equipment_table", "ledger_table", "stream_table"]
 
 
 @dataclass(frozen=True)
@@ -140,20 +140,28 @@ def _condition_blocks(a: Accounted, ambient: Ambient) -> list[_Block]:
     return blocks
 
 
+def crossing(site: Site) -> dict[str, list[str]]:
+    """The streams across the site's boundary, by the ledger's line that they count in."""
+    leaving = [s for s in site.streams if s not in site.consumer]
+    used = [s for s in leaving if site.counts_as_used(s)]
+    return {
+        "supplied": [s for s in site.streams if s not in site.producer],
+        "used": used,
+        "lost": [s for s in leaving if s not in used],
+    }
+
+
 def ledger_table(
     site: Site, plant: Plant, accounted: Sequence[Accounted], grid: Grid
 ) -> pd.DataFrame:
     """Supplied = used + lost + destroyed + change in store + imbalance, at both dead states."""
-    ambient = plant.ambient
-    supplied = [s for s in site.streams if s not in site.producer]
-    leaving = [s for s in site.streams if s not in site.consumer]
-    used = [s for s in leaving if site.counts_as_used(s)]
-    lost = [s for s in leaving if s not in used]
+    ambient, ends = plant.ambient, crossing(site)
+    supplied, used, lost = ends["supplied"], ends["used"], ends["lost"]
     lines: dict[str, FloatArray] = {}
     nothing = np.zeros(len(ambient.flag))
     for name, dead in (("live", ambient.live), ("reference", ambient.reference)):
         accounts = [a.live if name == "live" else a.reference for a in accounted]
-        crossing = {
+        totals = {
             "supplied": sum((plant.states[s].exergy(dead) for s in supplied), nothing),
             "used": sum((plant.states[s].exergy(dead) for s in used), nothing),
             "lost": sum((plant.states[s].exergy(dead) for s in lost), nothing)
@@ -162,7 +170,7 @@ def ledger_table(
             "stored_rate": sum((a.stored_rate for a in accounts), nothing),
             "imbalance": sum((a.unaccounted + a.closure for a in accounts), nothing),
         }
-        lines |= {f"{key}_{name}_kw": value / 1e3 for key, value in crossing.items()}
+        lines |= {f"{key}_{name}_kw": value / 1e3 for key, value in totals.items()}
     # A ledger with a hole in it is no ledger: its lines are there together or not at all.
     whole = np.isfinite(np.stack(list(lines.values()))).all(axis=0)
     columns = {

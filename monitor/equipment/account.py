@@ -229,8 +229,8 @@ def _unaccounted_state(
     water = entering + [s for s in outlets if s.medium == "water"]
     if not water:
         return None
-    is_inlet = np.arange(len(water))[:, None] < len(entering)
     flow = np.maximum(np.stack([s.mass_flow for s in water]), 0.0)
+    is_inlet = (np.arange(len(water)) < len(entering)).reshape(-1, *[1] * (flow.ndim - 1))
     enthalpy = np.stack([s.enthalpy for s in water])
     entropy = np.stack([s.entropy for s in water])
     into = np.add.reduce(np.where(is_inlet, flow, 0.0))
