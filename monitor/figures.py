@@ -40,7 +40,15 @@ if TYPE_CHECKING:
     from monitor.site.load import Site
     from monitor.site.models import Reference
 
-__all__ = ["Accounted", "Ambient", "Computed", "Plant", "compute", "lead_in"]
+__all__ = [
+    "Accounted",
+    "Ambient",
+    "Computed",
+    "Plant",
+    "compute",
+    "lead_in",
+    "stated_uncertainty",
+]
 
 _HOUR = 3600
 # Negative destruction beyond this share of the exergy that passes through is taken for a
@@ -227,7 +235,7 @@ def _moved_contents(site: Site, drawn: Drawn) -> list[Content]:
     item, moved = drawn.item, []
     for key, (reference, _) in item.options.signals().items() if drawn.content else ():
         signal = drawn.signals[key]
-        shift = _stated_uncertainty(site, reference, signal.edges)
+        shift = stated_uncertainty(site, reference, signal.edges)
         if shift is None:
             continue
         signals = {**drawn.signals, key: replace(signal, edges=signal.edges + shift)}
@@ -236,10 +244,10 @@ def _moved_contents(site: Site, drawn: Drawn) -> list[Content]:
     return moved
 
 
-def _stated_uncertainty(
+def stated_uncertainty(
     site: Site, reference: Reference, values: FloatArray
 ) -> FloatArray | float | None:
-    """Standard uncertainty of values [SI] as their tag states it; None where it does not."""
+    """Give the standard uncertainty of values [SI] that their tag states; None where it does not."""
     tag = site.tags.get(reference.tag or "")
     stated = None if tag is None else tag.stated_uncertainty
     if tag is None or stated is None:

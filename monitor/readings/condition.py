@@ -29,7 +29,7 @@ if TYPE_CHECKING:
     from monitor.equipment.base import FloatArray
     from monitor.site.models import Tag
 
-__all__ = ["RANGE_ABOVE", "RANGE_BELOW", "Conditioned", "Gridded", "condition"]
+__all__ = ["RANGE_ABOVE", "RANGE_BELOW", "Conditioned", "Gridded", "at_rest", "condition"]
 
 # NAMUR NE 43: 3.8 to 20.5 mA carry measured values, so a signal is trusted from 1.25 % of span
 # below the range to 3.125 % above it; beyond that it tells of a fault.
@@ -257,19 +257,26 @@ def _stuck(
         beside = [other for other in neighbours.get(name, ()) if other in judged and other != name]
         if cells == 0 or cells > grid.count or not beside:
             continue
-        suspect = stands_still(name, cells) & ~_at_rest(judged[name].held, tag)
+        held = judged[name].held
+        suspect = stands_still(name, cells) & ~at_rest(held.low, held.high, tag)
         suspect &= _reporting(judged[name].held.fresh, cells) & ~judged[name].missing
         if suspect.any():
             stuck[name] = suspect & np.logical_or.reduce([moved(other, cells) for other in beside])
     return stuck
 
 
-def _at_rest(held: Held, tag: Tag) -> _BoolArray:
-    """Where a value that stands still is what the plant does: nothing flows, nothing presses."""
+def at_rest(lowest: FloatArray, highest: FloatArray, tag: Tag) -> _BoolArray:
+    """Where a value that stands still is what the plant does: nothing flows, nothing presses.
+
+    Args:
+        lowest: smallest value over some time, in the tag's unit.
+        highest: largest value over that time.
+        tag: the tag.
+    """
     low, high = tag.range or (0.0, 0.0)
-    rest = held.high <= low + _REST_SHARE * (high - low) if tag.range else held.high < -np.inf
+    rest = highest <= low + _REST_SHARE * (high - low) if tag.range else highest < -np.inf
     if tag.unit.quantity in _REST_AT_ZERO or tag.unit.datum is PressureDatum.GAUGE:
-        rest = rest | (np.fmax(np.abs(held.low), np.abs(held.high)) <= tag.least_movement)
+        rest = rest | (np.fmax(np.abs(lowest), np.abs(highest)) <= tag.least_movement)
     return np.asarray(rest)
 
 
