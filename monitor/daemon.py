@@ -1,36 +1,30 @@
-"""The daemon: figures each interval, alarms each hour, pages each quarter hour, shift reports.
+"""A site's jobs: figures each interval, alarms each hour, pages each quarter hour, shift reports.
 
 All jobs but the notifications run one after the other in one worker thread, so they never overlap.
 A job that fails says so once, with its cause, and once more when it works again; meanwhile the
 watermark stays, and the next cycle catches up. Whatever ends the process, the store holds whole
-windows only. The site file is read again when it has changed.
+windows only. The site file is read again when it has changed. `monitor.running` calls the jobs.
 """
 
 from __future__ import annotations
 
 import contextlib
-import math
-import os
 import re
-import signal
 import threading
 import time
 from contextlib import ExitStack
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import pandas as pd
 import sqlalchemy as sa
-from apscheduler.executors.pool import ThreadPoolExecutor
-from apscheduler.schedulers.background import BackgroundScheduler
-from apscheduler.triggers.base import BaseTrigger
+from structlog.contextvars import bound_contextvars
 
 from connectors.base import ConnectorError
 from monitor.backfill import catch_up, kept, last_complete, recorded_sources
 from monitor.errors import LostworkError
-from monitor.health import EVERY, Health, heartbeat_path, tell_systemd
-from monitor.holding import SiteLock, wait_for_lock
+from monitor.health import Health, heartbeat_path
 from monitor.housekeeping import keep_house
 from monitor.judging import judge_site, plant_now
 from monitor.log import logger
@@ -38,23 +32,22 @@ from monitor.notify.notifier import NOTIFICATIONS, Notifier
 from monitor.reloading import SiteWatch
 from monitor.store import schema
 from monitor.store.engine import reading
-from monitor.store.errors import InstanceRunning
+from monitor.store.errors import InstanceRunning, StoreError
+from monitor.triggers import last_shifts
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping
 
     from connectors.base import Connector
     from monitor.figures import Computed
+    from monitor.holding import SiteLock
     from monitor.site.load import Site
-    from monitor.site.shifts import ShiftCalendar, Span
     from monitor.store.open import Store
     from monitor.store.site import SiteStore
 
-__all__ = ["Daemon", "GridTrigger", "ShiftTrigger", "last_shifts", "run_daemon"]
+__all__ = ["Daemon"]
 
-MINUTE, QUARTER, HOUR, DAY = 60, 900, 3600, 86400
-_HOUSEKEEPING = 3 * HOUR + 17 * 60
-"""[s after midnight UTC] When few look and few write."""
+DAY = 86400
 _SHIFTS = 9
 """So many shifts are reported that were missed: three days of three."""
 _JUDGED_RUNS = 200
@@ -63,53 +56,14 @@ _CLOCK_SLACK = 60.0
 """[s] A clock that is set back by less is being kept right."""
 _SEEN = 1000
 """Problems of sources that are remembered, so that each is told once."""
-
-
-_STANDBY = 5.0
-"""[s] Between two looks of a standby, at most; far below two cycles of a minute."""
+_STATE = "state in the store"
+"""That the store knows how the jobs are doing: no job, but it can fail like one. People are told of
+the jobs that fail with it."""
 _NUMBER = re.compile(r"\d+")
 
 
 class ClockSetBackError(LostworkError):
     """The wall clock shows a time that was passed before."""
-
-
-class GridTrigger(BaseTrigger):  # type: ignore[misc]  # no annotations there
-    """Fires at every multiple of an interval since 1970, plus an offset, whatever came before."""
-
-    def __init__(self, interval: int, offset: float) -> None:
-        self._interval, self._offset = interval, offset
-
-    def get_next_fire_time(self, previous_fire_time: datetime | None, now: datetime) -> datetime:
-        """The next time after ``previous_fire_time`` and not before ``now``."""
-        cells = math.ceil((now.timestamp() - self._offset) / self._interval)
-        if previous_fire_time is not None:
-            passed = math.floor((previous_fire_time.timestamp() - self._offset) / self._interval)
-            cells = max(cells, passed + 1)
-        due = cells * self._interval + self._offset
-        return datetime.fromtimestamp(due, tz=UTC)
-
-
-class ShiftTrigger(BaseTrigger):  # type: ignore[misc]  # as above
-    """Fires at the end of every shift, plus an offset: local time, daylight saving included."""
-
-    def __init__(self, calendar: ShiftCalendar, offset: float) -> None:
-        self._calendar, self._offset = calendar, offset
-
-    def get_next_fire_time(self, previous_fire_time: datetime | None, now: datetime) -> datetime:
-        """The next time after ``previous_fire_time`` and not before ``now``."""
-        after = now.timestamp() - self._offset
-        if previous_fire_time is not None:
-            after = max(after, previous_fire_time.timestamp() - self._offset + 1)
-        spans = self._calendar.spans(int(after) - 1, int(after) + 2 * DAY)
-        end = next(span.end for span in spans if span.end >= after)
-        return datetime.fromtimestamp(end + self._offset, tz=UTC)
-
-
-def last_shifts(calendar: ShiftCalendar, until: float, most: int = 1) -> list[Span]:
-    """The newest shifts that are over at a time (UTC seconds), the oldest first."""
-    spans = calendar.spans(int(until) - (2 + most) * DAY, int(until) + 1)
-    return [span for span in spans if span.end <= until][-most:]
 
 
 @dataclass
@@ -160,9 +114,14 @@ class Daemon:
         )
 
     def start(self) -> None:
-        """What a daemon does first: catch up, judge, draw, and report the last shift."""
+        """What a daemon does first: all that came due while none ran."""
+        with self._told_once(_STATE):
+            self._remember()
         for job in (self.cycle, self.judge, self.pages, self.shift_report):
             job()
+        kept_house = self.health.jobs.get("housekeeping")
+        if kept_house is not None and self.clock() - (kept_house.last or 0.0) >= DAY:
+            self.housekeeping()
 
     def cycle(self) -> None:
         """Catch up with the sources."""
@@ -182,9 +141,10 @@ class Daemon:
 
     def beat(self) -> None:
         """Show that the daemon lives, and look at the clock; may run beside any other job."""
-        with self._told_once("clock"):
-            self._look_at_clock()
-        self.health.beat()
+        with bound_contextvars(site=self.site.id):
+            with self._told_once("clock"):
+                self._look_at_clock()
+            self.health.beat()
 
     def housekeeping(self) -> None:
         """Keep the store quick and small."""
@@ -197,25 +157,43 @@ class Daemon:
         if self.stop.is_set():
             return
         # Without a look at the lock, whose connection belongs to the other jobs' thread.
-        with self._told_once(NOTIFICATIONS):
-            self._notifier.run(self.stop.is_set)
+        with bound_contextvars(site=self.site.id):
+            with self._told_once(NOTIFICATIONS):
+                self._notifier.run(self.stop.is_set)
+            with self._told_once(_STATE):
+                self.store.keep_daemon(self.health.state())
+
+    def end(self) -> None:
+        """Say that the daemon ended in order: no heartbeat, and a last word in the store."""
+        self.health.end()
+        try:
+            self.store.keep_daemon(self.health.state(ended=True))
+        except StoreError as error:
+            logger().warning("the end could not be recorded", site=self.site.id, cause=str(error))
 
     def close(self) -> None:
         """Close the sources."""
         self._sources = None
         self._open.close()
 
+    def _remember(self) -> None:
+        """Know from the store what the daemon before this one did last."""
+        known = self.store.daemon()
+        if known is not None:
+            self.health.remember(known)
+
     def _guarded(self, name: str, job: Callable[[], object]) -> None:
         """Run a job; its failure is told once, and so is its recovery."""
         if self.stop.is_set():
             return
-        with self._told_once(name):
-            if self.lock is not None:
-                self._check_lock(self.lock)
-            if name == "cycle":
-                self._reload()
-            job()
-        self.health.beat()
+        with bound_contextvars(site=self.site.id):
+            with self._told_once(name):
+                if self.lock is not None:
+                    self._check_lock(self.lock)
+                if name == "cycle":
+                    self._reload()
+                job()
+            self.health.beat()
 
     @contextlib.contextmanager
     def _told_once(self, name: str) -> Iterator[None]:
@@ -223,7 +201,8 @@ class Daemon:
             yield
         except Exception as error:  # noqa: BLE001 - a daemon outlives whatever a job meets
             self._tell_failure(name, error)
-            self._notifier.job_failed(name, self._failing[name])
+            if name != _STATE:
+                self._notifier.job_failed(name, self._failing[name])
         else:
             if self._failing.pop(name, None) is not None:
                 logger().info(f"{name} works again", job=name)
@@ -396,138 +375,6 @@ class Daemon:
 
     def _now(self) -> pd.Timestamp:
         return pd.Timestamp(self.clock(), unit="s", tz="UTC")
-
-
-def run_daemon(
-    site: Site,
-    database: Store,
-    store: SiteStore,
-    *,
-    clock: Callable[[], float] = time.time,
-    stop: threading.Event | None = None,
-    standby: bool = False,
-) -> None:
-    """Run until a signal comes, or ``stop`` is set.
-
-    Args:
-        site: the site.
-        database: the store.
-        store: the site's part of it.
-        clock: the wall clock, UTC seconds.
-        stop: ends the daemon when it is set.
-        standby: while another instance runs, wait for it to go instead of refusing.
-
-    Raises:
-        InstanceRunning: another instance computes this site; the message says who.
-        StoreError: the lock cannot be tried.
-    """
-    lock = SiteLock(database, site.id, "lostwork run")
-    daemon = Daemon(site, store, clock, stop or threading.Event(), lock, database)
-    with _signals(daemon.stop), contextlib.ExitStack() as ends:
-        ends.callback(lock.release)
-        if standby:
-            tell_systemd("READY=1\nSTATUS=standing by")
-            if not wait_for_lock(lock, daemon.stop, _STANDBY):
-                return
-        else:
-            lock.check()
-        ends.callback(daemon.close)
-        scheduler = _scheduler(daemon)
-        scheduler.start()
-        logger().info("running", site=site.id, interval_s=store.interval_s, process=os.getpid())
-        tell_systemd("READY=1\nSTATUS=running")
-        _beat_until_stopped(daemon, scheduler)
-        tell_systemd("STOPPING=1")
-        logger().info("ending: the window in hand is finished first")
-        # Without this the scheduler may still hand a job to workers that are gone.
-        scheduler.remove_all_jobs()
-        scheduler.shutdown(wait=True)
-        daemon.health.end()
-    if daemon.lost_lock is not None:
-        raise daemon.lost_lock
-    logger().info("ended")
-
-
-def _beat_until_stopped(daemon: Daemon, scheduler: Any) -> None:  # noqa: ANN401 - as below
-    beaten = -EVERY
-    while not daemon.stop.wait(1.0):
-        if time.monotonic() - beaten < EVERY:
-            continue
-        beaten = time.monotonic()
-        daemon.health.due(
-            {job.id: job.next_run_time.timestamp() for job in scheduler.get_jobs()
-             if job.id in _NAMES.values() and job.next_run_time}
-        )  # fmt: skip
-        daemon.beat()
-        # This thread alone is no sign of life: the scheduler's has to be there too.
-        if scheduler.running:
-            tell_systemd("WATCHDOG=1")
-
-
-_NAMES = {
-    "cycle": "cycle",
-    "judge": "judgement",
-    "pages": "pages",
-    "shift_report": "shift report",
-    "housekeeping": "housekeeping",
-}
-"""The daemon's jobs, and what they are called in the log."""
-
-
-def _scheduler(daemon: Daemon) -> Any:  # noqa: ANN401 - the library has no annotations
-    scheduler = BackgroundScheduler(
-        timezone=UTC,
-        executors={"default": ThreadPoolExecutor(1), NOTIFICATIONS: ThreadPoolExecutor(1)},
-        job_defaults={"coalesce": True, "max_instances": 1, "misfire_grace_time": None},
-    )
-    scheduler.add_job(daemon.start)
-    for method, trigger in _triggers(daemon).items():
-        scheduler.add_job(getattr(daemon, method), trigger, id=_NAMES[method])
-    # A thread of its own: a mail server that does not answer holds up no figures.
-    scheduler.add_job(daemon.notify, GridTrigger(MINUTE, 30), executor=NOTIFICATIONS)
-
-    def reschedule() -> None:
-        for method, trigger in _triggers(daemon).items():
-            scheduler.reschedule_job(_NAMES[method], trigger=trigger)
-
-    daemon.reloaded = reschedule
-    return scheduler
-
-
-def _triggers(daemon: Daemon) -> dict[str, BaseTrigger]:
-    """When each job is due, by the site file in force."""
-    settle = daemon.site.file.site.settle
-    return {
-        "cycle": GridTrigger(daemon.store.interval_s, settle),
-        # A second apart, so that at a full hour the figures come first and the report last.
-        "judge": GridTrigger(HOUR, settle + 1),
-        "pages": GridTrigger(QUARTER, settle + 2),
-        "shift_report": ShiftTrigger(daemon.site.calendar, settle + 3),
-        "housekeeping": GridTrigger(DAY, _HOUSEKEEPING),
-    }
-
-
-@contextlib.contextmanager
-def _signals(stop: threading.Event) -> Iterator[None]:
-    """Let SIGTERM and SIGINT end the daemon in order; a second one ends it at once."""
-    if threading.current_thread() is not threading.main_thread():
-        yield
-        return
-
-    def on_signal(number: int, _frame: object) -> None:
-        if stop.is_set():
-            signal.signal(number, signal.SIG_DFL)
-            os.kill(os.getpid(), number)
-        stop.set()
-
-    before = {
-        number: signal.signal(number, on_signal) for number in (signal.SIGTERM, signal.SIGINT)
-    }
-    try:
-        yield
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)
 
 
 def _expected() -> tuple[type[Exception], ...]:

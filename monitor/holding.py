@@ -1,20 +1,17 @@
-"""A site's lock over the years: waited for by a standby, taken again when the store was away."""
+"""A site's lock over the years: taken again when the store was away."""
 
 from __future__ import annotations
 
 from contextlib import ExitStack
 from typing import TYPE_CHECKING
 
-from monitor.log import logger
-from monitor.store.errors import InstanceRunning, StoreError
+from monitor.store.errors import StoreError
 
 if TYPE_CHECKING:
-    import threading
-
     from monitor.store.lock import InstanceLock
     from monitor.store.open import Store
 
-__all__ = ["SiteLock", "wait_for_lock"]
+__all__ = ["SiteLock"]
 
 
 class SiteLock:
@@ -47,31 +44,3 @@ class SiteLock:
         """Let go of it; harmless when it is not held."""
         self._held = None
         self._stack.close()
-
-
-def wait_for_lock(lock: SiteLock, stop: threading.Event, every: float) -> bool:
-    """Stand by until the instance that runs is gone.
-
-    Args:
-        lock: of the site.
-        stop: ends the wait.
-        every: seconds between two tries.
-
-    Returns:
-        Whether the lock is held; False when the wait was ended.
-    """
-    told = ""
-    while not stop.is_set():
-        try:
-            lock.check()
-        except (InstanceRunning, StoreError) as error:
-            # Who runs changes seldom, and a store that is away may come back.
-            if str(error) != told:
-                told = str(error)
-                logger().info("standing by", cause=told)
-        else:
-            if told:
-                logger().info("taking over")
-            return True
-        stop.wait(every)
-    return False

@@ -143,10 +143,10 @@ def _clear(folder: Path, *, keep: bool) -> None:
 def _pages(at: Opened, progress: Progress) -> str:
     import pandas as pd  # noqa: PLC0415
 
-    from monitor.daemon import last_shifts  # noqa: PLC0415
     from monitor.judging import plant_now  # noqa: PLC0415
     from monitor.reports.pages import pages_folder, write_pages  # noqa: PLC0415
     from monitor.reports.shift import write_shift_report  # noqa: PLC0415
+    from monitor.triggers import last_shifts  # noqa: PLC0415
 
     newest = at.store.newest()
     until = plant_now(at.store) if newest is None else newest.timestamp() + at.store.interval_s

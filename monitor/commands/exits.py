@@ -69,6 +69,10 @@ def _kinds() -> Iterator[tuple[type[Exception], ExitCode]]:
     yield InstanceRunning, ExitCode.RUNNING
     yield StoreError, ExitCode.STORE
 
+    from monitor.log import LogFileError  # noqa: PLC0415
+
+    yield LogFileError, ExitCode.STORE
+
     from monitor.ahead import WorkersError  # noqa: PLC0415
 
     yield WorkersError, ExitCode.WORKERS

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from monitor.commands.arguments import Json, Site  # noqa: TC001 - typer reads them
+from monitor.commands.arguments import Json, Site, Sites  # noqa: TC001 - typer reads them
 from monitor.commands.group import say, write_json
 from monitor.commands.names import count
 from monitor.commands.opening import opened
@@ -63,7 +63,7 @@ def once(
 
 
 def run(
-    site: Site,
+    sites: Sites,
     *,
     standby: Annotated[
         bool,
@@ -74,16 +74,17 @@ def run(
 
     Figures each interval, alarms each hour, pages and shift reports as they come due.
 
-    The site file is read again when it changes. Log lines go to stderr (--log-json for a machine);
-    how the daemon is doing is told by 'lostwork status' and the files of [daemon]. SIGTERM and
-    Ctrl-C finish the window in hand.
+    Of several sites, one that cannot begin (a bad site file, a store that is away, another instance
+    that runs) is told and tried again, and holds up no other. A site file is read again when it
+    changes. Log lines go to stderr (--log-json for a machine), and to a file if [daemon] names one;
+    how a site is doing is told by 'lostwork status' and the files of [daemon]. SIGTERM and Ctrl-C
+    finish the window in hand.
 
     Example: lostwork run site.toml
     """
-    from monitor.daemon import run_daemon  # noqa: PLC0415
+    from monitor.running import run_sites  # noqa: PLC0415
 
-    with opened(site) as at:
-        run_daemon(at.site, at.database, at.store, standby=standby)
+    run_sites(sites, standby=standby)
 
 
 def backfill(

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+import re
 from typing import Annotated, Any
 
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict
 
 from monitor.site.units import Quantity, UnitError, quantity
 
-__all__ = ["Duration", "Identifier", "Pressure", "Table", "Temperature", "si"]
+__all__ = ["Duration", "FileSize", "Identifier", "Pressure", "Table", "Temperature", "si"]
 
 
 class Table(BaseModel):
@@ -38,6 +39,24 @@ Duration = Annotated[float, si(Quantity.TIME)]
 """A duration, read from text such as '5 min' into seconds."""
 Pressure = Annotated[float, si(Quantity.PRESSURE)]
 Temperature = Annotated[float, si(Quantity.TEMPERATURE)]
+
+
+_SIZE = re.compile(r"(\d+(?:\.\d+)?) ?(kB|MB|GB)")
+_BYTES = {"kB": 1_000, "MB": 1_000_000, "GB": 1_000_000_000}
+
+
+def _file_size(value: object) -> object:
+    if not isinstance(value, str):
+        # Of this kind, so that pydantic makes it a sentence about the site file.
+        raise ValueError(f"{value!r} has no unit; write it as text, for example '10 MB'")  # noqa: TRY004
+    found = _SIZE.fullmatch(value.strip())
+    if found is None or not float(found[1]):
+        raise ValueError(f"'{value}' is not a size; write it like '500 kB', '10 MB' or '1 GB'")
+    return int(float(found[1]) * _BYTES[found[2]])
+
+
+FileSize = Annotated[int, BeforeValidator(_file_size)]
+"""A file's size, read from text such as '10 MB' into bytes."""
 
 
 def _identifier(value: str) -> str:

@@ -12,7 +12,15 @@ from typing import Annotated, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
 
-from monitor.site.fields import Duration, Identifier, Pressure, Table, Temperature, si
+from monitor.site.fields import (
+    Duration,
+    FileSize,
+    Identifier,
+    Pressure,
+    Table,
+    Temperature,
+    si,
+)
 from monitor.site.notify import Notify
 from monitor.site.tags import Meter, Tag, Uncertainty
 from monitor.site.units import Quantity, Unit, parse_unit, split_number
@@ -274,6 +282,9 @@ class Daemon(Table):
 
     heartbeat: str = "lostwork-heartbeat.json"
     metrics: str = ""
+    log_file: str = ""
+    log_size: FileSize = 10_000_000
+    log_keep: int = Field(default=5, ge=0, le=1000)
 
 
 class SiteFile(Table):

@@ -12,8 +12,8 @@ from structlog.testing import capture_logs
 
 from monitor.backfill import backfill
 from monitor.commands.opening import opened
-from monitor.daemon import run_daemon
 from monitor.housekeeping import keep_house
+from monitor.running import run_daemon
 from monitor.store import schema
 from monitor.store.errors import InstanceRunning, StoreError
 from monitor.store.lock import InstanceLock
@@ -319,9 +319,6 @@ def test_a_daemon_that_lost_its_lock_ends(plant):
 
 
 def test_the_scheduler_starts_at_once_and_lets_go_of_the_lock_at_the_end(plant):
-    # Registered once before two threads of one process open it at the same instant.
-    with opened(plant.path):
-        pass
     stop = threading.Event()
     failures = []
 

@@ -9,8 +9,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from monitor.daemon import GridTrigger, ShiftTrigger, last_shifts
 from monitor.site.shifts import ShiftCalendar
+from monitor.triggers import GridTrigger, ShiftTrigger, last_shifts
 
 UTC = dt.UTC
 SHIFTS = ShiftCalendar(

@@ -22,8 +22,9 @@ import pandas as pd
 
 from monitor import log
 from monitor.commands.opening import opened
-from monitor.daemon import Daemon, last_shifts
+from monitor.daemon import Daemon
 from monitor.holding import SiteLock
+from monitor.triggers import last_shifts
 
 PAGE_KB = 4
 DAY = 86400

@@ -11,7 +11,9 @@ from notify_samples import HOUR, NOW, PASSWORD
 from typer.testing import CliRunner
 
 from monitor.cli import app
-from monitor.daemon import Daemon, _scheduler
+from monitor.commands.opening import opened
+from monitor.daemon import Daemon
+from monitor.running import Runner, new_scheduler
 
 
 def lostwork(*arguments):
@@ -77,9 +79,15 @@ def test_a_target_that_hangs_holds_up_no_figures(told, command_table, tmp_path):
 
 def test_the_daemon_notifies_each_minute_in_a_thread_of_its_own(told):
     at = told()
-    scheduler = _scheduler(Daemon(at.site, at.store, at))
-    alone = [job for job in scheduler.get_jobs() if job.executor != "default"]
-    assert [job.func.__name__ for job in alone] == ["notify"]
+    scheduler = new_scheduler()
+    runner = Runner("site", lambda: opened(at.site.path), scheduler)
+    runner.begin()
+    # By thread: the scheduler has not been started, so nothing runs.
+    jobs = [(job.executor, job.func.__name__) for job in scheduler.get_jobs()]
+    runner.end()
+    assert [name for thread, name in jobs if thread != "site"] == ["notify"]
+    assert len(jobs) == 7
+    assert scheduler.get_jobs() == []
 
 
 def test_a_daemon_that_has_to_end_sends_nothing_more(told, web_server, hook_table):
