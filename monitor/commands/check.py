@@ -15,7 +15,7 @@ from monitor.commands.tables import Column, print_table
 from monitor.errors import WrongUseError
 
 if TYPE_CHECKING:
-    from monitor.check import Line, Verdict
+    from monitor.checking import Cause, Checked, Verdict
     from monitor.site.load import Site
 
 __all__ = ["check"]
@@ -46,14 +46,14 @@ def check(
 
     Example: lostwork check --sniff exports/day.csv
     """
-    from monitor.check import check as look  # noqa: PLC0415
+    from monitor.checking import check as look  # noqa: PLC0415
 
     if sniff is not None or site is None:
         _propose(site, sniff, as_json=as_json)
         return
     read = open_site(site)
-    lines = look(read)
-    count = Counter(line.verdict for line in lines)
+    checked = look(read)
+    count = Counter(line.verdict for line in checked.lines)
     if as_json:
         write_json(
             {
@@ -61,11 +61,12 @@ def check(
                 "ok": count["ok"],
                 "look": count["look"],
                 "wrong": count["wrong"],
-                "lines": [vars(line) | {"figures": dict(line.figures)} for line in lines],
+                "causes": [vars(cause) for cause in checked.causes],
+                "lines": [vars(line) | {"figures": dict(line.figures)} for line in checked.lines],
             }
         )
     else:
-        _print(read, lines, count)
+        _print(read, checked, count)
     if count["wrong"]:
         raise typer.Exit(ExitCode.FOUND_WRONG)
 
@@ -89,7 +90,7 @@ def _propose(site: Path | None, export: Path | None, *, as_json: bool) -> None:
         typer.echo(found.toml())
 
 
-def _print(site: Site, lines: list[Line], count: Counter[Verdict]) -> None:
+def _print(site: Site, checked: Checked, count: Counter[Verdict]) -> None:
     colours = {"ok": "green", "look": "yellow", "wrong": "red"}
     columns = [
         Column("what"),
@@ -98,9 +99,20 @@ def _print(site: Site, lines: list[Line], count: Counter[Verdict]) -> None:
         Column("found"),
         Column("why"),
     ]
-    rows = [(line.kind, line.subject, line.verdict, line.found, line.reason) for line in lines]
+    rows = [(x.kind, x.subject, x.verdict, x.found, x.reason) for x in checked.lines]
     print_table(columns, rows)
+    if checked.causes:
+        typer.echo("\nlook here first:")
+        for place, cause in enumerate(checked.causes, start=1):
+            typer.echo(f"{place}. {_sentence(cause)}")
+        typer.echo("")
     typer.echo(
         f"{site.file.site.name}: {count['ok']} ok, {count['look']} to look at, "
         f"{count['wrong']} wrong"
     )
+
+
+def _sentence(cause: Cause) -> str:
+    explained = len(cause.explains)
+    lines = f" ({explained} other line{'s' if explained > 1 else ''} may follow from it)"
+    return f"{cause.kind} {cause.subject}: {cause.reason}{lines if explained else ''}"

@@ -1,0 +1,174 @@
+"""From what each line tells to the few faults behind them, and who is told to look where."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import TYPE_CHECKING
+
+from monitor.checking.lines import VERDICTS, Cause, Line
+from monitor.checking.source_lines import clock_words
+from monitor.checking.typical import references
+
+if TYPE_CHECKING:
+    from collections.abc import Iterable, Mapping, Sequence
+
+    from monitor.checking.clocks import Offset
+    from monitor.checking.suspects import Suspect
+    from monitor.checking.twins import Twin
+    from monitor.site.load import Site
+
+__all__ = ["causes", "explained"]
+
+
+def causes(
+    site: Site,
+    lines: Sequence[Line],
+    shifts: Mapping[str, Offset],
+    pairs: Sequence[Twin],
+    found: Sequence[Suspect],
+    odd: Mapping[str, str],
+) -> tuple[Cause, ...]:
+    """Name the faults behind the lines, the one to put right first in front.
+
+    What is seen directly (a source that cannot be read, a tag without readings) comes before what
+    is inferred from contradictions.
+
+    Args:
+        site: the site.
+        lines: what was found of each thing.
+        shifts: sources whose times are off.
+        pairs: tags with the same readings.
+        found: misreadings that explain contradictions.
+        odd: tags whose datum few others have, with the reason.
+    """
+    told = [*_sources(site, lines, shifts), *_tags(site, lines)]
+    named = {cause.subject for cause in told if cause.kind == "tag"}
+    suspected = {tag: suspect for suspect in found for tag in suspect.guess.tags}
+    for twin in pairs:
+        told.append(_of_twin(site, twin, suspected))
+        named |= {twin.copy, twin.of}
+    told += [_of_suspect(one) for one in found if not named & set(one.guess.tags)]
+    named |= {cause.subject for cause in told}
+    told += [
+        Cause("tag", name, reason, "look", guess=True)
+        for name, reason in odd.items()
+        if name not in named
+    ]
+    return tuple(told)
+
+
+def _sources(site: Site, lines: Sequence[Line], shifts: Mapping[str, Offset]) -> Iterable[Cause]:
+    for line in lines:
+        if line.kind != "source" or line.verdict == "ok":
+            continue
+        own = [name for name, tag in site.used_tags().items() if tag.source == line.subject]
+        dead = {x.subject for x in lines if x.kind == "tag" and x.verdict == "wrong"} & set(own)
+        offset = shifts.get(line.subject)
+        reason = line.reason if offset is None else clock_words(offset)
+        yield Cause(
+            "source",
+            line.subject,
+            reason,
+            line.verdict,
+            guess=offset is not None,
+            explains=tuple(("tag", name) for name in own if name in dead) if offset is None else (),
+            others=() if offset is None else offset.others,
+        )
+
+
+def _tags(site: Site, lines: Sequence[Line]) -> Iterable[Cause]:
+    """Tags that are wrong by themselves, with the streams and equipment that hang on them."""
+    silent = {x.subject for x in lines if x.kind == "source" and x.verdict == "wrong"}
+    for line in lines:
+        tag = site.tags.get(line.subject)
+        if line.kind != "tag" or line.verdict != "wrong" or tag is None:
+            continue
+        if tag.source in silent and not line.figures:
+            continue
+        if "outside its range" in line.reason:
+            continue  # another unit may explain it, which says more
+        yield Cause("tag", line.subject, line.reason, explains=_hanging(site, line.subject, lines))
+
+
+def _hanging(site: Site, tag: str, lines: Sequence[Line]) -> tuple[tuple[str, str], ...]:
+    items = {item.id for item in site.items.values() if tag in _read_by(site, item.id)}
+    streams = {s for i in items for s in (*site.items[i].ids("in"), *site.items[i].ids("out"))}
+    return tuple(
+        (line.kind, line.subject)
+        for line in lines
+        if line.verdict != "ok"
+        and (
+            (line.kind == "equipment" and line.subject in items)
+            or (line.kind == "stream" and line.subject in streams)
+        )
+    )
+
+
+def _read_by(site: Site, item: str) -> set[str]:
+    own = {r.tag for r, _ in site.items[item].options.signals().values() if r.tag}
+    around = (*site.items[item].ids("in"), *site.items[item].ids("out"))
+    return own | {r.tag for s in around for _, r in references(site.streams[s]) if r.tag}
+
+
+def _of_twin(site: Site, twin: Twin, suspected: Mapping[str, Suspect]) -> Cause:
+    how = (
+        f"reads the historian's '{site.tags[twin.of].historian_name}'"
+        if twin.by_name
+        else "has the same readings to the last digit"
+    )
+    copy, of = twin.copy, twin.of
+    if of in suspected and copy not in suspected:
+        copy, of = of, copy
+    suspect = suspected.get(copy)
+    reason = f"duplicated: it {how}, as {of} does; check its source_name"
+    return Cause(
+        "tag",
+        copy,
+        reason,
+        "wrong" if suspect else "look",
+        guess=suspect is None,
+        explains=_lines_of(suspect) if suspect else (),
+        others=(of,),
+    )
+
+
+def _of_suspect(one: Suspect) -> Cause:
+    first, *crossed = one.guess.tags
+    others = [tag for rival in one.rivals for tag in rival.tags]
+    rivals = "".join(f"; or {r.tags[0]} {r.words}" for r in one.rivals)
+    what = ", ".join(dict.fromkeys(f"{what} of {subject}" for _, subject, what in one.explains[:3]))
+    more = f" and {len(one.explains) - 3} more" if len(one.explains) > 3 else ""  # noqa: PLR2004
+    reason = f"{one.guess.words}{rivals}; with that put right {what}{more} would come out"
+    return Cause(
+        "tag",
+        first,
+        reason,
+        "look" if one.guess.how == "off" else "wrong",
+        guess=True,
+        explains=(*_lines_of(one), *(("tag", tag) for tag in crossed)),
+        others=tuple(dict.fromkeys([*crossed, *others])),
+    )
+
+
+def _lines_of(one: Suspect) -> tuple[tuple[str, str], ...]:
+    own = {("tag", tag) for tag in one.guess.tags}
+    return tuple(
+        pair for pair in dict.fromkeys((kind, subject) for kind, subject, _ in one.explains)
+        if pair not in own
+    )  # fmt: skip
+
+
+def explained(lines: Sequence[Line], told: Sequence[Cause]) -> Iterable[Line]:
+    """Yield the lines with the causes in them: at least as bad as the cause says, and by whom."""
+    own: dict[tuple[str, str], Cause] = {(c.kind, c.subject): c for c in reversed(told)}
+    by = {pair: c for c in reversed(told) for pair in c.explains}
+    for line in lines:
+        cause = own.get((line.kind, line.subject))
+        if cause is not None and cause.reason not in line.reason:
+            verdict = max(line.verdict, cause.verdict, key=VERDICTS.index)
+            reason = "; ".join(filter(None, (cause.reason, line.reason)))
+            yield replace(line, verdict=verdict, reason=reason)
+        elif (line.kind, line.subject) in by and line.verdict != "ok":
+            yield replace(line, reason=f"{line.reason} (see {by[line.kind, line.subject].subject})")
+        else:
+            yield line

@@ -1,0 +1,143 @@
+"""A line a source: whether it can be read, from when to when, how much, and how far it lags."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import pandas as pd
+
+from monitor.checking.exports import doubts
+from monitor.checking.lines import Figures, Line, Verdict, worse
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    from connectors.base import Probe
+    from monitor.checking.clocks import Offset
+    from monitor.site.load import Site
+
+__all__ = ["STOPPED", "clock_words", "source_line", "span"]
+
+STOPPED = 3 * 86400
+"""[s] A source this far behind the others has stopped; nearer ones may come once a day."""
+_AHEAD = 600
+
+
+def source_line(
+    site: Site,
+    source_id: str,
+    probe: Probe,
+    probes: Mapping[str, Probe],
+    rows: int,
+    offset: Offset | None,
+) -> Line:
+    """Tell of one source.
+
+    Args:
+        site: the site.
+        source_id: which.
+        probe: what it has.
+        probes: what all have, this one among them.
+        rows: readings of the site's tags in the newest day.
+        offset: how far its times are off, None where the movements of the plant agree.
+    """
+    source = next(s for s in site.file.source if s.id == source_id)
+    passed = sum(problem.count for problem in probe.problems)
+    if probe.last is None or probe.first is None:
+        reason = "; ".join(
+            [
+                "it holds no reading; check its path, query and time format",
+                *_problems(probe, passed),
+                *doubts(source, site.folder),
+            ]
+        )
+        return Line("source", source_id, "wrong", f"empty; {probe.detail}", reason)
+    newest = max(p.last for p in probes.values() if p.last is not None)
+    lag = float((newest - probe.last).total_seconds())
+    figures: Figures = {
+        "tags": len(probe.tags),
+        "first": probe.first.isoformat(),
+        "last": probe.last.isoformat(),
+        "readings_newest_day": rows,
+        "lag_s": lag,
+        "clock_off_hours": None if offset is None else offset.hours,
+        "passed_over": passed,
+    }
+    found = (
+        f"{probe.detail}; {probe.first:%Y-%m-%d %H:%M} to {probe.last:%Y-%m-%d %H:%M} UTC; "
+        f"{rows} readings a day; lag {span(lag)}"
+    )
+    told = _judge(site, probe, lag, rows, offset)
+    if told[0] == "ok" and probe.problems:
+        told = ("look", _problems(probe, passed)[0])
+    elif probe.problems:
+        told = (told[0], "; ".join([told[1], *_problems(probe, passed)]))
+    if told[0] != "ok":
+        told = (told[0], "; ".join([told[1], *doubts(source, site.folder)]))
+    return Line("source", source_id, told[0], found, told[1], figures)
+
+
+def _judge(
+    site: Site, probe: Probe, lag: float, rows: int, offset: Offset | None
+) -> tuple[Verdict, str]:
+    told: tuple[Verdict, str] = ("ok", "")
+    if probe.last is None:
+        return told
+    ahead = (probe.last - pd.Timestamp.now(tz="UTC")).total_seconds()
+    if offset is not None:
+        told = worse(told, ("wrong", clock_words(offset)))
+    if ahead > _AHEAD:
+        told = worse(
+            told,
+            (
+                "wrong",
+                (
+                    f"its newest reading lies {span(ahead)} in the future; check time_zone and "
+                    "time_format, and the clock of the machine that writes it"
+                ),
+            ),
+        )
+    if lag > STOPPED:
+        told = worse(told, ("wrong", f"it stopped {span(lag)} before the others"))
+    elif lag > site.file.site.look_back and offset is None:
+        told = worse(
+            told,
+            (
+                "look",
+                (
+                    f"it lags {span(lag)} behind the others: figures that need it come so much "
+                    "later; right for an export that is written once a day, else it hangs. Tags and "
+                    "balances below are those of the newest day that all sources have"
+                ),
+            ),
+        )
+    if rows == 0 and told[0] == "ok":
+        return "wrong", "none of the site's tags has a reading in the newest day of data"
+    return told
+
+
+def clock_words(offset: Offset) -> str:
+    """Say how a source's clock is off, and what would set it right."""
+    way = "late" if offset.hours > 0 else "early"
+    advice = offset.advice or "check its time_zone"
+    other = f"; or those of {' or '.join(offset.others)} are" if offset.others else ""
+    return (
+        f"its times look {abs(offset.hours):g} h too {way}: what moves together in the plant comes "
+        f"that much {'later' if offset.hours > 0 else 'earlier'} here than in the other sources"
+        f"{other}; {advice}"
+    )
+
+
+def _problems(probe: Probe, passed: int) -> list[str]:
+    if not probe.problems:
+        return []
+    worst = max(probe.problems, key=lambda problem: problem.count)
+    return [f"passed over {passed}, most: {worst.what} ({worst.where})"]
+
+
+def span(seconds: float) -> str:
+    """Write a time in the unit that a person would take."""
+    for size, unit in ((86400, "d"), (3600, "h"), (60, "min")):
+        if abs(seconds) >= 2 * size:
+            return f"{seconds / size:.3g} {unit}"
+    return f"{seconds:.0f} s"

@@ -1,0 +1,85 @@
+"""Tags that are one and the same instrument under two names."""
+
+from __future__ import annotations
+
+import difflib
+import itertools
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator, Mapping
+
+    import pandas as pd
+
+    from monitor.site.load import Site
+
+__all__ = ["Twin", "twins"]
+
+_LEAST_DISTINCT = 10
+_LEAST_COMMON = 50
+_SAME_SHARE = 0.97
+
+
+@dataclass(frozen=True)
+class Twin:
+    """Two tags with the same readings.
+
+    Attributes:
+        copy: the one that is likelier to read where it should not.
+        of: the other.
+        by_name: both ask the source for the same name; else their series agree to the last digit.
+    """
+
+    copy: str
+    of: str
+    by_name: bool
+
+
+def twins(site: Site, parts: Mapping[str, pd.DataFrame]) -> list[Twin]:
+    """Find tags that read the same column, or series that agree to the last digit.
+
+    Args:
+        site: the site.
+        parts: a day's readings by tag.
+    """
+    found: list[Twin] = []
+    for one, other in _candidates(site, parts):
+        a, b = site.tags[one], site.tags[other]
+        by_name = a.source == b.source and a.historian_name == b.historian_name
+        if by_name or _equal(parts[one], parts[other]):
+            copy, of = _ordered(site, one, other)
+            found.append(Twin(copy, of, by_name))
+    return found
+
+
+def _candidates(site: Site, parts: Mapping[str, pd.DataFrame]) -> Iterator[tuple[str, str]]:
+    tags = site.used_tags()
+    last = {n: part["value"].dropna() for n, part in parts.items() if n in tags}
+    middle = {n: float(values.median()) for n, values in last.items() if len(values)}
+    for one, other in itertools.combinations(tags, 2):
+        a, b = tags[one], tags[other]
+        if (a.source, a.historian_name) == (b.source, b.historian_name) or (
+            one in middle and other in middle and middle[one] == middle[other] != 0.0
+        ):
+            yield one, other
+
+
+def _equal(one: pd.DataFrame, other: pd.DataFrame) -> bool:
+    """Whether two series agree to the last digit wherever both have a reading, and move."""
+    both = one[["time", "value"]].merge(other[["time", "value"]], on="time").dropna()
+    if len(both) < _LEAST_COMMON or both["value_x"].nunique() < _LEAST_DISTINCT:
+        return False
+    return bool(np.mean(both["value_x"] == both["value_y"]) >= _SAME_SHARE)
+
+
+def _ordered(site: Site, one: str, other: str) -> tuple[str, str]:
+    """The tag whose own name is further from what it asks the historian for comes first."""
+
+    def likeness(name: str) -> float:
+        asked = site.tags[name].historian_name
+        return difflib.SequenceMatcher(None, name.casefold(), asked.casefold()).ratio()
+
+    return (one, other) if likeness(one) < likeness(other) else (other, one)
