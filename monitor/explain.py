@@ -416,7 +416,7 @@ def _pumping(cell: _Cell, item: Item) -> Iterator[Step]:
         before["enthalpy_kj_kg"],
         before["entropy_kj_kgk"],
         before["mass_flow_kg_s"],
-        power["energy_kw"],
+        power["energy_kw"] / item.kind.drive_efficiency(item),
     )
     p2 = after["pressure_bar"]
     ideal = float(state_ps(p2 * 1e5, s1 * 1e3).enthalpy) / 1e3

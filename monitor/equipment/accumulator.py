@@ -34,7 +34,7 @@ from monitor.equipment.base import (
     measured,
     total,
 )
-from monitor.equipment.saturated_vessel import saturated_content
+from monitor.equipment.saturated_vessel import exergy_rise, saturated_content
 from monitor.site.models import Reference
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturated
@@ -98,15 +98,7 @@ class Accumulator(Kind):
         out = total([s.exergy(dead) for s in drawn.at("discharge")])
         charged = [s.exergy(dead) for s in drawn.at("charge")]
         into = total(charged) if charged else np.zeros_like(out)
-        held = drawn.content
-        if held is None:
-            raise TypeError(f"accumulator '{drawn.item.id}' was drawn without its content")
-        stored = (
-            np.diff(held.internal_energy)
-            - dead.temperature * np.diff(held.entropy)
-            - dead.gibbs * np.diff(held.mass)
-        )
-        return np.asarray(into - stored / drawn.interval), out
+        return np.asarray(into - exergy_rise(drawn, dead)), out
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Standing loss while nothing flows, and the same per kelvin above the surroundings."""

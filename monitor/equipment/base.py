@@ -38,6 +38,7 @@ __all__ = [
     "Signal",
     "Specific",
     "StreamState",
+    "flow_mean",
     "mean_specific",
     "measured",
     "sum_flags",
@@ -356,14 +357,20 @@ class Kind(ABC):
         return {}
 
     def drive_efficiency(self, item: Item) -> float:  # noqa: ARG002
-        """Measured power / power given by the working fluid: bearings, gear, generator."""
+        """Measured power / power that the working fluid gives, or takes: gear, generator, motor.
+
+        Below one where the fluid drives, above one where it is driven.
+        """
         return 1.0
 
     def unmeasured_heat(self, drawn: Drawn) -> FloatArray | float:
         """What the drive turns into heat at the dead state [W]."""
         lost_share = 1.0 / self.drive_efficiency(drawn.item) - 1.0
-        powers = [s.energy for s in drawn.facing("out") if s.medium == "power"]
-        return total(powers) * lost_share if powers and lost_share else 0.0
+        if not lost_share:
+            return 0.0
+        powers = [s.energy * lost_share for s in drawn.facing("out") if s.medium == "power"]
+        powers += [s.energy * -lost_share for s in drawn.facing("in") if s.medium == "power"]
+        return total(powers) if powers else 0.0
 
     def content(self, item: Item, signals: Mapping[str, Signal]) -> Content | None:  # noqa: ARG002
         """What the vessel holds at the cells' ends; None for kinds that store nothing."""
@@ -403,6 +410,17 @@ def mean_specific(states: Sequence[StreamState]) -> Specific:
         enthalpy=np.where(weight > 0, weight * enthalpy, 0.0).sum(axis=0) / total,
         entropy=np.where(weight > 0, weight * entropy, 0.0).sum(axis=0) / total,
     )
+
+
+def flow_mean(states: Sequence[StreamState], name: str) -> FloatArray:
+    """Flow-weighted mean of one quantity of some water streams; NaN where none of them flows.
+
+    A stream without flow weighs nothing, whatever its gauges say or do not say.
+    """
+    flow = np.maximum(np.stack([s.mass_flow for s in states]), 0.0)
+    value = np.stack([getattr(s, name) for s in states])
+    with np.errstate(invalid="ignore"):
+        return np.asarray(np.where(flow == 0, 0.0, flow * value).sum(axis=0) / flow.sum(axis=0))
 
 
 def sum_flags(states: Sequence[StreamState], signals: Sequence[Signal] = ()) -> FlagArray:

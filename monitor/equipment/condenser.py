@@ -4,7 +4,9 @@ UA = Q / LMTD with the saturation temperature on the steam side; TTD = T_sat - T
 The heat is counted on the cooling water's side, where flow and temperatures are measured.
 With a ``design_ua`` the cleanliness factor is UA / UA_design, the design's corrected to the day's
 cooling water: by the square root of its flow (velocity in the tubes) over the design's, and by a
-stated share per kelvin of its inlet temperature.
+stated share per kelvin of its inlet temperature. Beside it stands the TTD above that of clean tubes
+at the day's duty, flow and inlet temperature, (T_out - T_in) / (exp(UA / C) - 1), C = Q / (T_out -
+T_in): a TTD from which duty and weather have been taken out.
 Source: Heat Exchange Institute practice for UA and TTD (from memory); Bejan, Tsatsaronis, Moran
 (1996), chapter 3.5: a dissipative component, its product is what the cooling water gains.
 """
@@ -103,7 +105,7 @@ class Condenser(Kind):
         )
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Overall heat transfer, terminal temperature difference, and cleanliness with a design."""
+        """Heat transfer, terminal difference, duty; with a design how far from clean tubes."""
         designed = cast("CondenserOptions", item.options).design_ua is not None
         cleanliness = Figure(
             "cleanliness",
@@ -115,6 +117,14 @@ class Condenser(Kind):
                 "Check for air in-leakage and the cooling-water flow, then "
                 "plan a cleaning of the tubes."
             ),
+        )
+        above = Figure(
+            "ttd_above_clean",
+            "terminal temperature difference above that of clean tubes",
+            "K",
+            "high",
+            0.5,
+            judged=False,
         )
         return (
             # One alarm for one fouling: the cleanliness says the same with less of the weather.
@@ -131,7 +141,8 @@ class Condenser(Kind):
                 ),
             ),
             Figure("ttd", "terminal temperature difference", "K", "high", 0.5, judged=False),
-            *((cleanliness,) if designed else ()),
+            Figure("duty", "heat to the cooling water", "kW", "both", 0.0, judged=False),
+            *((cleanliness, above) if designed else ()),
         )
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
@@ -146,9 +157,14 @@ class Condenser(Kind):
         expected = cast("CondenserOptions", drawn.item.options).expected_ua(cold)
         measured = np.isfinite(approach_in) & np.isfinite(approach_out)
         flag = np.where(crossed & measured, np.int32(Flag.SECOND_LAW), np.int32(0))
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            rise = warm.temperature - cold.temperature
+            clean = rise / np.expm1(expected * rise / duty)
         ones = np.ones_like(duty)
         return {
             "ua": ConditionFigure(ua / 1e3, ones, flag),
             "cleanliness": ConditionFigure(share(ua, expected), ones, flag),
-            "ttd": ConditionFigure(approach_out, ones, np.zeros_like(flag)),
+            "ttd": ConditionFigure(approach_out, ones, flag),
+            "duty": ConditionFigure(duty / 1e3, ones, np.zeros_like(flag)),
+            "ttd_above_clean": ConditionFigure(approach_out - clean, ones, flag),
         }

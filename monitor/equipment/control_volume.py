@@ -26,9 +26,16 @@ class ControlVolume(Kind):
     fuel_and_product = "fuel: exergy of all inlets; product: exergy of all outlets"
 
     def load(self, drawn: Drawn) -> FloatArray:
-        """Flow of water into the control volume [kg/s]."""
-        flows = [s.mass_flow for s in drawn.at("inlet") if s.medium == "water"]
-        return total(flows) if flows else np.zeros(drawn.at("inlet")[0].flag.shape)
+        """Flow of water in; out where none enters; of fuel where there is no water [kg/s].
+
+        With power and heat alone there is no such load: NaN, and it never counts as out of service.
+        """
+        choices = (("inlet", "water"), ("outlet", "water"), ("inlet", "fuel"), ("outlet", "fuel"))
+        for port, medium in choices:
+            flows = [s.mass_flow for s in drawn.at(port) if s.medium == medium]
+            if flows:
+                return total(flows)
+        return np.full(drawn.at("inlet")[0].energy.shape, np.nan)
 
     def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
         """Exergy of the inlets, exergy of the outlets [W]."""

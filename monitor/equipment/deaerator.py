@@ -26,7 +26,7 @@ from monitor.equipment.base import (
 )
 from monitor.equipment.heat_transfer import share
 from monitor.equipment.open_feedwater_heater import OpenFeedwaterHeater
-from monitor.equipment.saturated_vessel import VesselOptions
+from monitor.equipment.saturated_vessel import VesselOptions, exergy_rise, mass_rise
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -52,6 +52,16 @@ class Deaerator(OpenFeedwaterHeater):
         "fuel: exergy of the steam above what its condensed part carries at the outlet's state; "
         "product: exergy gained by the water"
     )
+
+    def fuel(self, drawn: Drawn, dead: DeadState) -> tuple[FloatArray, FloatArray]:
+        """Those of an open heater; what the storage gains above the outlet's state is product [W].
+
+        So fuel less product is what is destroyed and vented, while the storage fills too.
+        """
+        spent, made = super().fuel(drawn, dead)
+        out = drawn.only("feedwater")
+        specific = out.enthalpy - dead.temperature * out.entropy - dead.gibbs
+        return spent, np.asarray(made + exergy_rise(drawn, dead) - mass_rise(drawn) * specific)
 
     def vented(self, drawn: Drawn) -> tuple[FloatArray, FloatArray]:
         """Flow [kg/s] and energy [W] of the vent."""

@@ -112,9 +112,11 @@ class Exchanger(Kind):
         by_temperature = T0 * (throttled[1] + exchanged[1])
         ones, nothing = np.ones_like(duty), np.zeros_like(uphill)
         most = _largest_duty(hot_in, hot_out, cold_in, cold_out)
+        with np.errstate(invalid="ignore"):
+            too_much = flag_where((duty > most) & (duty > 0)) | uphill
         return {
             "ua": ConditionFigure(conductance(duty, one_end, other_end) / 1e3, ones, uphill),
-            "effectiveness": ConditionFigure(share(duty, most), np.maximum(most, 0.0), nothing),
+            "effectiveness": ConditionFigure(share(duty, most), np.maximum(most, 0.0), too_much),
             "destroyed_by_temperature": ConditionFigure(by_temperature / 1e3, ones, nothing),
             "destroyed_by_pressure": ConditionFigure(by_pressure / 1e3, ones, nothing),
         }

@@ -26,7 +26,7 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.heat_transfer import flag_where, share
-from monitor.equipment.saturated_vessel import VesselOptions
+from monitor.equipment.saturated_vessel import VesselOptions, exergy_rise
 from monitor.thermo.water import saturated
 
 if TYPE_CHECKING:
@@ -49,7 +49,7 @@ class FlashVessel(Kind):
     )
     options = VesselOptions
     fuel_and_product = (
-        "fuel: exergy of the condensate in less what leaves as condensate; "
+        "fuel: exergy of the condensate in less what leaves as condensate or is stored; "
         "product: exergy of the flash steam"
     )
 
@@ -65,7 +65,8 @@ class FlashVessel(Kind):
         """Exergy of the condensate that is spent, exergy of the flash steam [W]."""
         brought = total([s.exergy(dead) for s in drawn.at("inlet")])
         left = drawn.only("condensate").exergy(dead)
-        return np.asarray(brought - left), drawn.only("steam").exergy(dead)
+        spent = brought - left - exergy_rise(drawn, dead)
+        return np.asarray(spent), drawn.only("steam").exergy(dead)
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Share that flashes, and the recovery where a balance is spare to tell it."""
@@ -90,10 +91,12 @@ class FlashVessel(Kind):
         liquid, vapour = saturated(steam.pressure)
         ideal = (energy - flow * liquid.enthalpy) / (vapour.enthalpy - liquid.enthalpy)
         cold = np.nan_to_num(ideal, nan=0.0) < 0
-        weight, nothing = np.maximum(flow, 0.0), np.zeros_like(steam.flag)
+        weight = np.maximum(flow, 0.0)
         flag = flag_where(cold & (steam.mass_flow > 0))
+        # More than all of it flashes: what comes in is superheated steam.
+        steamy = flag_where((np.nan_to_num(ideal, nan=0.0) > flow) & (flow > 0))
         return {
-            "flash_share": ConditionFigure(share(ideal, flow), weight, nothing),
+            "flash_share": ConditionFigure(share(ideal, flow), weight, flag | steamy),
             "flash_recovery": ConditionFigure(
                 share(steam.mass_flow, ideal), np.maximum(ideal, 0.0), flag
             ),

@@ -2,17 +2,19 @@
 
 The energy that the outlets do not carry leaves as heat (``heat_loss = "balance"`` by default); the
 mass that they do not carry is the unaccounted flow: a leak, an open drain, or a flow meter. Where
-inlets and outlets have gauges of their own, the pressure loss gives K = (p_in - p_out) / (m^2 v),
-which flow and density have been taken out of (Darcy: dp = K m^2 v in turbulent flow).
+inlets have gauges of their own, each is the end of a pipe to the header with p_in - p_out = K m^2 v
+(Darcy: turbulent flow), which flow and density have been taken out of. Of several pipes
+K = sum m (p_in - p_out) / sum m^3 v: each weighs as the power that it dissipates.
 Source: Bejan, Tsatsaronis, Moran (1996), chapter 3.2 (mass, energy, exergy of a control volume).
 """
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING, Literal
+from typing import TYPE_CHECKING, Literal, cast
 
 import numpy as np
 
+from monitor.equipment.account import balances
 from monitor.equipment.base import (
     ConditionFigure,
     Drawn,
@@ -22,19 +24,29 @@ from monitor.equipment.base import (
     Kind,
     Options,
     PortSpec,
+    flow_mean,
     total,
 )
 
 if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    from monitor.equipment.base import Medium
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Header", "HeaderOptions"]
 
 
 class HeaderOptions(Options):
-    """Keys of a header's table; the heat loss is the energy residual unless stated otherwise."""
+    """Keys of a header's table; the heat loss is the energy residual unless stated otherwise.
+
+    Attributes:
+        pressure_loss_from: inlets with no valve between their gauge and the header, which tell its
+            pressure loss; empty for all.
+    """
 
     heat_loss: Literal["none", "balance"] = "balance"
+    pressure_loss_from: tuple[str, ...] = ()
 
 
 class Header(Kind):
@@ -59,6 +71,17 @@ class Header(Kind):
             total([s.exergy(dead) for s in drawn.at("inlet")]),
             total([s.exergy(dead) for s in drawn.at("outlet")]),
         )
+
+    def complain(self, item: Item, media: Mapping[str, Medium]) -> list[str]:
+        """Name an inlet that is none."""
+        del media
+        inlets = item.ports.get("inlet", ())
+        chosen = cast("HeaderOptions", item.options).pressure_loss_from
+        return [
+            f"pressure_loss_from names '{stream}', which is no inlet: {', '.join(inlets)}"
+            for stream in chosen
+            if stream not in inlets
+        ]
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Heat-loss coefficient, and unaccounted flow where no flow is solved from the mass."""
@@ -92,8 +115,15 @@ class Header(Kind):
             judged=False,
             follows_load=False,
         )
-        gauged = item.any_differ("inlet", "outlet", "pressure")
-        cools = gauged or item.any_differ("inlet", "outlet", "temperature")
+        chosen = cast("HeaderOptions", item.options).pressure_loss_from
+        gauged = any(
+            item.differ(one, other, "pressure")
+            for one in chosen or item.ports["inlet"]
+            for other in item.ports["outlet"]
+        )
+        cools = item.any_differ("inlet", "outlet", "pressure") or item.any_differ(
+            "inlet", "outlet", "temperature"
+        )
         by_balance = item.options.heat_loss == "balance"
         return (
             *((heat,) if by_balance and cools else ()),
@@ -103,18 +133,13 @@ class Header(Kind):
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
-        from monitor.equipment.account import balances  # noqa: PLC0415 - account builds on base
-
         counted = balances(drawn)
         nothing = np.zeros_like(drawn.at("inlet")[0].flag)
         ones = np.ones(nothing.shape)
         found = {"unaccounted_flow": ConditionFigure(counted.mass_imbalance * 3.6, ones, nothing)}
         if drawn.item.options.heat_loss == "balance":
-            outlets = drawn.at("outlet")
-            flow = np.stack([s.mass_flow for s in outlets])
-            warmth = (np.stack([s.temperature for s in outlets]) * flow).sum(axis=0)
+            excess = flow_mean(drawn.at("outlet"), "temperature") - dead.temperature
             with np.errstate(divide="ignore", invalid="ignore"):
-                excess = warmth / flow.sum(axis=0) - dead.temperature
                 coefficient = counted.heat_loss / excess / 1e3
             found["heat_loss_coefficient"] = ConditionFigure(coefficient, ones, nothing)
         found["pressure_loss_coefficient"] = ConditionFigure(_pressure_loss(drawn), ones, nothing)
@@ -122,12 +147,19 @@ class Header(Kind):
 
 
 def _pressure_loss(drawn: Drawn) -> FloatArray:
-    """K = dp / (m^2 v) [1/m^4] between the flow-weighted pressures; NaN where nothing flows."""
-    inlets, outlets = drawn.at("inlet"), drawn.at("outlet")
-    flow = total([s.mass_flow for s in inlets])
-    out = total([s.mass_flow for s in outlets])
+    """K = sum m (p_in - p_out) / sum m^3 v over the inlets' pipes [1/m^4]; NaN at no flow."""
+    chosen = cast("HeaderOptions", drawn.item.options).pressure_loss_from
+    pipes = [s for s in drawn.at("inlet") if not chosen or s.id in chosen]
+    after = flow_mean(drawn.at("outlet"), "pressure")
+    flowing = [s.mass_flow > 0 for s in pipes]
+    power = total(
+        [
+            np.where(on, s.mass_flow * (s.pressure - after), 0.0)
+            for on, s in zip(flowing, pipes, strict=True)
+        ]
+    )
+    measure = total(
+        [np.where(on, s.mass_flow**3 * s.volume, 0.0) for on, s in zip(flowing, pipes, strict=True)]
+    )
     with np.errstate(divide="ignore", invalid="ignore"):
-        before = total([s.mass_flow * s.pressure for s in inlets]) / flow
-        after = total([s.mass_flow * s.pressure for s in outlets]) / out
-        volume = total([s.mass_flow * s.volume for s in inlets]) / flow
-        return np.where((flow > 0) & (out > 0), (before - after) / (flow**2 * volume), np.nan)
+        return np.where(measure > 0, power / measure, np.nan)

@@ -25,12 +25,11 @@ from monitor.equipment.base import (
     FloatArray,
     Item,
     Kind,
-    Options,
     PortSpec,
     measured,
     total,
 )
-from monitor.site.models import Reference
+from monitor.equipment.valve import ValveOptions, passing_figure, passing_flow
 from monitor.site.units import Quantity
 from monitor.thermo.water import state_ps
 
@@ -43,28 +42,18 @@ __all__ = ["Letdown", "LetdownOptions"]
 _STEAM_EXPONENT = 1.3  # superheated steam
 
 
-class LetdownOptions(Options):
-    """Keys of a let-down station's table.
+class LetdownOptions(ValveOptions):
+    """Keys of a let-down station's table, beside those of its valve.
 
     Attributes:
-        position: tag of the valve's position.
-        closed_below: position under which the valve counts as closed [0 to 1].
         characteristic: how the flow coefficient follows the position.
         rangeability: largest flow coefficient / smallest, of an equal-percentage valve.
         choking_ratio: x_T of the valve, dp / p1 at which it chokes [0 to 1].
     """
 
-    position: Reference | None = None
-    closed_below: Annotated[float, measured(Quantity.FRACTION)] = 0.02
     characteristic: Literal["linear", "equal_percentage"] = "linear"
     rangeability: float = Field(default=50.0, gt=1)
     choking_ratio: Annotated[float, measured(Quantity.FRACTION), Field(gt=0, lt=1)] = 0.7
-
-    def signals(self) -> dict[str, tuple[Reference, Quantity]]:
-        """The valve position, when the site has one."""
-        if self.position is None:
-            return {}
-        return {"position": (self.position, Quantity.FRACTION)}
 
 
 class Letdown(Kind):
@@ -96,21 +85,13 @@ class Letdown(Kind):
         bypassed = Figure(
             "work_bypassed", "work potential bypassed", "kW", "high", 0.0, judged=False
         )
-        if cast("LetdownOptions", item.options).position is None:
-            return (bypassed,)
-        passing = Figure(
-            "passing_flow",
-            "passing flow when closed",
-            "t/h",
-            "high",
-            0.5,
-            needs_load=False,
-            follows_load=False,
-            advice=(
-                "Confirm with the downstream thermometer, close the isolating "
-                "valve if operation allows, and have seat and plug looked at."
-            ),
+        passing = passing_figure(
+            item,
+            "Confirm with the downstream thermometer, close the isolating "
+            "valve if operation allows, and have seat and plug looked at.",
         )
+        if not passing:
+            return (bypassed,)
         coefficient = Figure(
             "flow_coefficient",
             "flow coefficient Kv, valve full open",
@@ -119,7 +100,7 @@ class Letdown(Kind):
             0.0,
             judged=False,
         )
-        return (passing, bypassed, coefficient)
+        return (*passing, bypassed, coefficient)
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
@@ -133,16 +114,15 @@ class Letdown(Kind):
         position = drawn.signals.get("position")
         if position is not None:
             options = cast("LetdownOptions", drawn.item.options)
-            closed = position.value < options.closed_below
             coefficient = np.where(
-                closed, np.nan, _flow_coefficient(inlet, outlet.pressure, position.value, options)
+                options.is_closed(position.value),
+                np.nan,
+                _flow_coefficient(inlet, outlet.pressure, position.value, options),
             )
             found["flow_coefficient"] = ConditionFigure(
                 coefficient, np.maximum(inlet.mass_flow, 0.0), position.flag
             )
-            passing = np.where(closed, inlet.mass_flow * 3.6, np.nan)
-            found["passing_flow"] = ConditionFigure(passing, ones, position.flag)
-        return found
+        return found | passing_flow(drawn, inlet.mass_flow)
 
 
 def _flow_coefficient(

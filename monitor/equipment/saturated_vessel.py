@@ -21,9 +21,10 @@ from monitor.thermo.water import saturated
 if TYPE_CHECKING:
     from collections.abc import Mapping
 
-    from monitor.equipment.base import FloatArray, Signal
+    from monitor.equipment.base import Drawn, FloatArray, Signal
+    from monitor.thermo.dead_state import DeadState
 
-__all__ = ["VesselOptions", "saturated_content"]
+__all__ = ["VesselOptions", "exergy_rise", "mass_rise", "saturated_content"]
 
 
 class VesselOptions(Options):
@@ -60,6 +61,28 @@ class VesselOptions(Options):
         if self.volume is None or not signals:
             return None
         return saturated_content(self.volume, signals["level"].edges, signals["pressure"].edges)
+
+
+def exergy_rise(drawn: Drawn, dead: DeadState) -> FloatArray | float:
+    """Rate at which the non-flow exergy of what a vessel holds rises [W]; 0.0 if not counted.
+
+    d(U + p0 V - T0 S - g0 m) / dt at each cell's own dead state: never with dT0.
+    """
+    held = drawn.content
+    if held is None:
+        return 0.0
+    stored = (
+        np.diff(held.internal_energy)
+        - dead.temperature * np.diff(held.entropy)
+        - dead.gibbs * np.diff(held.mass)
+    )
+    return np.asarray(stored / drawn.interval)
+
+
+def mass_rise(drawn: Drawn) -> FloatArray | float:
+    """Rate at which the mass in a vessel rises [kg/s]; 0.0 if not counted."""
+    held = drawn.content
+    return 0.0 if held is None else np.asarray(np.diff(held.mass) / drawn.interval)
 
 
 def saturated_content(volume: float, liquid_share: FloatArray, pressure: FloatArray) -> Content:

@@ -28,6 +28,7 @@ from monitor.equipment.base import (
     measured,
     total,
 )
+from monitor.equipment.heat_transfer import flag_where
 from monitor.equipment.nozzle import Orifice, zeuner_exponent
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturated
@@ -121,8 +122,10 @@ class TrapGroup(Kind):
         blown = (mean_specific(inlets).enthalpy - liquid.enthalpy) / latent
         nothing = np.zeros_like(inlets[0].flag)
         weight = np.maximum(flow, 0.0)
+        # A dryness above one: the traps would pass nothing but superheated steam.
+        impossible = flag_where(np.nan_to_num(blown, nan=0.0) > 1)
         found = {
-            "blow_through": ConditionFigure(100.0 * blown, weight, nothing),
+            "blow_through": ConditionFigure(100.0 * blown, weight, impossible),
             "blow_through_flow": ConditionFigure(
                 np.maximum(blown, 0.0) * flow * 3.6, np.ones_like(flow), nothing
             ),

@@ -8,11 +8,14 @@ Steam admitted between two points of the expansion expands beside the main flow,
 state: eta_s = [sum(m h)in - m h_out] / sum(m [h - h(p_out, s)]), the sums over main flow and
 inductions. Gland steam that leaks off passes no section; it keeps its exergy as the exhaust does.
 
-A wet section loses about 1 % of efficiency per 1 % of mean moisture (Baumann, from memory), so an
-efficiency with a wet exhaust is compared at like exhaust pressures; drops erode the last blades
-where the exhaust is wetter than ``least_dryness``.
+A section loses about 1 % of its efficiency per 1 % of the mean moisture of the steam in it
+(Baumann's rule), so a warm day, which dries the exhaust, passes for a better machine. With
+``loss_per_moisture`` = 1.0 the efficiency is that of dry steam, eta_s / (1 - a y), y the mean of
+the moistures before and after the section; by default it is as measured. Drops erode the last
+blades where the exhaust is wetter than ``least_dryness``.
 Source: Moran and Shapiro, Fundamentals of Engineering Thermodynamics, eq. 6.46 (isentropic turbine
-efficiency); Bejan, Tsatsaronis, Moran (1996), table 3.3 (fuel and product of a turbine).
+efficiency); Bejan, Tsatsaronis, Moran (1996), table 3.3 (fuel and product of a turbine);
+K. Baumann, Journal of the IEE 59, 565 (1921) (moisture; from memory).
 """
 
 from __future__ import annotations
@@ -36,9 +39,10 @@ from monitor.equipment.base import (
     measured,
     total,
 )
+from monitor.equipment.heat_transfer import flag_where
 from monitor.flags import Flag
 from monitor.site.units import Quantity
-from monitor.thermo.water import state_ps
+from monitor.thermo.water import saturated, state_ps
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -59,6 +63,8 @@ class TurbineOptions(Options):
         mechanical_efficiency, generator_efficiency: the same in two parts, when known so.
         order: streams of extractions and inductions as the steam meets them.
         least_dryness: of the exhaust, below which it is flagged [0 to 1].
+        loss_per_moisture: share of its efficiency that a section loses per share of mean moisture,
+            taken out of eta_s; Baumann's rule is 1, and 0 leaves it as measured.
     """
 
     drive_efficiency: Share = 1.0
@@ -66,6 +72,7 @@ class TurbineOptions(Options):
     generator_efficiency: Share = 1.0
     order: tuple[str, ...] = ()
     least_dryness: Annotated[float, measured(Quantity.FRACTION), Field(ge=0, le=1)] = 0.88
+    loss_per_moisture: float = Field(default=0.0, ge=0, le=3)
 
     @model_validator(mode="after")
     def _said_once(self) -> TurbineOptions:
@@ -133,13 +140,13 @@ class Turbine(Kind):
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Isentropic efficiency of each section, and steam per kWh."""
         names = ["inlet", *item.ports.get("extraction", ()), "exhaust"]
+        dry = cast("TurbineOptions", item.options).loss_per_moisture > 0
+        efficiency = "isentropic efficiency" + (", on dry steam" if dry else "")
         single = len(names) == 2  # noqa: PLR2004
         per_section = tuple(
             Figure(
                 name=f"eta_s_{number}",
-                label="isentropic efficiency"
-                if single
-                else f"isentropic efficiency, section {number}",
+                label=efficiency if single else f"{efficiency}, section {number}",
                 unit="%",
                 worse="low",
                 smallest_change=0.7,
@@ -157,16 +164,14 @@ class Turbine(Kind):
         moisture = Figure(
             "exhaust_moisture", "moisture of the exhaust", "%", "high", 1.0, judged=False
         )
-        # Only a balance can find an exhaust wet; p and T are stated for a dry one.
-        (exhaust,) = item.ports["exhaust"]
-        wet = item.states(exhaust, "enthalpy") == "balance"
-        return (*per_section, steam_rate, *((moisture,) if wet else ()))
+        return (*per_section, steam_rate, *((moisture,) if _is_wet(item) else ()))
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
         del dead
+        loss = cast("TurbineOptions", drawn.item.options).loss_per_moisture
         figures = {
-            f"eta_s_{number}": _efficiency(section)
+            f"eta_s_{number}": _efficiency(section, loss)
             for number, section in enumerate(sections(drawn), start=1)
         }
         inlet, power = drawn.only("inlet"), drawn.only("power")
@@ -174,8 +179,15 @@ class Turbine(Kind):
             rate = np.where(power.energy > 0, inlet.mass_flow / power.energy * 3.6e6, np.nan)
         nothing = np.zeros_like(inlet.flag)
         figures["steam_rate"] = ConditionFigure(rate, np.maximum(power.energy, 0.0), nothing)
-        figures["exhaust_moisture"] = _moisture(drawn)
+        if _is_wet(drawn.item):
+            figures["exhaust_moisture"] = _moisture(drawn)
         return figures
+
+
+def _is_wet(item: Item) -> bool:
+    """Whether the exhaust may be wet: only a balance can find that, p and T are stated for dry."""
+    (exhaust,) = item.ports["exhaust"]
+    return item.states(exhaust, "enthalpy") == "balance"
 
 
 def _flow_of_section(item: Item, number: int) -> tuple[tuple[float, str], ...]:
@@ -233,7 +245,7 @@ def sections(drawn: Drawn) -> list[Section]:
     return found
 
 
-def _efficiency(section: Section) -> ConditionFigure:
+def _efficiency(section: Section, loss_per_moisture: float) -> ConditionFigure:
     before, after = section.before, section.after
     ideal = state_ps(after.pressure, before.entropy).enthalpy
     given, available = before.enthalpy - after.enthalpy, before.enthalpy - ideal
@@ -249,13 +261,26 @@ def _efficiency(section: Section) -> ConditionFigure:
         efficiency = np.where(available > 0, given / available, np.nan)
     possible = np.nan_to_num(efficiency, nan=0.5)
     flag = np.where((possible > 1) | (possible < 0), np.int32(Flag.SECOND_LAW), np.int32(0))
-    return ConditionFigure(100.0 * efficiency, np.maximum(weight, 0.0), flag)
+    # The law holds what was measured against the ideal; the rule tells dry steam from wet.
+    moisture = 1.0 - _mean_dryness(before, after)
+    dry = 1.0 - loss_per_moisture * moisture if loss_per_moisture else 1.0
+    return ConditionFigure(100.0 * efficiency / dry, np.maximum(weight * dry, 0.0), flag)
+
+
+def _mean_dryness(before: StreamState, after: StreamState) -> FloatArray:
+    """Of the steam in a section; what has none, above the critical point, counts as dry."""
+    ends = [np.nan_to_num(state.dryness, nan=1.0) for state in (before, after)]
+    return np.asarray(total(ends) / 2.0)
 
 
 def _moisture(drawn: Drawn) -> ConditionFigure:
+    """(h_g - h) / h_fg: below zero for steam that the balance finds superheated."""
     exhaust = drawn.only("exhaust")
+    liquid, vapour = saturated(exhaust.pressure)
+    moisture = (vapour.enthalpy - exhaust.enthalpy) / (vapour.enthalpy - liquid.enthalpy)
     least = cast("TurbineOptions", drawn.item.options).least_dryness
-    too_wet = np.nan_to_num(exhaust.dryness, nan=1.0) < least
-    flag = np.where(too_wet, np.int32(Flag.MOISTURE), np.int32(0))
-    weight = np.maximum(exhaust.mass_flow, 0.0)
-    return ConditionFigure(100.0 * (1.0 - exhaust.dryness), weight, flag)
+    with np.errstate(invalid="ignore"):
+        impossible = (moisture < 0) | (moisture > 1)
+        too_wet = moisture > 1.0 - least
+    flag = flag_where(impossible) | np.where(too_wet, np.int32(Flag.MOISTURE), np.int32(0))
+    return ConditionFigure(100.0 * moisture, np.maximum(exhaust.mass_flow, 0.0), flag)

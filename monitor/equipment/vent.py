@@ -21,12 +21,11 @@ from monitor.equipment.base import (
     FloatArray,
     Item,
     Kind,
-    Options,
     PortSpec,
     measured,
 )
 from monitor.equipment.nozzle import Orifice, zeuner_exponent
-from monitor.site.models import Reference
+from monitor.equipment.valve import ValveOptions, passing_figure, passing_flow
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturation_temperature
 
@@ -36,26 +35,16 @@ if TYPE_CHECKING:
 __all__ = ["Vent", "VentOptions"]
 
 
-class VentOptions(Options):
-    """Keys of a vent's table.
+class VentOptions(ValveOptions):
+    """Keys of a vent's table, beside those of its valve.
 
     Attributes:
-        position: tag of the valve's position.
-        closed_below: position under which the valve counts as closed [0 to 1].
         orifice: diameter of the hole [m].
         discharge_coefficient: flow / isentropic flow through it.
     """
 
-    position: Reference | None = None
-    closed_below: Annotated[float, measured(Quantity.FRACTION)] = 0.02
     orifice: Annotated[float, measured(Quantity.LENGTH), Field(gt=0)] | None = None
     discharge_coefficient: Annotated[float, measured(Quantity.FRACTION), Field(gt=0, le=1)] = 0.7
-
-    def signals(self) -> dict[str, tuple[Reference, Quantity]]:
-        """The valve position, when the site has one."""
-        if self.position is None:
-            return {}
-        return {"position": (self.position, Quantity.FRACTION)}
 
 
 class Vent(Kind):
@@ -82,15 +71,8 @@ class Vent(Kind):
     def figures(self, item: Item) -> tuple[Figure, ...]:
         """Passing flow when closed (with a position), and what the hole would pass (with one)."""
         options = cast("VentOptions", item.options)
-        passing = Figure(
-            "passing_flow",
-            "passing flow when closed",
-            "t/h",
-            "high",
-            0.5,
-            needs_load=False,
-            follows_load=False,
-            advice=("Have the valve's seat looked at; a lifting safety valve is reported at once."),
+        passing = passing_figure(
+            item, "Have the valve's seat looked at; a lifting safety valve is reported at once."
         )
         orifice = Figure(
             "orifice_flow",
@@ -102,9 +84,7 @@ class Vent(Kind):
             needs_load=False,
             follows_load=False,
         )
-        return ((passing,) if options.position is not None else ()) + (
-            (orifice,) if options.orifice is not None else ()
-        )
+        return (*passing, *((orifice,) if options.orifice is not None else ()))
 
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:
         """Values of `figures`."""
@@ -112,12 +92,7 @@ class Vent(Kind):
         options = cast("VentOptions", drawn.item.options)
         inlet, outlet = drawn.only("inlet"), drawn.only("outlet")
         ones, nothing = np.ones_like(inlet.mass_flow), np.zeros_like(inlet.flag)
-        found = {}
-        position = drawn.signals.get("position")
-        if position is not None:
-            closed = position.value < options.closed_below
-            passing = np.where(closed, inlet.mass_flow * 3.6, np.nan)
-            found["passing_flow"] = ConditionFigure(passing, ones, position.flag)
+        found = passing_flow(drawn, inlet.mass_flow)
         if options.orifice is not None:
             superheat = inlet.temperature - saturation_temperature(inlet.pressure)
             flow = Orifice(options.orifice, options.discharge_coefficient).flow(

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from equipment_builders import (
+    NO_FLAG,
     dead,
     drawn,
     figures_of,
@@ -18,6 +19,8 @@ from equipment_builders import (
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from monitor.equipment.base import StreamState
+from monitor.equipment.solve import with_flow
 from monitor.flags import Flag
 from monitor.thermo.water import saturated, saturation_temperature, state_ps
 
@@ -25,18 +28,40 @@ from monitor.thermo.water import saturated, saturation_temperature, state_ps
 
 
 @settings(max_examples=30, deadline=None)
-@given(st.floats(2.0, 60.0), st.floats(0.02, 1.0))
+@given(st.floats(2.0, 60.0), st.floats(0.02, 0.98))
 def test_pressure_loss_of_a_header_is_free_of_its_load(flow, share):
-    """dp = K m^2 v with K = 500 1/m^4."""
-    p_in, volume = 12.0, water("x", 1.0, p_bar=12.0, T_C=250.0).volume[0]
-    drop = 500.0 * flow**2 * volume / 1e5
-    inlets = [
-        water("a", share * flow, p_bar=p_in, T_C=250.0),
-        water("b", (1 - share) * flow, p_bar=p_in, T_C=250.0),
-    ]
-    out = water("out", flow, p_bar=p_in - drop, h=inlets[0].enthalpy)
+    """Two equal pipes, dp = K m^2 v in each with K = 500 1/m^4, however the flow is split."""
+    inlets = []
+    for name, m in (("a", share * flow), ("b", (1 - share) * flow)):
+        p = 12.0
+        for _ in range(40):
+            p = 12.0 + 500.0 * m**2 * water(name, m, p_bar=p, T_C=250.0).volume[0] / 1e5
+        inlets.append(water(name, m, p_bar=p, T_C=250.0))
+    out = water("out", flow, p_bar=12.0, T_C=250.0)
     figure = figures_of(drawn("header", {"inlet": inlets, "outlet": out}))
     assert figure["pressure_loss_coefficient"].value[0] == pytest.approx(500.0, rel=1e-6)
+
+
+def test_a_pipe_with_a_valve_in_it_can_be_left_out_of_a_headers_pressure_loss():
+    a, b = water("a", 9.0, p_bar=12.2, T_C=250.0), water("b", 2.0, p_bar=30.0, T_C=300.0)
+    ports = {"inlet": [a, b], "outlet": water("out", 11.0, p_bar=12.0, T_C=255.0)}
+    box = drawn("header", ports, pressure_loss_from=["a"])
+    expected = 0.2e5 / (81.0 * a.volume[0])
+    got = figures_of(box)["pressure_loss_coefficient"].value[0]
+    assert got == pytest.approx(expected, rel=1e-9)
+    assert box.item.kind.complain(box.item, {}) == []
+    (text,) = box.item.kind.complain(drawn("header", ports, pressure_loss_from=["c"]).item, {})
+    assert "no inlet: a, b" in text
+
+
+def test_a_pipe_without_flow_takes_no_figure_of_a_header_away():
+    """A dead branch whose gauges are gone: NaN throughout but for its flow, which is zero."""
+    a, out = water("a", 9.0, p_bar=12.2, T_C=250.0), water("out", 9.0, p_bar=12.0, T_C=245.0)
+    still = with_flow(StreamState.absent("water", 1, "x"), np.zeros(1), NO_FLAG)
+    whole = figures_of(drawn("header", {"inlet": a, "outlet": out}))
+    lame = figures_of(drawn("header", {"inlet": [a, still], "outlet": [still, out]}))
+    assert {k: v.value[0] for k, v in lame.items()} == {k: v.value[0] for k, v in whole.items()}
+    assert all(np.isfinite(v.value[0]) for v in whole.values())
 
 
 def test_a_header_read_by_one_gauge_has_no_pressure_loss_to_show():
