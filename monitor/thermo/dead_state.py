@@ -12,9 +12,9 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from monitor.thermo import engine
 from monitor.thermo.arrays import broadcast
 from monitor.thermo.ice import ice_state, melting_temperature
+from monitor.thermo.limits import LOWEST_TEMPERATURE
 from monitor.thermo.water import state_pt
 
 if TYPE_CHECKING:
@@ -70,9 +70,9 @@ def dead_state(temperature: npt.ArrayLike, pressure: npt.ArrayLike) -> DeadState
     ambient = (T0 >= _COLDEST) & (T0 <= _WARMEST)
     frozen = ambient & (melting_temperature(p0) > T0)
     ice = ice_state(p0, np.where(frozen, T0, np.nan))
-    above_zero = np.maximum(T0, engine.LOWEST_TEMPERATURE)
+    above_zero = np.maximum(T0, LOWEST_TEMPERATURE)
     liquid = state_pt(p0, np.where(ambient & ~frozen, above_zero, np.nan), side="liquid")
-    below_zero = np.minimum(T0 - engine.LOWEST_TEMPERATURE, 0.0)
+    below_zero = np.minimum(T0 - LOWEST_TEMPERATURE, 0.0)
     enthalpy = liquid.enthalpy + _HEAT_CAPACITY_AT_FREEZING * below_zero
     entropy = liquid.entropy + _HEAT_CAPACITY_AT_FREEZING * below_zero / above_zero
     h0 = np.where(frozen, ice.enthalpy, enthalpy)

@@ -1,5 +1,7 @@
 """CoolProp's IF97 backend in batch: pressure and temperature in; h, s and v out.
 
+In region 3 CoolProp gives a density to start from, and `region3` the rest.
+
 This is the only file that talks to CoolProp. Importing CoolProp takes about two seconds, so it
 happens at the first evaluation, not at import. An `AbstractState` is not shared between threads.
 """
@@ -12,18 +14,24 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from monitor.thermo import region3
+from monitor.thermo.limits import (
+    HIGHEST_TEMPERATURE,
+    LOWEST_PRESSURE,
+    REGION_5_PRESSURE,
+    REGION_5_TEMPERATURE,
+)
+
 if TYPE_CHECKING:
+    import numpy.typing as npt
+
     from monitor.thermo.arrays import BoolArray, FloatArray
+
+    StatusArray = npt.NDArray[np.int32]
 
 __all__ = [
     "ENTHALPY",
     "ENTROPY",
-    "HIGHEST_PRESSURE",
-    "HIGHEST_TEMPERATURE",
-    "LOWEST_PRESSURE",
-    "LOWEST_TEMPERATURE",
-    "REGION_5_PRESSURE",
-    "REGION_5_TEMPERATURE",
     "VOLUME",
     "evaluate",
     "evaluate_column",
@@ -32,14 +40,6 @@ __all__ = [
 
 ENTHALPY, ENTROPY, VOLUME = 0, 1, 2
 """Columns of an evaluation [J/kg, J/(kg K), m3/kg]."""
-
-LOWEST_TEMPERATURE = 273.15
-HIGHEST_TEMPERATURE = 1073.15
-HIGHEST_PRESSURE = 100e6
-REGION_5_TEMPERATURE = 2273.15
-REGION_5_PRESSURE = 50e6
-LOWEST_PRESSURE = 611.213
-"""CoolProp refuses anything below the saturation pressure at 0 degC, though IF97 would not."""
 
 _ON_SATURATION = 2  # the batch call's status for "within 3.3e-5 (relative) of p_sat"
 _ALL = (ENTHALPY, ENTROPY, VOLUME)
@@ -104,21 +104,26 @@ def evaluate_off_saturation(
 
 def _batch(
     pressure: FloatArray, temperature: FloatArray, phase: int, columns: tuple[int, ...]
-) -> tuple[FloatArray, Any]:
-    coolprop = _coolprop()
-    values = np.full((pressure.size, len(columns)), np.nan)
-    status = np.zeros(pressure.size, dtype=np.int32)
-    if pressure.size == 0:
-        return values, status
-    _state().fast_evaluate(
-        coolprop.PT_INPUTS,
-        np.ascontiguousarray(pressure),
-        np.ascontiguousarray(temperature),
-        _outputs(columns),
-        values,
-        status,
-        phase,
+) -> tuple[FloatArray, StatusArray]:
+    critical = region3.covers(pressure, temperature)
+    if not critical.any():
+        return _outside_region_3(pressure, temperature, phase, columns)
+    values = np.empty((pressure.size, len(columns)))
+    status = np.empty(pressure.size, dtype=np.int32)
+    rest = ~critical
+    values[rest], status[rest] = _outside_region_3(
+        pressure[rest], temperature[rest], phase, columns
     )
+    values[critical], status[critical] = _region_3(
+        pressure[critical], temperature[critical], phase, columns
+    )
+    return values, status
+
+
+def _outside_region_3(
+    pressure: FloatArray, temperature: FloatArray, phase: int, columns: tuple[int, ...]
+) -> tuple[FloatArray, StatusArray]:
+    values, status = _call(pressure, temperature, phase, columns)
     hot = (temperature > HIGHEST_TEMPERATURE) & (temperature <= REGION_5_TEMPERATURE)
     if hot.any():
         hot &= (pressure >= LOWEST_PRESSURE) & (pressure <= REGION_5_PRESSURE)
@@ -126,6 +131,35 @@ def _batch(
     if columns[-1] == VOLUME:
         np.divide(1.0, values[:, -1], out=values[:, -1])
     return values, status
+
+
+def _call(
+    pressure: FloatArray, temperature: FloatArray, phase: int, columns: tuple[int, ...]
+) -> tuple[FloatArray, StatusArray]:
+    values = np.full((pressure.size, len(columns)), np.nan)
+    status = np.zeros(pressure.size, dtype=np.int32)
+    if pressure.size:
+        _state().fast_evaluate(
+            _coolprop().PT_INPUTS,
+            np.ascontiguousarray(pressure),
+            np.ascontiguousarray(temperature),
+            _outputs(columns),
+            values,
+            status,
+            phase,
+        )
+    return values, status
+
+
+def _region_3(
+    pressure: FloatArray, temperature: FloatArray, phase: int, columns: tuple[int, ...]
+) -> tuple[FloatArray, StatusArray]:
+    close, status = _call(pressure, temperature, phase, (VOLUME,))
+    rho = region3.density(pressure, temperature, close[:, 0])
+    rho[status == _ON_SATURATION] = np.nan
+    at = region3.helmholtz(rho, temperature)
+    wanted = {ENTHALPY: at.enthalpy, ENTROPY: at.entropy, VOLUME: 1.0 / rho}
+    return np.column_stack([wanted[column] for column in columns]), status
 
 
 def _region_5(

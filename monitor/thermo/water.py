@@ -18,15 +18,19 @@ import numpy as np
 from monitor.thermo import engine
 from monitor.thermo.arrays import broadcast
 from monitor.thermo.engine import ENTHALPY, ENTROPY, VOLUME
-from monitor.thermo.isobar import solve_single_phase
-from monitor.thermo.saturation import (
+from monitor.thermo.isobar import solve_above_region_3_pressure, solve_single_phase
+from monitor.thermo.limits import (
+    CRITICAL_DENSITY,
     CRITICAL_PRESSURE,
     CRITICAL_TEMPERATURE,
-    LIQUID,
-    VAPOUR,
+    HIGHEST_PRESSURE,
+    LOWEST_PRESSURE,
+    REGION_3_TEMPERATURE,
+)
+from monitor.thermo.saturation import LIQUID, VAPOUR, saturation_properties
+from monitor.thermo.saturation_line import (
     near_saturation,
     saturation_pressure,
-    saturation_properties,
     saturation_temperature,
 )
 
@@ -50,7 +54,7 @@ __all__ = [
     "state_tx",
 ]
 
-_CRITICAL_VOLUME = 1.0 / 322.0
+_CRITICAL_VOLUME = 1.0 / CRITICAL_DENSITY
 
 
 @dataclass(frozen=True, eq=False)
@@ -140,10 +144,10 @@ def saturated(pressure: npt.ArrayLike) -> tuple[State, State]:
 def state_ph(pressure: npt.ArrayLike, enthalpy: npt.ArrayLike) -> State:
     """State from pressure [Pa] and enthalpy [J/kg], wet states included.
 
-    The forward equations at the temperature found give the enthalpy back within 1e-3 J/kg below
-    the critical region. In region 3 (above 350 degC and 16.5 MPa), where IF97's equations meet
-    with small jumps, a jump's width is left (0.1 kJ/kg; more within 0.2 MPa of the critical
-    point).
+    The forward equations at the temperature found give the enthalpy back within 1e-3 J/kg.
+    Where the equations of two regions meet they leave gaps in h and s: what lies in one gets the
+    boundary's temperature, and the gap is left (0.1 kJ/kg at most). On an isobar within 50 Pa of
+    the critical pressure the isotherm is flat: there T is within 1 mK.
     """
     return _on_isobar(pressure, enthalpy, ENTHALPY)
 
@@ -160,26 +164,72 @@ def _on_isobar(pressure: npt.ArrayLike, target: npt.ArrayLike, column: int) -> S
     p, wanted = broadcast(pressure, target)
     shape, p, wanted = p.shape, p.ravel(), wanted.ravel()
     t_sat = saturation_temperature(p)
-    both = saturation_properties(p, t_sat)
-    liquid, vapour = both[:, LIQUID], both[:, VAPOUR]
-    x = (wanted - liquid[:, column]) / (vapour[:, column] - liquid[:, column])
+    temperature, values = t_sat.copy(), np.full((p.size, 3), np.nan)
+    x = np.full(p.size, np.nan)
+    low = t_sat <= REGION_3_TEMPERATURE
+    for solve, where in ((_below_region_3, low), (_from_region_3_on, ~low)):
+        if where.all():
+            temperature, values, x = solve(p, t_sat, wanted, column)
+            break
+        index = np.flatnonzero(where)
+        if index.size:
+            found = solve(p[index], t_sat[index], wanted[index], column)
+            temperature[index], values[index], x[index] = found
+    dryness = np.where(np.isnan(x), _phase(p, temperature, values[:, VOLUME]), x)
+    return _state(p.reshape(shape), temperature, values, dryness)
+
+
+def _below_region_3(
+    p: FloatArray, t_sat: FloatArray, wanted: FloatArray, column: int
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """T, h-s-v and the dryness of what is wet (NaN beside), up to 350 degC at saturation."""
+    liquid, vapour, x = _within_the_dome(p, t_sat, wanted, column)
     temperature = t_sat.copy()
     values = liquid + x[:, None] * (vapour - liquid)
     values[:, column] = wanted
-    # Above the critical pressure x is NaN and the branch's name does not matter.
     for branch, where in ((True, ~(x <= 1.0)), (False, x < 0.0)):
         index = np.flatnonzero(where)
-        temperature[index], values[index] = solve_single_phase(
-            p[index],
-            t_sat[index],
-            (vapour if branch else liquid)[index, column],
-            wanted[index],
-            column=column,
-            vapour=branch,
-        )
-    single = _phase(p, temperature, values[:, VOLUME])
-    dryness = np.where((x >= 0.0) & (x <= 1.0), x, single)
-    return _state(p.reshape(shape), temperature, values, dryness)
+        if index.size:
+            temperature[index], values[index] = solve_single_phase(
+                p[index],
+                t_sat[index],
+                (vapour if branch else liquid)[index, column],
+                wanted[index],
+                column=column,
+                vapour=branch,
+            )
+    return temperature, values, np.where((x >= 0.0) & (x <= 1.0), x, np.nan)
+
+
+def _from_region_3_on(
+    p: FloatArray, t_sat: FloatArray, wanted: FloatArray, column: int
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """The same above 350 degC at saturation, and above the critical pressure."""
+    temperature, values = np.full(p.size, np.nan), np.full((p.size, 3), np.nan)
+    x = np.full(p.size, np.nan)
+    covered = np.flatnonzero((p > LOWEST_PRESSURE) & (p <= HIGHEST_PRESSURE))
+    temperature[covered], values[covered] = solve_above_region_3_pressure(
+        p[covered], wanted[covered], column=column
+    )
+    below = np.flatnonzero(np.isfinite(t_sat))
+    if below.size:
+        liquid, vapour, share = _within_the_dome(p[below], t_sat[below], wanted[below], column)
+        wet = (share >= 0.0) & (share <= 1.0)
+        index, share = below[wet], share[wet]
+        x[index], temperature[index] = share, t_sat[index]
+        values[index] = liquid[wet] + share[:, None] * (vapour[wet] - liquid[wet])
+        values[index, column] = wanted[index]
+    return temperature, values, x
+
+
+def _within_the_dome(
+    p: FloatArray, t_sat: FloatArray, wanted: FloatArray, column: int
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    both = saturation_properties(p, t_sat)
+    liquid, vapour = both[:, LIQUID], both[:, VAPOUR]
+    width = vapour[:, column] - liquid[:, column]
+    # At the critical point itself the dome has no width.
+    return liquid, vapour, (wanted - liquid[:, column]) / np.where(width == 0.0, np.nan, width)
 
 
 def _mixture(pressure: FloatArray, temperature: FloatArray, dryness: FloatArray) -> State:

@@ -1,0 +1,37 @@
+"""The range of IAPWS R7-97(2012): where its regions end, in SI."""
+
+from __future__ import annotations
+
+__all__ = [
+    "CRITICAL_DENSITY",
+    "CRITICAL_PRESSURE",
+    "CRITICAL_TEMPERATURE",
+    "HIGHEST_PRESSURE",
+    "HIGHEST_TEMPERATURE",
+    "LOWEST_PRESSURE",
+    "LOWEST_TEMPERATURE",
+    "REGION_3_HIGHEST_TEMPERATURE",
+    "REGION_3_PRESSURE",
+    "REGION_3_TEMPERATURE",
+    "REGION_5_PRESSURE",
+    "REGION_5_TEMPERATURE",
+]
+
+LOWEST_TEMPERATURE = 273.15
+HIGHEST_TEMPERATURE = 1073.15
+HIGHEST_PRESSURE = 100e6
+LOWEST_PRESSURE = 611.213
+"""CoolProp refuses anything below the saturation pressure at 0 degC, though IF97 would not."""
+
+REGION_3_TEMPERATURE = 623.15
+REGION_3_PRESSURE = 16.529164252604509e6
+"""The saturation pressure at 623.15 K: region 3 lies above both."""
+REGION_3_HIGHEST_TEMPERATURE = 863.15
+"""Where the boundary between regions 2 and 3 meets 100 MPa."""
+
+REGION_5_TEMPERATURE = 2273.15
+REGION_5_PRESSURE = 50e6
+
+CRITICAL_PRESSURE = 22.064e6
+CRITICAL_TEMPERATURE = 647.096
+CRITICAL_DENSITY = 322.0
