@@ -31,6 +31,7 @@ from monitor.store.batch import LEFT_OUT_COLUMNS, FigureBatch
 from monitor.streams import Gauges, signals_of, stream_states, with_enthalpy
 from monitor.tables import condition_table, equipment_table, ledger_table, stream_table
 from monitor.thermo.dead_state import DeadState, dead_state, live_ambient
+from monitor.uncertainty import COVERAGE, Hourly, Uncertainties, propagate
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -51,11 +52,15 @@ __all__ = [
 ]
 
 _HOUR = 3600
-# Negative destruction beyond this share of the exergy that passes through is taken for a
-# contradiction of the second law rather than for noise (common practice: meters of 1 %). What a
-# vessel holds is differentiated, so the stated uncertainties of its gauges come on top, expanded to
-# leave one cell in seven hundred (normal distribution).
-_CONTRADICTION, _COVERAGE = 0.02, 3.0
+# Negative destruction beyond the expanded uncertainty of the instruments is a contradiction of the
+# second law. Steam tables and fixed values, which that leaves out, are allowed a thousandth of the
+# exergy that passes through. Where the site file does not state every class, or the load moves and
+# pipes and metal store what no account holds, the allowance is a share of what passes through
+# (common practice: meters of 1 %).
+_MODEL, _CONTRADICTION = 0.001, 0.02
+# What a vessel holds is differentiated, so the stated uncertainties of its gauges come on top,
+# expanded to leave one cell in seven hundred (normal distribution).
+_CONTENT_COVERAGE = 3.0
 
 
 @dataclass(frozen=True)
@@ -66,6 +71,7 @@ class Computed:
         batch: figures for the store.
         readings, bad, missing: readings inside the window; those left out; cells without a value.
         problems: what the sources passed over.
+        uncertainties: what each instrument contributes to each figure; None unless asked for.
     """
 
     batch: FigureBatch
@@ -73,6 +79,7 @@ class Computed:
     bad: int
     missing: int
     problems: tuple[Problem, ...] = ()
+    uncertainties: Uncertainties | None = None
 
 
 def lead_in(site: Site) -> int:
@@ -90,7 +97,9 @@ def lead_in(site: Site) -> int:
     return math.ceil(before / general.interval + 1) * int(general.interval)
 
 
-def compute(site: Site, read: ReadResult, start: int, end: int) -> Computed:
+def compute(
+    site: Site, read: ReadResult, start: int, end: int, *, with_budgets: bool = False
+) -> Computed:
     """Compute every figure of a window.
 
     Args:
@@ -98,6 +107,7 @@ def compute(site: Site, read: ReadResult, start: int, end: int) -> Computed:
         read: readings from ``start - lead_in(site)`` to ``end`` inclusive.
         start: UTC s, on a full hour.
         end: UTC s, on the grid.
+        with_budgets: hand out the uncertainty budgets too, which nobody stores.
     """
     if start % _HOUR:
         raise ValueError(f"a window starts on a full hour, not at {start}")
@@ -107,8 +117,12 @@ def compute(site: Site, read: ReadResult, start: int, end: int) -> Computed:
     conditioned = condition_site(site, read.readings, wide)
     kept = grid.count + _steady_cells(site) - 1
     ambient = _ambient(site, conditioned, kept)
-    plant = _plant(site, conditioned, ambient, kept, interval)
-    return _figures(site, plant, grid, conditioned, read.problems)
+    tags = {name: one.tail(kept) for name, one in conditioned.tags.items()}
+    plant = _plant(site, tags, ambient, interval)
+    hourly = Hourly.of(kept, grid.count, _HOUR // interval)
+    uncertain = propagate(site, tags, ambient, hourly)
+    computed = _figures(site, plant, uncertain, grid, conditioned, read.problems)
+    return replace(computed, uncertainties=uncertain) if with_budgets else computed
 
 
 @dataclass(frozen=True)
@@ -170,10 +184,7 @@ class Plant:
     drawn: Mapping[str, Drawn]
 
 
-def _plant(
-    site: Site, conditioned: Conditioned, ambient: Ambient, kept: int, interval: int
-) -> Plant:
-    tags: dict[str, Gridded] = {k: v.tail(kept) for k, v in conditioned.tags.items()}
+def _plant(site: Site, tags: Mapping[str, Gridded], ambient: Ambient, interval: int) -> Plant:
     gauges = Gauges(tags, ambient.barometer, ambient.barometer_edges, ambient.barometer_flag)
     states = stream_states(site, gauges)
     signals = signals_of(site, gauges)
@@ -198,7 +209,12 @@ def _draw(
 
 @dataclass(frozen=True)
 class Accounted:
-    """One piece of equipment with its account at both dead states."""
+    """One piece of equipment with its account at both dead states.
+
+    Attributes:
+        u_destroyed: standard uncertainty of what it destroys, live [W].
+        classes_stated: whether the site file states the class of every instrument behind it.
+    """
 
     drawn: Drawn
     counted: Balances
@@ -206,18 +222,24 @@ class Accounted:
     reference: Account
     load: FloatArray
     flag: FlagArray
+    u_destroyed: FloatArray
+    classes_stated: bool
 
 
-def _accounted(site: Site, drawn: Drawn, ambient: Ambient) -> Accounted:
+def _accounted(site: Site, drawn: Drawn, ambient: Ambient, uncertain: Uncertainties) -> Accounted:
     counted = balances(drawn)
     live = account(drawn, counted, ambient.live)
     reference = account(drawn, counted, ambient.reference)
     load = drawn.item.kind.load(drawn)
     flag = sum_flags((*drawn.facing("in"), *drawn.facing("out")), tuple(drawn.signals.values()))
     flag = np.asarray(flag | ambient.flag | _running(site, drawn.item, load), dtype=np.int32)
+    u = uncertain.standard(uncertain.destroyed[drawn.item.id])
+    stated = not uncertain.by_default[drawn.item.id]
     passing = np.maximum(np.abs(live.exergy_in), np.abs(live.exergy_out))
+    judged = np.isfinite(u) & ((flag & Flag.UNSTEADY) == 0) & stated
+    allowed = np.where(judged, COVERAGE * u + _MODEL * passing, _CONTRADICTION * passing)
     stored = content_uncertainty(drawn, ambient.live, _moved_contents(site, drawn))
-    contradicts = live.destroyed < -(_CONTRADICTION * passing + _COVERAGE * stored)
+    contradicts = live.destroyed < -(allowed + _CONTENT_COVERAGE * stored)
     if drawn.content is None:
         # Out of service, meters about zero show as much below it as above.
         contradicts &= (flag & Flag.OFF) == 0
@@ -227,7 +249,7 @@ def _accounted(site: Site, drawn: Drawn, ambient: Ambient) -> Accounted:
     flag[whole] &= ~np.int32(Flag.MISSING)
     absent = ~np.isfinite(live.destroyed) & ((flag & Flag.OUT_OF_REGION) == 0)
     flag[absent] |= Flag.MISSING
-    return Accounted(drawn, counted, live, reference, load, flag)
+    return Accounted(drawn, counted, live, reference, load, flag, u, stated)
 
 
 def _moved_contents(site: Site, drawn: Drawn) -> list[Content]:
@@ -247,7 +269,7 @@ def _moved_contents(site: Site, drawn: Drawn) -> list[Content]:
 def stated_uncertainty(
     site: Site, reference: Reference, values: FloatArray
 ) -> FloatArray | float | None:
-    """Give the standard uncertainty of values [SI] that their tag states; None where it does not."""
+    """Standard uncertainty of values [SI] by their tag's class; None where it states none."""
     tag = site.tags.get(reference.tag or "")
     stated = None if tag is None else tag.stated_uncertainty
     if tag is None or stated is None:
@@ -283,11 +305,12 @@ def _bits(where: np.ndarray[tuple[int], np.dtype[np.bool_]], flag: Flag) -> Flag
 def _figures(
     site: Site,
     plant: Plant,
+    uncertain: Uncertainties,
     grid: Grid,
     conditioned: Conditioned,
     problems: tuple[Problem, ...],
 ) -> Computed:
-    accounted = [_accounted(site, d, plant.ambient) for d in plant.drawn.values()]
+    accounted = [_accounted(site, d, plant.ambient, uncertain) for d in plant.drawn.values()]
     quality = conditioned.quality
     quality = quality[(quality["hour"] >= grid.start) & (quality["hour"] < grid.end)]
     moving = {
@@ -300,10 +323,10 @@ def _figures(
     batch = FigureBatch(
         start=grid.start,
         end=grid.end,
-        streams=stream_table(plant, moving, grid),
+        streams=stream_table(plant, moving, uncertain, grid),
         equipment=equipment_table(accounted, grid),
-        conditions=condition_table(accounted, plant.ambient, grid),
-        ledger=ledger_table(site, plant, accounted, grid),
+        conditions=condition_table(accounted, plant.ambient, uncertain, grid),
+        ledger=ledger_table(site, plant, accounted, uncertain, grid),
         tag_quality=quality.reset_index(drop=True),
     )
     return Computed(

@@ -18,6 +18,7 @@ from monitor.store.batch import (
     LEDGER_COLUMNS,
     STREAM_COLUMNS,
 )
+from monitor.uncertainty.budget import COVERAGE
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
@@ -26,8 +27,9 @@ if TYPE_CHECKING:
     from monitor.figures import Accounted, Ambient, Plant
     from monitor.readings.grid import Grid
     from monitor.site.load import Site
+    from monitor.uncertainty import Uncertainties
 
-__all__ = ["condition_table", "crossing", "equipment_table", "ledger_table", "stream_table"]
+__all__ = ["condition_table", "equipment_table", "ledger_table", "stream_table"]
 
 
 @dataclass(frozen=True)
@@ -57,12 +59,13 @@ def _stacked(
     return pd.DataFrame(table)
 
 
-def stream_table(plant: Plant, moving: Mapping[str, FlagArray], grid: Grid) -> pd.DataFrame:
+def stream_table(
+    plant: Plant, moving: Mapping[str, FlagArray], uncertain: Uncertainties, grid: Grid
+) -> pd.DataFrame:
     """State, flow and exergy of every stream, flagged where its rate was moving.
 
     That is the stream's own steadiness: a machine's is told by its load, whatever a drain does.
     """
-    absent = np.full(len(plant.ambient.flag), np.nan)
     blocks = []
     for state in plant.states.values():
         values = (
@@ -75,8 +78,8 @@ def stream_table(plant: Plant, moving: Mapping[str, FlagArray], grid: Grid) -> p
             state.energy / 1e3,
             state.exergy(plant.ambient.live) / 1e3,
             state.exergy(plant.ambient.reference) / 1e3,
-            absent,
-            absent,
+            uncertain.standard(uncertain.mass_flow[state.id]),
+            uncertain.standard(uncertain.exergy[state.id]) / 1e3,
         )
         columns = dict(zip(STREAM_COLUMNS, values, strict=True))
         flag = np.asarray(state.flag | plant.ambient.flag | moving[state.id], dtype=np.int32)
@@ -109,53 +112,57 @@ def _account_columns(a: Accounted) -> dict[str, FloatArray]:
         "unaccounted_live_kw": live.unaccounted,
         "closure_live_kw": live.closure,
         "energy_imbalance_kw": counted.energy_imbalance,
+        "u_destroyed_live_kw": a.u_destroyed,
     }
     return {name: np.asarray(values) / 1e3 for name, values in watts.items()} | {
         "load_kg_s": a.load,
         "mass_imbalance_kg_s": counted.mass_imbalance,
-        "u_destroyed_live_kw": np.full_like(a.load, np.nan),
     }
 
 
-def condition_table(accounted: Sequence[Accounted], ambient: Ambient, grid: Grid) -> pd.DataFrame:
+def condition_table(
+    accounted: Sequence[Accounted], ambient: Ambient, uncertain: Uncertainties, grid: Grid
+) -> pd.DataFrame:
     """The condition figures of every piece of equipment, in their own units."""
-    blocks = [block for a in accounted for block in _condition_blocks(a, ambient)]
+    blocks = [block for a in accounted for block in _condition_blocks(a, ambient, uncertain)]
     if not blocks:
         return pd.DataFrame(columns=["subject", "figure", "time", *CONDITION_COLUMNS, "flag"])
     return _stacked(("subject", "figure"), CONDITION_COLUMNS, blocks, grid)
 
 
-def _condition_blocks(a: Accounted, ambient: Ambient) -> list[_Block]:
+def _condition_blocks(a: Accounted, ambient: Ambient, uncertain: Uncertainties) -> list[_Block]:
     item = a.drawn.item
     values = item.kind.condition(a.drawn, ambient.live)
     blocks = []
     for figure in item.kind.figures(item):
         got = values[figure.name]
+        u = uncertain.standard(uncertain.conditions[item.id, figure.name])
+        own = got.flag
+        if a.classes_stated and figure.unit == "%":
+            own = np.where(_possible(got.value, u), own & ~np.int32(Flag.SECOND_LAW), own)
         running = np.int32(Flag.OFF | Flag.STARTING | Flag.UNSTEADY)
-        flag = np.asarray((a.flag if figure.needs_load else a.flag & ~running) | got.flag)
+        flag = np.asarray((a.flag if figure.needs_load else a.flag & ~running) | own)
         absent = np.where(np.isfinite(got.value), np.int32(0), np.int32(Flag.MISSING))
-        unknown = np.full_like(a.load, np.nan)
-        columns = dict(zip(CONDITION_COLUMNS, (got.value, got.weight, unknown), strict=True))
+        columns = dict(zip(CONDITION_COLUMNS, (got.value, got.weight, u), strict=True))
         blocks.append(_Block((item.id, figure.name), columns, np.asarray(flag | absent, np.int32)))
     return blocks
 
 
-def crossing(site: Site) -> dict[str, list[str]]:
-    """The streams across the site's boundary, by the ledger's line that they count in."""
-    leaving = [s for s in site.streams if s not in site.consumer]
-    used = [s for s in leaving if site.counts_as_used(s)]
-    return {
-        "supplied": [s for s in site.streams if s not in site.producer],
-        "used": used,
-        "lost": [s for s in leaving if s not in used],
-    }
+def _possible(share: FloatArray, u: FloatArray) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+    """Where a share [%] is outside 0 to 100 by no more than its instruments explain."""
+    beyond = np.maximum(share - 100.0, -share)
+    return np.asarray((beyond > 0) & (beyond <= COVERAGE * u))
 
 
 def ledger_table(
-    site: Site, plant: Plant, accounted: Sequence[Accounted], grid: Grid
+    site: Site,
+    plant: Plant,
+    accounted: Sequence[Accounted],
+    uncertain: Uncertainties,
+    grid: Grid,
 ) -> pd.DataFrame:
     """Supplied = used + lost + destroyed + change in store + imbalance, at both dead states."""
-    ambient, ends = plant.ambient, crossing(site)
+    ambient, ends = plant.ambient, site.crossing()
     supplied, used, lost = ends["supplied"], ends["used"], ends["lost"]
     lines: dict[str, FloatArray] = {}
     nothing = np.zeros(len(ambient.flag))
@@ -173,6 +180,10 @@ def ledger_table(
         lines |= {f"{key}_{name}_kw": value / 1e3 for key, value in totals.items()}
     # A ledger with a hole in it is no ledger: its lines are there together or not at all.
     whole = np.isfinite(np.stack(list(lines.values()))).all(axis=0)
+    lines |= {
+        f"u_{line}_live_kw": uncertain.standard(budget) / 1e3
+        for line, budget in uncertain.ledger.items()
+    }
     columns = {
         "t0_degc": ambient.live.temperature - 273.15,
         "p0_bar": ambient.live.pressure / 1e5,

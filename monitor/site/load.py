@@ -75,6 +75,16 @@ class Site:
         stream = self.streams[stream_id]
         return (stream.counts_as or ("used" if stream.medium == "power" else "lost")) == "used"
 
+    def crossing(self) -> dict[str, list[str]]:
+        """The streams across the site's boundary, by the ledger's line that they count in."""
+        leaving = [s for s in self.streams if s not in self.consumer]
+        used = [s for s in leaving if self.counts_as_used(s)]
+        return {
+            "supplied": [s for s in self.streams if s not in self.producer],
+            "used": used,
+            "lost": [s for s in leaving if s not in used],
+        }
+
     def used_tags(self) -> dict[str, Tag]:
         """Tags that some stream, equipment or the dead state reads, in the order of the file."""
         used = {reference.tag for _, _, reference, _ in _references(self) if reference.tag}

@@ -2,7 +2,9 @@
 
 Times are integer seconds since 1970-01-01 UTC, the start of the grid cell they stand for. A figure
 is NaN exactly where its flag holds `Flag.MISSING` or `Flag.OUT_OF_REGION`. Standard uncertainties
-(``u_`` columns) are NaN until they are computed.
+(``u_`` columns, in the unit of their figure) are those of the instruments' classes, the same in all
+cells of an hour; they are NaN where a class is not known, and in figures of before version 0005 of
+the schema.
 """
 
 from __future__ import annotations
@@ -72,6 +74,11 @@ LEDGER_COLUMNS = (
     "destroyed_reference_kw",
     "stored_rate_reference_kw",
     "imbalance_reference_kw",
+    "u_supplied_live_kw",
+    "u_used_live_kw",
+    "u_lost_live_kw",
+    "u_destroyed_live_kw",
+    "u_imbalance_live_kw",
 )
 CONDITION_COLUMNS = ("value", "weight", "u_value")
 QUALITY_COLUMNS = (

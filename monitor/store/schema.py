@@ -49,7 +49,7 @@ __all__ = [
     "watermarks",
 ]
 
-REVISIONS = ("0001", "0002", "0003", "0004")
+REVISIONS = ("0001", "0002", "0003", "0004", "0005")
 """Every schema revision this program knows, oldest first; the last one is what it works with."""
 
 VERSION_TABLE = "lostwork_schema"

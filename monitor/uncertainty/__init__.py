@@ -6,7 +6,7 @@
 
 from __future__ import annotations
 
-from monitor.uncertainty.budget import COVERAGE, Budget, Uncertainties
+from monitor.uncertainty.budget import COVERAGE, Budget, Hourly, Uncertainties
 from monitor.uncertainty.propagate import propagate
 
-__all__ = ["COVERAGE", "Budget", "Uncertainties", "propagate"]
+__all__ = ["COVERAGE", "Budget", "Hourly", "Uncertainties", "propagate"]

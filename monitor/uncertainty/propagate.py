@@ -17,7 +17,6 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from monitor.equipment.account import account, balances
-from monitor.tables import crossing
 from monitor.thermo.dead_state import DeadState, dead_state
 from monitor.uncertainty.budget import Budget, Hourly, Uncertainties
 from monitor.uncertainty.classes import class_of, standard_uncertainty
@@ -172,7 +171,7 @@ def _ledger(
     equipment: Mapping[str, _Equipment],
 ) -> dict[str, Budget]:
     """The ledger's lines: what a tag does to each part of a line adds up with its sign."""
-    ends = crossing(site)
+    ends = site.crossing()
     parts = {line: [streams[s][1] for s in ends.get(line, ())] for line in _LINES}
     for one in equipment.values():
         parts["lost"].append(one.heat_loss)

@@ -242,12 +242,13 @@ def _passes(site: Site, sample: Sample) -> Gauges:
             barometer[_BAROMETER] += u
     barometer = barometer.reshape(-1)
     flag = np.zeros(barometer.shape, dtype=np.int32)
-    tags = {}
-    for place, name in enumerate(names):
-        values = moved[place].reshape(-1)
-        # Streams are made of means; the edges are the equipment's own signals' and stand idle here.
-        tags[name] = Gridded(values, values, flag)
-    return Gauges(tags, barometer, barometer, flag)
+    # Streams are made of means; edges belong to the equipment's own signals and stand idle here.
+    idle = np.append(barometer, barometer[-1])
+    tags = {
+        name: Gridded(values, idle, flag)
+        for name, values in zip(names, moved.reshape(len(names), -1), strict=True)
+    }
+    return Gauges(tags, barometer, idle, flag)
 
 
 def _pass_of(tag: Tag, sample: Sample) -> int:

@@ -27,7 +27,7 @@ TAGS = ("62-FT-001", "62-PT-001")
 RATED = {
     "stream": tuple(n for n in STREAM_COLUMNS if not n.startswith("u_")),
     "equipment": tuple(n for n in EQUIPMENT_COLUMNS if not n.startswith("u_")),
-    "site": LEDGER_COLUMNS,
+    "site": tuple(n for n in LEDGER_COLUMNS if not n.startswith("u_")),
 }
 
 
