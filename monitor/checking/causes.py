@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 from monitor.checking.lines import VERDICTS, Cause, Line
@@ -17,17 +17,30 @@ if TYPE_CHECKING:
     from monitor.checking.twins import Twin
     from monitor.site.load import Site
 
-__all__ = ["causes", "explained"]
+__all__ = ["Found", "causes", "explained"]
 
 
-def causes(
-    site: Site,
-    lines: Sequence[Line],
-    shifts: Mapping[str, Offset],
-    pairs: Sequence[Twin],
-    found: Sequence[Suspect],
-    odd: Mapping[str, str],
-) -> tuple[Cause, ...]:
+@dataclass(frozen=True)
+class Found:
+    """What was found beside the lines.
+
+    Attributes:
+        shifts: sources whose times are off.
+        pairs: tags with the same readings.
+        suspects: misreadings that explain contradictions.
+        odd: tags whose datum few others have, with the reason.
+    """
+
+    shifts: Mapping[str, Offset] = field(default_factory=dict)
+    pairs: Sequence[Twin] = ()
+    suspects: Sequence[Suspect] = ()
+    odd: Mapping[str, str] = field(default_factory=dict)
+
+
+_NOTHING = Found()
+
+
+def causes(site: Site, lines: Sequence[Line], found: Found = _NOTHING) -> tuple[Cause, ...]:
     """Name the faults behind the lines, the one to put right first in front.
 
     What is seen directly (a source that cannot be read, a tag without readings) comes before what
@@ -36,25 +49,22 @@ def causes(
     Args:
         site: the site.
         lines: what was found of each thing.
-        shifts: sources whose times are off.
-        pairs: tags with the same readings.
-        found: misreadings that explain contradictions.
-        odd: tags whose datum few others have, with the reason.
+        found: what was found beside them.
     """
-    told = [*_sources(site, lines, shifts), *_tags(site, lines)]
+    told = [*_sources(site, lines, found.shifts), *_tags(site, lines)]
     named = {cause.subject for cause in told if cause.kind == "tag"}
-    suspected = {tag: suspect for suspect in found for tag in suspect.guess.tags}
-    for twin in pairs:
+    suspected = {tag: suspect for suspect in found.suspects for tag in suspect.guess.tags}
+    for twin in found.pairs:
         told.append(_of_twin(site, twin, suspected))
         named |= {twin.copy, twin.of}
-    told += [_of_suspect(one) for one in found if not named & set(one.guess.tags)]
+    told += [_of_suspect(one) for one in found.suspects if not named & set(one.guess.tags)]
     named |= {cause.subject for cause in told}
     told += [
         Cause("tag", name, reason, "look", guess=True)
-        for name, reason in odd.items()
+        for name, reason in found.odd.items()
         if name not in named
     ]
-    return tuple(told)
+    return tuple(sorted(told, key=lambda cause: -VERDICTS.index(cause.verdict)))
 
 
 def _sources(site: Site, lines: Sequence[Line], shifts: Mapping[str, Offset]) -> Iterable[Cause]:

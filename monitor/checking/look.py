@@ -17,7 +17,7 @@ import sqlalchemy as sa
 
 import connectors
 from connectors.base import ConnectorError, ReadResult
-from monitor.checking.causes import causes, explained
+from monitor.checking.causes import Found, causes, explained
 from monitor.checking.clocks import offsets
 from monitor.checking.datums import odd_datums
 from monitor.checking.equipment_lines import equipment_lines
@@ -74,8 +74,9 @@ def check(site: Site) -> Checked:
                 lines.append(Line("source", source.id, "wrong", "cannot be read", reason))
         day = _newest_day(site, probes)
         if day is None:
-            empty = [source_line(site, i, probe, probes, 0, None) for i, probe in probes.items()]
-            return Checked((), (*lines, *empty))
+            empty = [source_line(site, i, probe, probes, 0, {}) for i, probe in probes.items()]
+            lines += empty
+            return Checked(causes(site, lines), tuple(lines))
         return _look(site, opened, probes, day, lines)
 
 
@@ -136,7 +137,7 @@ def _look(
     for source_id, probe in probes.items():
         own = [n for n, tag in site.used_tags().items() if tag.source == source_id]
         rows = sum(len(parts[n]) for n in own if n in parts)
-        lines.append(source_line(site, source_id, probe, probes, rows, shifts.get(source_id)))
+        lines.append(source_line(site, source_id, probe, probes, rows, shifts))
     counted = batch.tag_quality.groupby("tag", observed=True)[["cells", "cells_stuck"]].sum()
     cells, stuck_cells = (counted[c].to_numpy(dtype=np.float64) for c in ("cells", "cells_stuck"))
     shares = stuck_cells / np.maximum(cells, 1.0)
@@ -151,7 +152,7 @@ def _look(
     found, contradicted = suspects(site, normal)
     lines += stream_lines(site, batch)
     lines += equipment_lines(site, batch, contradicted)
-    told = causes(site, lines, shifts, twins(site, parts), found, odd_datums(site, normal))
+    told = causes(site, lines, Found(shifts, twins(site, parts), found, odd_datums(site, normal)))
     return Checked(told, tuple(explained(lines, told)))
 
 

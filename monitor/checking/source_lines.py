@@ -29,7 +29,7 @@ def source_line(
     probe: Probe,
     probes: Mapping[str, Probe],
     rows: int,
-    offset: Offset | None,
+    shifts: Mapping[str, Offset],
 ) -> Line:
     """Tell of one source.
 
@@ -39,7 +39,7 @@ def source_line(
         probe: what it has.
         probes: what all have, this one among them.
         rows: readings of the site's tags in the newest day.
-        offset: how far its times are off, None where the movements of the plant agree.
+        shifts: sources whose times are off: no lag is counted from those.
     """
     source = next(s for s in site.file.source if s.id == source_id)
     passed = sum(problem.count for problem in probe.problems)
@@ -52,8 +52,9 @@ def source_line(
             ]
         )
         return Line("source", source_id, "wrong", f"empty; {probe.detail}", reason)
-    newest = max(p.last for p in probes.values() if p.last is not None)
-    lag = float((newest - probe.last).total_seconds())
+    offset = shifts.get(source_id)
+    trusted = [p.last for i, p in probes.items() if p.last is not None and i not in shifts]
+    lag = float((max(trusted, default=probe.last) - probe.last).total_seconds())
     figures: Figures = {
         "tags": len(probe.tags),
         "first": probe.first.isoformat(),
