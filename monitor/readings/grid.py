@@ -96,7 +96,7 @@ def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: floa
     # The value in force changes at readings and ends at cell edges; between two such points it is
     # constant. Sums never leave their cell, so that a figure does not depend on the window.
     inside = (seconds > edges[0]) & (seconds < edges[-1])
-    points = np.unique(np.concatenate([seconds[inside], edges]))
+    points = _merged(seconds[inside], edges)
     index = np.searchsorted(seconds, points, side="right") - 1
     known = np.maximum(index, 0)
     lasted = np.minimum(points[1:], until[known[:-1]]) - points[:-1]
@@ -125,3 +125,9 @@ def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: floa
         low=np.fmin.reduceat(counted, first),
         high=np.fmax.reduceat(counted, first),
     )
+
+
+def _merged(one: FloatArray, other: FloatArray) -> FloatArray:
+    """Distinct values of two ascending arrays: a stable sort only merges the two runs."""
+    both = np.sort(np.concatenate([one, other]), kind="stable")
+    return both[np.append(True, both[1:] != both[:-1])]

@@ -1,8 +1,9 @@
 """Replace many rows of one table through the driver; rows that are equal stay as they are.
 
-One mechanism for every big table: an upsert that leaves equal rows alone, then removal of what the
-rows no longer hold. SQLite takes a prepared statement; PostgreSQL takes COPY into a staging table
-and one statement from there, because an upsert that rewrites equal rows doubles the table.
+One mechanism for every big table: plain inserts where nothing is stored yet; else an upsert that
+leaves equal rows alone, then removal of what the rows no longer hold. SQLite takes a prepared
+statement; PostgreSQL takes COPY, for an upsert into a staging table and one statement from there,
+because an upsert that rewrites equal rows doubles the table.
 """
 
 from __future__ import annotations
@@ -111,11 +112,12 @@ def _replace_sqlite(
 ) -> Changes:
     driver: Any = connection.connection.driver_connection
     count = len(next(iter(columns.values())))
+    rows = zip(*(_plain(values) for values in columns.values()), strict=True)
+    if not any(driver.execute(_any(table, where)).fetchone() for where in scope.conditions("t")):
+        driver.executemany(_sqlite_insert(table), rows)
+        return Changes(count, count, 0)
     before = driver.total_changes
-    driver.executemany(
-        _sqlite_upsert(table),
-        zip(*(_plain(values) for values in columns.values()), strict=True),
-    )
+    driver.executemany(_sqlite_upsert(table), rows)
     changed = driver.total_changes - before
     held = sum(
         driver.execute(_count(table, where)).fetchone()[0] for where in scope.conditions("t")
@@ -150,13 +152,18 @@ def _plain(values: Values) -> list[Any]:
 
 
 @cache
-def _sqlite_upsert(table: sa.Table) -> str:
+def _sqlite_insert(table: sa.Table) -> str:
     names = [_quoted(column.name) for column in table.columns]
     marks = ", ".join("?" for _ in names)
+    return f"insert into {table.name} as t ({', '.join(names)}) values ({marks})"  # noqa: S608
+
+
+@cache
+def _sqlite_upsert(table: sa.Table) -> str:
     keys = ", ".join(_keys(table))
     differs = " or ".join(f"t.{name} is not excluded.{name}" for name in _compared(table))
     return (
-        f"insert into {table.name} as t ({', '.join(names)}) values ({marks}) "  # noqa: S608
+        f"{_sqlite_insert(table)} "
         f"on conflict ({keys}) do update set {_assignments(table)} where {differs}"
     )
 
@@ -185,6 +192,10 @@ def _replace_postgres(
     driver: Any = connection.connection.driver_connection
     count = len(next(iter(columns.values())))
     with driver.cursor() as cursor:
+        if not any(cursor.execute(_any(table, w)).fetchone() for w in scope.conditions("t")):
+            with cursor.copy(f"copy {table.name} ({names}) from stdin (format csv)") as copy:
+                copy.write(_csv(table, columns))
+            return Changes(count, count, 0)
         cursor.execute(
             f"create temporary table if not exists {stage} (like {table.name}) "
             "on commit delete rows"
@@ -223,6 +234,10 @@ def _remove_postgres(
         removed += cursor.rowcount
     cursor.execute("set local enable_nestloop = on")
     return removed
+
+
+def _any(table: sa.Table, where: str) -> str:
+    return f"select 1 from {table.name} t where {where} limit 1"  # noqa: S608
 
 
 def _count(table: sa.Table, where: str) -> str:
