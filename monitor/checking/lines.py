@@ -19,7 +19,6 @@ __all__ = [
     "LineKind",
     "Verdict",
     "number",
-    "worse",
 ]
 
 Verdict = Literal["ok", "look", "wrong"]
@@ -83,11 +82,6 @@ class Checked:
 
     causes: tuple[Cause, ...]
     lines: tuple[Line, ...]
-
-
-def worse(one: tuple[Verdict, str], other: tuple[Verdict, str]) -> tuple[Verdict, str]:
-    """Return the worse of two verdicts with its reason; the first where they are alike."""
-    return other if VERDICTS.index(other[0]) > VERDICTS.index(one[0]) else one
 
 
 def number(value: float) -> float | None:

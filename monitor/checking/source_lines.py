@@ -7,10 +7,10 @@ from typing import TYPE_CHECKING
 import pandas as pd
 
 from monitor.checking.exports import doubts
-from monitor.checking.lines import Figures, Line, Verdict, worse
+from monitor.checking.lines import Figures, Line, Verdict
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Iterator, Mapping
 
     from connectors.base import Probe
     from monitor.checking.clocks import Offset
@@ -21,6 +21,16 @@ __all__ = ["STOPPED", "clock_words", "source_line", "span"]
 STOPPED = 3 * 86400
 """[s] A source this far behind the others has stopped; nearer ones may come once a day."""
 _AHEAD = 600
+_TEN = 10.0
+_AHEAD_WORDS = (
+    "its newest reading lies {} in the future; check time_zone and time_format, and the clock of "
+    "the machine that writes it"
+)
+_LAG_WORDS = (
+    "it lags {} behind the others: figures that need it come so much later; right for an export "
+    "that is written once a day, else it hangs. Tags and balances below are those of the newest "
+    "day that all sources have"
+)
 
 
 def source_line(
@@ -68,7 +78,8 @@ def source_line(
         f"{probe.detail}; {probe.first:%Y-%m-%d %H:%M} to {probe.last:%Y-%m-%d %H:%M} UTC; "
         f"{rows} readings a day; lag {span(lag)}"
     )
-    told = _judge(site, probe, lag, rows, offset)
+    findings = _findings(site, probe.last, lag, rows, offset)
+    told: tuple[Verdict, str] = next(findings, ("ok", ""))
     if told[0] == "ok" and probe.problems:
         told = ("look", _problems(probe, passed)[0])
     elif probe.problems:
@@ -78,43 +89,21 @@ def source_line(
     return Line("source", source_id, told[0], found, told[1], figures)
 
 
-def _judge(
-    site: Site, probe: Probe, lag: float, rows: int, offset: Offset | None
-) -> tuple[Verdict, str]:
-    told: tuple[Verdict, str] = ("ok", "")
-    if probe.last is None:
-        return told
-    ahead = (probe.last - pd.Timestamp.now(tz="UTC")).total_seconds()
+def _findings(
+    site: Site, last: pd.Timestamp, lag: float, rows: int, offset: Offset | None
+) -> Iterator[tuple[Verdict, str]]:
+    """What is not as it should be with a source that holds readings, the gravest first."""
+    ahead = (last - pd.Timestamp.now(tz="UTC")).total_seconds()
     if offset is not None:
-        told = worse(told, ("wrong", clock_words(offset)))
+        yield "wrong", clock_words(offset)
     if ahead > _AHEAD:
-        told = worse(
-            told,
-            (
-                "wrong",
-                (
-                    f"its newest reading lies {span(ahead)} in the future; check time_zone and "
-                    "time_format, and the clock of the machine that writes it"
-                ),
-            ),
-        )
+        yield "wrong", _AHEAD_WORDS.format(span(ahead))
     if lag > STOPPED:
-        told = worse(told, ("wrong", f"it stopped {span(lag)} before the others"))
-    elif lag > site.file.site.look_back and offset is None:
-        told = worse(
-            told,
-            (
-                "look",
-                (
-                    f"it lags {span(lag)} behind the others: figures that need it come so much "
-                    "later; right for an export that is written once a day, else it hangs. Tags and "
-                    "balances below are those of the newest day that all sources have"
-                ),
-            ),
-        )
-    if rows == 0 and told[0] == "ok":
-        return "wrong", "none of the site's tags has a reading in the newest day of data"
-    return told
+        yield "wrong", f"it stopped {span(lag)} before the others"
+    if rows == 0:
+        yield "wrong", "none of the site's tags has a reading in the newest day of data"
+    if lag > site.file.site.look_back and offset is None:
+        yield "look", _LAG_WORDS.format(span(lag))
 
 
 def clock_words(offset: Offset) -> str:
@@ -140,5 +129,6 @@ def span(seconds: float) -> str:
     """Write a time in the unit that a person would take."""
     for size, unit in ((86400, "d"), (3600, "h"), (60, "min")):
         if abs(seconds) >= 2 * size:
-            return f"{seconds / size:.3g} {unit}"
+            amount = seconds / size
+            return f"{amount:.0f} {unit}" if amount >= _TEN else f"{amount:.2g} {unit}"
     return f"{seconds:.0f} s"

@@ -118,15 +118,7 @@ def _findings(
             (f"all outside its range {low:g} to {high:g} {tag.unit.text}; is the unit right?"),
         )
         return
-    if not np.isfinite(silent):
-        yield "wrong", "no value can be used; the historian calls all of them bad"
-    elif silent > max(tag.hold, _SILENT):
-        yield (
-            "wrong",
-            (
-                f"dead: no usable reading in the last {span(silent)}; see the instrument and its export"
-            ),
-        )
+    yield from _silence(tag, silent)
     stuck = _still(tag, usable, float(str(figures["stuck_share"])))
     if stuck is not None and stuck[0] == "wrong":
         yield stuck
@@ -145,6 +137,16 @@ def _findings(
                 f"longest gap {gap / 60:.0f} min, longer than its hold of {tag.hold / 60:.0f} min; "
                 "a historian that reports by exception needs a longer hold"
             ),
+        )
+
+
+def _silence(tag: Tag, silent: float) -> Iterator[tuple[Verdict, str]]:
+    if not np.isfinite(silent):
+        yield "wrong", "no value can be used; the historian calls all of them bad"
+    elif silent > max(tag.hold, _SILENT):
+        yield (
+            "wrong",
+            f"dead: no usable reading in the last {span(silent)}; see instrument and export",
         )
 
 

@@ -20,7 +20,7 @@ __all__ = ["Twin", "twins"]
 
 _LEAST_DISTINCT = 10
 _LEAST_COMMON = 50
-_SAME_SHARE = 0.97
+_SAME_SHARE, _NEAR = 0.97, 0.01
 
 
 @dataclass(frozen=True)
@@ -56,15 +56,17 @@ def twins(site: Site, parts: Mapping[str, pd.DataFrame]) -> list[Twin]:
 
 
 def _candidates(site: Site, parts: Mapping[str, pd.DataFrame]) -> Iterator[tuple[str, str]]:
+    """Yield pairs that ask for one name, or show about the same on the day."""
     tags = site.used_tags()
-    last = {n: part["value"].dropna() for n, part in parts.items() if n in tags}
-    middle = {n: float(values.median()) for n, values in last.items() if len(values)}
+    middle = {n: float(part["value"].median()) for n, part in parts.items() if n in tags}
     for one, other in itertools.combinations(tags, 2):
         a, b = tags[one], tags[other]
-        if (a.source, a.historian_name) == (b.source, b.historian_name) or (
-            one in middle and other in middle and middle[one] == middle[other] != 0.0
-        ):
+        if (a.source, a.historian_name) == (b.source, b.historian_name):
             yield one, other
+        elif one in middle and other in middle:
+            near = _NEAR * max(abs(middle[one]), abs(middle[other]))
+            if near > 0.0 and abs(middle[one] - middle[other]) <= near:
+                yield one, other
 
 
 def _equal(one: pd.DataFrame, other: pd.DataFrame) -> bool:

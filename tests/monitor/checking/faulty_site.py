@@ -127,9 +127,31 @@ class FaultySite:
             )
         connection.close()
 
+    def values_of(self, tag: str) -> pd.Series:
+        """What the exports hold of a tag, by time."""
+        parts: list[pd.Series] = []
+
+        def keep(values: pd.Series) -> pd.Series:
+            parts.append(values.set_axis(times(values)))
+            return values
+
+        self.write(tag, keep)
+        return pd.concat(parts)
+
+    def shift(self, source: str, by: pd.Timedelta) -> None:
+        """Move the stamps of the database."""
+        assert source == "historian"
+        connection = sqlite3.connect(self.folder / "exports/historian.sqlite")
+        with connection:  # by way of stamps that no row has: the key is unique at every moment
+            far = 10**10
+            connection.execute("update reading set stamp = stamp + ?", (far,))
+            connection.execute("update reading set stamp = stamp + ?", (by.total_seconds() - far,))
+        connection.close()
+
     def cut(self, source: str, after: pd.Timestamp) -> None:
         """Let a source end before the others."""
-        for tag in self.tags().query("source == @source")["name"]:
+        table = self.tags()
+        for tag in table.loc[table["source"] == source, "name"]:
             self.write(tag, lambda s: s[s.index.get_level_values(1) < after])
 
 
