@@ -4,18 +4,20 @@ from __future__ import annotations
 
 import re
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     import numpy.typing as npt
 
     from connectors.quality import QualityWords
 
-__all__ = ["NumberReader", "ParsedNumbers"]
+__all__ = ["NumberReader", "ParsedNumbers", "floats"]
 
 
 @dataclass(frozen=True)
@@ -81,3 +83,15 @@ class NumberReader:
         example = str(trimmed[int(unknown.argmax())]) if unknown.any() else ""
         value[np.isinf(value)] = np.nan
         return ParsedNumbers(value, empty, unknown, example)
+
+
+def floats(cells: Sequence[Any]) -> npt.NDArray[np.float64]:
+    """Return cells as floats, a null as NaN.
+
+    Raises:
+        TypeError, ValueError: one of them is no number.
+    """
+    try:
+        return np.fromiter(cells, np.float64, len(cells))
+    except TypeError:
+        return np.array(list(cells), dtype=np.float64)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from itertools import compress
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -9,7 +10,7 @@ import pandas as pd
 import pyarrow as pa
 
 from connectors.base import Quality
-from connectors.numbers import NumberReader
+from connectors.numbers import NumberReader, floats
 from connectors.quality import QualityWords
 from connectors.tidy import Rows
 from connectors.times import NO_TIME
@@ -76,20 +77,16 @@ class CellReader:
             collated: the database has chosen the rows by their tags; some take capitals and blanks
                 at the end for the same, so that its word counts.
         """
-        codes, found = pd.factorize(pd.Series(columns[1], dtype=object), use_na_sentinel=False)
-        distinct = list(found)
-        if collated and not all(key in keys for key in distinct):
-            keys = {_folded(key): code for key, code in keys.items()}
-            distinct = [_folded(key) for key in distinct]
-        known = np.array([keys.get(key, -1) for key in distinct], dtype=np.int32)
-        tag = known[codes]
-        if (known < 0).any():
-            asked = np.flatnonzero(tag >= 0).tolist()
-            columns, tag = [[cells[i] for i in asked] for cells in columns], tag[asked]
+        codes = _TagCodes(keys, collated=collated)
+        tag = np.fromiter(map(codes.__getitem__, columns[1]), np.int32, len(columns[1]))
+        known = tag >= 0
+        if not known.all():
+            asked = known.tolist()
+            columns, tag = [list(compress(cells, asked)) for cells in columns], tag[known]
         if not len(tag):
             return _rows(times.parse([]), tag, np.zeros(0), np.zeros(0, dtype=np.uint8))
         parsed, there = self.times(columns[0], times, problems)
-        value = self._values(columns[2], problems)
+        value, _ = self._values(columns[2], problems)
         quality = self._qualities(columns[3] if len(columns) > 3 else None, len(value), problems)  # noqa: PLR2004
         quality[np.isnan(value)] = Quality.BAD
         rows = _rows(parsed, tag, value, quality)
@@ -111,33 +108,44 @@ class CellReader:
             problems: what is passed over is counted here.
         """
         parsed, has_time = self.times(columns[0], times, problems)
-        values = [self._values(cells, problems) for cells in columns[1:]]
-        there = [_there(v, cells) & has_time for v, cells in zip(values, columns[1:], strict=True)]
-        column, row = np.nonzero(np.array(there, dtype=np.bool_).reshape(len(values), -1))
-        value = np.array(values).reshape(len(values), -1)[column, row]
+        cells = [self._values(column, problems) for column in columns[1:]]
+        shape = (len(cells), len(has_time))
+        there = np.array([part[1] for part in cells], dtype=np.bool_).reshape(shape) & has_time
+        column, row = np.nonzero(there)
+        value = np.array([part[0] for part in cells], dtype=np.float64).reshape(shape)[column, row]
         tag = np.array(codes, dtype=np.int32)[column]
         quality = np.where(np.isnan(value), Quality.BAD, Quality.GOOD).astype(np.uint8)
         return _rows(parsed.take(row), tag, value, quality)
 
-    def _values(self, cells: Sequence[Any], problems: ProblemCount) -> npt.NDArray[np.float64]:
+    def _values(
+        self, cells: Sequence[Any], problems: ProblemCount
+    ) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.bool_]]:
+        """Return numbers, NaN where there is none, and where there is a cell at all.
+
+        A null or an empty text is none, a word for no value is one.
+        """
         try:
-            value = np.array(cells, dtype=np.float64)  # None becomes NaN
+            value = floats(cells)
         except (TypeError, ValueError):
             parsed = self._numbers.read(pa.array(["" if c is None else str(c) for c in cells]))
             unknown = int(parsed.not_understood.sum())
             problems.add(self._where, "", _NOT_A_NUMBER, unknown, example=parsed.example)
-            return parsed.value
+            return parsed.value, ~parsed.empty
+        there = np.ones(len(value), dtype=np.bool_)
+        if np.isnan(value).any():
+            there = np.asarray(_objects(cells) != None, dtype=np.bool_)  # noqa: E711 - by cell
         infinite = np.isinf(value)
-        problems.add(self._where, "", _NOT_A_NUMBER, int(infinite.sum()))
-        value[infinite] = np.nan
-        return value
+        if infinite.any():
+            problems.add(self._where, "", _NOT_A_NUMBER, int(infinite.sum()))
+            value[infinite] = np.nan
+        return value, there
 
     def _qualities(
         self, cells: Sequence[Any] | None, count: int, problems: ProblemCount
     ) -> npt.NDArray[np.uint8]:
         if cells is None:
             return np.full(count, Quality.GOOD, dtype=np.uint8)
-        at, distinct = pd.factorize(pd.Series(cells, dtype=object), use_na_sentinel=False)
+        at, distinct = pd.factorize(pd.Series(list(cells), dtype=object), use_na_sentinel=False)
         words = [_word(cell) for cell in distinct]
         classes, unknown = self._words.classify(words)
         rows = unknown[at]
@@ -156,13 +164,22 @@ def _rows(
     return Rows(tag, times.first, value, quality, doubled, times.second[doubled])
 
 
-def _there(value: npt.NDArray[np.float64], cells: Sequence[Any]) -> npt.NDArray[np.bool_]:
-    """Say where there is a cell: a null or an empty text is none, a word for no value is one."""
-    there = ~np.isnan(value)
-    for at in np.flatnonzero(~there).tolist():
-        cell = cells[at]
-        there[at] = cell is not None and not (isinstance(cell, str) and not cell.strip())
-    return there
+class _TagCodes(dict[Any, int]):
+    """The code of each content of a tag column, -1 for those that nobody asked for."""
+
+    def __init__(self, keys: Mapping[Any, int], *, collated: bool) -> None:
+        super().__init__(keys)
+        self._folded = {_folded(key): code for key, code in keys.items()} if collated else {}
+
+    def __missing__(self, key: Any) -> int:  # noqa: ANN401
+        code = self[key] = self._folded.get(_folded(key), -1)
+        return code
+
+
+def _objects(cells: Sequence[Any]) -> npt.NDArray[np.object_]:
+    held = np.empty(len(cells), dtype=object)
+    held[:] = list(cells)
+    return held
 
 
 def _folded(key: object) -> object:

@@ -4,6 +4,9 @@ from __future__ import annotations
 
 import sqlite3
 import time
+from collections.abc import Sequence
+from contextlib import contextmanager
+from itertools import chain, islice
 from operator import itemgetter
 from typing import TYPE_CHECKING, Any, TypeVar
 from urllib.parse import quote
@@ -16,7 +19,7 @@ from sqlalchemy.pool import NullPool
 from connectors.base import ConnectorError
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterator, Mapping, Sequence
+    from collections.abc import Callable, Iterator, Mapping
     from pathlib import Path
 
     from sqlalchemy import Connection, CursorResult, Engine, Executable
@@ -36,6 +39,9 @@ _MOST_PARAMETERS = {"sqlite": 900, "postgresql": 10_000, "mysql": 10_000, "maria
 # SQL Server takes 2100 parameters, Oracle 1000 members of a list.
 _MOST_PARAMETERS |= {"mssql": 2_000, "oracle": 900}
 _FEW_PARAMETERS = 500
+
+_MOST_CELLS = 300_000
+"""Cells fetched at a time at most."""
 
 _STEPS = 20_000
 """SQLite's steps between two looks at the clock: some hundred microseconds."""
@@ -124,20 +130,34 @@ class Database:
         self._start_clock()
         with connection.execute(statement, execution_options=options) as result:
             names = list(result.keys())
-            for rows in self._chunks(result):
-                # Not zip(*rows): an iterator for each of many rows keeps the collector busy.
-                yield names, [list(map(itemgetter(at), rows)) for at in range(len(names))]
+            # Wide rows are cut shorter: memory is bound by cells.
+            most = max(1, min(self._chunk, _MOST_CELLS // len(names)))
+            for cells in self._chunks(connection, result, most):
+                yield names, cells
                 # As servers do: each fetch has the time of a statement, not all of them together.
                 self._start_clock()
 
-    def _chunks(self, result: CursorResult[Any]) -> Iterator[Sequence[Any]]:
-        cursor = result.cursor
-        if cursor is None or self.dialect != "sqlite":
-            yield from result.partitions(self._chunk)
-            return
-        # Its driver reads as it goes and gives cells as they are: no row need be made twice.
-        while rows := cursor.fetchmany(self._chunk):
-            yield rows
+    def _chunks(
+        self, connection: Connection, result: CursorResult[Any], most: int
+    ) -> Iterator[list[Sequence[Any]]]:
+        width = len(result.keys())
+        cursor: Any = result.cursor
+        if self.dialect == "sqlite":
+            with _driver_errors(connection):
+                # Into one flat list as the driver makes them: a million rows kept as tuples cost
+                # the collector more than reading them.
+                while flat := list(chain.from_iterable(islice(cursor, most))):
+                    yield [flat[at::width] for at in range(width)]
+        elif cursor is not None and connection.dialect.driver == "psycopg":
+            # The first row is fetched already; the others need no second row of SQLAlchemy's.
+            rows: Sequence[Any] = result.fetchmany(1)
+            with _driver_errors(connection):
+                while rows:
+                    yield [_Column(rows, at) for at in range(width)]
+                    rows = cursor.fetchmany(most)
+        else:
+            for rows in result.partitions(most):
+                yield [_Column(rows, at) for at in range(width)]
 
     def close(self) -> None:
         """Close the connections."""
@@ -199,6 +219,39 @@ class Database:
             else "see the reason and correct the source's table, columns or rights"
         )
         return ConnectorError(f"{self.shown}: {reason} ({todo})")
+
+
+class _Column(Sequence[Any]):
+    """The cells at one place of each row, without a list of their own."""
+
+    def __init__(self, rows: Sequence[Sequence[Any]], at: int) -> None:
+        self._rows, self._at = rows, at
+
+    def __len__(self) -> int:
+        return len(self._rows)
+
+    def __getitem__(self, number: Any) -> Any:  # noqa: ANN401
+        return self._rows[number][self._at]
+
+    def __iter__(self) -> Iterator[Any]:
+        return map(itemgetter(self._at), self._rows)
+
+
+@contextmanager
+def _driver_errors(connection: Connection) -> Iterator[None]:
+    """Turn what the driver itself raises into what SQLAlchemy would have made of it."""
+    driver: Any = connection.dialect.dbapi
+    try:
+        yield
+    except driver.Error as error:
+        dialect, held = connection.dialect, connection.connection.dbapi_connection
+        lost = dialect.is_disconnect(error, held, None)
+        if lost:
+            connection.invalidate(error)
+        told = DBAPIError.instance(
+            None, None, error, driver.Error, connection_invalidated=lost, dialect=dialect
+        )
+        raise told from error
 
 
 def _on_connect(

@@ -57,7 +57,8 @@ class SqlSource:
         names = sorted(set(tags))
         rows, problems = self._database.run(lambda c: self._rows(c, names, window))
         start, end = microseconds(window.start), microseconds(window.end)
-        rows = rows.keep((rows.time >= start) & (rows.time < end))
+        inside = (rows.time >= start) & (rows.time < end)
+        rows = rows if inside.all() else rows.keep(inside)
         unsettled = rows.doubled_at
         problems.add(self._options.named, "", _UNSETTLED, len(unsettled))
         rows.quality[unsettled] = np.maximum(rows.quality[unsettled], np.uint8(Quality.UNCERTAIN))

@@ -7,13 +7,13 @@ import re
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
 import pandas as pd
 import pyarrow as pa
 from sqlalchemy import BigInteger, DateTime, String, select
 
 from connectors.base import ConnectorError
-from connectors.times import DOUBLED_HOUR_REACH, TimeReader, microseconds
+from connectors.numbers import floats
+from connectors.times import DOUBLED_HOUR_REACH, NO_TIME, TimeReader, microseconds
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -117,18 +117,18 @@ class SqlTimes:
         """Read fetched cells; what cannot be read becomes `NO_TIME`."""
         if self.kind in _PER_SECOND:
             try:
-                return self.reader.numbers(np.array(cells, dtype=np.float64))  # None becomes NaN
+                return self.reader.numbers(floats(cells))
             except (TypeError, ValueError):
                 pass  # texts among the numbers: read one by one below
-        codes, distinct = pd.factorize(pd.Series(cells, dtype=object), use_na_sentinel=False)
-        at = codes.astype(np.int32)
         if self.kind in {"zoned", "local"}:
-            moments = pd.Series(pd.to_datetime(list(distinct), utc=self.kind == "zoned"))
-            time = pd.DatetimeIndex(moments).as_unit("us").asi8
+            stamps = pa.array(
+                list(cells), pa.timestamp("us", "UTC" if self.kind == "zoned" else None)
+            )
+            time = stamps.cast(pa.int64()).fill_null(NO_TIME).to_numpy(zero_copy_only=False)
             read = self.reader.universal if self.kind == "zoned" else self.reader.local
-            return read(time).take(at)
-        texts = pa.array(["" if cell is None else str(cell) for cell in distinct], type=pa.string())
-        return self.reader.read(texts).take(at)
+            return read(time)
+        coded = _texts(cells).dictionary_encode()
+        return self.reader.read(coded.dictionary).take(coded.indices.to_numpy())
 
     def _wall_clock(self, window: Window) -> tuple[pd.Timestamp, pd.Timestamp]:
         """Return local bounds that hold the window, both passes of a doubled hour included."""
@@ -163,3 +163,12 @@ class SqlTimes:
         self, low: object, high: object
     ) -> tuple[ColumnElement[bool], ColumnElement[bool]]:
         return self.column >= low, self.column < high
+
+
+def _texts(cells: Sequence[Any]) -> pa.Array:
+    """Return cells as texts, a null as an empty one."""
+    try:
+        return pa.array(list(cells), pa.string()).fill_null("")
+    except (pa.ArrowException, UnicodeError):
+        texts = ["" if cell is None else str(cell) for cell in cells]
+        return pa.array(texts, pa.string())
