@@ -39,8 +39,9 @@ def check(
     """Look at a site before anything runs.
 
     Site file, store, sources, tags, streams and balances over the newest day; nothing is stored.
-    Each line says ok, look (worth your eyes) or wrong (figures would be wrong). Ends with exit code
-    1 when anything is wrong, 3 when the site file itself is.
+    Each line says ok, look (worth your eyes) or wrong (figures would be wrong); below them stand the
+    faults that explain the lines, the one to put right first in front. Ends with exit code 1 when
+    anything is wrong, 3 when the site file itself is.
 
     Example: lostwork check site.toml
 
