@@ -175,7 +175,7 @@ def solve_above_region_3_pressure(
 
     Between the phases (p below critical) the temperature and the values are those of the equation
     of region 3 alone: the caller knows the saturation properties and puts the mixture there.
-    Where the equations of two regions leave a gap in h or s at their boundary (up to 0.1 kJ/kg),
+    Where the equations of two regions leave a gap in h or s at their boundary (up to 0.14 kJ/kg),
     T is that of the boundary.
 
     Args:

@@ -47,7 +47,8 @@ the saturation line and of region 3 differ by more there than the phases do."""
 _GAS_CONSTANT = 461.526
 _LEAST_DENSITY, _MOST_DENSITY = 80.0, 850.0  # region 3 itself: 113 to 765
 _PLAIN_STEPS = 4
-_SETTLED = 1e-9  # the last step's own error is its square
+_SETTLED = 1e-7  # of the density, a last step; the error left is as its square
+_PATIENT_STEPS = 20  # within 0.1 K of the critical temperature
 _SAFE_STEPS = 60
 
 # Orthobaric densities over sqrt(Tc - T), fitted to the basic equation: where Newton starts from.
@@ -258,6 +259,11 @@ def saturated_densities(
     for coefficients in (_LIQUID, _VAPOUR):
         start = CRITICAL_DENSITY + distance * _horner(coefficients, distance)
         rho, settled = _newton(pressure, temperature, start)
+        rest = np.flatnonzero(~settled & ~joined)
+        if rest.size:
+            rho[rest], settled[rest] = _newton(
+                pressure[rest], temperature[rest], start[rest], steps=_PATIENT_STEPS
+            )
         both.append(np.where(joined, CRITICAL_DENSITY, np.where(settled, rho, np.nan)))
     return both[0], both[1]
 
@@ -270,11 +276,11 @@ def _horner(coefficients: tuple[float, ...], x: FloatArray) -> FloatArray:
 
 
 def _newton(
-    pressure: FloatArray, temperature: FloatArray, start: FloatArray
+    pressure: FloatArray, temperature: FloatArray, start: FloatArray, steps: int = _PLAIN_STEPS
 ) -> tuple[FloatArray, BoolArray]:
     """Density after a few Newton steps, and whether they settled on a stable root."""
     rho = start
-    for _ in range(_PLAIN_STEPS):
+    for _ in range(steps):
         at = helmholtz(rho, temperature)
         step = (pressure - at.pressure) / np.where(at.stiffness == 0.0, np.nan, at.stiffness)
         rho = np.clip(rho + step, _LEAST_DENSITY, _MOST_DENSITY)

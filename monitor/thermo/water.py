@@ -144,10 +144,11 @@ def saturated(pressure: npt.ArrayLike) -> tuple[State, State]:
 def state_ph(pressure: npt.ArrayLike, enthalpy: npt.ArrayLike) -> State:
     """State from pressure [Pa] and enthalpy [J/kg], wet states included.
 
-    The forward equations at the temperature found give the enthalpy back within 1e-3 J/kg.
-    Where the equations of two regions meet they leave gaps in h and s: what lies in one gets the
-    boundary's temperature, and the gap is left (0.1 kJ/kg at most). On an isobar within 50 Pa of
-    the critical pressure the isotherm is flat: there T is within 1 mK.
+    The forward equations at the temperature found give the enthalpy and the entropy back within
+    1e-3 J/kg and 2e-6 J/(kg K), up to 100 MPa and through region 3; within 0.5 mK and 100 Pa of the
+    critical point, where the isotherm is flat, within 0.1 J/kg. Where the equations of two regions
+    meet, IF97 leaves gaps in h and s (30 J/kg at 350 degC, 134 J/kg at the boundary between regions
+    2 and 3): what lies in a gap gets the boundary's temperature.
     """
     return _on_isobar(pressure, enthalpy, ENTHALPY)
 

@@ -20,9 +20,9 @@ STATES = [r for r in rows("if97_states.csv") if r["region"] in {"1", "2", "3", "
 @pytest.mark.parametrize("row", STATES, ids=lambda r: f"{r['table']}, {r['T_K']} K, {r['p_MPa']}")
 def test_a_single_phase_check_value_is_reproduced(row):
     # IAPWS R7-97(2012) Tables 5, 15, 33, 42, nine printed digits. Region 3 is checked in (T, rho)
-    # in the standard; from (p, T) the supplementary v(p, T) leaves 4e-6 in the volume, and with it
-    # 2e-6 in h, u and s at these points.
-    tolerance = 1e-5 if row["region"] == "3" else 1e-8
+    # in the standard; here the printed pressure goes in and the density must come out: at
+    # 200 kg/m3 a share of 2e-9, the last digit of p, is 2e-8 of the density.
+    tolerance = 2e-8 if row["region"] == "3" else 1e-8
     state = state_pt(float(row["p_MPa"]) * 1e6, float(row["T_K"]))
     assert state.valid
     assert state.enthalpy == pytest.approx(float(row["h_kJ_kg"]) * 1e3, rel=tolerance)
