@@ -1,12 +1,17 @@
 """What reading databases and Parquet costs beside their own drivers, and memory as files grow.
 
-Run ``python benchmarks/read_sources.py [days]``. Speeds are the best of three, as ratios to the
-driver's own fetch of the same rows; the machine's own speed drops out. Memory is the peak of a
-process of its own that reads day windows with little room for parsed rows.
+    python benchmarks/read_sources.py [--days 28] [--postgres postgresql://user@host/database]
+
+60 tags, a reading a minute; ``--days 365`` is the whole year of 31.5 million readings, some
+minutes. Speeds are the best of three, as ratios to the driver's own fetch of the same rows (its
+rows in chunks, nothing done with them); the machine's own speed drops out. The database's tables
+are dropped afterwards. Memory is the peak of a process of its own that reads day windows with
+little room for parsed rows.
 """
 
 from __future__ import annotations
 
+import argparse
 import re
 import sqlite3
 import subprocess
@@ -36,23 +41,92 @@ def frame_of(days):
     )
 
 
-def write_database(path, frame):
-    epoch = frame["time"].dt.as_unit("s").astype("int64").tolist()
-    with sqlite3.connect(path) as connection:
-        connection.execute("create table readings (time integer, tag text, value real)")
-        rows = zip(epoch, frame["tag"].tolist(), frame["value"].tolist(), strict=True)
-        connection.executemany("insert into readings values (?, ?, ?)", rows)
-        connection.execute("create index by_time on readings (time)")
+def parts(days, most=30):
+    """The readings in pieces that fit into memory."""
+    for day in range(0, days, most):
+        frame = frame_of(min(most, days - day))
+        yield frame.assign(time=frame["time"] + pd.Timedelta(days=day))
+
+
+# A table of each layout and kind of time: what is created, and how a frame becomes its rows.
+TIMES = {
+    "epoch_s": ("bigint", lambda time: time.dt.as_unit("s").astype("int64")),
+    "timestamp_zoned": ("timestamptz", lambda time: time.dt.strftime("%Y-%m-%d %H:%M:%S+00")),
+    "timestamp_local": ("timestamp", lambda time: time.dt.strftime("%Y-%m-%d %H:%M:%S")),
+    "text_iso": ("text", lambda time: time.dt.strftime("%Y-%m-%d %H:%M:%S")),
+}
+LAYOUTS = ("long", "looked up", "wide")
+CASES = [("epoch_s", "long"), ("epoch_s", "looked up"), ("epoch_s", "wide"), ("text_iso", "long")]
+
+
+def columns_of(layout, kind):
+    if layout == "wide":
+        return [f"time {kind}", *(f'"{tag}" double precision' for tag in TAGS)]
+    return [f"time {kind}", f"tag {'text' if layout == 'long' else 'integer'}", "value float8"]
+
+
+def table_of(frame, layout, kind):
+    """A frame as the rows of a table."""
+    if layout == "wide":
+        wide = frame["value"].to_numpy().reshape(-1, len(TAGS))
+        times = TIMES[kind][1](frame["time"].iloc[:: len(TAGS)])
+        return pd.DataFrame(wide, columns=TAGS).assign(time=times.to_numpy())[["time", *TAGS]]
+    tags = frame["tag"]
+    if layout == "looked up":
+        tags = np.tile(np.arange(len(TAGS)), len(frame) // len(TAGS))
+    return frame.assign(time=TIMES[kind][1](frame["time"]), tag=tags)
+
+
+def write_sqlite(path, days, layout, kind):
+    connection = sqlite3.connect(path)
+    connection.execute(f"create table readings ({', '.join(columns_of(layout, TIMES[kind][0]))})")
+    for frame in parts(days):
+        table = table_of(frame, layout, kind)
+        marks = ", ".join("?" * len(table.columns))
+        rows = zip(*(table[name].tolist() for name in table), strict=True)
+        connection.executemany(f"insert into readings values ({marks})", rows)
+    connection.execute("create table tags (id integer primary key, name text)")
+    connection.executemany("insert into tags values (?, ?)", enumerate(TAGS))
+    connection.execute("create index by_time on readings (time)")
+    connection.commit()
     connection.close()
+
+
+def write_postgres(dsn, days, layout, kind):
+    import psycopg  # noqa: PLC0415 - an extra that only this needs
+
+    with psycopg.connect(dsn) as connection:
+        connection.execute("drop table if exists readings, tags")
+        columns = ", ".join(columns_of(layout, TIMES[kind][0]))
+        connection.execute(f"create table readings ({columns})")
+        for frame in parts(days):
+            text = table_of(frame, layout, kind).to_csv(index=False, header=False)
+            with connection.cursor().copy("copy readings from stdin (format csv)") as copy:
+                copy.write(text)
+        connection.execute("create table tags (id integer primary key, name text)")
+        connection.cursor().executemany("insert into tags values (%s, %s)", list(enumerate(TAGS)))
+        connection.execute("create index by_time on readings (time)")
+        connection.execute("analyze readings")
 
 
 def fetch(path):
     """The driver's own fetch of all rows."""
     connection = sqlite3.connect(path)
-    cursor, count = connection.execute("select time, tag, value from readings"), 0
+    cursor, count = connection.execute("select * from readings"), 0
     while rows := cursor.fetchmany(50_000):
         count += len(rows)
     connection.close()
+    return count
+
+
+def fetch_postgres(dsn):
+    import psycopg  # noqa: PLC0415
+
+    with psycopg.connect(dsn) as connection, connection.cursor("all_rows") as cursor:
+        cursor.execute("select * from readings")
+        count = 0
+        while rows := cursor.fetchmany(50_000):
+            count += len(rows)
     return count
 
 
@@ -79,29 +153,62 @@ def peak(path, layout, days):
     print(int(re.search(r"VmHWM:\s*(\d+)", status)[1]) / 1024)
 
 
-def speeds(folder, days):
-    frame = frame_of(days)
-    write_database(folder / "r.sqlite", frame)
-    pq.write_table(pa.Table.from_pandas(frame, preserve_index=False), folder / "r.parquet")
-    sql = {"url": "sqlite:///r.sqlite", "table": "readings", "time_kind": "epoch_s"}
+def head(days):
+    count = days * PER_DAY * len(TAGS)
+    print(f"{days} days of minutes, {count / 1e6:.2f} million readings")
+    print(f"{'':44}{'s':>8}{'/ own':>8}   the same in processor time", flush=True)
+
+
+def show(name, took, own):
+    columns = zip(took, took / own, strict=True)
+    print(f"{name:44}" + "   ".join(f"{s:8.3f}{o:8.2f}" for s, o in columns), flush=True)
+
+
+def sql_speeds(name, url, bare, folder, days, case):
+    kind, layout = case
+    options = {"url": url, "table": "readings", "time_kind": kind}
+    options |= {"tag_table": "tags"} if layout == "looked up" else {}
+    options |= {"layout": "wide"} if layout == "wide" else {}
+    if read_days("sql", options, folder, days, 7) != days * PER_DAY * len(TAGS):
+        raise SystemExit(f"{name}, {case} lost readings: nothing is measured")
+    own = best(*bare)
+    show(f"{name}, {layout}, {kind}: own fetch", own, own)
+    for step in (7, 1):
+        show(
+            f"  windows of {step} day(s)", best(read_days, "sql", options, folder, days, step), own
+        )
+
+
+def sqlite_speeds(folder, days, cases):
+    for kind, layout in cases:
+        path = folder / "r.sqlite"
+        write_sqlite(path, days, layout, kind)
+        sql_speeds("SQLite", f"sqlite:///{path}", (fetch, path), folder, days, (kind, layout))
+        path.unlink()
+
+
+def postgres_speeds(dsn, folder, days):
+    url = dsn.replace("postgresql://", "postgresql+psycopg://")
+    for case in (*CASES, ("timestamp_zoned", "long"), ("timestamp_local", "long")):
+        write_postgres(dsn, days, case[1], case[0])
+        sql_speeds("PostgreSQL", url, (fetch_postgres, dsn), folder, days, case)
+
+
+def parquet_speeds(folder, days):
+    writer = None
+    for frame in parts(days):
+        table = pa.Table.from_pandas(frame, preserve_index=False)
+        writer = writer or pq.ParquetWriter(folder / "r.parquet", table.schema)
+        writer.write_table(table)
+    writer.close()
     parquet = {"path": "r.parquet"}
-    for kind, options in (("sql", sql), ("parquet", parquet)):
-        if read_days(kind, options, folder, days, 7) != len(frame):
-            raise SystemExit(f"{kind} lost readings: nothing is measured")
-    driver = best(fetch, folder / "r.sqlite")
+    if read_days("parquet", parquet, folder, days, 7) != days * PER_DAY * len(TAGS):
+        raise SystemExit("parquet lost readings: nothing is measured")
     bare = best(pq.read_table, folder / "r.parquet")
-    print(f"{days} days of minutes, {len(frame) / 1e6:.2f} million readings")
-    print(f"{'':44}{'s':>8}{'/ own':>8}   the same in processor time")
-    for name, took, own in (
-        ("SQLite, the driver's own fetch of all rows", driver, driver),
-        ("sql, week windows", best(read_days, "sql", sql, folder, days, 7), driver),
-        ("sql, day windows", best(read_days, "sql", sql, folder, days, 1), driver),
-        ("Parquet, its own read of all rows", bare, bare),
-        ("parquet, week windows", best(read_days, "parquet", parquet, folder, days, 7), bare),
-        ("parquet, day windows", best(read_days, "parquet", parquet, folder, days, 1), bare),
-    ):
-        columns = zip(took, took / own, strict=True)
-        print(f"{name:44}" + "   ".join(f"{s:8.3f}{o:8.2f}" for s, o in columns))
+    show("Parquet, its own read of all rows", bare, bare)
+    for step in (7, 1):
+        took = best(read_days, "parquet", parquet, folder, days, step)
+        show(f"  windows of {step} day(s)", took, bare)
 
 
 def memory(folder):
@@ -121,10 +228,21 @@ def main():
     if sys.argv[1:2] == ["--peak"]:
         peak(*sys.argv[2:])
         return
-    days = int(sys.argv[1]) if len(sys.argv) > 1 else 28
+    parser = argparse.ArgumentParser(description=__doc__.partition("\n")[0])
+    parser.add_argument("--days", type=int, default=28)
+    parser.add_argument("--postgres", help="address of a database to write the tables into")
+    parser.add_argument("--layout", choices=LAYOUTS, help="of SQLite's tables, all by default")
+    parser.add_argument("--only-sql", action="store_true", help="leave Parquet and memory out")
+    asked = parser.parse_args()
     with tempfile.TemporaryDirectory() as name:
-        speeds(Path(name), days)
-        memory(Path(name))
+        folder = Path(name)
+        head(asked.days)
+        sqlite_speeds(folder, asked.days, [c for c in CASES if asked.layout in {None, c[1]}])
+        if asked.postgres:
+            postgres_speeds(asked.postgres, folder, asked.days)
+        if not asked.only_sql:
+            parquet_speeds(folder, asked.days)
+            memory(folder)
 
 
 if __name__ == "__main__":
