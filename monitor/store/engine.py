@@ -21,6 +21,10 @@ __all__ = ["is_sqlite", "make_engine", "place", "reading", "sqlite_path", "writi
 
 _BUSY_MS = 30_000
 _RETRY_S = 0.02
+_CACHE_KB = 16_384
+"""Of each connection. Pages read the whole store, and what was read stays: a daemon's memory would
+grow with its store up to this. Four times as much was not seen to be faster in
+`benchmarks/store.py`: the system keeps the file in memory too."""
 _CONNECT_S = 10
 _WRITE = "lostwork_write"
 _POSTGRES_READ = {"isolation_level": "REPEATABLE READ", "postgresql_readonly": True}
@@ -153,7 +157,7 @@ def _prepare_sqlite(connection: Any, _record: object) -> None:  # noqa: ANN401 -
         "temp_store = memory",
         # Four times the default: a page that many windows touch goes to the file less often.
         "wal_autocheckpoint = 4000",
-        "cache_size = -65536",
+        f"cache_size = -{_CACHE_KB}",
     ):
         connection.execute(f"pragma {pragma}")
 
