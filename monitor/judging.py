@@ -10,7 +10,6 @@ from monitor.costing import span_costs
 from monitor.drift.judge import judge
 from monitor.drift.raising import Money
 from monitor.drift.rules import figure_rules, settings_of
-from monitor.site.models import Reference
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping
@@ -95,8 +94,6 @@ def plant_now(store: SiteStore, wall_clock: float | None = None) -> int:
 
 def tags_of_stream(site: Site, stream: str) -> Iterator[str]:
     """The tags that a stream of the site reads."""
-    table = site.streams[stream]
-    for key in ("flow", "pressure", "temperature", "power", "heat", "boundary_temperature"):
-        value = getattr(table, key)
-        if isinstance(value, Reference) and value.tag:
-            yield value.tag
+    for _, reference, _ in site.streams[stream].references():
+        if reference.tag:
+            yield reference.tag

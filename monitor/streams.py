@@ -27,16 +27,16 @@ from monitor.thermo.water import (
 )
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable, Mapping, Sequence
+    from collections.abc import Callable, Iterable, Mapping, Sequence
 
     from monitor.readings.condition import Gridded
     from monitor.site.load import Site
-    from monitor.site.models import Stream, Tag
+    from monitor.site.models import Stream, Tag, ThrottlingTest
     from monitor.thermo.water import State
 
 __all__ = ["Gauges", "signals_of", "stream_states", "with_enthalpy"]
 
-Way = Literal["pt", "px", "tx", "p only"]
+Way = Literal["pt", "degree", "throttled", "px", "tx", "p only"]
 
 
 @dataclass(frozen=True)
@@ -120,30 +120,37 @@ class _Specification:
 
     way: Way
     pressure: Reference | None
-    temperature: Reference | None
-    dryness: float | None
-    phase: str | None
+    temperature: Reference | None = None
+    dryness: float | None = None
+    phase: str | None = None
+    degree: Reference | None = None
+    test: ThrottlingTest | None = None
 
 
 def _specification(stream: Stream) -> _Specification:
-    dryness = stream.dryness
-    if dryness is None and (stream.pressure is None or stream.temperature is None):
-        dryness = {"vapour": 1.0, "liquid": 0.0}.get(stream.phase or "")
+    p = stream.pressure
     if stream.enthalpy is not None:
-        way: Way = "p only"
-    elif dryness is None:
-        way = "pt"
-    else:
-        way = "tx" if stream.pressure is None else "px"
-    phase = stream.phase if way == "pt" else None
-    return _Specification(way, stream.pressure, stream.temperature, dryness, phase)
+        return _Specification("p only", p)
+    if stream.throttling_test is not None:
+        return _Specification("throttled", p, test=stream.throttling_test)
+    if stream.superheat is not None:
+        return _Specification("degree", p, phase="vapour", degree=stream.superheat)
+    if stream.subcooling is not None:
+        return _Specification("degree", p, phase="liquid", degree=stream.subcooling)
+    if p is not None and stream.temperature is not None and stream.dryness is None:
+        return _Specification("pt", p, stream.temperature, phase=stream.phase)
+    dryness = stream.dryness
+    if dryness is None:
+        dryness = {"vapour": 1.0, "liquid": 0.0}.get(stream.phase or "")
+    way: Way = "tx" if p is None else "px"
+    return _Specification(way, p, stream.temperature, dryness)
 
 
 def _water_states(site: Site, gauges: Gauges, streams: Sequence[Stream]) -> dict[str, StreamState]:
     wanted = {s.id: _specification(s) for s in streams}
     distinct = list(dict.fromkeys(wanted.values()))
     found: dict[_Specification, StreamState] = {}
-    for way, solve in (("pt", _by_pt), ("px", _by_px), ("tx", _by_tx), ("p only", _by_p)):
+    for way, solve in _WAYS.items():
         group = [s for s in distinct if s.way == way]
         if group:
             found |= dict(zip(group, solve(site, gauges, group), strict=True))
@@ -161,26 +168,83 @@ def _by_pt(site: Site, gauges: Gauges, group: Sequence[_Specification]) -> list[
     """P and T; near saturation they do not fix the state, so a stated phase decides or a flag."""
     p, p_flag = _stacked(site, gauges, (s.pressure for s in group))
     T, T_flag = _stacked(site, gauges, (s.temperature for s in group))
-    # +1 for a stream stated as vapour, -1 as liquid, 0 for one that says nothing.
-    side = np.repeat(
-        [{"vapour": 1, "liquid": -1}.get(s.phase or "", 0) for s in group], gauges.count
+    return _beside_saturation(
+        site, gauges, group, p, T - saturation_temperature(p), T, p_flag | T_flag
     )
-    boiling = saturation_temperature(p)
-    off = T - boiling
+
+
+def _by_degree(site: Site, gauges: Gauges, group: Sequence[_Specification]) -> list[StreamState]:
+    """P and a degree of superheat or of subcooling, which has a meaning below critical only."""
+    p, p_flag = _stacked(site, gauges, (s.pressure for s in group))
+    degree, flag = _stacked(site, gauges, (s.degree for s in group))
+    off = _sides(group, gauges.count) * degree
+    T = saturation_temperature(p) + off
+    return _beside_saturation(site, gauges, group, p, off, T, p_flag | flag)
+
+
+def _sides(group: Sequence[_Specification], count: int) -> FloatArray:
+    """+1 for a stream stated as vapour, -1 as liquid, 0 for one that says nothing."""
+    sides = [{"vapour": 1.0, "liquid": -1.0}.get(s.phase or "", 0.0) for s in group]
+    return np.repeat(sides, count)
+
+
+def _beside_saturation(
+    site: Site,
+    gauges: Gauges,
+    group: Sequence[_Specification],
+    p: FloatArray,
+    off: FloatArray,
+    T: FloatArray,
+    flag: FlagArray,
+) -> list[StreamState]:
+    """States at p and T, which is ``off`` saturation (NaN where there is none)."""
+    side = _sides(group, gauges.count)
     wrong = (side != 0) & (side * off <= 0)
     near = np.abs(off) < site.file.site.saturation_band
     # A little on the wrong side is the thermometer's error; far on it, the statement is in doubt.
-    state = state_pt(p, np.where(wrong, boiling, T), side=side)
-    known = np.isfinite(p) & np.isfinite(T)
+    state = state_pt(p, np.where(wrong, T - off, T), side=side)
+    known = np.isfinite(p) & (np.isfinite(T) | np.isfinite(off))
     flag = (
-        p_flag
-        | T_flag
+        flag
         | _bits(near & (side == 0), Flag.NEAR_SATURATION)
         | _bits(wrong, Flag.SIDE_ASSUMED)
         | _bits(wrong & ~near, Flag.UNCERTAIN)
         | _bits(known & ~state.valid, Flag.OUT_OF_REGION)
     )
     return _cut(state, flag, gauges.count)
+
+
+def _by_throttling(
+    site: Site, gauges: Gauges, group: Sequence[_Specification]
+) -> list[StreamState]:
+    """P, and the enthalpy of a sample that kept it while it expanded and became superheated.
+
+    A sample that did not clear saturation by the stated margin may hold water still: the state is
+    flagged, and absent where it lies on saturation or below.
+    """
+    tests = [s.test for s in group if s.test is not None]
+    p, flag = _stacked(site, gauges, (s.pressure for s in group))
+    T, T_flag = _stacked(site, gauges, (t.temperature for t in tests))
+    after = [_after(site, gauges, test) for test in tests]
+    p_after = np.concatenate([signal.value for signal in after])
+    flag = flag | T_flag | np.concatenate([signal.flag for signal in after])
+    superheat = T - saturation_temperature(p_after)
+    least = np.repeat([t.least_superheat for t in tests], gauges.count)
+    sample = state_pt(p_after, np.where(superheat > 0.0, T, np.nan), side="vapour")
+    state = state_ph(p, sample.enthalpy)
+    known = np.isfinite(p) & np.isfinite(p_after) & np.isfinite(T)
+    flag = (
+        flag
+        | _bits(known & (superheat < least), Flag.NEAR_SATURATION)
+        | _bits(known & ~state.valid, Flag.OUT_OF_REGION)
+    )
+    return _cut(state, flag, gauges.count)
+
+
+def _after(site: Site, gauges: Gauges, test: ThrottlingTest) -> Signal:
+    if test.pressure is not None:
+        return gauges.signal(test.pressure, site.tags)
+    return Signal(gauges.barometer, gauges.barometer_edges, gauges.barometer_flag)
 
 
 def _by_px(site: Site, gauges: Gauges, group: Sequence[_Specification]) -> list[StreamState]:
@@ -203,6 +267,16 @@ def _by_p(site: Site, gauges: Gauges, group: Sequence[_Specification]) -> list[S
         replace(StreamState.absent("water", gauges.count), pressure=part, flag=bits)
         for part, bits in zip(np.split(p, len(group)), np.split(flag, len(group)), strict=True)
     ]
+
+
+_WAYS: dict[Way, Callable[[Site, Gauges, Sequence[_Specification]], list[StreamState]]] = {
+    "pt": _by_pt,
+    "degree": _by_degree,
+    "throttled": _by_throttling,
+    "px": _by_px,
+    "tx": _by_tx,
+    "p only": _by_p,
+}
 
 
 def _cut(state: State, flag: FlagArray, count: int) -> list[StreamState]:

@@ -15,7 +15,7 @@ import pydantic
 import connectors
 from monitor.equipment import KINDS
 from monitor.equipment.base import Item, Kind, Medium, Options
-from monitor.equipment.solve import Needs, Step, plan, spare_balances
+from monitor.equipment.solve import Needs, Step, Unknown, competing, plan, spare_balances
 from monitor.errors import Issue, SiteFileError
 from monitor.site.flows import flow_complaints, meter_complaints
 from monitor.site.issues import issue_of, no_such, option_issue, unique
@@ -27,7 +27,7 @@ from monitor.site.tags import FLOWS
 from monitor.site.units import PressureDatum, Quantity
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable, Iterator, Mapping
+    from collections.abc import Collection, Iterable, Iterator, Mapping
     from pathlib import Path
 
 __all__ = ["Site", "load_site"]
@@ -144,7 +144,7 @@ def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Sit
         for k, v in items.items()
     }
     for kind, stream_id in sorted(planned.unsolved):
-        issues.append(_unsolved(kind, stream_id, items.values()))
+        issues.append(_unsolved(kind, stream_id, items.values(), planned.unsolved))
     site = Site(
         path=path,
         hash=digest,
@@ -297,18 +297,29 @@ def _needs(streams: Iterable[Stream]) -> Needs:
     )
 
 
-def _unsolved(kind: str, stream: str, items: Iterable[Item]) -> Issue:
-    touching = [i.id for i in items if stream in (*i.ids("in"), *i.ids("out"))]
+def _unsolved(
+    kind: str, stream: str, items: Iterable[Item], unsolved: Collection[Unknown]
+) -> Issue:
+    touching = [i for i in items if stream in (*i.ids("in"), *i.ids("out"))]
     balance = {"flow": "mass", "enthalpy": "energy", "rate": "energy"}[kind]
     key = {"flow": "flow", "enthalpy": "enthalpy", "rate": "power or heat"}[kind]
-    return Issue(
-        f"[[stream]] {stream!r}",
-        key,
+    found = (
         f"'balance' cannot be found: the {balance} balance of "
-        f"{' and '.join(touching) or 'nothing'} has more unknowns than equations "
-        "(or its energy residual is already its heat loss); give one more measurement there, "
-        "or heat_loss = 'none'",
+        f"{' and '.join(i.id for i in touching) or 'nothing'} has more unknowns than equations"
     )
+    if balance == "energy" and any(i.options.heat_loss == "balance" for i in touching):
+        found += ", or its energy residual is already its heat loss (heat_loss = 'none' frees it)"
+    at = "; ".join(
+        f"at {item.id} measure {_one_of(competing(item, unsolved))}" for item in touching
+    )
+    remedy = f"; {at}" if at else "; give the stream a place at some equipment, or a measurement"
+    return Issue(f"[[stream]] {stream!r}", key, found + remedy)
+
+
+def _one_of(unknown: tuple[str, ...]) -> str:
+    if len(unknown) == 1:
+        return unknown[0]
+    return f"{', '.join(unknown[:-1])} or {unknown[-1]}"
 
 
 def _references(site: Site) -> Iterator[tuple[str, str, Reference, Quantity]]:
@@ -316,19 +327,9 @@ def _references(site: Site) -> Iterator[tuple[str, str, Reference, Quantity]]:
     dead = site.file.dead_state
     yield "[dead_state]", "temperature", dead.temperature, Quantity.TEMPERATURE
     yield "[dead_state]", "pressure", dead.pressure, Quantity.PRESSURE
-    expected = {
-        "flow": Quantity.MASS_FLOW,
-        "pressure": Quantity.PRESSURE,
-        "temperature": Quantity.TEMPERATURE,
-        "power": Quantity.POWER,
-        "heat": Quantity.POWER,
-        "boundary_temperature": Quantity.TEMPERATURE,
-    }
     for stream in site.streams.values():
-        for key, quantity in expected.items():
-            value = getattr(stream, key)
-            if isinstance(value, Reference):
-                yield f"[[stream]] {stream.id!r}", key, value, quantity
+        for key, value, quantity in stream.references():
+            yield f"[[stream]] {stream.id!r}", key, value, quantity
     for item in site.items.values():
         for key, (reference, quantity) in item.options.signals().items():
             yield f"[[equipment]] {item.id!r}", key, reference, quantity
@@ -353,6 +354,9 @@ def _check_references(site: Site, issues: list[Issue]) -> None:
             bad_datum = unit is not None and unit.datum is PressureDatum.DIFFERENCE
             if bad_datum:
                 issues.append(Issue(table, key, "is a pressure difference; a pressure is wanted"))
+            if key in {"superheat", "subcooling"} and unit is not None and unit.offset:
+                said = f"is a difference of temperatures: give it in 'K', and not in '{unit.text}'"
+                issues.append(Issue(table, key, said))
             continue
         found = unit.quantity.name.lower().replace("_", " ")
         wanted = quantity.name.lower().replace("_", " ")

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import datetime as dt
 import zoneinfo
-from typing import Annotated, Literal
+from typing import TYPE_CHECKING, Annotated, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
 
@@ -24,6 +24,9 @@ from monitor.site.fields import (
 from monitor.site.notify import Notify
 from monitor.site.tags import Meter, Tag, Uncertainty
 from monitor.site.units import Quantity, Unit, parse_unit, split_number
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
 
 __all__ = [
     "Alarms",
@@ -44,6 +47,7 @@ __all__ = [
     "Store",
     "Stream",
     "Tag",
+    "ThrottlingTest",
     "Uncertainty",
 ]
 
@@ -156,12 +160,26 @@ class Source(BaseModel):
     kind: str
 
 
+class ThrottlingTest(Table):
+    """stream.throttling_test: a sample of wet steam, expanded until it is superheated.
+
+    Attributes:
+        temperature: of the expanded sample.
+        pressure: of the expanded sample; without one that of the surroundings.
+        least_superheat: of the expanded sample, below which the test says nothing sure.
+    """
+
+    temperature: Reference
+    pressure: Reference | None = None
+    least_superheat: float = Field(default=5.0, ge=0, description="kelvin")
+
+
 class Stream(Table):
     """[[stream]]: a flow between two pieces of equipment, or across the site's boundary.
 
     Water and steam need enough to fix the state (pressure and temperature; or one of them with a
-    dryness or a phase; or pressure with ``enthalpy = "balance"``) and a flow. Power, heat and fuel
-    need their rate alone.
+    dryness or a phase; or pressure with a degree of superheat or subcooling, with a throttling
+    test, or with ``enthalpy = "balance"``) and a flow. Power, heat and fuel need their rate alone.
     """
 
     id: Identifier
@@ -172,6 +190,9 @@ class Stream(Table):
     temperature: Reference | None = None
     dryness: float | None = Field(default=None, ge=0, le=1)
     phase: Literal["vapour", "liquid"] | None = None
+    superheat: Reference | None = None
+    subcooling: Reference | None = None
+    throttling_test: ThrottlingTest | None = None
     enthalpy: Literal["balance"] | None = None
     power: Literal["balance"] | Reference | None = None
     heat: Literal["balance"] | Reference | None = None
@@ -186,6 +207,30 @@ class Stream(Table):
     co2: float | None = Field(
         default=None, ge=0, description="kg per MWh of exergy, for a fuel of heating value"
     )
+
+    def references(self) -> Iterator[tuple[str, Reference, Quantity]]:
+        """Every key of the table that reads a tag or states a number, and what it must measure."""
+        for key, quantity in _MEASURED.items():
+            value = getattr(self, key)
+            if isinstance(value, Reference):
+                yield key, value, quantity
+        test = self.throttling_test
+        if test is not None:
+            yield "throttling_test.temperature", test.temperature, Quantity.TEMPERATURE
+            if test.pressure is not None:
+                yield "throttling_test.pressure", test.pressure, Quantity.PRESSURE
+
+
+_MEASURED = {
+    "flow": Quantity.MASS_FLOW,
+    "pressure": Quantity.PRESSURE,
+    "temperature": Quantity.TEMPERATURE,
+    "superheat": Quantity.TEMPERATURE,
+    "subcooling": Quantity.TEMPERATURE,
+    "power": Quantity.POWER,
+    "heat": Quantity.POWER,
+    "boundary_temperature": Quantity.TEMPERATURE,
+}
 
 
 class Equipment(BaseModel):

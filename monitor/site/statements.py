@@ -57,24 +57,47 @@ def _check_water(stream: Stream) -> Iterator[tuple[str, str]]:
     yield from _check_state(stream)
 
 
+_WITH_PRESSURE_ALONE = ("enthalpy", "superheat", "subcooling", "throttling_test")
+"""Each fixes the state of a stream together with its pressure, and with nothing else."""
+
+
 def _check_state(stream: Stream) -> Iterator[tuple[str, str]]:
     """What a water stream says must fix its state, and not say it twice."""
+    given = [key for key in _WITH_PRESSURE_ALONE if getattr(stream, key) is not None]
+    if given:
+        yield from _check_with_pressure_alone(stream, given)
+    else:
+        yield from _check_pair(stream)
+
+
+def _check_with_pressure_alone(stream: Stream, given: list[str]) -> Iterator[tuple[str, str]]:
+    others = (stream.temperature, stream.dryness, stream.phase)
+    if stream.pressure is None or any(v is not None for v in others) or len(given) > 1:
+        what = "'balance'" if given[0] == "enthalpy" else "it"
+        hint = f"{what} goes with a pressure alone: leave out temperature, dryness and phase"
+        if len(given) > 1:
+            hint += f"; and of {' and '.join(given)} keep one"
+        yield given[0], hint
+    for key in ("superheat", "subcooling"):
+        degree = getattr(stream, key)
+        if degree is not None and degree.fixed is not None and degree.fixed <= 0.0:
+            hint = "is not above 0 K; for a saturated stream give phase = 'vapour' or 'liquid'"
+            yield key, hint
+
+
+def _check_pair(stream: Stream) -> Iterator[tuple[str, str]]:
+    """Pressure and temperature, or one of them with a dryness or a phase."""
     p, t, x = stream.pressure, stream.temperature, stream.dryness
     fixed_side = x is not None or stream.phase is not None
-    if stream.enthalpy is not None:
-        if p is None or t is not None or fixed_side:
-            yield (
-                "enthalpy",
-                "'balance' goes with a pressure alone: leave out temperature, dryness and phase",
-            )
-    elif p is None and t is None:
+    if p is None and t is None:
         yield "pressure", "is missing: a stream needs pressure and temperature, or one with dryness"
     elif p is None or t is None:
         if not fixed_side:
             given, other = ("temperature", "pressure") if p is None else ("pressure", "temperature")
             hint = (
                 f"alone does not fix the state; add {other}, "
-                "dryness = 0.97, phase = 'vapour' or 'liquid', or enthalpy = 'balance'"
+                "dryness = 0.97, phase = 'vapour' or 'liquid', a superheat or a subcooling, "
+                "or enthalpy = 'balance'"
             )
             yield given, hint
     elif x is not None:
