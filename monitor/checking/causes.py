@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 from monitor.checking.lines import VERDICTS, Cause, Line
 from monitor.checking.source_lines import clock_words
+from monitor.checking.tag_lines import out_of_range
 from monitor.checking.typical import references
 
 if TYPE_CHECKING:
@@ -87,17 +88,18 @@ def _sources(site: Site, lines: Sequence[Line], shifts: Mapping[str, Offset]) ->
 
 
 def _tags(site: Site, lines: Sequence[Line]) -> Iterable[Cause]:
-    """Tags that are wrong by themselves, with the streams and equipment that hang on them."""
+    """Tags that are odd by themselves, with the streams and equipment that hang on them."""
     silent = {x.subject for x in lines if x.kind == "source" and x.verdict == "wrong"}
     for line in lines:
         tag = site.tags.get(line.subject)
-        if line.kind != "tag" or line.verdict != "wrong" or tag is None:
+        if line.kind != "tag" or line.verdict == "ok" or tag is None:
             continue
         if tag.source in silent and not line.figures:
             continue
-        if "outside its range" in line.reason:
+        if out_of_range(line):
             continue  # another unit may explain it, which says more
-        yield Cause("tag", line.subject, line.reason, explains=_hanging(site, line.subject, lines))
+        explains = _hanging(site, line.subject, lines) if line.verdict == "wrong" else ()
+        yield Cause("tag", line.subject, line.reason, line.verdict, explains=explains)
 
 
 def _hanging(site: Site, tag: str, lines: Sequence[Line]) -> tuple[tuple[str, str], ...]:

@@ -33,7 +33,7 @@ if TYPE_CHECKING:
     from monitor.site.load import Site
     from monitor.thermo.dead_state import DeadState
 
-__all__ = ["Contradiction", "contradictions"]
+__all__ = ["Contradiction", "contradictions", "resting"]
 
 _PERCENT = 0.01
 _COVERAGE = 2.0
@@ -47,6 +47,8 @@ _CLEAR = 3.0
 """Size of a contradiction that has no measure: the wrong phase, a value out of range."""
 _DOUBTED = 1.5
 _HALF = 0.5
+_WATER_CAPACITY, _STEAM_CAPACITY = 4.2e3, 2.2e3
+"""[J/(kg K)] About, for what a kelvin of a thermometer's uncertainty is worth."""
 # Figure, lowest and highest value [%] of machines that run, and what beyond them counts as one.
 _EFFICIENCIES = (
     ("turbine", "eta_s_", 35.0, 93.0, 4.0),
@@ -73,8 +75,23 @@ class Contradiction:
     size: FloatArray
 
 
-def contradictions(site: Site, trial: Trial) -> list[Contradiction]:
-    """Hold every supposition against what cannot be."""
+def resting(trial: Trial) -> frozenset[str]:
+    """The streams of water that do not flow, as the readings stand in a trial's first cell."""
+    flows = {s.id: abs(float(s.mass_flow[0])) for s in trial.states.values() if s.medium == "water"}
+    return frozenset(stream for stream, flow in flows.items() if flow < _FLOWING)
+
+
+def contradictions(
+    site: Site, trial: Trial, at_rest: frozenset[str] = frozenset()
+) -> list[Contradiction]:
+    """Hold every supposition against what cannot be.
+
+    Args:
+        site: the site.
+        trial: the suppositions.
+        at_rest: streams that may stand at any pressure; the same for all suppositions, or one that
+            stops a stream would excuse its gauge.
+    """
     count = len(trial.barometer)
     reference = site.file.dead_state
     dead = dead_state(
@@ -87,9 +104,9 @@ def contradictions(site: Site, trial: Trial) -> list[Contradiction]:
         found += _at_stream(site, trial, stream.id, errors)
     for item in site.items.values():
         drawn = trial.drawn[item.id]
-        found += _balanced(item, drawn, errors)
+        found += _balanced(site, item, drawn, errors)
         found += _possible(item, drawn, dead)
-        found += _pressures(site, item, trial)
+        found += _pressures(site, item, trial, at_rest)
         found += _phases(item, trial)
     with np.errstate(invalid="ignore"):
         return [replace(one, size=np.asarray(np.maximum(one.size, 0.0))) for one in found]
@@ -98,9 +115,14 @@ def contradictions(site: Site, trial: Trial) -> list[Contradiction]:
 def _ranges(site: Site, trial: Trial) -> Iterator[Contradiction]:
     for name, tag in site.used_tags().items():
         if tag.range is not None:
-            low, high = tag.range
-            span, shown = high - low, trial.shown[name]
-            outside = (shown < low - RANGE_BELOW * span) | (shown > high + RANGE_ABOVE * span)
+            low, high = tag.range[0], tag.range[1]
+            below, above = RANGE_BELOW * (high - low), RANGE_ABOVE * (high - low)
+            outside = np.logical_and.reduce(
+                [
+                    (v < low - below) | (v > high + above)
+                    for v in (trial.shown[name], trial.as_read[name])
+                ]
+            )
             yield Contradiction("tag", name, "range", np.where(outside, _CLEAR, 0.0))
 
 
@@ -174,8 +196,17 @@ def _at_stream(
         yield Contradiction("stream", stream, "state by balance", 0.0 * state.entropy)
 
 
+def _thermal_error(site: Site, state: StreamState) -> FloatArray:
+    """Standard uncertainty of a stream's energy from its thermometer [W]."""
+    reference = site.streams[state.id].temperature
+    stated = None if reference is None else stated_uncertainty(site, reference, state.temperature)
+    capacity = np.where(state.dryness > _HALF, _STEAM_CAPACITY, _WATER_CAPACITY)
+    flow = np.abs(np.nan_to_num(state.mass_flow))
+    return np.asarray(flow * capacity * (0.0 if stated is None else stated))
+
+
 def _balanced(
-    item: Item, drawn: Drawn, errors: Mapping[str, FloatArray]
+    site: Site, item: Item, drawn: Drawn, errors: Mapping[str, FloatArray]
 ) -> Iterator[Contradiction]:
     counted = balances(drawn)
     around = (*drawn.facing("in"), *drawn.facing("out"))
@@ -191,6 +222,7 @@ def _balanced(
         return
     passing = np.maximum(_sum(drawn, "in", "energy"), _sum(drawn, "out", "energy"))
     carried = [np.asarray(errors[s.id] * np.nan_to_num(s.enthalpy)) for s in water]
+    carried += [_thermal_error(site, s) for s in water]
     error = np.hypot(_joint(carried, count), _PERCENT * passing)
     if by_heat:
         # A lagged vessel or pipe loses a little and gains nothing.
@@ -252,19 +284,20 @@ def _condensing(item: Item, drawn: Drawn) -> Iterator[Contradiction]:
     yield Contradiction("equipment", item.id, "cooling water's rise", -rise / 0.5)
 
 
-def _pressures(site: Site, item: Item, trial: Trial) -> Iterator[Contradiction]:
+def _pressures(
+    site: Site, item: Item, trial: Trial, at_rest: frozenset[str]
+) -> Iterator[Contradiction]:
     """Pressure falls along a pipe, and little along a header's or from a drum to its outlet."""
     for upper, lower in falling_pairs(item):
+        if {upper, lower} & at_rest:
+            continue
         above, below = trial.states[upper], trial.states[lower]
         error = np.hypot(
             _gauge_error(site, upper, above.pressure), _gauge_error(site, lower, below.pressure)
         )
         allowed = _COVERAGE * error + _RISE * above.pressure
         rise = (below.pressure - above.pressure) / allowed
-        still = (np.abs(above.mass_flow) < _FLOWING) | (np.abs(below.mass_flow) < _FLOWING)
-        yield Contradiction(
-            "equipment", item.id, f"pressure from {upper} to {lower}", np.where(still, 0.0, rise)
-        )
+        yield Contradiction("equipment", item.id, f"pressure from {upper} to {lower}", rise)
     if item.kind.name == "header":
         yield from _header(item, trial)
     if item.kind.name == "boiler":

@@ -8,6 +8,7 @@ import numpy as np
 
 from monitor.checking.lines import VERDICTS, Figures, Line, Verdict, number
 from monitor.checking.ports import PRESSURE_FALLS, STEAM_PORTS, WATER_PORTS
+from monitor.equipment.solve import spare_measurements
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Mapping, Sequence
@@ -61,7 +62,13 @@ def equipment_lines(
             f"{_percent(shares['energy_imbalance_share'])}, closure "
             f"{_percent(shares['closure_share'])}; destroys {destroyed:.4g} kW"
         )
+        spare = spare_measurements(item)
+        found += "".join(
+            f"; {balance} balance spare: any one of {', '.join(tags)} could be left to it"
+            for balance, tags in spare.items()
+        )
         figures: Figures = {k: number(v) for k, v in shares.items()}
+        figures |= {f"spare_{balance}": " ".join(tags) for balance, tags in spare.items()}
         figures |= {"destroyed_live_kw": number(destroyed), "exergy_in_live_kw": number(entered)}
         verdict, reason = _judge_equipment(shares, destroyed, entered)
         for told in (_judge_phase(item, dryness), _judge_pressure(item, bar)):

@@ -55,7 +55,7 @@ def doubts(source: Source, folder: Path) -> list[str]:
     seen = {**_DEFAULTS, **found.options}
     told = [
         f"{newest.name} seems to be written with {key} = {seen[key]!r}, not {options[key]!r}"
-        for key in ("delimiter", "layout", "decimal", "thousands")
+        for key in ("delimiter", "decimal", "thousands")
         if _spelled(seen[key]) != _spelled(options[key])
     ]
     return told + _order(options, seen, newest.name)

@@ -8,7 +8,7 @@ every balance that it has a part in.
 from __future__ import annotations
 
 from contextlib import ExitStack
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -23,10 +23,10 @@ from monitor.checking.datums import odd_datums
 from monitor.checking.equipment_lines import equipment_lines
 from monitor.checking.exports import doubts
 from monitor.checking.lines import Checked, Line
-from monitor.checking.source_lines import STOPPED, source_line
+from monitor.checking.source_lines import STOPPED, SourceDay, source_line
 from monitor.checking.stream_lines import stream_lines
 from monitor.checking.suspects import suspects
-from monitor.checking.tag_lines import TagDay, tag_line
+from monitor.checking.tag_lines import TagDay, out_of_range, tag_line
 from monitor.checking.twins import twins
 from monitor.checking.typical import typical
 from monitor.cycle import read_window
@@ -35,7 +35,7 @@ from monitor.store.engine import is_sqlite, make_engine, place, reading, sqlite_
 from monitor.store.errors import StoreError
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Mapping, Sequence
 
     from connectors.base import Connector, Probe
     from monitor.site.load import Site
@@ -44,7 +44,7 @@ __all__ = ["check"]
 
 HOUR, DAY = 3600, 86400
 _DAYS_OF_CLOCKS = 3
-"""Days whose movements tell whether two sources keep the same time."""
+"""Days that are read: their movements tell whether two sources keep the same time."""
 
 
 def check(site: Site) -> Checked:
@@ -74,7 +74,9 @@ def check(site: Site) -> Checked:
                 lines.append(Line("source", source.id, "wrong", "cannot be read", reason))
         day = _newest_day(site, probes)
         if day is None:
-            empty = [source_line(site, i, probe, probes, 0, {}) for i, probe in probes.items()]
+            empty = [
+                source_line(site, i, SourceDay(probe, 0), probes, {}) for i, probe in probes.items()
+            ]
             lines += empty
             return Checked(causes(site, lines), tuple(lines))
         return _look(site, opened, probes, day, lines)
@@ -120,15 +122,17 @@ def _look(
     day: _Day,
     lines: list[Line],
 ) -> Checked:
-    several = len(opened) > 1
-    before = (_DAYS_OF_CLOCKS - 1) * DAY if several else 0
+    before = (_DAYS_OF_CLOCKS - 1) * DAY
     read = read_window(site, opened, day.start - before, day.end)
     times = read.readings["time"]
     now = read.readings[(times >= _utc(day.start)) & (times < _utc(day.end))]
     parts: dict[str, pd.DataFrame] = {
         str(name): part for name, part in now.groupby("tag", observed=True)
     }
-    shifts = offsets(site, read.readings, day.start - before, day.end) if several else {}
+    shifts = {}
+    if len(opened) > 1:
+        shifts = offsets(site, read.readings, day.start - before, day.end)
+    earlier = set(read.readings["tag"][times < _utc(day.start)].unique())
     needed = ReadResult(
         read.readings[times >= _utc(day.start - lead_in(site))].reset_index(drop=True),
         read.problems,
@@ -137,7 +141,8 @@ def _look(
     for source_id, probe in probes.items():
         own = [n for n, tag in site.used_tags().items() if tag.source == source_id]
         rows = sum(len(parts[n]) for n in own if n in parts)
-        lines.append(source_line(site, source_id, probe, probes, rows, shifts))
+        seen_source = SourceDay(probe, rows, alone=not earlier & set(own))
+        lines.append(source_line(site, source_id, seen_source, probes, shifts))
     counted = batch.tag_quality.groupby("tag", observed=True)[["cells", "cells_stuck"]].sum()
     cells, stuck_cells = (counted[c].to_numpy(dtype=np.float64) for c in ("cells", "cells_stuck"))
     shares = stuck_cells / np.maximum(cells, 1.0)
@@ -149,11 +154,21 @@ def _look(
             )
             lines.append(tag_line(site, tag, seen))
     normal = typical(site, parts, day.start, day.end)
-    found, contradicted = suspects(site, normal)
+    believed = {n: v for n, v in normal.raw.items() if n not in _unusable(lines)}
+    found, contradicted = suspects(site, replace(normal, raw=believed))
     lines += stream_lines(site, batch)
     lines += equipment_lines(site, batch, contradicted)
     told = causes(site, lines, Found(shifts, twins(site, parts), found, odd_datums(site, normal)))
     return Checked(told, tuple(explained(lines, told)))
+
+
+def _unusable(lines: Sequence[Line]) -> set[str]:
+    """Tags that are wrong by what they deliver: no other is suspected for what they show."""
+    return {
+        line.subject
+        for line in lines
+        if line.kind == "tag" and line.verdict == "wrong" and not out_of_range(line)
+    }
 
 
 def _utc(seconds: int) -> pd.Timestamp:

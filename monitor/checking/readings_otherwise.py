@@ -98,7 +98,8 @@ def _of_tag(
         )
         same_scale = other.scale == tag.unit.scale and other.datum != tag.unit.datum
         how: How = "datum" if same_scale and quantity is Quantity.PRESSURE else "unit"
-        yield Guess((name,), how, _unit_words(tag, text, how), cost, Supposition({name: value}))
+        restated = Supposition({name: value}, frozenset({name}))
+        yield Guess((name,), how, _unit_words(tag, text, how), cost, restated)
     yield from _off(name, tag, raw)
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import pandas as pd
@@ -16,11 +17,17 @@ if TYPE_CHECKING:
     from monitor.checking.clocks import Offset
     from monitor.site.load import Site
 
-__all__ = ["STOPPED", "clock_words", "source_line", "span"]
+__all__ = ["STOPPED", "SourceDay", "clock_words", "source_line", "span"]
 
 STOPPED = 3 * 86400
 """[s] A source this far behind the others has stopped; nearer ones may come once a day."""
 _AHEAD = 600
+_LONG = 20 * 86400
+"""[s] A source that reaches back so far has readings on the day before the newest."""
+_ALONE_WORDS = (
+    "its newest day stands alone, with nothing in the two days before it: see whether its times "
+    "are read with day and month the wrong way round (time_format), or whether exports are missing"
+)
 _TEN = 10.0
 _AHEAD_WORDS = (
     "its newest reading lies {} in the future; check time_zone and time_format, and the clock of "
@@ -33,12 +40,26 @@ _LAG_WORDS = (
 )
 
 
+@dataclass(frozen=True)
+class SourceDay:
+    """What one source has.
+
+    Attributes:
+        probe: a quick look at it.
+        rows: readings of the site's tags in the newest day.
+        alone: nothing stands in the days before that one.
+    """
+
+    probe: Probe
+    rows: int
+    alone: bool = False
+
+
 def source_line(
     site: Site,
     source_id: str,
-    probe: Probe,
+    seen: SourceDay,
     probes: Mapping[str, Probe],
-    rows: int,
     shifts: Mapping[str, Offset],
 ) -> Line:
     """Tell of one source.
@@ -46,12 +67,12 @@ def source_line(
     Args:
         site: the site.
         source_id: which.
-        probe: what it has.
+        seen: what it has.
         probes: what all have, this one among them.
-        rows: readings of the site's tags in the newest day.
         shifts: sources whose times are off: no lag is counted from those.
     """
     source = next(s for s in site.file.source if s.id == source_id)
+    probe, rows = seen.probe, seen.rows
     passed = sum(problem.count for problem in probe.problems)
     if probe.last is None or probe.first is None:
         reason = "; ".join(
@@ -78,7 +99,7 @@ def source_line(
         f"{probe.detail}; {probe.first:%Y-%m-%d %H:%M} to {probe.last:%Y-%m-%d %H:%M} UTC; "
         f"{rows} readings a day; lag {span(lag)}"
     )
-    findings = _findings(site, probe.last, lag, rows, offset)
+    findings = _findings(site, seen, lag, offset)
     told: tuple[Verdict, str] = next(findings, ("ok", ""))
     if told[0] == "ok" and probe.problems:
         told = ("look", _problems(probe, passed)[0])
@@ -90,9 +111,12 @@ def source_line(
 
 
 def _findings(
-    site: Site, last: pd.Timestamp, lag: float, rows: int, offset: Offset | None
+    site: Site, seen: SourceDay, lag: float, offset: Offset | None
 ) -> Iterator[tuple[Verdict, str]]:
     """What is not as it should be with a source that holds readings, the gravest first."""
+    first, last = seen.probe.first, seen.probe.last
+    if first is None or last is None:
+        return
     ahead = (last - pd.Timestamp.now(tz="UTC")).total_seconds()
     if offset is not None:
         yield "wrong", clock_words(offset)
@@ -100,10 +124,12 @@ def _findings(
         yield "wrong", _AHEAD_WORDS.format(span(ahead))
     if lag > STOPPED:
         yield "wrong", f"it stopped {span(lag)} before the others"
-    if rows == 0:
+    if seen.rows == 0:
         yield "wrong", "none of the site's tags has a reading in the newest day of data"
     if lag > site.file.site.look_back and offset is None:
         yield "look", _LAG_WORDS.format(span(lag))
+    if seen.alone and (last - first).total_seconds() > _LONG:
+        yield "look", _ALONE_WORDS
 
 
 def clock_words(offset: Offset) -> str:

@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from monitor.checking.contradictions import contradictions
+from monitor.checking.contradictions import contradictions, resting
 from monitor.checking.readings_otherwise import guesses
 from monitor.checking.typical import Supposition, try_out
 
@@ -65,21 +65,27 @@ def suspects(site: Site, day: Typical) -> tuple[list[Suspect], list[Contradictio
         size (1,).
     """
     tried = guesses(site, day)
+    still = resting(try_out(site, day, [Supposition({})]))
     believed: dict[str, float] = {}
+    restated: frozenset[str] = frozenset()
     found: list[Suspect] = []
     before: list[Contradiction] | None = None
     while True:
         taken = {tag for suspect in found for tag in suspect.guess.tags}
         open_guesses = [g for g in tried if not taken & set(g.tags)]
-        cells = [Supposition(believed)]
-        cells += [Supposition({**believed, **g.supposition.readings}) for g in open_guesses]
-        told = contradictions(site, try_out(site, day, cells))
+        cells = [Supposition(believed, restated)]
+        cells += [
+            Supposition(believed | g.supposition.readings, restated | g.supposition.restated)
+            for g in open_guesses
+        ]
+        told = contradictions(site, try_out(site, day, cells), still)
         before = before or told
         best = _best(open_guesses, told)
         if best is None or len(found) == _MOST:
             return found, before
         found.append(best)
-        believed |= best.guess.supposition.readings
+        believed = believed | best.guess.supposition.readings
+        restated |= best.guess.supposition.restated
 
 
 def _best(tried: Sequence[Guess], told: Sequence[Contradiction]) -> Suspect | None:

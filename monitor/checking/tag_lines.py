@@ -24,7 +24,7 @@ if TYPE_CHECKING:
     from monitor.site.load import Site
     from monitor.site.tags import Tag
 
-__all__ = ["TagDay", "tag_line"]
+__all__ = ["TagDay", "out_of_range", "tag_line"]
 
 HOUR = 3600
 LEAST_GOOD = 0.9
@@ -85,6 +85,11 @@ def tag_line(site: Site, tag: Tag, seen: TagDay) -> Line:
     findings = _findings(site, tag, value[finite & ~outside], figures)
     verdict, reason = next(findings, ("ok", ""))
     return Line("tag", tag.name, verdict, found, reason, figures)
+
+
+def out_of_range(line: Line) -> bool:
+    """Whether a tag delivers numbers, but none within its range: its unit may be another."""
+    return line.verdict == "wrong" and line.figures.get("outside_share") == 1.0
 
 
 def _silent(

@@ -59,16 +59,32 @@ class Typical:
 
 @dataclass(frozen=True)
 class Supposition:
-    """Readings taken another way: by tag, what it would show in the site file's own unit."""
+    """Readings taken another way.
 
-    readings: Mapping[str, float]
+    Attributes:
+        readings: by tag, what it would show in the site file's own unit.
+        restated: tags whose numbers stay what they are, and only their unit is another: the stated
+            range may be in that unit too.
+    """
+
+    readings: dict[str, float]
+    restated: frozenset[str] = frozenset()
 
 
 @dataclass(frozen=True)
 class Trial:
-    """The plant in every supposition; arrays of shape (n,)."""
+    """The plant in every supposition; arrays of shape (n,).
+
+    Attributes:
+        shown: by tag, in the site file's unit, as supposed.
+        as_read: the same, but for restated tags the number that the instrument gives.
+        states: of streams.
+        drawn: equipment.
+        barometer: [Pa].
+    """
 
     shown: Mapping[str, FloatArray]
+    as_read: Mapping[str, FloatArray]
     states: Mapping[str, StreamState]
     drawn: Mapping[str, Drawn]
     barometer: FloatArray
@@ -222,9 +238,12 @@ def try_out(site: Site, day: Typical, suppositions: list[Supposition]) -> Trial:
         name: np.full(count, day.raw.get(name, np.nan), dtype=np.float64)
         for name in site.used_tags()
     }
+    as_read = {name: values.copy() for name, values in shown.items()}
     for cell, supposition in enumerate(suppositions):
         for name, value in supposition.readings.items():
             shown[name][cell] = value
+            if name not in supposition.restated:
+                as_read[name][cell] = value
     barometer = _barometers(site, day, shown, count)
     flag = np.zeros(count, dtype=np.int32)
     tags = {}
@@ -236,7 +255,7 @@ def try_out(site: Site, day: Typical, suppositions: list[Supposition]) -> Trial:
     signals = signals_of(site, gauges)
     draw = partial(_draw, site, states, signals, day.stored, count)
     complete(site.steps, states, draw, with_enthalpy)
-    return Trial(shown, states, {item: draw(item) for item in site.items}, barometer)
+    return Trial(shown, as_read, states, {item: draw(item) for item in site.items}, barometer)
 
 
 def _barometers(

@@ -20,6 +20,8 @@ if TYPE_CHECKING:
 
 __all__ = ["check"]
 
+_MOST_CAUSES = 8
+
 
 def check(
     site: Annotated[
@@ -39,7 +41,7 @@ def check(
     """Look at a site before anything runs.
 
     Site file, store, sources, tags, streams and balances over the newest day; nothing is stored.
-    Each line says ok, look (worth your eyes) or wrong (figures would be wrong); below them stand the
+    Each line says ok, look (worth your eyes) or wrong (figures would be wrong); below stand the
     faults that explain the lines, the one to put right first in front. Ends with exit code 1 when
     anything is wrong, 3 when the site file itself is.
 
@@ -104,8 +106,10 @@ def _print(site: Site, checked: Checked, count: Counter[Verdict]) -> None:
     print_table(columns, rows)
     if checked.causes:
         typer.echo("\nlook here first:")
-        for place, cause in enumerate(checked.causes, start=1):
+        for place, cause in enumerate(checked.causes[:_MOST_CAUSES], start=1):
             typer.echo(f"{place}. {_sentence(cause)}")
+        if len(checked.causes) > _MOST_CAUSES:
+            typer.echo(f"and {len(checked.causes) - _MOST_CAUSES} more, in the lines above")
         typer.echo("")
     typer.echo(
         f"{site.file.site.name}: {count['ok']} ok, {count['look']} to look at, "

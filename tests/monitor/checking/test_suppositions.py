@@ -1,0 +1,163 @@
+"""The parts of `check`: suppositions, misreadings, clocks, exports, and what a line shows."""
+
+from __future__ import annotations
+
+import dataclasses
+
+import numpy as np
+import pandas as pd
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from iapws import IAPWS97
+
+from monitor.checking import check
+from monitor.checking.contradictions import contradictions
+from monitor.checking.exports import doubts
+from monitor.checking.readings_otherwise import guesses
+from monitor.checking.suspects import suspects
+from monitor.checking.typical import Supposition, Typical, relative, try_out, typical
+from monitor.cycle import read_window
+from monitor.site.load import Site, load_site
+from monitor.site.models import Source
+from monitor.site.units import parse_unit
+from monitor.sources import open_sources
+
+PRESSURES = ("bar(g)", "bar(a)", "kPa(g)", "psi(a)", "psi(g)", "mmHg(vac)", "mbar(a)", "MPa(g)")
+
+
+@pytest.fixture(scope="session")
+def site(sound_folder) -> Site:
+    return load_site(sound_folder / "site.toml")
+
+
+@pytest.fixture(scope="session")
+def day(site) -> Typical:
+    end = int(pd.Timestamp("2026-02-27T00:00Z").timestamp())
+    start = end - 86400
+    with open_sources(site) as sources:
+        rows = read_window(site, sources, start, end).readings
+    rows = rows[rows["time"] >= pd.Timestamp(start, unit="s", tz="UTC")]
+    parts = {str(name): part for name, part in rows.groupby("tag", observed=True)}
+    return typical(site, parts, start, end)
+
+
+@settings(deadline=None)
+@given(
+    one=st.sampled_from(PRESSURES),
+    other=st.sampled_from(PRESSURES),
+    value=st.floats(-50.0, 500.0),
+    barometer=st.floats(85e3, 105e3),
+)
+def test_a_pressure_taken_in_another_unit_and_back_is_the_same(one, other, value, barometer):
+    a, b = parse_unit(one), parse_unit(other)
+    there = relative(a, b, value, barometer)
+    # A pressure of a few mmHg below many bar loses digits to the sum with the barometer.
+    scale = max(abs(value), 1e6 / b.scale, 1.0)
+    assert relative(b, a, there, barometer) == pytest.approx(value, abs=1e-9 * scale)
+
+
+def test_gauge_pressure_counts_from_the_barometer_and_not_from_one_atmosphere():
+    # 12 bar(g) on a mountain at 0.85 bar is 12.85 bar(a).
+    assert relative(parse_unit("bar(a)"), parse_unit("bar(g)"), 12.0, 85e3) == pytest.approx(12.85)
+
+
+@settings(max_examples=15, deadline=None)
+@given(picked=st.lists(st.integers(0, 400), min_size=1, max_size=6))
+def test_a_supposition_does_not_depend_on_those_tried_with_it(site, day, picked):
+    every = guesses(site, day)
+    chosen = [every[k % len(every)].supposition for k in picked]
+    together = contradictions(site, try_out(site, day, chosen))
+    for cell, one in enumerate(chosen):
+        alone = contradictions(site, try_out(site, day, [one]))
+        for a, b in zip(together, alone, strict=True):
+            assert a.size[cell] == pytest.approx(b.size[0], rel=1e-9, abs=1e-12, nan_ok=True), a
+
+
+def test_no_law_is_broken_by_much_more_than_its_tolerance_on_a_sound_site(site, day):
+    told = contradictions(site, try_out(site, day, [Supposition({})]))
+    assert len(told) > 100
+    # Tolerances are two standard uncertainties: of forty balances one or two lie just beyond.
+    assert [t for t in told if not t.size[0] < 1.5] == []
+    assert sum(t.size[0] > 1.0 for t in told) <= 2
+
+
+def _with(day: Typical, **raw: float) -> Typical:
+    renamed = {name.replace("_", "-"): value for name, value in raw.items()}
+    return dataclasses.replace(day, raw={**day.raw, **renamed})
+
+
+def test_two_faults_at_once_are_both_named(site, day):
+    # A feed meter that shows kg/s, and a thermometer that shows degF.
+    wrong = _with(day, FT_2002=day.raw["FT-2002"] / 3.6, TT_4302=day.raw["TT-4302"] * 1.8 + 32.0)
+    found, _ = suspects(site, wrong)
+    assert {s.guess.tags[0] for s in found} == {"FT-2002", "TT-4302"}
+    words = {s.guess.tags[0]: s.guess.words for s in found}
+    assert words["FT-2002"].startswith("looks like kg/s")
+    assert words["TT-4302"].startswith("looks like degF")
+
+
+def test_a_meter_that_is_off_by_no_unit_is_said_to_be_off(site, day):
+    found, _ = suspects(site, _with(day, FT_4301=day.raw["FT-4301"] * 1.5))
+    assert found[0].guess.tags == ("FT-4301",)
+    assert found[0].guess.words == "seems to read about 1.5 times what flows"
+
+
+def test_what_physics_cannot_tell_is_not_made_up(site, day):
+    # One bar at the feed pump's 82, and the valve of a line that is shut: nothing depends on them.
+    for raw in ({"PT_3004": day.raw["PT-3004"] - 1.0}, {"TT_5101": day.raw["TT-5101"] - 60.0}):
+        assert suspects(site, _with(day, **raw))[0] == []
+
+
+def test_the_compressibility_is_that_of_the_steam_tables(sound):
+    (line,) = (x for x in sound.lines if (x.kind, x.subject) == ("stream", "tg1_inlet"))
+    steam = IAPWS97(
+        P=float(line.figures["pressure_bar"]) / 10,
+        T=float(line.figures["temperature_degc"]) + 273.15,
+    )
+    # iapws' own volume; R of water as in IAPWS R7-97(2012), table 1.
+    expected = steam.P * 1e6 * steam.v / (461.526 * steam.T)
+    assert line.figures["compressibility"] == pytest.approx(expected, abs=1e-4)
+    assert f"Z = {expected:.3f}" in line.found
+    water = next(x for x in sound.lines if x.subject == "b1_feed")
+    assert water.figures["compressibility"] is None
+
+
+@pytest.mark.parametrize(
+    ("stated", "first", "told"),
+    [
+        ("month_first", "24.02.2026 00:05:00", "day first"),
+        ("day_first", "02/24/2026 00:05:00", "month first"),
+        ("%m/%d/%Y %H:%M:%S", "24/02/2026 00:05:00", "day first"),
+    ],
+)
+def test_day_and_month_the_wrong_way_round_are_doubted(tmp_path, stated, first, told):
+    rows = [f"{first[:-5]}{minute:02d}:00,PT-1,{minute}" for minute in range(60)]
+    (tmp_path / "day.csv").write_text("\n".join(["time,tag,value", *rows]))
+    source = Source(id="one", kind="csv", path="day.csv", time_format=stated)
+    (doubt,) = doubts(source, tmp_path)
+    assert f"seems to be written {told}" in doubt
+
+
+def test_days_read_as_months_stand_alone_and_are_doubted(make_plant, tmp_path):
+    # 9, 10 and 11 February, written day first, read as 2 September, October and November.
+    plant = make_plant(tmp_path / "site", start="2025-02-09T00:00Z", days=3.0)
+    export = plant.folder / "exports" / "day.csv"
+    table = pd.read_csv(export, dtype=str, keep_default_na=False)
+    table["time"] = pd.to_datetime(table["time"], utc=True).dt.strftime("%d/%m/%Y %H:%M:%S")
+    table.to_csv(export, index=False)
+    plant.edit('kind = "csv"', 'kind = "csv"\ntime_format = "month_first"')
+    checked = check(load_site(plant.path))
+    (line,) = (x for x in checked.lines if x.kind == "source")
+    assert line.verdict == "look"
+    assert "day and month the wrong way round" in line.reason
+    assert checked.causes[0].subject == line.subject
+
+
+def test_a_file_that_is_as_stated_is_not_doubted(site):
+    assert [d for s in site.file.source for d in doubts(s, site.folder)] == []
+
+
+def test_typical_readings_take_means_of_flows_while_they_run(day):
+    assert np.isfinite(list(day.raw.values())).all()
+    assert len(day.raw) == 64
