@@ -16,13 +16,24 @@ import numpy as np
 from monitor.equipment.account import content_rates
 from monitor.equipment.base import FloatArray, StreamState, sum_flags
 from monitor.flags import Flag, FlagArray
+from monitor.site.models import Reference
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Sequence
+    from collections.abc import Callable, Collection, Sequence
 
     from monitor.equipment.base import Drawn, Item
 
-__all__ = ["Needs", "Plan", "Step", "complete", "plan", "spare_balances"]
+__all__ = [
+    "Needs",
+    "Plan",
+    "Step",
+    "Unknown",
+    "competing",
+    "complete",
+    "plan",
+    "spare_balances",
+    "spare_measurements",
+]
 
 Unknown = tuple[Literal["flow", "enthalpy", "rate"], str]
 
@@ -97,6 +108,43 @@ def spare_balances(item: Item, steps: Sequence[Step]) -> frozenset[str]:
     """The balances of one piece of equipment that no step has used."""
     used = {b for step in steps if step.equipment == item.id for b in step.balance.split(" and ")}
     return frozenset(_offered(item) - used)
+
+
+def spare_measurements(item: Item) -> dict[str, tuple[str, ...]]:
+    """The tags of which any one might be left to each balance that nothing was taken from.
+
+    Together they say more than is needed: that is what tells a wrong one, and it is worth knowing.
+
+    Args:
+        item: with its ``spare`` balances and ``statements``.
+
+    Returns:
+        ``mass`` and ``energy``, as far as they are spare and rest on a tag: tags in the order of
+        the ports.
+    """
+    keys = {"mass": ("flow",), "energy": ("flow", "temperature", "power", "heat")}
+    found = {}
+    for balance, read in keys.items():
+        tags = [
+            reference.tag
+            for stream in (*item.ids("in"), *item.ids("out"))
+            for key in read
+            if not (balance == "mass" and item.states(stream, "medium") != "water")
+            and isinstance(reference := item.states(stream, key), Reference)
+            and reference.tag
+        ]
+        if balance in item.spare and tags:
+            found[balance] = tuple(dict.fromkeys(tags))
+    return found
+
+
+def competing(item: Item, unsolved: Collection[Unknown]) -> tuple[str, ...]:
+    """What is still unknown at one piece of equipment, in words: one of these must be measured."""
+    streams = (*item.ids("in"), *item.ids("out"))
+    words = {"flow": "flow", "enthalpy": "state", "rate": "rate"}
+    return tuple(
+        f"the {words[kind]} of '{stream}'" for kind, stream in sorted(unsolved) if stream in streams
+    )
 
 
 def _offered(item: Item) -> set[str]:
