@@ -20,9 +20,11 @@ if TYPE_CHECKING:
     from pydantic import BaseModel
 
 __all__ = [
+    "FEW",
     "READING_COLUMNS",
     "Connector",
     "ConnectorError",
+    "Example",
     "Mark",
     "Probe",
     "Problem",
@@ -32,6 +34,9 @@ __all__ = [
     "Window",
     "empty_readings",
 ]
+
+FEW = 3
+"""So many of each problem are kept for a person to see."""
 
 READING_COLUMNS = ("tag", "time", "value", "quality")
 
@@ -72,12 +77,49 @@ class Window:
 
 
 @dataclass(frozen=True)
-class Problem:
-    """Something in a source that was passed over, counted rather than lost in silence."""
+class Example:
+    """One of the things that were passed over: where it stands, and what is written there."""
 
-    where: str
+    place: str = ""
+    text: str = ""
+
+    def __str__(self) -> str:
+        """The place and the text, as far as there are any."""
+        shown = repr(self.text) if self.text else ""
+        return f"{self.place} {shown}".strip()
+
+
+@dataclass(frozen=True)
+class Problem:
+    """Something in a source that was passed over, counted rather than lost in silence.
+
+    Attributes:
+        source: the file or table.
+        what: what was found and what became of it.
+        count: how often.
+        examples: the first few of them.
+    """
+
+    source: str
     what: str
     count: int = 1
+    examples: tuple[Example, ...] = ()
+
+    def with_more(self, other: Problem) -> Problem:
+        """Return the same problem with those counted in that another look has met."""
+        examples = (*self.examples, *other.examples)[:FEW]
+        return Problem(self.source, self.what, self.count + other.count, examples)
+
+    @property
+    def where(self) -> str:
+        """Where the first of them stands."""
+        place = self.examples[0].place if self.examples else ""
+        return f"{self.source}:{place}" if place else self.source
+
+    def __str__(self) -> str:
+        """What it is, with the first few of them."""
+        shown = ", ".join(filter(None, map(str, self.examples)))
+        return f"{self.what} (first: {shown})" if shown else self.what
 
 
 @dataclass(frozen=True)

@@ -8,7 +8,7 @@ import zlib
 from dataclasses import dataclass, field
 from typing import IO, TYPE_CHECKING, TypeAlias
 
-from connectors.base import ConnectorError
+from connectors.base import ConnectorError, Example
 from connectors.paths import by_name
 
 if TYPE_CHECKING:
@@ -111,7 +111,7 @@ def read_up_to(file: Export, size: int, name: str, problems: ProblemCount) -> by
             pieces.append(piece)
             left -= len(piece)
     except (EOFError, zlib.error, gzip.BadGzipFile, zipfile.BadZipFile) as error:
-        problems.add(name, "", _DAMAGED, 1, example=str(error))
+        problems.add(name, _DAMAGED, 1, [Example(text=str(error))])
     return b"".join(pieces)
 
 

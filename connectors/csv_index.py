@@ -13,7 +13,7 @@ from collections import OrderedDict
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, cast
 
-from connectors.base import ConnectorError
+from connectors.base import ConnectorError, Example
 from connectors.csv_files import open_export, read_up_to
 from connectors.csv_header import check_columns, detect_encoding, line_end, read_header
 from connectors.csv_parse import BlockParser
@@ -312,8 +312,8 @@ class IndexedFile:
             return None
         check_columns(header, options, str(self.file))
         twice = {name for name in header.columns if name and header.columns.count(name) > 1}
-        example = min(twice, default="")
-        problems.add(self.file.name, "header", _TWICE, len(twice), example=example)
+        examples = (Example("header", name[:40]) for name in sorted(twice))
+        problems.add(self.file.name, _TWICE, len(twice), examples)
         self._encoding = encoding
         self._parsed_by = BlockParser(self._reading, header, encoding, self.file.name)
         self._end, self._line = header.body, header.lines + 1

@@ -17,14 +17,14 @@ import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.csv as pacsv
 
-from connectors.base import Quality
+from connectors.base import FEW, Example, Quality
 from connectors.numbers import NumberReader
 from connectors.quality import QualityWords
-from connectors.tidy import ProblemCount, Rows, join_rows
+from connectors.tidy import ProblemCount, Rows, first_few, join_rows
 from connectors.times import NO_TIME, ParsedTimes, TimeReader
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable, Sequence
+    from collections.abc import Callable, Iterable, Sequence
 
     import numpy.typing as npt
 
@@ -42,6 +42,7 @@ _MISSING_HOUR = "row dropped: its local time does not exist, the clock was put f
 _NO_TAG = "row dropped: it names no tag"
 _WRONG_CELLS = "row dropped: more or fewer cells than the header"
 _NOT_A_NUMBER = "value is not a number: the reading is kept as bad"
+_OTHER_MARK = "value has a decimal {found}: the reading is kept as bad; set decimal = '{mark}'"
 _UNKNOWN_QUALITY = "quality word is in no list: the reading counts as uncertain"
 _NOT_DECODED = "characters that the encoding does not have, replaced"
 _STRAY_QUOTE = "block with a quotation mark that is not closed: quotes are read as plain text there"
@@ -150,6 +151,8 @@ class BlockParser:
         self._reading, self._header, self._encoding, self._file = reading, header, encoding, file
         self._as_text: set[int] = set()
         options = reading.options
+        found, mark = ("comma", ",") if options.decimal == "." else ("point", ".")
+        self._other_mark = _OTHER_MARK.format(found=found, mark=mark)
         self._time = tuple(header.position(name) for name in options.time_columns)
         self._long = options.layout == "long"
         if self._long:
@@ -209,7 +212,7 @@ class BlockParser:
             note.count(_STRAY_QUOTE, 1)
             types = dict.fromkeys(types, _TEXT)
             table, refused = self._read(data, types, len(data) + 1, quote=False)
-        note.count(_WRONG_CELLS, refused.count, example=refused.example, row=table.num_rows)
+        note.refused(_WRONG_CELLS, refused)
         return table
 
     def _read(
@@ -306,8 +309,7 @@ class BlockParser:
         if not has_time.all():
             missing = times.in_missing_hour
             for what, rows in ((_MISSING_HOUR, missing), (_NO_TIME, ~has_time & ~missing)):
-                example = str(texts[at[int(rows.argmax())]]) if rows.any() else ""
-                note.rows(what, rows, example=example)
+                note.rows(what, rows, lambda row: texts[at[row]])
         return times, has_time
 
     def _time_texts(self, table: pa.Table) -> tuple[pa.Array, npt.NDArray[np.intp]]:
@@ -340,12 +342,14 @@ class BlockParser:
         """Return values, NaN where there is none, and where they are bad."""
         if pa.types.is_string(column.type):
             parsed = self._reading.numbers.read(column.combine_chunks())
-            value, unknown, example = parsed.value, parsed.not_understood, parsed.example
+            value, unknown, other = parsed.value, parsed.not_understood, parsed.other_mark
         else:
             value = column.to_numpy()
-            unknown, example = np.isinf(value), ""
+            unknown = np.isinf(value)
+            other = np.zeros_like(unknown)
         if unknown.any():
-            note.rows(_NOT_A_NUMBER, unknown & counted, example=example)
+            note.rows(_NOT_A_NUMBER, unknown & ~other & counted, lambda row: column[row])
+            note.rows(self._other_mark, other & counted, lambda row: column[row])
             value = np.where(unknown, np.nan, value)
         return value, np.isnan(value)
 
@@ -357,8 +361,7 @@ class BlockParser:
         words, at = _distinct(table[_name(self._quality)])
         classes, unknown = self._reading.words.classify(words)
         if unknown.any():
-            rows = unknown[at] & counted
-            note.rows(_UNKNOWN_QUALITY, rows, example=words[at[int(rows.argmax())]])
+            note.rows(_UNKNOWN_QUALITY, unknown[at] & counted, lambda row: words[at[row]])
         return classes[at]
 
 
@@ -366,11 +369,13 @@ class _Refused:
     """Counts the rows that have the wrong number of cells."""
 
     def __init__(self) -> None:
-        self.count, self.example = 0, ""
+        self.count = 0
+        self.texts: list[str] = []
 
     def __call__(self, row: Any) -> str:  # noqa: ANN401 - the parser's own row type
         self.count += 1
-        self.example = self.example or str(row.text)
+        if len(self.texts) < FEW:
+            self.texts.append(str(row.text))
         return "skip"
 
 
@@ -380,14 +385,21 @@ class _Note:
     line: int
     problems: ProblemCount
 
-    def rows(self, what: str, rows: npt.NDArray[np.bool_], *, example: str = "") -> None:
+    def rows(
+        self, what: str, rows: npt.NDArray[np.bool_], text: Callable[[int], object] = lambda _: ""
+    ) -> None:
         count = int(np.count_nonzero(rows))
         if count:
-            self.count(what, count, example=example, row=int(rows.argmax()))
+            examples = first_few(rows, text, lambda row: f"line {self.line + row}")
+            self.problems.add(self.file, what, count, examples)
 
-    def count(self, what: str, count: int, *, example: str = "", row: int = 0) -> None:
-        place = f"line {self.line + row}" if what != _WRONG_CELLS else f"after line {self.line}"
-        self.problems.add(self.file, place, what, count, example=example)
+    def count(self, what: str, count: int) -> None:
+        self.problems.add(self.file, what, count, [Example(f"line {self.line}")])
+
+    def refused(self, what: str, refused: _Refused) -> None:
+        # The parser works in pieces, and does not say on which line it is.
+        examples = [Example(f"after line {self.line}", text[:40]) for text in refused.texts]
+        self.problems.add(self.file, what, refused.count, examples)
 
 
 def _name(at: int) -> str:

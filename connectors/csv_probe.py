@@ -77,7 +77,7 @@ def look_at(exports: Sequence[ExportFile], options: CsvOptions, problems: Proble
         except (ConnectorError, OSError) as failed:
             error = unreadable(export, failed) if isinstance(failed, OSError) else failed
             errors.append(error)
-            problems.add(str(export), "", f"file passed over: {error}", 1)
+            problems.add(str(export), f"file passed over: {error}", 1)
             continue
         spans += [span for span in found if span.first <= span.last]
     if errors and len(errors) == len(exports):

@@ -28,13 +28,13 @@ class ParsedNumbers:
         value: the numbers, NaN where the text is none.
         empty: there is no text at all.
         not_understood: neither a number nor a known word for no value.
-        example: the first text that was not understood.
+        other_mark: of these, the ones that are numbers with the other decimal mark.
     """
 
     value: npt.NDArray[np.float64]
     empty: npt.NDArray[np.bool_]
     not_understood: npt.NDArray[np.bool_]
-    example: str
+    other_mark: npt.NDArray[np.bool_]
 
 
 class NumberReader:
@@ -52,6 +52,9 @@ class NumberReader:
         plain = rf"\d+({mark}\d*)?|{mark}\d+"
         # Only whole groups of three count: '1,5' must not become 15 because ',' groups digits.
         grouped = rf"\d{{1,3}}({re.escape(thousands)}\d{{3}})+({mark}\d*)?|" if thousands else ""
+        other = "," if decimal == "." else "."
+        # None where that mark groups digits: '12.34' is then no number in any reading.
+        self._other_mark = "" if other == thousands else rf"^[+-]?\d+{re.escape(other)}\d+$"
         self._pattern = rf"^[+-]?({grouped}{plain})([eE][+-]?\d+)?$"
 
     def read(self, texts: pa.Array) -> ParsedNumbers:
@@ -67,6 +70,7 @@ class NumberReader:
             number = pc.replace_substring(number, self._decimal, ".")
         value = number.cast(pa.float64()).to_numpy(zero_copy_only=False)
         empty = pc.equal(trimmed, "").to_numpy(zero_copy_only=False)
+        other = np.zeros(len(texts), dtype=np.bool_)
         words = ~(matched.to_numpy(zero_copy_only=False) | empty)
         value = np.array(value, dtype=np.float64)
         unknown = np.isinf(value)  # digits that no number of 64 bits can hold
@@ -80,9 +84,11 @@ class NumberReader:
             at = found.indices.to_numpy(zero_copy_only=False)
             value[words] = state[at]
             unknown[words] = ~no_value[at] & np.isnan(state[at])
-        example = str(trimmed[int(unknown.argmax())]) if unknown.any() else ""
+            if self._other_mark:
+                like = pc.match_substring_regex(found.dictionary, self._other_mark)
+                other[words] = unknown[words] & like.to_numpy(zero_copy_only=False)[at]
         value[np.isinf(value)] = np.nan
-        return ParsedNumbers(value, empty, unknown, example)
+        return ParsedNumbers(value, empty, unknown, other)
 
 
 def floats(cells: Sequence[Any]) -> npt.NDArray[np.float64]:

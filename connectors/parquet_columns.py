@@ -15,6 +15,8 @@ from connectors.quality import QualityWords
 from connectors.times import NO_TIME, TimeReader, is_numeric
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     import numpy.typing as npt
 
     from connectors.parquet_options import ParquetOptions
@@ -33,13 +35,13 @@ class Cells:
         value: the numbers, NaN where there is none.
         there: where the cell is not null.
         not_understood: neither a number nor a known word for no value.
-        example: the first text that was not understood.
+        text: what stands in a cell, by its position.
     """
 
     value: npt.NDArray[np.float64]
     there: npt.NDArray[np.bool_]
     not_understood: npt.NDArray[np.bool_]
-    example: str
+    text: Callable[[int], str]
 
 
 class ColumnReader:
@@ -104,7 +106,7 @@ class ColumnReader:
             value = _floats(column)
             infinite = np.isinf(value)
             value = np.where(infinite, np.nan, value)
-            return Cells(value, there, infinite, "infinity" if infinite.any() else "")
+            return Cells(value, there, infinite, lambda _: "infinity")
         if not is_text(column.type):
             raise ConnectorError(
                 f"{file}: column '{name}' holds no values but {column.type}; leave the tag out or "
@@ -112,15 +114,15 @@ class ColumnReader:
             )
         texts = column.cast(pa.string()).fill_null("")
         read = self._numbers.read(texts)
-        return Cells(read.value, there & ~read.empty, read.not_understood, read.example)
+        return Cells(
+            read.value, there & ~read.empty, read.not_understood, lambda row: str(texts[row])
+        )
 
-    def qualities(
-        self, column: pa.Array
-    ) -> tuple[npt.NDArray[np.uint8], npt.NDArray[np.bool_], list[str]]:
-        """Return classes, where the word is in no list, and the words."""
+    def qualities(self, column: pa.Array) -> tuple[npt.NDArray[np.uint8], npt.NDArray[np.bool_]]:
+        """Return classes, and where the word is in no list."""
         words, at = distinct_texts(column)
         classes, unknown = self._words.classify(words)
-        return classes[at], unknown[at], [words[i] for i in at[unknown[at]][:1]]
+        return classes[at], unknown[at]
 
 
 def distinct_texts(column: pa.Array) -> tuple[list[str], npt.NDArray[np.int64]]:

@@ -18,7 +18,7 @@ import pyarrow.parquet as pq
 
 from connectors.base import ConnectorError, Quality
 from connectors.parquet_columns import distinct_texts, is_text
-from connectors.tidy import Rows
+from connectors.tidy import Rows, first_few
 from connectors.times import NO_TIME
 
 if TYPE_CHECKING:
@@ -177,9 +177,9 @@ class ParquetFile:
             missing = times.in_missing_hour
             lost = (times.first == NO_TIME) & ~missing
             column = batch.column(self._options.time_column)
-            example = str(column[int(lost.argmax())]) if lost.any() else ""
-            problems.add(self._path.name, "", _MISSING_HOUR, int(missing.sum()))
-            problems.add(self._path.name, "", _NO_TIME, int(lost.sum()), example=example)
+            examples = first_few(lost, lambda row: column[row])
+            problems.add(self._path.name, _MISSING_HOUR, int(missing.sum()))
+            problems.add(self._path.name, _NO_TIME, int(lost.sum()), examples)
         return times
 
     def _long(
@@ -197,7 +197,7 @@ class ParquetFile:
         tag = np.array(codes, dtype=np.int32)[at]
         has_time = times.first != NO_TIME
         if unheard is not None:
-            unheard.add(name, "", _NO_TAG, int((has_time & (tag < 0)).sum()))
+            unheard.add(name, _NO_TAG, int((has_time & (tag < 0)).sum()))
         keep = _inside(times, wanted) & (tag >= 0) & ((tag < others) | times.doubled)
         rows = np.flatnonzero(keep)
         kept = batch.take(pa.array(rows)) if len(rows) < len(keep) else batch
@@ -208,9 +208,11 @@ class ParquetFile:
         self._count_words(cells, asked, problems)
         quality = np.full(len(rows), Quality.GOOD, dtype=np.uint8)
         if options.quality_column:
-            quality, unknown, example = self._reader.qualities(kept.column(options.quality_column))
-            count = int((unknown & asked).sum())
-            problems.add(name, "", _UNKNOWN_QUALITY, count, example="".join(example))
+            words = kept.column(options.quality_column)
+            quality, unknown = self._reader.qualities(words)
+            unknown &= asked
+            examples = first_few(unknown, lambda row: words[row])
+            problems.add(name, _UNKNOWN_QUALITY, int(unknown.sum()), examples)
         quality[np.isnan(cells.value)] = Quality.BAD
         return _rows(times.take(rows), tag[rows], cells.value, quality)
 
@@ -239,8 +241,9 @@ class ParquetFile:
     def _count_words(
         self, cells: Cells, asked: npt.NDArray[np.bool_], problems: ProblemCount
     ) -> None:
-        count = int((cells.not_understood & asked).sum())
-        problems.add(self._path.name, "", _NOT_A_NUMBER, count, example=cells.example)
+        unknown = cells.not_understood & asked
+        examples = first_few(unknown, cells.text)
+        problems.add(self._path.name, _NOT_A_NUMBER, int(unknown.sum()), examples)
 
     def _batches(self, groups: Sequence[Group], columns: list[str]) -> Iterator[pa.RecordBatch]:
         numbers = [group.number for group in groups]

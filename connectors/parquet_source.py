@@ -83,7 +83,7 @@ class ParquetSource:
         rows = self._settled(parts, start, end, problems)
         keep = (rows.tag < len(names)) & (rows.time >= start) & (rows.time < end)
         table, replaced = tidy(rows if keep.all() else rows.keep(keep), names)
-        problems.add(self._options.path, "", _REPLACED, replaced)
+        problems.add(self._options.path, _REPLACED, replaced)
         return ReadResult(table, problems.problems())
 
     def probe(self) -> Probe:
@@ -171,7 +171,7 @@ class ParquetSource:
             known = self._known.get(path)
             if known is not None and known.error is None:
                 known.error = error
-                problems.add(str(path), "", f"file passed over: {error}", 1)
+                problems.add(str(path), f"file passed over: {error}", 1)
             raise error from failed
 
     def _settled(
@@ -184,7 +184,7 @@ class ParquetSource:
         part = np.repeat(np.arange(len(parts), dtype=np.int32), lengths)
         rows, unsettled = settle_doubled_hour(rows, part)
         counted = (rows.time[unsettled] >= start) & (rows.time[unsettled] < end)
-        problems.add(self._options.path, "", _UNSETTLED, int(counted.sum()))
+        problems.add(self._options.path, _UNSETTLED, int(counted.sum()))
         return rows
 
 

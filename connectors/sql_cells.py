@@ -12,7 +12,7 @@ import pyarrow as pa
 from connectors.base import Quality
 from connectors.numbers import NumberReader, floats
 from connectors.quality import QualityWords
-from connectors.tidy import Rows
+from connectors.tidy import Rows, first_few
 from connectors.times import NO_TIME
 
 if TYPE_CHECKING:
@@ -52,10 +52,10 @@ class CellReader:
         parsed = times.parse(cells)
         there = parsed.first != NO_TIME
         missing = parsed.in_missing_hour
-        problems.add(self._where, "", _MISSING_HOUR, int(missing.sum()))
+        problems.add(self._where, _MISSING_HOUR, int(missing.sum()))
         lost = ~there & ~missing
-        example = str(cells[int(lost.argmax())]) if lost.any() else ""
-        problems.add(self._where, "", _NO_TIME, int(lost.sum()), example=example)
+        examples = first_few(lost, cells.__getitem__)
+        problems.add(self._where, _NO_TIME, int(lost.sum()), examples)
         return parsed, there
 
     def long(
@@ -128,15 +128,17 @@ class CellReader:
             value = floats(cells)
         except (TypeError, ValueError):
             parsed = self._numbers.read(pa.array(["" if c is None else str(c) for c in cells]))
-            unknown = int(parsed.not_understood.sum())
-            problems.add(self._where, "", _NOT_A_NUMBER, unknown, example=parsed.example)
+            unknown = parsed.not_understood
+            examples = first_few(unknown, cells.__getitem__)
+            problems.add(self._where, _NOT_A_NUMBER, int(unknown.sum()), examples)
             return parsed.value, ~parsed.empty
         there = np.ones(len(value), dtype=np.bool_)
         if np.isnan(value).any():
             there = np.asarray(_objects(cells) != None, dtype=np.bool_)  # noqa: E711 - by cell
         infinite = np.isinf(value)
         if infinite.any():
-            problems.add(self._where, "", _NOT_A_NUMBER, int(infinite.sum()))
+            examples = first_few(infinite, cells.__getitem__)
+            problems.add(self._where, _NOT_A_NUMBER, int(infinite.sum()), examples)
             value[infinite] = np.nan
         return value, there
 
@@ -149,8 +151,8 @@ class CellReader:
         words = [_word(cell) for cell in distinct]
         classes, unknown = self._words.classify(words)
         rows = unknown[at]
-        example = words[at[int(rows.argmax())]] if rows.any() else ""
-        problems.add(self._where, "", _UNKNOWN_QUALITY, int(rows.sum()), example=example)
+        examples = first_few(rows, lambda row: words[at[row]])
+        problems.add(self._where, _UNKNOWN_QUALITY, int(rows.sum()), examples)
         return classes[at]
 
 

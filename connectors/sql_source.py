@@ -60,10 +60,10 @@ class SqlSource:
         inside = (rows.time >= start) & (rows.time < end)
         rows = rows if inside.all() else rows.keep(inside)
         unsettled = rows.doubled_at
-        problems.add(self._options.named, "", _UNSETTLED, len(unsettled))
+        problems.add(self._options.named, _UNSETTLED, len(unsettled))
         rows.quality[unsettled] = np.maximum(rows.quality[unsettled], np.uint8(Quality.UNCERTAIN))
         table, replaced = tidy(rows, names)
-        problems.add(self._options.named, "", _REPLACED, replaced)
+        problems.add(self._options.named, _REPLACED, replaced)
         return ReadResult(table, problems.problems())
 
     def probe(self) -> Probe:

@@ -14,7 +14,7 @@ from sqlalchemy.types import NullType
 
 from connectors.base import ConnectorError, Probe, Window
 from connectors.sql_times import SqlTimes
-from connectors.tidy import ProblemCount, Rows, join_rows
+from connectors.tidy import ProblemCount, Rows, first_few, join_rows
 from connectors.times import NO_TIME, from_microseconds
 
 if TYPE_CHECKING:
@@ -98,8 +98,8 @@ class TableReader:
         if ends[0] is not None:
             parsed = found.times.parse(list(ends))
             lost = parsed.first == NO_TIME
-            example = str(ends[int(lost.argmax())])
-            problems.add(self._options.table, "", _NO_TIME, int(lost.sum()), example=example)
+            examples = first_few(lost, ends.__getitem__)
+            problems.add(self._options.table, _NO_TIME, int(lost.sum()), examples)
             if not lost.any():
                 first, last = from_microseconds(np.array([parsed.first[0], parsed.second[1]]))
         if self._options.layout == "wide":

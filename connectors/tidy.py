@@ -4,20 +4,30 @@ from __future__ import annotations
 
 from collections import Counter
 from dataclasses import dataclass
+from itertools import islice
 from typing import TYPE_CHECKING
 
 import numpy as np
 import pandas as pd
 
-from connectors.base import Mark, Problem, Quality
+from connectors.base import FEW, Example, Mark, Problem, Quality
 from connectors.times import from_microseconds, resolve_doubled_hour
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Callable, Iterable, Iterator, Sequence
 
     import numpy.typing as npt
 
-__all__ = ["ProblemCount", "Rows", "join_rows", "settle_doubled_hour", "tidy"]
+__all__ = [
+    "ProblemCount",
+    "Rows",
+    "first_few",
+    "join_rows",
+    "settle_doubled_hour",
+    "tidy",
+]
+
+_LONGEST = 40
 
 
 @dataclass(frozen=True)
@@ -72,32 +82,48 @@ class Rows:
 
 
 class ProblemCount:
-    """Counts problems by what they are; keeps the place of the first of each."""
+    """Counts problems by what they are; keeps the first few of each."""
 
     def __init__(self) -> None:
         self._counts: Counter[tuple[str, str]] = Counter()
-        self._first: dict[tuple[str, str], tuple[str, str]] = {}
+        self._examples: dict[tuple[str, str], list[Example]] = {}
 
-    def add(self, source: str, place: str, what: str, count: int, *, example: str = "") -> None:
+    def add(self, source: str, what: str, count: int, examples: Iterable[Example] = ()) -> None:
         """Count a problem.
 
         Args:
             source: the file or table.
-            place: where in it the first one stands, empty when there is no place to name.
             what: what was found and what became of it.
             count: how often; nothing is noted for 0.
-            example: the first text concerned.
+            examples: the first of them.
         """
         if not count:
             return
-        key = (source, what)
-        self._counts[key] += int(count)
-        shown = f" (first: {example[:40]!r})" if example else ""
-        self._first.setdefault(key, (f"{source}:{place}" if place else source, what + shown))
+        self._counts[source, what] += int(count)
+        kept = self._examples.setdefault((source, what), [])
+        kept += list(islice(examples, FEW - len(kept)))
 
     def problems(self) -> tuple[Problem, ...]:
         """Return what was counted, in the order it was met."""
-        return tuple(Problem(*self._first[key], count) for key, count in self._counts.items())
+        return tuple(
+            Problem(*key, count, tuple(self._examples[key])) for key, count in self._counts.items()
+        )
+
+
+def first_few(
+    rows: npt.NDArray[np.bool_],
+    text: Callable[[int], object],
+    place: Callable[[int], str] = lambda _: "",
+) -> Iterator[Example]:
+    """Yield the first few of some rows as examples.
+
+    Args:
+        rows: where they are.
+        text: what stands in a row, by its position.
+        place: where a row stands, by its position.
+    """
+    for at in np.flatnonzero(rows)[:FEW].tolist():
+        yield Example(place(at), str(text(at)).strip()[:_LONGEST])
 
 
 def join_rows(parts: Sequence[Rows]) -> Rows:

@@ -58,14 +58,15 @@ class Tally:
     Attributes:
         windows: how many were stored.
         readings, bad, missing: readings; those left out; cells without a value.
-        problems: what the sources passed over, counted.
+        problems: what the sources passed over, by source and kind, counted over all windows, with
+            the first few of each.
     """
 
     windows: int = 0
     readings: int = 0
     bad: int = 0
     missing: int = 0
-    problems: dict[tuple[str, str], int] = field(default_factory=dict)
+    problems: dict[tuple[str, str], Problem] = field(default_factory=dict)
 
     def add(self, computed: Computed) -> None:
         """Count a window in."""
@@ -77,8 +78,10 @@ class Tally:
             self._note(problem)
 
     def _note(self, problem: Problem) -> None:
-        key = (problem.where, problem.what)
-        self.problems[key] = self.problems.get(key, 0) + problem.count
+        known = self.problems.get((problem.source, problem.what))
+        self.problems[problem.source, problem.what] = (
+            problem if known is None else known.with_more(problem)
+        )
 
 
 def windows(start: int, end: int) -> list[tuple[int, int]]:

@@ -297,14 +297,14 @@ class Daemon:
 
     def _tell_problems(self, done: list[Computed]) -> None:
         for problem in (p for computed in done for p in computed.problems):
-            key = (problem.where, problem.what)
+            key = (problem.source, problem.what)
             if key in self._told:
                 continue
             if len(self._told) >= _SEEN:
                 self._told.clear()
             self._told.add(key)
             logger().warning(
-                "passed over in a source", where=problem.where, what=problem.what,
+                "passed over in a source", where=problem.source, what=str(problem),
                 count=problem.count,
             )  # fmt: skip
 

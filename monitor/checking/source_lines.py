@@ -148,7 +148,7 @@ def _problems(probe: Probe, passed: int) -> list[str]:
     if not probe.problems:
         return []
     worst = max(probe.problems, key=lambda problem: problem.count)
-    return [f"passed over {passed}, most: {worst.what} ({worst.where})"]
+    return [f"passed over {passed}, most: {worst} ({worst.source})"]
 
 
 def span(seconds: float) -> str:

@@ -155,7 +155,7 @@ def _newest_end(store: SiteStore) -> int:
 
 
 def _report(site: ReadSite, tally: Tally, first: int, last: int, *, as_json: bool) -> None:
-    problems = sorted(tally.problems.items(), key=lambda found: -found[1])
+    problems = sorted(tally.problems.items(), key=lambda found: -found[1].count)
     if as_json:
         write_json(
             {
@@ -166,8 +166,13 @@ def _report(site: ReadSite, tally: Tally, first: int, last: int, *, as_json: boo
                 "bad": tally.bad,
                 "missing": tally.missing,
                 "passed_over": [
-                    {"where": where, "what": what, "count": times}
-                    for (where, what), times in problems
+                    {
+                        "where": where,
+                        "what": what,
+                        "count": problem.count,
+                        "examples": [{"place": e.place, "text": e.text} for e in problem.examples],
+                    }
+                    for (where, what), problem in problems
                 ],
             }
         )
@@ -178,7 +183,7 @@ def _report(site: ReadSite, tally: Tally, first: int, last: int, *, as_json: boo
         f"{count(tally.readings, 'reading')}, {tally.bad} bad, "
         f"{count(tally.missing, 'cell')} without a value"
     )
-    for (where, what), times in problems[:_SHOWN_PROBLEMS]:
-        say(f"passed over {times}: {what} ({where})")
+    for (where, _), problem in problems[:_SHOWN_PROBLEMS]:
+        say(f"passed over {problem.count}: {problem} ({where})")
     if len(problems) > _SHOWN_PROBLEMS:
         say(f"and {len(problems) - _SHOWN_PROBLEMS} other kinds; --json lists them all")

@@ -230,7 +230,7 @@ def test_words_in_value_cells_are_bad_and_only_unknown_ones_are_counted(tmp_path
     (problem,) = result.problems
     assert problem.count == 1
     assert problem.where == "export.csv:line 6"
-    assert "'gestört'" in problem.what
+    assert str(problem).endswith("(first: line 6 'gestört')")
 
 
 def test_an_unknown_quality_word_is_uncertain_and_counted(tmp_path):
@@ -250,19 +250,51 @@ def test_bad_rows_are_counted_with_the_place_of_the_first_and_reported_once(tmp_
     reader = source(tmp_path)
     result = reader.read(TAGS, DAY)
     assert len(result.readings) == 4
-    assert {(p.where, p.what, p.count) for p in result.problems} == {
+    assert {(p.where, str(p), p.count) for p in result.problems} == {
         (
             "export.csv:after line 2",
             (
                 "row dropped: more or fewer cells than the header"
-                " (first: '2026-01-31 07:00:00,62-PT-001')"
+                " (first: after line 2 '2026-01-31 07:00:00,62-PT-001',"
+                " after line 2 '2026-01-31 07:02:00,62-PT-001,1,5,Good')"
             ),
             2,
         ),
-        ("export.csv:line 6", "row dropped: its time cannot be read (first: 'yesterday')", 2),
-        ("export.csv:line 7", "row dropped: it names no tag", 1),
+        (
+            "export.csv:line 6",
+            (
+                "row dropped: its time cannot be read"
+                " (first: line 6 'yesterday', line 8 '2026-13-31 07:00:00')"
+            ),
+            2,
+        ),
+        ("export.csv:line 7", "row dropped: it names no tag (first: line 7)", 1),
     }
+    # Every row of the file is either a reading or counted with its reason.
+    assert len(result.readings) + sum(p.count for p in result.problems) == 9
     assert reader.read(TAGS, DAY).problems == ()
+
+
+def test_of_a_problem_the_first_few_are_kept_over_all_blocks(tmp_path, monkeypatch):
+    monkeypatch.setattr(connectors.csv_index, "BLOCK", 100)
+    write(tmp_path, LONG + "".join(f"never {n},62-PT-001,{n},Good\n" for n in range(40)))
+    (problem,) = source(tmp_path).read(TAGS, DAY).problems
+    assert problem.count == 40
+    assert [(e.place, e.text) for e in problem.examples] == [
+        ("line 6", "never 0"),
+        ("line 7", "never 1"),
+        ("line 8", "never 2"),
+    ]
+
+
+def test_a_decimal_comma_that_the_site_file_does_not_know_of_is_called_by_its_name(tmp_path):
+    write(tmp_path, LONG.replace(",", ";").replace(".", ","))
+    result = source(tmp_path, delimiter=";").read(TAGS, DAY)
+    (problem,) = result.problems
+    assert problem.what == (
+        "value has a decimal comma: the reading is kept as bad; set decimal = ','"
+    )
+    assert problem.examples[0].text == "41,5"
 
 
 def test_a_stray_quotation_mark_does_not_swallow_the_rows_after_it(tmp_path):
