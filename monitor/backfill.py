@@ -19,6 +19,7 @@ import structlog
 
 from connectors.base import ConnectorError, Window
 from monitor.ahead import on_cluster, on_processes
+from monitor.changed import Changed
 from monitor.cycle import compute_window, run_window, store_window
 from monitor.errors import WrongUseError
 from monitor.log import logger
@@ -60,6 +61,7 @@ class Tally:
         readings, bad, missing: readings; those left out; cells without a value.
         problems: what the sources passed over, by source and kind, counted over all windows, with
             the first few of each.
+        why: what made stored figures be computed again, empty for nothing.
     """
 
     windows: int = 0
@@ -67,6 +69,7 @@ class Tally:
     bad: int = 0
     missing: int = 0
     problems: dict[tuple[str, str], Problem] = field(default_factory=dict)
+    why: str = ""
 
     def add(self, computed: Computed) -> None:
         """Count a window in."""
@@ -188,7 +191,7 @@ def catch_up(
     newest = store.newest()
     if newest is None:
         logger().info("the store is empty: taking the last 24 hours; use backfill for older ones")
-        start = (end - DAY) // HOUR * HOUR
+        reached = start = (end - DAY) // HOUR * HOUR
     else:
         reached = int(newest.timestamp()) + store.interval_s
         late = _late(site, store, sources, min(reached, end))
@@ -199,6 +202,7 @@ def catch_up(
         # What came so late that its time has expired stays out, as with `backfill`.
         start = max(start, oldest_writable(kept(site), now) or start)
     done: list[Computed] = []
+    changed = Changed.since(store, start, min(reached, end))
     with recorded_run(site, store, run_kind, start, end) as (run_id, tally):
         cut, skipped = windows(start, end), 0
         for first, last in cut:
@@ -214,6 +218,8 @@ def catch_up(
                 computed = run_window(site, store, sources, first, last, run_id)
             done.append(computed)
             tally.add(computed)
+            changed.note(computed.batch)
+        tally.why = changed.told(site)
     if skipped:
         logger().info("days without any reading were not stored", days=skipped)
     return done
@@ -257,7 +263,7 @@ def recorded_run(
         except Exception as second:  # noqa: BLE001 - the first cause is the one to tell
             logger().warning("the failed run could not be recorded", run=run_id, cause=str(second))
         raise
-    _finish(store, run_id, "done", tally, _windows(tally.windows))
+    _finish(store, run_id, "done", tally, _message(tally))
 
 
 @contextmanager
@@ -276,8 +282,14 @@ def recorded_sources(site: Site, store: SiteStore, job: str) -> Iterator[Mapping
         yield sources
 
 
-def _windows(count: int) -> str:
-    return "1 window" if count == 1 else f"{count} windows"
+def _message(tally: Tally) -> str:
+    """What a run came to, for a person: windows, why some again, what most was passed over."""
+    parts = ["1 window" if tally.windows == 1 else f"{tally.windows} windows", tally.why]
+    if tally.problems:
+        worst = max(tally.problems.values(), key=lambda problem: problem.count)
+        total = sum(problem.count for problem in tally.problems.values())
+        parts.append(f"passed over {total}, most: {worst} ({worst.source})")
+    return "; ".join(filter(None, parts))
 
 
 def _finish(store: SiteStore, run_id: int, status: str, tally: Tally, message: str) -> None:
