@@ -23,8 +23,8 @@ def _site(folder, unit="K", **stated):
             "out": {"pressure": "0.5 bar(a)", "phase": "vapour", "flow": "5 kg/s"},
         },
         {"valve": {"kind": "control_volume", "ports": {"inlet": "in", "outlet": "out"}}},
-        {"P": {"unit": "bar(a)"}, "T": {"unit": "degC"}, "D": {"unit": unit, "range": [-20.0, 80.0]},
-         "P2": {"unit": "bar(g)"}},
+        {"P": {"unit": "bar(a)"}, "T": {"unit": "degC"}, "P2": {"unit": "bar(g)"},
+         "D": {"unit": unit, "range": [-20.0, 80.0]}},
     )  # fmt: skip
 
 
