@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 import pyarrow as pa
-from sqlalchemy import BigInteger, DateTime, String, select
+from sqlalchemy import BigInteger, DateTime, String, or_, select
 
 from connectors.base import ConnectorError
 from connectors.numbers import floats
@@ -76,9 +76,7 @@ class SqlTimes:
             zone=options.time_zone,
         )
 
-    def condition(
-        self, connection: Connection, window: Window
-    ) -> tuple[ColumnElement[bool], ColumnElement[bool]]:
+    def condition(self, connection: Connection, window: Window) -> tuple[ColumnElement[bool], ...]:
         """Return what a row must fulfil to be in the window, or close to it.
 
         Local times and texts are asked for with a margin: the exact cut is made on UTC afterwards.
@@ -140,8 +138,13 @@ class SqlTimes:
 
     def _text_between(
         self, connection: Connection, start: pd.Timestamp, end: pd.Timestamp
-    ) -> tuple[ColumnElement[bool], ColumnElement[bool]]:
-        """Compare texts as texts, written as the column's own are."""
+    ) -> tuple[ColumnElement[bool], ...]:
+        """Compare texts as texts, whether a blank or a T stands before the time of day.
+
+        A blank sorts before a T, so that one range holds the window in both forms: from its start
+        with a blank to its end with a T. What lies in it too, the first day's earlier times with a
+        T and the last day's later ones with a blank, is taken out again.
+        """
         example = connection.execute(
             select(self.column).where(self.column.is_not(None)).limit(1)
         ).scalar()
@@ -151,13 +154,19 @@ class SqlTimes:
                 f"column '{self.name}' holds times such as {text[:40]!r}, which are no ISO "
                 "texts; correct the source's time_kind (epoch_s and epoch_ms are for numbers)"
             )
-        separator = text[_DATE] if len(text) > _DATE else "T"
         plain = text[_DATE:].rstrip("Zz").replace("+00:00", "")
         if "+" in plain or "-" in plain or (self.zone != "UTC" and plain != text[_DATE:]):
             start, end = start - _FARTHEST_OFFSET, end + _FARTHEST_OFFSET
-        low = start.floor("min").isoformat(sep=separator)[:_MINUTE]
-        high = (end.ceil("min") + dt.timedelta(minutes=1)).isoformat(sep=separator)[:_MINUTE]
-        return self._between(low, high)
+        first, last = start.floor("min"), end.ceil("min") + dt.timedelta(minutes=1)
+        first_day, last_day = f"{first:%Y-%m-%d}", f"{last:%Y-%m-%d}"
+        since, until = f"{first:%H:%M}", f"{last:%H:%M}"
+        # A date alone is its midnight, and sorts before all times of its day.
+        low = first_day if since == "00:00" else f"{first_day} {since}"
+        return (
+            *self._between(low, f"{last_day}T{until}"),
+            or_(self.column < f"{first_day}T", self.column >= f"{first_day}T{since}"),
+            or_(self.column < f"{last_day} {until}", self.column >= f"{last_day}T"),
+        )
 
     def _between(
         self, low: object, high: object

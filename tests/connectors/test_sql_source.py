@@ -170,6 +170,35 @@ def test_times_kept_as_text(database, source, write, zone):
     assert rows(source(database, time_kind="text_iso", time_zone=zone).read(TAGS, DAY)) == EXPECTED
 
 
+@pytest.mark.parametrize(
+    ("start", "end"),
+    [
+        ("2026-01-31 06:00", "2026-01-31 08:00"),
+        ("2026-01-31 22:00", "2026-02-01 02:00"),
+        ("2026-01-31 00:00", "2026-02-01 00:00"),
+        ("2026-01-30 23:00", "2026-02-02 01:00"),
+    ],
+)
+def test_texts_with_a_blank_and_with_a_t_are_both_found_at_the_windows_edges(
+    database, source, start, end
+):
+    times = pd.date_range("2026-01-30 12:00", "2026-02-02 12:00", freq="30min")
+    forms = (f"{{:%Y-%m-%d{separator}%H:%M:%S}}" for separator in " T")
+    blank, letter = ([form.format(t) for t in times] for form in forms)
+    cells = [(t, "blank", 1.0, "Good") for t in blank] + [(t, "T", 1.0, "Good") for t in letter]
+    cells += [(f"{day:%Y-%m-%d}", "date", 1.0, "Good") for day in times.normalize().unique()]
+    fill(database, "text", cells)
+    reader = source(database, time_kind="text_iso")
+    found = reader.read(["blank", "T", "date"], window(start, end)).readings
+    asked = times[(times >= start) & (times < end)]
+    for tag, expected in (
+        ("blank", asked),
+        ("T", asked),
+        ("date", asked[asked.hour * 60 + asked.minute == 0]),
+    ):
+        assert list(found["time"][found["tag"] == tag].dt.tz_localize(None)) == list(expected)
+
+
 def test_times_that_are_numbers_where_texts_are_expected_are_told(database, source):
     fill(database, "bigint", [(1769839200, "a", 1.0, "Good")])
     with pytest.raises(ConnectorError, match=r"no ISO texts; correct the source's time_kind"):
