@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import datetime as dt
 import itertools
+import math
 import time
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, field
@@ -44,12 +45,22 @@ __all__ = [
     "last_complete",
     "recorded_run",
     "recorded_sources",
+    "window_length",
     "windows",
 ]
 
 HOUR, DAY = 3600, 86400
 _FEW = 3
 """So many windows are done sooner than another process is up."""
+_CELLS = 3000
+"""Cells of a window that are enough: each call's own cost no longer counts, the lead-in hardly."""
+_READINGS = 3_000_000
+"""Readings of a window in memory, some hundred bytes each with their figures; a reading a minute
+and tag, or a cell where that is shorter, is reckoned with."""
+_LONGEST = 7
+"""[days] Of a window, so that what is done shows, and little is lost when it ends midway."""
+_PARTS = 10
+"""Windows that a stretch of many days is cut into at least: processes share it evenly."""
 
 
 @dataclass
@@ -87,10 +98,33 @@ class Tally:
         )
 
 
-def windows(start: int, end: int) -> list[tuple[int, int]]:
-    """Cut [start, end) at midnights UTC; integer UTC seconds, half open."""
-    cuts = [start, *range((start // DAY + 1) * DAY, end, DAY), end]
+def windows(start: int, end: int, length: int = DAY) -> list[tuple[int, int]]:
+    """Cut [start, end), integer UTC seconds, half open.
+
+    Args:
+        start: on a full hour.
+        end: on the grid.
+        length: [s] of a window: hours that divide a day, or whole days, from midnight UTC on.
+    """
+    step = min(length, DAY)
+    cuts = [start, *range((start // step + 1) * step, end, length), end]
     return [(a, b) for a, b in itertools.pairwise(cuts) if a < b]
+
+
+def window_length(site: Site, stretch: int) -> int:
+    """How long the windows of a stretch are best [s], see `windows`.
+
+    As long as the overhead of each wants it, as short as memory and progress want it: a week of
+    5-minute figures, two days of 1-minute figures, and hours where a site has thousands of tags.
+    """
+    interval = int(site.file.site.interval)
+    readings = len(site.used_tags()) * DAY / min(interval, 60)
+    most = _READINGS / readings
+    if most < 1:
+        return next((h for h in (12, 8, 6) if h <= most * 24), 4) * HOUR
+    enough = _CELLS * interval // DAY
+    share = math.ceil(stretch / DAY / _PARTS)
+    return max(min(int(most), enough, share, _LONGEST), 1) * DAY
 
 
 def last_complete(site: Site, now: float) -> int:
@@ -116,7 +150,7 @@ def backfill(
     workers: int = 1,
     cluster: str = "",
 ) -> Tally:
-    """Compute a stretch of time, a UTC day a window.
+    """Compute a stretch of time, window by window (`window_length`).
 
     Args:
         site: the site.
@@ -146,7 +180,7 @@ def backfill(
             f"figures from before {since:%Y-%m-%d} have expired; begin there or later, or set "
             "[store] keep_cells to a longer time"
         )
-    cut = windows(first, last)
+    cut = windows(first, last, window_length(site, last - first))
     with recorded_run(site, store, run_kind, first, last) as (run_id, tally):
         with _computed(site, cut, workers, cluster) as stream:
             for computed in stream:
@@ -204,7 +238,8 @@ def catch_up(
     done: list[Computed] = []
     changed = Changed.since(store, start, min(reached, end))
     with recorded_run(site, store, run_kind, start, end) as (run_id, tally):
-        cut, skipped = windows(start, end), 0
+        length = min(window_length(site, end - start), DAY)
+        cut, skipped = windows(start, end, length), 0
         for first, last in cut:
             if stop():
                 break

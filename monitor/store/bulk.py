@@ -28,6 +28,7 @@ Values = npt.NDArray[Any]
 
 _ID_CHUNK = 5000
 """Ids in one statement: far below both databases' limit on a statement's length."""
+_ROWS_CHUNK = 10_000
 _PROVENANCE = "run_id"
 """Not compared: a row keeps the run that last changed it."""
 
@@ -112,7 +113,7 @@ def _replace_sqlite(
 ) -> Changes:
     driver: Any = connection.connection.driver_connection
     count = len(next(iter(columns.values())))
-    rows = zip(*(_plain(values) for values in columns.values()), strict=True)
+    rows = _rows(list(columns.values()), count)
     if not any(driver.execute(_any(table, where)).fetchone() for where in scope.conditions("t")):
         driver.executemany(_sqlite_insert(table), rows)
         return Changes(count, count, 0)
@@ -146,9 +147,14 @@ def _remove_sqlite(
     return len(gone)
 
 
-def _plain(values: Values) -> list[Any]:
-    """Python numbers for the driver, which stores NaN as NULL by itself."""
-    return values.tolist()  # type: ignore[no-any-return]
+def _rows(columns: Sequence[Values], count: int) -> Iterator[tuple[Any, ...]]:
+    """Rows of Python numbers for the driver, which stores NaN as NULL by itself.
+
+    A part at a time, since a Python number takes five times the room of one in an array.
+    """
+    for start in range(0, count, _ROWS_CHUNK):
+        part = slice(start, start + _ROWS_CHUNK)
+        yield from zip(*(values[part].tolist() for values in columns), strict=True)
 
 
 @cache
