@@ -29,10 +29,12 @@ if TYPE_CHECKING:
 __all__ = [
     "Account",
     "Balances",
+    "Destruction",
     "account",
     "balances",
     "content_rates",
     "content_uncertainty",
+    "destruction",
 ]
 
 # Inlets that carry less than this share of what the outlets carry do not value what is missing.
@@ -89,6 +91,16 @@ class Account:
     product: FloatArray
 
 
+@dataclass(frozen=True)
+class Destruction:
+    """The part of an account that Gouy and Stodola give, without exergies: all [W]."""
+
+    heat_loss_exergy: FloatArray
+    unaccounted: FloatArray
+    stored_rate: FloatArray
+    destroyed: FloatArray
+
+
 def content_rates(drawn: Drawn) -> Rates:
     """Rates of change of what the vessel holds, over each cell."""
     held = drawn.content
@@ -139,11 +151,9 @@ def balances(drawn: Drawn) -> Balances:
     )
 
 
-def account(drawn: Drawn, counted: Balances, dead: DeadState) -> Account:
-    """Draw up the exergy account against one dead state."""
+def destruction(drawn: Drawn, counted: Balances, dead: DeadState) -> Destruction:
+    """What is destroyed and what leaves unused, against one dead state."""
     inlets, outlets = drawn.facing("in"), drawn.facing("out")
-    exergy_in = _add(*(s.exergy(dead) for s in inlets))
-    exergy_out = _add(*(s.exergy(dead) for s in outlets))
     T0 = dead.temperature
     stated = drawn.item.options.boundary_temperature
     boundary = T0 if stated is None else stated
@@ -170,17 +180,29 @@ def account(drawn: Drawn, counted: Balances, dead: DeadState) -> Account:
     # Burning turns the fuel's exergy above its heating value into nothing; there is no entropy
     # of a fuel in the steam tables, so it joins Gouy-Stodola as what it is worth.
     chemical = _sum(inlets, "chemical") - _sum(outlets, "chemical")
-    destroyed = np.asarray(T0 * entropy_generation + chemical)
-    balance = exergy_in - exergy_out - heat_exergy - unaccounted - stored_rate
+    return Destruction(
+        heat_loss_exergy=np.asarray(heat_exergy),
+        unaccounted=np.asarray(unaccounted),
+        stored_rate=np.asarray(stored_rate),
+        destroyed=np.asarray(T0 * entropy_generation + chemical),
+    )
+
+
+def account(drawn: Drawn, counted: Balances, dead: DeadState) -> Account:
+    """Draw up the exergy account against one dead state."""
+    exergy_in = _add(*(s.exergy(dead) for s in drawn.facing("in")))
+    exergy_out = _add(*(s.exergy(dead) for s in drawn.facing("out")))
+    gone = destruction(drawn, counted, dead)
+    balance = exergy_in - exergy_out - gone.heat_loss_exergy - gone.unaccounted - gone.stored_rate
     fuel, product = drawn.item.kind.fuel(drawn, dead)
     return Account(
         exergy_in=exergy_in,
         exergy_out=exergy_out,
-        heat_loss_exergy=np.asarray(heat_exergy),
-        unaccounted=np.asarray(unaccounted),
-        stored_rate=np.broadcast_to(stored_rate, destroyed.shape).astype(float),
-        destroyed=destroyed,
-        closure=np.asarray(balance - destroyed),
+        heat_loss_exergy=gone.heat_loss_exergy,
+        unaccounted=gone.unaccounted,
+        stored_rate=np.broadcast_to(gone.stored_rate, gone.destroyed.shape).astype(float),
+        destroyed=gone.destroyed,
+        closure=np.asarray(balance - gone.destroyed),
         fuel=fuel,
         product=product,
     )
@@ -229,10 +251,10 @@ def _unaccounted_state(
     water = entering + [s for s in outlets if s.medium == "water"]
     if not water:
         return None
-    flow = np.maximum(np.stack([s.mass_flow for s in water]), 0.0)
+    flow = np.maximum(np.array([s.mass_flow for s in water]), 0.0)
     is_inlet = (np.arange(len(water)) < len(entering)).reshape(-1, *[1] * (flow.ndim - 1))
-    enthalpy = np.stack([s.enthalpy for s in water])
-    entropy = np.stack([s.entropy for s in water])
+    enthalpy = np.array([s.enthalpy for s in water])
+    entropy = np.array([s.entropy for s in water])
     into = np.add.reduce(np.where(is_inlet, flow, 0.0))
     out = np.add.reduce(np.where(is_inlet, 0.0, flow))
     weight = np.where(is_inlet == (into >= _LITTLE * out), flow, 0.0)

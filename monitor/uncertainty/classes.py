@@ -7,6 +7,7 @@ its drift between two of them. It does not average out: an hour's mean is as unc
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -17,6 +18,8 @@ from monitor.site.units import Quantity
 if TYPE_CHECKING:
     from monitor.equipment.base import FloatArray
     from monitor.site.models import Tag
+    from monitor.site.tags import Uncertainty
+    from monitor.site.units import Unit
 
 __all__ = ["DEFAULTS", "InstrumentClass", "class_of", "standard_uncertainty"]
 
@@ -51,6 +54,11 @@ def class_of(tag: Tag) -> InstrumentClass | None:
     return None if default is None else InstrumentClass(default, stated=False)
 
 
+@lru_cache(maxsize=1024)
+def _parsed(text: str, unit: Unit) -> Uncertainty:
+    return parse_uncertainty(text, unit)
+
+
 def standard_uncertainty(tag: Tag, values: FloatArray) -> FloatArray:
     """Standard uncertainty of a tag's readings [SI]; NaN where the tag has no class.
 
@@ -61,7 +69,7 @@ def standard_uncertainty(tag: Tag, values: FloatArray) -> FloatArray:
     found = class_of(tag)
     if found is None:
         return np.full_like(values, np.nan)
-    parsed = parse_uncertainty(found.text, tag.unit)
+    parsed = _parsed(found.text, tag.unit)
     if parsed.basis == "reading":
         # A share of what the instrument shows: of degrees Celsius, not of kelvins.
         return np.asarray(parsed.amount * np.abs(values - tag.unit.offset))

@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from monitor.equipment.account import account, balances
+from monitor.equipment.account import balances, destruction
 from monitor.thermo.dead_state import DeadState, dead_state
 from monitor.uncertainty.budget import Budget, Hourly, Uncertainties
 from monitor.uncertainty.classes import class_of, standard_uncertainty
@@ -149,13 +149,14 @@ def _equipment(moved: Moved, surroundings: _Surroundings, item: Item) -> _Equipm
     drawn = moved.draw(item, wanted)
     dead = surroundings.column(wanted)
     counted = balances(drawn)
-    drawn_up = account(drawn, counted, dead)
+    gone = destruction(drawn, counted, dead)
     figures = item.kind.figures(item)
     values = item.kind.condition(drawn, dead) if figures else {}
     return _Equipment(
-        destroyed=_budget(wanted, drawn_up.destroyed),
-        heat_loss=_budget(wanted, drawn_up.heat_loss_exergy),
-        imbalance=_budget(wanted, drawn_up.unaccounted + drawn_up.closure),
+        destroyed=_budget(wanted, gone.destroyed),
+        heat_loss=_budget(wanted, gone.heat_loss_exergy),
+        # An account closes but for the energy that the readings do not account for.
+        imbalance=_budget(wanted, gone.unaccounted + counted.energy_imbalance),
         conditions={f.name: _budget(wanted, values[f.name].value) for f in figures},
     )
 
@@ -177,7 +178,7 @@ def _ledger(
         parts["lost"].append(one.heat_loss)
         parts["destroyed"].append(one.destroyed)
         parts["imbalance"].append(one.imbalance)
-    every = in_order(*(budget.sources for line in parts.values() for budget in line))
+    every = in_order(*[budget.sources for line in parts.values() for budget in line])
     places = {source: place for place, source in enumerate(every)}
     count = next(iter(equipment.values())).destroyed.moves.shape[1]
     return {line: _added(every, places, budgets, count) for line, budgets in parts.items()}

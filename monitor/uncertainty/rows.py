@@ -21,7 +21,6 @@ from monitor.equipment.base import Drawn, Signal, StreamState
 from monitor.equipment.solve import complete
 from monitor.flags import Flag
 from monitor.readings.condition import Gridded
-from monitor.site.models import Reference
 from monitor.site.units import PressureDatum, Quantity
 from monitor.streams import Gauges, stream_states, with_enthalpy
 from monitor.thermo.water import state_px
@@ -34,7 +33,7 @@ if TYPE_CHECKING:
     from monitor.equipment.base import FloatArray, Item
     from monitor.flags import FlagArray
     from monitor.site.load import Site
-    from monitor.site.models import Stream, Tag
+    from monitor.site.models import Reference, Stream, Tag
     from monitor.site.units import Unit
 
 __all__ = ["Moved", "Sample", "in_order", "move", "rows_of"]
@@ -130,8 +129,8 @@ class Moved:
     def sources(self, item: Item) -> tuple[str, ...]:
         """What a piece of equipment hangs on, its surroundings left out."""
         streams = (*item.ids("in"), *item.ids("out"))
-        own = (signal.sources for signal in self._signals[item.id].values())
-        return in_order(*(self._streams[stream].sources for stream in streams), *own)
+        own = [signal.sources for signal in self._signals[item.id].values()]
+        return in_order(*[self._streams[stream].sources for stream in streams], *own)
 
     def stream(
         self, stream: str, further: tuple[str, ...] = ()
@@ -156,8 +155,7 @@ class Moved:
     def keep(self, sources: tuple[str, ...], states: Iterable[StreamState]) -> None:
         """Take over states of shape (1 + sources, n), or of as many cells in one column."""
         for state in states:
-            shape = len(_FIELDS), 1 + len(sources), self._sample.count
-            values = np.stack([getattr(state, name) for name in _FIELDS]).reshape(shape)
+            values = _values(state, 1 + len(sources), self._sample.count)
             self._streams[state.id] = _Rows(sources, values, state)
 
     def _column(
@@ -181,7 +179,8 @@ def rows_of(sources: tuple[str, ...], wanted: tuple[str, ...]) -> npt.NDArray[np
     return np.array([0, *(places.get(source, 0) for source in wanted)], dtype=np.intp)
 
 
-def in_order(*groups: Iterable[str]) -> tuple[str, ...]:
+@lru_cache(maxsize=1024)
+def in_order(*groups: tuple[str, ...]) -> tuple[str, ...]:
     """Every source once, in the order met."""
     return tuple(dict.fromkeys(source for group in groups for source in group))
 
@@ -213,10 +212,9 @@ def move(site: Site, sample: Sample) -> Moved:
 def _measured(site: Site, sample: Sample) -> dict[str, _Rows]:
     """What the instruments alone give; unknowns that balances give are NaN."""
     states = stream_states(site, _passes(site, sample))
-    shape = (len(_FIELDS), _PASSES, sample.count)
     found = {}
     for name, state in states.items():
-        values = np.stack([getattr(state, n) for n in _FIELDS]).reshape(shape)
+        values = _values(state, _PASSES, sample.count)
         ways = _ways(site, sample, site.streams[name])
         near = (state.flag[: sample.count] & Flag.NEAR_SATURATION) != 0
         if near.any():
@@ -261,10 +259,7 @@ def _pass_of(tag: Tag, sample: Sample) -> int:
 def _ways(site: Site, sample: Sample, stream: Stream) -> dict[str, int]:
     """The tags that a stream reads, each with the pass that moved it."""
     ways: dict[str, int] = {}
-    for key in ("flow", "pressure", "temperature", "power", "heat", "boundary_temperature"):
-        reference = getattr(stream, key)
-        if not isinstance(reference, Reference):
-            continue
+    for _, reference, _ in stream.references():
         if reference.tag is not None:
             ways[reference.tag] = _pass_of(site.tags[reference.tag], sample)
         if sample.barometer_tag and _on_barometer(site, reference):
@@ -342,8 +337,8 @@ def _signal(site: Site, sample: Sample, reference: Reference) -> _SignalRows:
         mean, edges = sample.means[reference.tag], sample.edges[reference.tag]
     gauged = unit is not None and unit.quantity is Quantity.PRESSURE
     on_barometer = bool(sample.barometer_tag) and _on_barometer(site, reference)
-    own = [reference.tag] if reference.tag is not None else []
-    sources = in_order(own, [sample.barometer_tag] if on_barometer else [])
+    own = () if reference.tag is None else (reference.tag,)
+    sources = in_order(own, (sample.barometer_tag,) if on_barometer else ())
     values, ends = [], []
     for source in ("", *sources):
         here, there = (
@@ -363,6 +358,10 @@ def _step(site: Site, sample: Sample, name: str | None) -> FloatArray | float:
     if not name:
         return 0.0
     return standard_uncertainty(site.tags[name], sample.means[name])
+
+
+def _values(state: StreamState, rows: int, count: int) -> FloatArray:
+    return np.array([getattr(state, name) for name in _FIELDS]).reshape(len(_FIELDS), rows, count)
 
 
 def _state(like: StreamState, values: FloatArray, flag: FlagArray) -> StreamState:
