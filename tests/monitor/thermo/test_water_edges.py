@@ -23,6 +23,7 @@ from monitor.thermo.water import (
 )
 
 T_SAT_1_BAR = float(saturation_temperature(1e5))
+P_350 = float(saturation_pressure(623.15))
 
 # Each edge: what it is, a pressure in Pa, a temperature in K, whether it is a state, how dry.
 EDGES = [
@@ -46,6 +47,15 @@ EDGES = [
     ("gas below the critical pressure, above the critical temperature", 20e6, 700.0, True, 1.0),
     ("supercritical", 25e6, 700.0, True, np.nan),
     ("liquid above the critical pressure", 25e6, 500.0, True, 0.0),
+    ("350 degC, region 1", 20e6, 623.15, True, 0.0),
+    ("the next number above 350 degC, region 3", 20e6, np.nextafter(623.15, 1e3), True, 0.0),
+    ("where region 3 begins, on saturation", P_350, 623.15, False, None),
+    ("on the boundary between regions 2 and 3", 30e6, 698.15, True, np.nan),
+    ("where that boundary meets 100 MPa", 100e6, 863.15, True, np.nan),
+    ("800 degC at 100 MPa", 100e6, 1073.15, True, np.nan),
+    ("the critical point is on saturation", 22.064e6, 647.096, False, None),
+    ("1 mK above the critical point", 22.064e6, 647.097, True, np.nan),
+    ("10 mK below the critical temperature", 22.064e6, 647.086, True, 0.0),
     ("no pressure", np.nan, 500.0, False, None),
     ("no temperature", 1e5, np.nan, False, None),
     ("infinite pressure", np.inf, 500.0, False, None),
@@ -69,6 +79,61 @@ def test_an_edge_has_a_defined_state(pressure, temperature, valid, dryness):
     for computed in (state.enthalpy, state.entropy, state.volume, state.internal_energy):
         assert bool(np.isfinite(computed)) is valid
     assert state.dryness == pytest.approx(np.nan if dryness is None else dryness, nan_ok=True)
+
+
+# Each edge of the other ways: what it is, the way, its two numbers, T in K (None: absent), dryness.
+# T away from saturation by iapws.
+OTHER_EDGES = [
+    ("saturation at 0 degC", state_tx, 273.15, 0.5, 273.15, 0.5),
+    ("saturation below 0 degC", state_tx, 273.149, 0.5, None, None),
+    ("saturation at the critical temperature", state_tx, 647.096, 0.3, 647.096, 0.3),
+    ("saturation above it", state_tx, 647.097, 0.3, None, None),
+    ("saturation at the lowest pressure", state_px, 611.213, 1.0, 273.15, 1.0),
+    ("saturation below it", state_px, 611.212, 1.0, None, None),
+    ("saturation at the critical pressure", state_px, 22.064e6, 0.3, 647.096, 0.3),
+    ("saturation above it", state_px, 22.0641e6, 0.3, None, None),
+    ("dry", state_px, 1e5, 1.0, T_SAT_1_BAR, 1.0),
+    ("boiling", state_px, 1e5, 0.0, T_SAT_1_BAR, 0.0),
+    ("drier than dry", state_px, 1e5, np.nextafter(1.0, 2.0), None, None),
+    ("wetter than boiling", state_px, 1e5, -1e-12, None, None),
+    ("h at 0 degC", state_ph, 1e5, 59.7, 273.15, 0.0),
+    ("h below 0 degC", state_ph, 1e5, 30.0, None, None),
+    ("h above 2000 degC", state_ph, 1e5, 8e6, None, None),
+    ("h of region 5 at 500 bar", state_ph, 50e6, 4.2e6, 1167.22, np.nan),
+    ("h above 800 degC, above 500 bar", state_ph, 51e6, 4.2e6, None, None),
+    ("h where region 3 begins", state_ph, P_350, 2.5e6, 623.15, 0.92877),
+    ("h at the critical point", state_ph, 22.064e6, 2087546.845, 647.096, np.nan),
+    ("s at 100 MPa", state_ps, 100e6, 3e3, 570.35, 0.0),
+    ("s above 100 MPa", state_ps, 100.01e6, 3e3, None, None),
+    ("s at the lowest pressure", state_ps, 611.213, 9.1e3, 273.15, 0.99391),
+    ("s below the lowest pressure", state_ps, 611.0, 9.1e3, None, None),
+]
+
+
+@pytest.mark.parametrize(
+    ("way", "first", "second", "temperature", "dryness"),
+    [edge[1:] for edge in OTHER_EDGES],
+    ids=[edge[0] for edge in OTHER_EDGES],
+)
+def test_every_other_way_has_defined_edges(way, first, second, temperature, dryness):
+    state = way(first, second)
+    present = temperature is not None
+    assert bool(state.valid) is present
+    for computed in (state.enthalpy, state.entropy, state.volume, state.internal_energy):
+        assert bool(np.isfinite(computed)) is present
+    if present:
+        assert state.temperature == pytest.approx(temperature, abs=0.05)
+        assert state.dryness == pytest.approx(dryness, abs=1e-5, nan_ok=True)
+    else:
+        assert np.isnan(state.dryness)
+
+
+def test_the_critical_point_has_the_published_enthalpy_whatever_the_dryness():
+    # IAPWS R7-97(2012) at its own critical point, 322 kg/m3 and 647.096 K: 2087.5 kJ/kg, as the
+    # handbooks print it (from memory).
+    wet = state_px(CRITICAL_PRESSURE, [0.0, 0.5, 1.0])
+    assert wet.enthalpy == pytest.approx(2087.5e3, abs=100.0)
+    assert wet.volume == pytest.approx(1 / 322.0)
 
 
 def test_a_batch_of_edges_gives_what_each_gives_alone():
