@@ -138,6 +138,29 @@ class Outbox:
         with reading(self.store.engine, "read notifications") as connection:
             return {about: int(ended) for about, ended in connection.execute(query)}
 
+    def undelivered(self) -> dict[str, Entry]:
+        """Targets whose newest message that came to an end was given up, and that message."""
+        ended = ("sent", "failed")
+        newest = (
+            sa.select(_TABLE.c.target, sa.func.max(_TABLE.c.ended).label("ended"))
+            .where(*self._of(None), _TABLE.c.state.in_(ended))
+            .group_by(_TABLE.c.target)
+            .subquery()
+        )
+        same = sa.and_(_TABLE.c.target == newest.c.target, _TABLE.c.ended == newest.c.ended)
+        found = self._entries(*self._of(None), _TABLE.c.state.in_(ended), sa.exists().where(same))
+        # Of two that ended in the same second, one that arrived says that messages do.
+        arrived = {entry.target for entry in found if entry.state == "sent"}
+        return {entry.target: entry for entry in found if entry.target not in arrived}
+
+    def failed_since(self, time: int) -> int:
+        """How many messages were given up since a time (UTC seconds)."""
+        query = sa.select(sa.func.count()).where(
+            *self._of(None), _TABLE.c.state == "failed", _TABLE.c.ended > time
+        )
+        with reading(self.store.engine, "read notifications") as connection:
+            return int(connection.execute(query).scalar_one())
+
     def change(self, changes: Mapping[int, Mapping[str, Any]]) -> None:
         """Set columns of messages, by their numbers, all or none."""
         with writing(self.store.engine, "keep notifications up to date") as connection:
