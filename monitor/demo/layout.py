@@ -48,7 +48,7 @@ MACHINES = (
     Layout("CEP", "pump", ("hotwell", "cep_power"), ("condensate",)),
     Layout(
         "DA",
-        "control_volume",
+        "deaerator",
         ("da_steam", "bm_return", "disp_return", "heat_return", "condensate", "makeup"),
         ("feedwater",),
     ),
