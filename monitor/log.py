@@ -91,7 +91,9 @@ def also_to(path: Path, site: str, size: int, keep: int) -> Iterator[None]:
         yield
     finally:
         _files.remove(entry)
-        file.close()
+        # What a full disk did not take was told when it was written.
+        with contextlib.suppress(OSError):
+            file.close()
 
 
 _files: list[tuple[str, logging.Handler]] = []
