@@ -15,9 +15,11 @@ import pandas as pd
 
 from connectors.base import Quality
 from monitor.cycle import read_window
+from monitor.equipment.working import AtHand
+from monitor.equipment.working import Working as Step
 from monitor.errors import WrongUseError
 from monitor.figures import Computed, compute, lead_in
-from monitor.flags import describe
+from monitor.flags import Flag, describe
 from monitor.judging import tags_behind, tags_of_stream
 from monitor.readings.grid import Grid
 from monitor.readings.site import condition_site
@@ -25,7 +27,7 @@ from monitor.store.batch import EQUIPMENT_COLUMNS, LEDGER_COLUMNS, STREAM_COLUMN
 from monitor.store.errors import StoreError
 from monitor.store.handle import SITE_SUBJECT
 from monitor.thermo.dead_state import dead_state
-from monitor.thermo.water import state_ps
+from monitor.uncertainty.told import Contribution, budget_of, contributions, excess, suspect
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Mapping
@@ -75,21 +77,6 @@ class StateRow:
 
 
 @dataclass(frozen=True)
-class Step:
-    """One step: what it gives, the formula, the numbers in it, the outcome with its unit.
-
-    ``is_figure`` marks the step whose outcome is the figure that is explained.
-    """
-
-    gives: str
-    formula: str
-    numbers: str
-    value: float
-    unit: str
-    is_figure: bool = False
-
-
-@dataclass(frozen=True)
 class Explanation:
     """Where one figure comes from.
 
@@ -100,6 +87,9 @@ class Explanation:
         gridded, states, steps: from readings to the figure.
         computed: the figure as computed now; NaN when absent.
         rests_on: its flag in words.
+        uncertainty: its combined standard uncertainty, in its unit; NaN where none is worked out.
+        budget: what makes it up, the largest first.
+        suspect: what most easily explains a figure that contradicts the second law; or empty.
         stored: the figure in the store; None when there is none.
     """
 
@@ -114,6 +104,9 @@ class Explanation:
     steps: tuple[Step, ...]
     computed: float
     rests_on: str
+    uncertainty: float
+    budget: tuple[Contribution, ...]
+    suspect: str
     stored: float | None
 
     @property
@@ -172,13 +165,18 @@ def explain(
     start = at // interval * interval
     hour = start // HOUR * HOUR
     read = read_window(site, sources, hour, start + interval)
-    cell = _Cell(site, compute(site, read, hour, start + interval), start)
+    window = compute(site, read, hour, start + interval, with_budgets=True)
+    cell = _Cell(site, window, start)
     streams, tags = _behind(site, subject)
     computed, flag = cell.figure(subject, figure)
+    unit = _unit(site, subject, figure)
+    uncertainty, budget = _uncertainty(site, window, subject, figure)
+    beyond = excess(computed, unit) if flag & Flag.SECOND_LAW else 0.0
+    culprit = suspect(budget, beyond)
     return Explanation(
         subject=subject,
         figure=figure,
-        unit=_unit(site, subject, figure),
+        unit=unit,
         start=start,
         end=start + interval,
         readings=tuple(_readings(site, read, tags, start, start + interval)),
@@ -187,8 +185,24 @@ def explain(
         steps=tuple(_steps(site, cell, subject, figure)),
         computed=computed,
         rests_on=describe(flag),
+        uncertainty=uncertainty,
+        budget=budget,
+        suspect="" if culprit is None else culprit.sentence,
         stored=None if store is None else _stored(store, site, subject, figure, start),
     )
+
+
+def _uncertainty(
+    site: Site, window: Computed, subject: str, figure: str
+) -> tuple[float, tuple[Contribution, ...]]:
+    """Standard uncertainty and budget; the window begins with the cell's hour."""
+    found = None
+    if window.uncertainties is not None:
+        found = budget_of(window.uncertainties, subject, figure)
+    if found is None:
+        return math.nan, ()
+    budget, scale = found
+    return scale * float(budget.standard[0]), contributions(budget, scale, site.tags, 0)
 
 
 @dataclass(frozen=True)
@@ -222,6 +236,16 @@ class _Cell:
         figures = {n: float(row[n]) for n in STREAM_COLUMNS if not n.startswith("u_")}
         medium = self.site.streams[stream].medium
         return StateRow(stream, medium, figures, describe(int(row["flag"])))
+
+    def at_hand(self, item: Item) -> AtHand:
+        """What the steps of a condition figure may use."""
+        row = self._row(item.id, EQUIPMENT_COLUMNS[0])
+        return AtHand(
+            item=item,
+            streams={s: self.state(s).figures for s in (*item.ids("in"), *item.ids("out"))},
+            account={n: float(row[n]) for n in EQUIPMENT_COLUMNS},
+            ambient=float(self._row(SITE_SUBJECT, "t0_degc")["t0_degc"]),
+        )
 
     def dead(self, figure: str) -> DeadState:
         table = self.site.file.dead_state
@@ -283,10 +307,9 @@ def _steps(site: Site, cell: _Cell, subject: str, figure: str) -> Iterator[Step]
         yield from _stream_exergy(cell, subject, figure)
     elif subject in site.items and figure in {"destroyed_live_kw", "destroyed_reference_kw"}:
         yield from _destroyed(cell, site.items[subject], figure)
-    elif subject in site.items and figure == "eta_s":
-        yield from _pumping(cell, site.items[subject])
-    elif subject in site.items and figure.startswith("eta_s_"):
-        yield from _isentropic(cell, site.items[subject], figure)
+    elif subject in site.items and figure not in EQUIPMENT_COLUMNS:
+        item = site.items[subject]
+        yield from item.kind.working(cell.at_hand(item), figure)
 
 
 def _dead_step(dead: DeadState) -> Step:
@@ -376,65 +399,6 @@ def _entropies(cell: _Cell, item: Item) -> str:
         return float(np.sum(terms))
 
     return f"water out {total(item.ids('out')):.5f}, water in {total(item.ids('in')):.5f} kW/K"
-
-
-def _isentropic(cell: _Cell, item: Item, figure: str) -> Iterator[Step]:
-    """eta_s = (h_in - h_out) / (h_in - h(p_out, s_in)), Moran and Shapiro eq. 6.46."""
-    if item.ports.get("induction"):
-        # Its efficiency is that of several expansions side by side: no one line of numbers.
-        return
-    line = [*item.ports["inlet"], *item.ports.get("extraction", ()), *item.ports["exhaust"]]
-    number = int(figure.rsplit("_", 1)[1])
-    before, after = (cell.state(s).figures for s in line[number - 1 : number + 1])
-    h1, s1, h2 = before["enthalpy_kj_kg"], before["entropy_kj_kgk"], after["enthalpy_kj_kg"]
-    p2 = after["pressure_bar"]
-    ideal = float(state_ps(p2 * 1e5, s1 * 1e3).enthalpy) / 1e3
-    yield Step(
-        "enthalpy after an isentropic expansion",
-        f"h_s = h(p = {p2:.4f} bar(a), s = {s1:.6f} kJ/(kg K))",
-        f"from {line[number - 1]} to the pressure of {line[number]}",
-        ideal,
-        "kJ/kg",
-    )
-    efficiency = 100 * (h1 - h2) / (h1 - ideal) if h1 > ideal else math.nan
-    yield Step(
-        "isentropic efficiency",
-        "eta_s = (h_in - h_out) / (h_in - h_s)",
-        f"({h1:.4f} - {h2:.4f}) / ({h1:.4f} - {ideal:.4f})",
-        efficiency,
-        "%",
-        is_figure=True,
-    )
-
-
-def _pumping(cell: _Cell, item: Item) -> Iterator[Step]:
-    """The efficiency m [h(p_out, s_in) - h_in] / W, Moran and Shapiro eq. 6.48, with drive."""
-    before, after, power = (
-        cell.state(item.ports[port][0]).figures for port in ("inlet", "outlet", "power")
-    )
-    h1, s1, m, W = (
-        before["enthalpy_kj_kg"],
-        before["entropy_kj_kgk"],
-        before["mass_flow_kg_s"],
-        power["energy_kw"] / item.kind.drive_efficiency(item),
-    )
-    p2 = after["pressure_bar"]
-    ideal = float(state_ps(p2 * 1e5, s1 * 1e3).enthalpy) / 1e3
-    yield Step(
-        "enthalpy after an isentropic compression",
-        f"h_s = h(p = {p2:.4f} bar(a), s = {s1:.6f} kJ/(kg K))",
-        f"from {item.ports['inlet'][0]} to the pressure of {item.ports['outlet'][0]}",
-        ideal,
-        "kJ/kg",
-    )
-    yield Step(
-        "isentropic efficiency with drive",
-        "eta_s = m (h_s - h_in) / W",
-        f"{m:.5f} * ({ideal:.4f} - {h1:.4f}) / {W:.3f}",
-        100 * m * (ideal - h1) / W if W > 0 else math.nan,
-        "%",
-        is_figure=True,
-    )
 
 
 def _stored(store: SiteStore, site: Site, subject: str, figure: str, start: int) -> float | None:

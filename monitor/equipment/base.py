@@ -18,8 +18,9 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict
 from monitor.site.units import Quantity, UnitError, quantity
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Iterable, Mapping, Sequence
 
+    from monitor.equipment.working import AtHand, Working
     from monitor.flags import FlagArray
     from monitor.site.models import Reference, Stream
     from monitor.thermo.dead_state import DeadState
@@ -355,6 +356,10 @@ class Kind(ABC):
     def condition(self, drawn: Drawn, dead: DeadState) -> dict[str, ConditionFigure]:  # noqa: ARG002
         """Values of `figures`, by name."""
         return {}
+
+    def working(self, at: AtHand, figure: str) -> Iterable[Working]:  # noqa: ARG002
+        """The steps from stored states to one condition figure; none where a kind tells none."""
+        return ()
 
     def drive_efficiency(self, item: Item) -> float:  # noqa: ARG002
         """Measured power / power that the working fluid gives, or takes: gear, generator, motor.

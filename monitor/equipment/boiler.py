@@ -26,10 +26,14 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.heat_transfer import share
+from monitor.equipment.working import Working, ratio
 from monitor.flags import Flag
 from monitor.thermo.dead_state import dead_state
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Boiler", "BoilerOptions"]
@@ -142,3 +146,18 @@ class Boiler(Kind):
             "loss_share": ConditionFigure(share(lost, burnt), weight, nothing),
             "fuel_efficiency": ConditionFigure(100.0 * efficiency, np.maximum(burnt, 0.0), flag),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure, but the exergetic efficiency: its dead state is not the day's."""
+        burnt = at.total("energy_kw", "fuel")
+        feed = at.total("energy_kw", "feedwater")
+        if figure == "fuel_efficiency":
+            made = at.total("energy_kw", "steam", "blowdown")
+            formula = "eta = (H_steam + H_blowdown - H_feedwater) / (m_fuel LHV), direct method"
+            yield from ratio("fuel efficiency", formula, made - feed, burnt)
+        elif figure == "blowdown_share":
+            part, whole = (at.total("mass_flow_kg_s", port) for port in ("blowdown", "feedwater"))
+            yield from ratio("share of the feed water", "m_blowdown / m_feedwater", part, whole)
+        elif figure == "loss_share":
+            lost = at.total("energy_kw", "loss")
+            yield from ratio("share of the fuel", "Q_loss / (m_fuel LHV)", lost, burnt)

@@ -24,9 +24,13 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.heat_transfer import conductance, flag_where
+from monitor.equipment.working import Working, boiling_at, conductance_of, difference, heat_taken
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["ClosedFeedwaterHeater"]
@@ -106,3 +110,22 @@ class ClosedFeedwaterHeater(Kind):
                 ua / 1e3, ones, flag_where(heating & (cold.temperature > boiling))
             ),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure."""
+        cold, warm = at.only("feedwater_in"), at.only("feedwater_out")
+        if figure == "dca":
+            drain, entering = at.only("drain")["temperature_degc"], cold["temperature_degc"]
+            yield difference("drain cooler approach", "T_drain - T_in", drain, entering)
+            return
+        boiling = boiling_at(at.only("steam")["pressure_bar"])
+        yield boiling
+        if figure == "ttd":
+            formula = "T_sat - T_feedwater,out"
+            leaving = warm["temperature_degc"]
+            yield difference("terminal temperature difference", formula, boiling.value, leaving)
+        else:
+            duty = heat_taken(cold, warm)
+            yield duty
+            ends = [boiling.value - row["temperature_degc"] for row in (cold, warm)]
+            yield from conductance_of(duty.value, *ends)

@@ -13,6 +13,7 @@ Source: Heat Exchange Institute practice for UA and TTD (from memory); Bejan, Ts
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING, Annotated, cast
 
 import numpy as np
@@ -32,11 +33,15 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.heat_transfer import conductance, share
+from monitor.equipment.working import Working, boiling_at, conductance_of, difference, heat_taken
 from monitor.flags import Flag
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Condenser", "CondenserOptions"]
@@ -168,3 +173,21 @@ class Condenser(Kind):
             "duty": ConditionFigure(duty / 1e3, ones, np.zeros_like(flag)),
             "ttd_above_clean": ConditionFigure(approach_out - clean, ones, flag),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to heat transfer, terminal difference and duty."""
+        cold, warm = at.only("cooling_in"), at.only("cooling_out")
+        duty = heat_taken(cold, warm)
+        if figure == "duty":
+            yield replace(duty, is_figure=True)
+            return
+        boiling = boiling_at(at.only("steam")["pressure_bar"])
+        ends = [boiling.value - row["temperature_degc"] for row in (cold, warm)]
+        if figure == "ttd":
+            yield boiling
+            leaving = warm["temperature_degc"]
+            name = "terminal temperature difference"
+            yield difference(name, "T_sat - T_cooling,out", boiling.value, leaving)
+        elif figure == "ua":
+            yield from (duty, boiling)
+            yield from conductance_of(duty.value, *ends)

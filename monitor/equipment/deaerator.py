@@ -27,10 +27,12 @@ from monitor.equipment.base import (
 from monitor.equipment.heat_transfer import share
 from monitor.equipment.open_feedwater_heater import OpenFeedwaterHeater
 from monitor.equipment.saturated_vessel import VesselOptions, exergy_rise, mass_rise
+from monitor.equipment.working import Working, ratio
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Iterator, Mapping
 
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Deaerator"]
@@ -94,3 +96,12 @@ class Deaerator(OpenFeedwaterHeater):
         nothing = np.zeros_like(drawn.only("feedwater").flag)
         found["vent_share"] = ConditionFigure(vented, np.maximum(feedwater, 0.0), nothing)
         return found
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Those of an open heater, and the vent's share."""
+        if figure == "vent_share":
+            part, whole = (at.total("mass_flow_kg_s", port) for port in ("vent", "feedwater"))
+            yield from ratio("vent, share of the feed water", "m_vent / m_feedwater", part, whole)
+        elif figure != "ttd" or not at.item.options.signals():
+            # With a gauge of its own the vessel's pressure is no stream's.
+            yield from super().working(at, figure)

@@ -30,9 +30,13 @@ from monitor.equipment.base import (
     StreamState,
 )
 from monitor.equipment.heat_transfer import conductance, flag_where, share
+from monitor.equipment.working import Working, conductance_of, heat_taken
 from monitor.thermo.water import state_ph, state_pt
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Exchanger", "ExchangerOptions"]
@@ -120,6 +124,20 @@ class Exchanger(Kind):
             "destroyed_by_temperature": ConditionFigure(by_temperature / 1e3, ones, nothing),
             "destroyed_by_pressure": ConditionFigure(by_pressure / 1e3, ones, nothing),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to the heat transfer."""
+        if figure != "ua":
+            return
+        duty = heat_taken(at.only("cold_in"), at.only("cold_out"))
+        yield duty
+        counter = cast("ExchangerOptions", at.item.options).arrangement == "counterflow"
+        ends = ("cold_out", "cold_in") if counter else ("cold_in", "cold_out")
+        differences = [
+            at.only(hot)["temperature_degc"] - at.only(cold)["temperature_degc"]
+            for hot, cold in zip(("hot_in", "hot_out"), ends, strict=True)
+        ]
+        yield from conductance_of(duty.value, *differences)
 
 
 def _drops(item: Item, side: str) -> bool:

@@ -27,11 +27,13 @@ from monitor.equipment.base import (
 )
 from monitor.equipment.heat_transfer import flag_where, share
 from monitor.equipment.saturated_vessel import VesselOptions, exergy_rise
+from monitor.equipment.working import Working, enthalpies_at_boiling, ratio
 from monitor.thermo.water import saturated
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Iterator, Mapping
 
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["FlashVessel"]
@@ -101,3 +103,21 @@ class FlashVessel(Kind):
                 share(steam.mass_flow, ideal), np.maximum(ideal, 0.0), flag
             ),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure."""
+        h_f, h_g = enthalpies_at_boiling(at.only("steam")["pressure_bar"])
+        flow, energy = at.total("mass_flow_kg_s", "inlet"), at.total("energy_kw", "inlet")
+        ideal = Working(
+            "steam that flashes",
+            "m_s = (sum(m h)_in - m_in h_f) / (h_g - h_f)",
+            f"({energy:.3f} - {flow:.5f} * {h_f:.4f}) / ({h_g:.4f} - {h_f:.4f})",
+            (energy - flow * h_f) / (h_g - h_f),
+            "kg/s",
+        )
+        yield ideal
+        if figure == "flash_share":
+            yield from ratio("share that flashes", "m_s / m_in", ideal.value, flow)
+        else:
+            taken = at.only("steam")["mass_flow_kg_s"]
+            yield from ratio("flash steam recovered", "m_steam / m_s", taken, ideal.value)

@@ -10,6 +10,7 @@ Source: Bejan, Tsatsaronis, Moran (1996), chapter 3.2 (mass, energy, exergy of a
 
 from __future__ import annotations
 
+import math
 from typing import TYPE_CHECKING, Literal, cast
 
 import numpy as np
@@ -27,11 +28,13 @@ from monitor.equipment.base import (
     flow_mean,
     total,
 )
+from monitor.equipment.working import Working, ratio
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Iterator, Mapping
 
     from monitor.equipment.base import Medium
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Header", "HeaderOptions"]
@@ -144,6 +147,35 @@ class Header(Kind):
             found["heat_loss_coefficient"] = ConditionFigure(coefficient, ones, nothing)
         found["pressure_loss_coefficient"] = ConditionFigure(_pressure_loss(drawn), ones, nothing)
         return found
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure."""
+        if figure == "unaccounted_flow":
+            into, out = (at.total("mass_flow_kg_s", port) for port in ("inlet", "outlet"))
+            yield Working(
+                "unaccounted flow",
+                "3.6 (sum m_in - sum m_out)",
+                f"3.6 * ({into:.6f} - {out:.6f})",
+                3.6 * (into - out),
+                "t/h",
+                is_figure=True,
+            )
+        elif figure == "heat_loss_coefficient":
+            outlets = [s for s in at.at("outlet") if s["mass_flow_kg_s"] > 0]
+            flow = sum(s["mass_flow_kg_s"] for s in outlets)
+            warmth = sum(s["mass_flow_kg_s"] * s["temperature_degc"] for s in outlets)
+            mean = Working(
+                "mean temperature of the outlets",
+                "sum(m T) / sum(m)",
+                f"{warmth:.4f} / {flow:.5f}",
+                warmth / flow if flow else math.nan,
+                "degC",
+            )
+            yield mean
+            lost = at.account["heat_loss_kw"]
+            formula = "Q / (T - T0), Q the energy residual of the header"
+            excess = mean.value - at.ambient
+            yield from ratio("heat-loss coefficient", formula, lost, excess, "kW/K")
 
 
 def _pressure_loss(drawn: Drawn) -> FloatArray:

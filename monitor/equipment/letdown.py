@@ -30,11 +30,15 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.valve import ValveOptions, passing_figure, passing_flow
+from monitor.equipment.working import Working, isentropic_end
 from monitor.site.units import Quantity
 from monitor.thermo.water import state_ps
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
     from monitor.equipment.base import StreamState
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Letdown", "LetdownOptions"]
@@ -123,6 +127,24 @@ class Letdown(Kind):
                 coefficient, np.maximum(inlet.mass_flow, 0.0), position.flag
             )
         return found | passing_flow(drawn, inlet.mass_flow)
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to the work bypassed."""
+        if figure != "work_bypassed":
+            return
+        inlet, outlet = at.only("inlet"), at.only("outlet")
+        names = (at.item.ports["inlet"][0], at.item.ports["outlet"][0])
+        end = isentropic_end(inlet, outlet["pressure_bar"], names)
+        yield end
+        flow, h1 = inlet["mass_flow_kg_s"], inlet["enthalpy_kj_kg"]
+        yield Working(
+            "work of a turbine without losses",
+            "m [h1 - h(p2, s1)]",
+            f"{flow:.5f} * ({h1:.4f} - {end.value:.4f})",
+            flow * (h1 - end.value),
+            "kW",
+            is_figure=True,
+        )
 
 
 def _flow_coefficient(

@@ -12,6 +12,7 @@ Source: Bejan, Tsatsaronis, Moran (1996), table 3.3 (mixing unit); Moran and Sha
 
 from __future__ import annotations
 
+import math
 from typing import TYPE_CHECKING, ClassVar
 
 import numpy as np
@@ -27,9 +28,13 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.heat_transfer import flag_where, share
+from monitor.equipment.working import Working, boiling_at, difference
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["OpenFeedwaterHeater"]
@@ -112,6 +117,26 @@ class OpenFeedwaterHeater(Kind):
             "ttd": ConditionFigure(approach, ones, flag_where(superheated)),
             "steam_excess": ConditionFigure(excess, np.maximum(needed, 0.0), nothing),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure."""
+        out = at.only("feedwater")
+        if figure == "ttd":
+            boiling = boiling_at(out["pressure_bar"])
+            yield boiling
+            name = "terminal temperature difference"
+            yield difference(name, "T_sat - T_out", boiling.value, out["temperature_degc"])
+            return
+        h = out["enthalpy_kj_kg"]
+
+        def above(*ports: str) -> float:
+            return at.total("energy_kw", *ports) - h * at.total("mass_flow_kg_s", *ports)
+
+        needed = above("vent") - above("water")
+        formula = "sum[m (h - h_out)] of the steam / what water and vent need of it"
+        excess = 100.0 * above("steam") / needed - 100.0 if needed > 0 else math.nan
+        numbers = f"{above('steam'):.3f} / {needed:.3f} - 1"
+        yield Working("steam beyond need", formula, numbers, excess, "%", is_figure=True)
 
 
 # Water out of an open heater cannot be hotter than saturation by more than a thermometer's error.

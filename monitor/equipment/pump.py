@@ -30,11 +30,15 @@ from monitor.equipment.base import (
     measured,
 )
 from monitor.equipment.heat_transfer import flag_where, share
+from monitor.equipment.working import Working, isentropic_end, ratio
 from monitor.flags import Flag
 from monitor.site.units import Quantity
 from monitor.thermo.water import state_ps
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Pump", "PumpOptions"]
@@ -128,3 +132,31 @@ class Pump(Kind):
             ),
             "thermodynamic_efficiency": ConditionFigure(by_rise, np.maximum(rise, 0.0), uphill),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure, Moran and Shapiro eq. 6.48."""
+        before, after = at.only("inlet"), at.only("outlet")
+        measured = at.only("power")["energy_kw"]
+        shaft = measured / self.drive_efficiency(at.item)
+        if figure == "drive_loss":
+            yield Working(
+                "loss of motor and drive",
+                "W - W motor_efficiency",
+                f"{measured:.4f} - {shaft:.4f}",
+                measured - shaft,
+                "kW",
+                is_figure=True,
+            )
+            return
+        names = (at.item.ports["inlet"][0], at.item.ports["outlet"][0])
+        end = isentropic_end(before, after["pressure_bar"], names)
+        yield end
+        gain = end.value - before["enthalpy_kj_kg"]
+        if figure == "eta_s":
+            flow = before["mass_flow_kg_s"]
+            formula = f"eta_s = m (h_s - h_in) / W, m = {flow:.5f} kg/s, W that of the shaft"
+            yield from ratio("isentropic efficiency", formula, flow * gain, shaft)
+        else:
+            rise = after["enthalpy_kj_kg"] - before["enthalpy_kj_kg"]
+            formula = "eta_s = (h_s - h_in) / (h_out - h_in)"
+            yield from ratio("isentropic efficiency", formula, gain, rise)

@@ -30,10 +30,14 @@ from monitor.equipment.base import (
 )
 from monitor.equipment.heat_transfer import flag_where
 from monitor.equipment.nozzle import Orifice, zeuner_exponent
+from monitor.equipment.working import Working, enthalpies_at_boiling, ratio
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturated
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["TrapGroup", "TrapGroupOptions"]
@@ -140,3 +144,16 @@ class TrapGroup(Kind):
             )
             found["orifice_flow"] = ConditionFigure(options.failed_traps * one * 3.6, ones, nothing)
         return found
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to the blow-through."""
+        if figure == "orifice_flow" or len(at.at("inlet")) > 1:
+            return
+        inlet = at.only("inlet")
+        h_f, h_g = enthalpies_at_boiling(inlet["pressure_bar"])
+        live, formula = inlet["enthalpy_kj_kg"] - h_f, "x = (h - h_f) / (h_g - h_f)"
+        if figure == "blow_through":
+            yield from ratio("live steam in the condensate", formula, live, h_g - h_f)
+        else:
+            flow = 3.6 * inlet["mass_flow_kg_s"] * max(live, 0.0)
+            yield from ratio("blow-through", f"3.6 m x, {formula}", flow, h_g - h_f, "t/h")

@@ -20,6 +20,7 @@ K. Baumann, Journal of the IEE 59, 565 (1921) (moisture; from memory).
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Annotated, cast
 
@@ -40,14 +41,16 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.heat_transfer import flag_where
+from monitor.equipment.working import Working, enthalpies_at_boiling, isentropic_end, ratio
 from monitor.flags import Flag
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturated, state_ps
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Iterator, Mapping
 
     from monitor.equipment.base import Medium
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Section", "Turbine", "TurbineOptions", "sections"]
@@ -182,6 +185,49 @@ class Turbine(Kind):
         if _is_wet(drawn.item):
             figures["exhaust_moisture"] = _moisture(drawn)
         return figures
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure; none to an efficiency of several expansions side by side."""
+        if figure == "steam_rate":
+            flow, power = at.only("inlet")["mass_flow_kg_s"], at.only("power")["energy_kw"]
+            yield from ratio("steam per kWh", "3600 m / W", 3600.0 * flow, power, "kg/kWh")
+        elif figure == "exhaust_moisture":
+            exhaust = at.only("exhaust")
+            h_f, h_g = enthalpies_at_boiling(exhaust["pressure_bar"])
+            wet = h_g - exhaust["enthalpy_kj_kg"]
+            yield from ratio("moisture", "1 - x = (h_g - h) / (h_g - h_f)", wet, h_g - h_f)
+        elif not at.item.ports.get("induction"):
+            yield from self._expansion(at, int(figure.rsplit("_", 1)[1]))
+
+    def _expansion(self, at: AtHand, number: int) -> Iterator[Working]:
+        """One section, Moran and Shapiro eq. 6.46."""
+        ports = at.item.ports
+        line = [*ports["inlet"], *ports.get("extraction", ()), *ports["exhaust"]]
+        names = line[number - 1 : number + 1]
+        before, after = (at.streams[s] for s in names)
+        end = isentropic_end(before, after["pressure_bar"], names)
+        yield end
+        h1, h2 = before["enthalpy_kj_kg"], after["enthalpy_kj_kg"]
+        loss = cast("TurbineOptions", at.item.options).loss_per_moisture
+        value = 100 * (h1 - h2) / (h1 - end.value) if h1 > end.value else math.nan
+        yield Working(
+            "isentropic efficiency",
+            "eta_s = (h_in - h_out) / (h_in - h_s)",
+            f"({h1:.4f} - {h2:.4f}) / ({h1:.4f} - {end.value:.4f})",
+            value,
+            "%",
+            is_figure=not loss,
+        )
+        if loss:
+            x1, x2 = (1.0 if math.isnan(s["dryness"]) else s["dryness"] for s in (before, after))
+            yield Working(
+                "the same on dry steam (Baumann)",
+                "eta_s / (1 - a y), y = 1 - (x_in + x_out) / 2",
+                f"{value:.4f} / (1 - {loss:g} * (1 - ({x1:.5f} + {x2:.5f}) / 2))",
+                value / (1.0 - loss * (1.0 - (x1 + x2) / 2.0)),
+                "%",
+                is_figure=True,
+            )
 
 
 def _is_wet(item: Item) -> bool:

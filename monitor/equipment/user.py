@@ -24,9 +24,13 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.heat_transfer import flag_where, share
+from monitor.equipment.working import Working, boiling_at, ratio
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["User"]
@@ -97,3 +101,16 @@ class User(Kind):
             ),
             "ua": ConditionFigure(ua / 1e3, np.ones_like(ua), flag_where(uphill)),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure."""
+        if figure == "condensate_return":
+            part, whole = (at.total("mass_flow_kg_s", port) for port in ("condensate", "steam"))
+            yield from ratio("condensate returned", "sum m_condensate / sum m_steam", part, whole)
+            return
+        boiling = boiling_at(at.only("steam")["pressure_bar"])
+        yield boiling
+        heat = at.only("heat")
+        formula = "UA = Q / (T_sat - T_process)"
+        gap = boiling.value - heat["temperature_degc"]
+        yield from ratio("heat transfer", formula, heat["energy_kw"], gap, "kW/K")

@@ -38,6 +38,9 @@ READ = {"TA": ("degC", 12.0), "PT-1": ("bar(a)", 12.3), "PT-2": ("bar(a)", 12.1)
 START = 1_770_000_000 // 3600 * 3600
 # What an example's valve, open or closed, leaves without a value.
 ABSENT = {("letdown", "passing_flow")}
+# Judged figures that are a reading as it stands, or rest on more than the streams' stored states.
+WITHOUT_STEPS = {("vent", "passing_flow"), ("condenser", "cleanliness"), ("turbine", "eta_s_1"),
+                 ("turbine", "eta_s_2")}  # fmt: skip
 
 
 def _example(kind, folder):
@@ -114,7 +117,9 @@ def test_each_figure_of_an_example_explains_itself(kind, tmp_path):
             told = explain(site, None, sources, "it", figure.name, START + 1800)
             assert told.unit == figure.unit
             steps = [step.value for step in told.steps if step.is_figure]
-            assert all(v == pytest.approx(told.computed, rel=1e-4) for v in steps), figure.name
+            assert all(v == pytest.approx(told.computed, rel=1e-9) for v in steps), figure.name
+            known = (kind, figure.name) not in ABSENT | WITHOUT_STEPS
+            assert bool(steps) == (figure.judged and known) or not figure.judged, figure.name
 
 
 @pytest.mark.parametrize("kind", sorted(KINDS))
