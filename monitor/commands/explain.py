@@ -22,6 +22,8 @@ if TYPE_CHECKING:
 
 __all__ = ["explain"]
 
+_LEAST_SHARE = 0.001
+
 _STATE = ("mass_flow_kg_s", "pressure_bar", "temperature_degc", "enthalpy_kj_kg",
           "entropy_kj_kgk", "dryness", "energy_kw", "exergy_live_kw")  # fmt: skip
 
@@ -109,6 +111,8 @@ def _print(found: Explanation, zone: str) -> None:
     for number, step in enumerate(steps, start=1):
         typer.echo(f"{number}. {step.gives}: {step.formula}")
         typer.echo(f"   {step.numbers} = {_digits(step.value)} {step.unit}")
+    if found.budget and not absent:
+        _uncertainty(found)
     _section("the figure")
     if absent:
         typer.echo(f"There is none in this cell: {found.rests_on}. See what is absent above.")
@@ -125,6 +129,34 @@ def _print(found: Explanation, zone: str) -> None:
         typer.echo(f"{'stored':16} nothing for this cell")
     typer.echo(f"{'rests on':16} {found.rests_on}")
     typer.echo(f"{'they agree':16} {'yes' if found.agrees else 'NO: compute that time again'}")
+
+
+def _uncertainty(found: Explanation) -> None:
+    """The budget as GUM lays it out: what each instrument's class does to the figure."""
+    from monitor.uncertainty.budget import COVERAGE  # noqa: PLC0415 - with all that computes
+
+    _section("uncertainty (of the instruments' classes, the same all hour)")
+    told = [line for line in found.budget if not line.share < _LEAST_SHARE]
+    rows = [
+        (
+            line.source,
+            line.instrument_class + (" (default)" if line.by_default else ""),
+            f"{line.moves:+.3g}",
+            f"{100 * line.share:.1f}",
+        )
+        for line in told
+    ]
+    heads = ("source", "standard uncertainty", f"moves it by, {found.unit}", "% of variance")
+    print_table([Column(h, right=h not in heads[:2]) for h in heads], rows)
+    if len(told) < len(found.budget):
+        typer.echo(f"and {len(found.budget) - len(told)} more that hardly move it")
+    if math.isfinite(found.uncertainty):
+        typer.echo(
+            f"u = {found.uncertainty:.3g} {found.unit}; expanded (k = {COVERAGE:g}): "
+            f"+/- {COVERAGE * found.uncertainty:.2g} {found.unit}"
+        )
+    if found.suspect:
+        typer.echo(f"It contradicts the second law. {found.suspect}.")
 
 
 def _section(title: str) -> None:
