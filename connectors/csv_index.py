@@ -17,6 +17,7 @@ from connectors.base import ConnectorError, Example
 from connectors.csv_files import open_export, read_up_to
 from connectors.csv_header import check_columns, detect_encoding, line_end, read_header
 from connectors.csv_parse import BlockParser
+from connectors.order import FileOrder
 from connectors.paths import unreadable
 from connectors.tidy import ProblemCount, Rows, join_rows
 
@@ -60,6 +61,8 @@ class Block:
         first, last: [us] the span of time in it, empty when ``first`` > ``last``.
         doubled: some of its times are in a doubled hour.
         ordered: its rows stand in the order of time.
+        late: some of its rows stand after later ones of the same tag.
+        before: the order of the file's rows before it, None where it is not needed any more.
     """
 
     offset: int
@@ -70,6 +73,8 @@ class Block:
     last: int
     doubled: bool
     ordered: bool
+    late: bool
+    before: FileOrder | None
 
     def overlaps(self, start: int, end: int) -> bool:
         """Say whether a time in [start, end) may be in the block."""
@@ -220,7 +225,8 @@ class IndexedFile:
         unheard = ProblemCount()
         file.seek(block.offset)
         raw = read_up_to(file, block.length, self.file.name, unheard)
-        return self._parser().parse(raw, block.line, unheard).rows
+        order = None if block.before is None else block.before.copy()
+        return self._parser().parse(raw, block.line, unheard, order).rows
 
     def forget_rows(self) -> None:
         """Release what is kept in memory for this file."""
@@ -238,6 +244,7 @@ class IndexedFile:
         self._end, self._line = 0, 1
         self._waiting = False
         self._unfinished: Block | None = None
+        self._order = FileOrder()
         self._marks = (b"", b"")
         self._encoding: Encoding | None = None
         self._parsed_by: BlockParser | None = None
@@ -296,7 +303,9 @@ class IndexedFile:
                 )
         self._waiting = bool(raw) and not quiet
         if raw and quiet and self._parsed_by is not None:
+            order = self._order.copy()
             self._unfinished = self._block(raw, problems)
+            self._order = order  # the line is read again when it has its end
             self.blocks.append(self._unfinished)
 
     def _start(self, raw: bytes, problems: ProblemCount) -> Header | None:
@@ -329,10 +338,17 @@ class IndexedFile:
             self.blocks[-1] = self._merged(last, block)
         else:
             self.blocks.append(block)
+            self._settle(last)
+
+    def _settle(self, block: Block | None) -> None:
+        """Drop what a block that cannot grow any more does not need."""
+        if block is not None and not block.late:
+            block.before = None
 
     def _block(self, raw: bytes, problems: ProblemCount) -> Block:
-        parsed = self._parser().parse(raw, self._line, problems)
-        block = _block_of(parsed, self._end, len(raw), self._line)
+        before = self._order.copy()
+        parsed = self._parser().parse(raw, self._line, problems, self._order)
+        block = _block_of(parsed, self._end, len(raw), self._line, before)
         self._cache.offer(block, parsed.rows)
         return block
 
@@ -349,6 +365,8 @@ class IndexedFile:
             last=max(one.last, other.last),
             doubled=one.doubled or other.doubled,
             ordered=one.ordered and other.ordered and seam,
+            late=one.late or other.late,
+            before=one.before,
         )
         if rows[0] is not None and rows[1] is not None:
             self._cache.offer(block, join_rows([rows[0], rows[1]]))
@@ -364,7 +382,7 @@ def _status(path: Path) -> os.stat_result:
         raise unreadable(path, error) from error
 
 
-def _block_of(parsed: Parsed, offset: int, length: int, line: int) -> Block:
+def _block_of(parsed: Parsed, offset: int, length: int, line: int, before: FileOrder) -> Block:
     return Block(
         offset=offset,
         length=length,
@@ -374,4 +392,6 @@ def _block_of(parsed: Parsed, offset: int, length: int, line: int) -> Block:
         last=parsed.span.last,
         doubled=parsed.span.doubled,
         ordered=parsed.span.ordered,
+        late=parsed.late,
+        before=before,
     )

@@ -30,6 +30,7 @@ if TYPE_CHECKING:
 
     from connectors.csv_header import Encoding, Header
     from connectors.csv_options import CsvOptions
+    from connectors.order import FileOrder
 
 __all__ = ["BlockParser", "Parsed", "Reading", "Span", "TagBook"]
 
@@ -130,11 +131,13 @@ class Parsed:
             of all rows counts).
         span: what its times are like, those of all tags.
         lines: how many lines it has.
+        late: some of its readings, of whatever tag, stand after later ones.
     """
 
     rows: Rows
     span: Span
     lines: int
+    late: bool = False
 
 
 class BlockParser:
@@ -167,13 +170,16 @@ class BlockParser:
             else None
         )
 
-    def parse(self, raw: bytes, line: int, problems: ProblemCount) -> Parsed:
+    def parse(
+        self, raw: bytes, line: int, problems: ProblemCount, order: FileOrder | None = None
+    ) -> Parsed:
         """Parse whole lines.
 
         Args:
             raw: the bytes.
             line: the number of the first line, for problems.
             problems: what is passed over is counted here.
+            order: that of the rows before; None where it does not matter.
         """
         note = _Note(self._file, line, problems)
         data = self._encoding.to_utf8(raw)
@@ -189,8 +195,8 @@ class BlockParser:
         columns = self._value_columns()
         table = self._table(data, columns, note)
         if self._long:
-            return self._parse_long(table, lines, note)
-        return self._parse_wide(table, columns, lines, note)
+            return self._parse_long(table, lines, note, order)
+        return self._parse_wide(table, columns, lines, note, order)
 
     def _value_columns(self) -> tuple[int, ...]:
         if self._long:
@@ -263,7 +269,9 @@ class BlockParser:
         words = self._reading.words.bad_values
         return ["", *{form for w in words for form in (w, w.lower(), w.upper(), w.capitalize())}]
 
-    def _parse_long(self, table: pa.Table, lines: int, note: _Note) -> Parsed:
+    def _parse_long(
+        self, table: pa.Table, lines: int, note: _Note, order: FileOrder | None
+    ) -> Parsed:
         times, has_time = self._times(table, note)
         names, name_at = _distinct(table[_name(self._tag)])
         names = [name.strip(' \t"') for name in names]
@@ -278,16 +286,26 @@ class BlockParser:
         value, bad = self._numbers(table[_name(self._value)], there, note)
         quality = self._qualities(table, there, note)
         quality[bad] = Quality.BAD
-        rows = Rows(codes[name_at], times.first, value, quality, *_doubled(times, doubled))
-        return Parsed(rows if keep.all() else rows.keep(keep), _span(times, there), lines)
+        tag = codes[name_at]
+        late = np.flatnonzero(_late(order, tag, times, there))
+        rows = Rows(tag, times.first, value, quality, *_doubled(times, doubled), late)
+        rows = rows if keep.all() else rows.keep(keep)
+        return Parsed(rows, _span(times, there), lines, bool(len(late)))
 
     def _parse_wide(
-        self, table: pa.Table, columns: tuple[int, ...], lines: int, note: _Note
+        self,
+        table: pa.Table,
+        columns: tuple[int, ...],
+        lines: int,
+        note: _Note,
+        order: FileOrder | None,
     ) -> Parsed:
         times, has_time = self._times(table, note)
         span = _span(times, has_time)
+        # A row is in order or not, for all of its tags.
+        late = _late(order, np.zeros(len(has_time), dtype=np.int32), times, has_time)
         if not columns:
-            return Parsed(join_rows([]), span, lines)
+            return Parsed(join_rows([]), span, lines, bool(late.any()))
         cells = [self._cells(table[_name(at)], has_time, note) for at in columns]
         value, bad, there = (np.column_stack(part) for part in zip(*cells, strict=True))
         there &= has_time[:, np.newaxis]
@@ -299,8 +317,9 @@ class BlockParser:
             value[there],
             np.where(bad[there], Quality.BAD, Quality.GOOD).astype(np.uint8),
             *_doubled(times.take(row), times.doubled[row]),
+            np.flatnonzero(late[row]),
         )
-        return Parsed(rows, span, lines)
+        return Parsed(rows, span, lines, bool(late.any()))
 
     def _times(self, table: pa.Table, note: _Note) -> tuple[ParsedTimes, npt.NDArray[np.bool_]]:
         texts, at = self._time_texts(table)
@@ -459,6 +478,22 @@ def _span(times: ParsedTimes, there: npt.NDArray[np.bool_]) -> Span:
         return Span(int(first.min()), int(first.max()), doubled=False, ordered=ordered)
     doubled = bool((first != second).any())
     return Span(int(first.min()), int(second.max()), doubled=doubled, ordered=ordered)
+
+
+def _late(
+    order: FileOrder | None,
+    tag: npt.NDArray[np.int32],
+    times: ParsedTimes,
+    there: npt.NDArray[np.bool_],
+) -> npt.NDArray[np.bool_]:
+    """Say which rows stand after later ones of their tag."""
+    if order is None:
+        return np.zeros(len(tag), dtype=np.bool_)
+    if there.all():
+        return order.late(tag, times.first, times.second)
+    late = np.zeros(len(tag), dtype=np.bool_)
+    late[there] = order.late(tag[there], times.first[there], times.second[there])
+    return late
 
 
 def _doubled(

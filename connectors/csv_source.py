@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -136,7 +137,7 @@ class CsvSource:
         position = np.full(len(self._book.names), -1, dtype=np.int32)
         position[asked] = np.arange(len(names), dtype=np.int32)
         tag = position[rows.tag]
-        rows = Rows(tag, rows.time, rows.value, rows.quality, rows.doubled_at, rows.doubled_second)
+        rows = replace(rows, tag=tag)
         keep = (tag >= 0) & (rows.time >= start) & (rows.time < end)
         return rows if keep.all() else rows.keep(keep)
 

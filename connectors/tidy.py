@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from itertools import islice
 from typing import TYPE_CHECKING
 
@@ -41,6 +41,7 @@ class Rows:
         quality: see `Quality`.
         doubled_at: the positions of the rows in a doubled hour, ascending.
         doubled_second: [us] UTC; the later candidate of each of those.
+        late_at: the positions of the rows that stand after later ones of their tag, ascending.
     """
 
     tag: npt.NDArray[np.int32]
@@ -49,6 +50,7 @@ class Rows:
     quality: npt.NDArray[np.uint8]
     doubled_at: npt.NDArray[np.int64]
     doubled_second: npt.NDArray[np.int64]
+    late_at: npt.NDArray[np.int64] = field(default_factory=lambda: np.zeros(0, dtype=np.int64))
 
     def __len__(self) -> int:
         return len(self.time)
@@ -57,7 +59,7 @@ class Rows:
     def nbytes(self) -> int:
         """The memory that the arrays take."""
         arrays = (self.tag, self.time, self.value, self.quality)
-        return sum(a.nbytes for a in (*arrays, self.doubled_at, self.doubled_second))
+        return sum(a.nbytes for a in (*arrays, self.doubled_at, self.doubled_second, self.late_at))
 
     def keep(self, mask: npt.NDArray[np.bool_]) -> Rows:
         """Return the rows where the mask is true."""
@@ -70,14 +72,17 @@ class Rows:
             self.quality[mask],
             position[self.doubled_at[kept]],
             self.doubled_second[kept],
+            position[self.late_at[mask[self.late_at]]],
         )
 
     def between(self, low: int, high: int) -> Rows:
         """Return a slice of rows that hold no doubled hour."""
         part = slice(low, high)
         none = self.doubled_at[:0]
+        ends = np.searchsorted(self.late_at, [low, high])
+        late = self.late_at[ends[0] : ends[1]] - low
         return Rows(
-            self.tag[part], self.time[part], self.value[part], self.quality[part], none, none
+            self.tag[part], self.time[part], self.value[part], self.quality[part], none, none, late
         )
 
 
@@ -148,6 +153,7 @@ def join_rows(parts: Sequence[Rows]) -> Rows:
         np.concatenate([part.quality for part in parts]),
         np.concatenate([p.doubled_at + at for p, at in zip(parts, offsets, strict=True)]),
         np.concatenate([part.doubled_second for part in parts]),
+        np.concatenate([p.late_at + at for p, at in zip(parts, offsets, strict=True)]),
     )
 
 
@@ -174,7 +180,8 @@ def settle_doubled_hour(
     unsettled = at[passes < 0]
     quality[unsettled] = np.maximum(quality[unsettled], np.uint8(Quality.UNCERTAIN))
     second = rows.doubled_second[passes < 0]
-    return Rows(rows.tag, time, rows.value, quality, unsettled, second), unsettled
+    settled = Rows(rows.tag, time, rows.value, quality, unsettled, second, rows.late_at)
+    return settled, unsettled
 
 
 def tidy(rows: Rows, tags: Sequence[str]) -> tuple[pd.DataFrame, int]:
@@ -201,10 +208,11 @@ def tidy(rows: Rows, tags: Sequence[str]) -> tuple[pd.DataFrame, int]:
     if replaced:
         order, tag, time = order[last], tag[last], time[last]
     marks: dict[str, npt.NDArray[np.uint8]] = {}
-    if len(rows.doubled_at):
-        ambiguous = np.zeros(len(rows), dtype=np.uint8)
-        ambiguous[rows.doubled_at] = Mark.AMBIGUOUS_TIME
-        marks["marks"] = ambiguous[order]
+    if len(rows.doubled_at) or len(rows.late_at):
+        made = np.zeros(len(rows), dtype=np.uint8)
+        made[rows.doubled_at] = Mark.AMBIGUOUS_TIME
+        made[rows.late_at] |= np.uint8(Mark.OUT_OF_ORDER)
+        marks["marks"] = made[order]
     table = pd.DataFrame(
         {
             "tag": pd.Categorical.from_codes(tag, categories=pd.Index(list(tags), dtype="str")),

@@ -1,0 +1,71 @@
+"""Which readings of a file stand after later ones of the same tag."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from connectors.times import NO_TIME
+
+if TYPE_CHECKING:
+    import numpy.typing as npt
+
+__all__ = ["FileOrder"]
+
+
+class FileOrder:
+    """The latest time of each tag so far, as a file is read from its start.
+
+    What is out of order is a property of the file: the order is that of its rows from the first
+    one on, whichever part of them a window asks for.
+    """
+
+    def __init__(self) -> None:
+        self._latest = np.zeros(0, dtype=np.int64)
+        self._highest = NO_TIME
+
+    def copy(self) -> FileOrder:
+        """Return the order as it is here, to go on from later."""
+        other = FileOrder()
+        other._latest, other._highest = self._latest.copy(), self._highest
+        return other
+
+    def late(
+        self,
+        tag: npt.NDArray[np.int32],
+        first: npt.NDArray[np.int64],
+        second: npt.NDArray[np.int64],
+    ) -> npt.NDArray[np.bool_]:
+        """Say which of the next rows are out of order.
+
+        Args:
+            tag: the code of each row's tag.
+            first: [us] the time, in a doubled hour the earlier candidate; that one may have been
+                meant by the rows before.
+            second: [us] the later candidate, which may be meant by the row itself.
+        """
+        late = np.zeros(len(first), dtype=np.bool_)
+        if not len(first):
+            return late
+        self._reach(int(tag.max()) + 1)
+        sorted_on = int(first[0]) >= self._highest and bool((first[1:] >= first[:-1]).all())
+        if sorted_on:
+            self._latest[tag] = first  # of equal tags the last one stays
+            self._highest = int(first[-1])
+            return late
+        order = np.argsort(tag, kind="stable")
+        bounds = np.flatnonzero(np.diff(tag[order], prepend=-1))
+        for low, high in zip(bounds, [*bounds[1:], len(order)], strict=True):
+            rows = order[low:high]
+            code = tag[rows[0]]
+            so_far = np.maximum.accumulate(np.append(self._latest[code], first[rows]))
+            late[rows] = second[rows] < so_far[:-1]
+            self._latest[code] = so_far[-1]
+        self._highest = max(self._highest, int(first.max()))
+        return late
+
+    def _reach(self, count: int) -> None:
+        new = count - len(self._latest)
+        if new > 0:
+            self._latest = np.append(self._latest, np.full(new, NO_TIME, dtype=np.int64))
