@@ -101,13 +101,23 @@ class Accumulator(Kind):
         return np.asarray(into - exergy_rise(drawn, dead)), out
 
     def figures(self, item: Item) -> tuple[Figure, ...]:
-        """Standing loss while nothing flows, and the same per kelvin above the surroundings."""
+        """Exergy held; standing loss while nothing flows, whole and per kelvin of difference."""
         del item
         both = (
             ("standing_loss", "standing heat loss", "kW", 20.0),
             ("heat_loss_coefficient", "heat-loss coefficient", "kW/K", 0.2),
         )
-        return tuple(
+        held = Figure(
+            "stored_exergy",
+            "exergy stored, at the cell's end",
+            "kWh",
+            "both",
+            0.0,
+            judged=False,
+            needs_load=False,
+            follows_load=False,
+        )
+        return held, *(
             Figure(
                 name,
                 label,
@@ -136,7 +146,14 @@ class Accumulator(Kind):
         loss = np.where(idle, total([missed, *brought]), np.nan) / 1e3
         flag = drawn.signals["level"].flag | pressure.flag
         ones = np.ones_like(loss)
+        stored = (
+            held.internal_energy[..., 1:]
+            + dead.pressure * held.volume[..., 1:]
+            - dead.temperature * held.entropy[..., 1:]
+            - dead.gibbs * held.mass[..., 1:]
+        )
         return {
+            "stored_exergy": ConditionFigure(stored / 3.6e6, ones, flag),
             "standing_loss": ConditionFigure(loss, ones, flag),
             "heat_loss_coefficient": ConditionFigure(
                 loss / (liquid.temperature - dead.temperature), ones, flag

@@ -294,6 +294,15 @@ def _cooled(loss, seconds, discharge=0.0):
     return p[0], float(((1 - x) * mass * liquid.volume / 60.0)[0])
 
 
+def test_stored_exergy_is_that_of_two_independent_libraries():
+    """Own example, tests/reference (accumulator charging, E1): 4620.72 MJ at 12 degC, 1.004 bar."""
+    ports = {"discharge": water("d", 0.0, p_bar=7.8, x=1.0)}
+    signals = {"pressure": signal([7.5e5, 7.8e5]), "level": signal([0.7, 0.72])}
+    box = drawn("accumulator", ports, signals=signals, volume="52 m^3", level="L", pressure="P")
+    got = figures_of(box, dead(12.0, 1.004))["stored_exergy"].value[0]
+    assert got == pytest.approx(4620.72 / 3.6, abs=0.5 / 3.6)
+
+
 @pytest.mark.parametrize("discharge", [0.0, 0.2])
 def test_a_standing_vessel_loses_what_it_was_made_to_lose_even_while_a_little_flows(discharge):
     p, level = _cooled(50e3, 300.0, discharge)
