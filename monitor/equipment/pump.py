@@ -43,6 +43,9 @@ if TYPE_CHECKING:
 
 __all__ = ["Pump", "PumpOptions"]
 
+_ROUNDING = 1e-9
+"""A pump without a loss comes to one, give or take the last digits of its enthalpies."""
+
 
 class PumpOptions(Options):
     """Keys of a pump's table.
@@ -120,11 +123,11 @@ class Pump(Kind):
         ideal = state_ps(outlet.pressure, inlet.entropy).enthalpy - inlet.enthalpy
         with np.errstate(divide="ignore", invalid="ignore"):
             efficiency = np.where(shaft > 0, inlet.mass_flow * ideal / shaft, np.nan)
-        impossible = np.nan_to_num(efficiency, nan=0.5) > 1
+        impossible = np.nan_to_num(efficiency, nan=0.5) > 1 + _ROUNDING
         flag = np.where(impossible, np.int32(Flag.SECOND_LAW), np.int32(0))
         rise = outlet.enthalpy - inlet.enthalpy
         by_rise = share(ideal, rise)
-        uphill = flag_where(np.nan_to_num(by_rise, nan=50.0) > 100.0)  # noqa: PLR2004 - per cent
+        uphill = flag_where(np.nan_to_num(by_rise, nan=50.0) > 100.0 * (1 + _ROUNDING))
         return {
             "eta_s": ConditionFigure(100.0 * efficiency, np.maximum(shaft, 0.0), flag),
             "drive_loss": ConditionFigure(
