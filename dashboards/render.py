@@ -30,6 +30,7 @@ _CAUTION = (
     "A monitoring aid, not a protection system. Work on pressure equipment belongs to authorised "
     "people under local codes."
 )
+_EXPANDED = "±: expanded uncertainty (k = 2), from the classes of the instruments."
 _LINKS = (
     (OVERVIEW_FILE, "Overview"),
     (LATEST_SHIFT_FILE, "Shift report"),
@@ -76,6 +77,7 @@ def environment() -> Environment:
         statements=statements,
         COLOURS=theme.COLOURS,
         LEDGER_COLOURS=theme.LEDGER_COLOURS,
+        EXPANDED=_EXPANDED,
         FONT=theme.FONT,
         SIZES=theme.SIZES,
     )

@@ -7,6 +7,7 @@ markup, and every page escapes it.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Literal
 
@@ -68,6 +69,8 @@ class LedgerLine:
     cost: float | None
     """Total cost over the span in the site's currency, None where a cost makes no sense."""
     co2_t: float | None
+    expanded_kw: float = math.nan
+    """Expanded uncertainty (k = 2) of the live mean from the instruments, kW; NaN for not known."""
 
 
 @dataclass(frozen=True)
@@ -105,6 +108,8 @@ class EquipmentRow:
     """Part of the span in service, 0 to 1."""
     flags: tuple[tuple[str, float], ...]
     """What the figures rest on: words, and the part of the span it holds for, 0 to 1."""
+    destroyed_expanded_kw: float = math.nan
+    """Expanded uncertainty (k = 2) of ``destroyed_kw`` from the instruments; NaN for not known."""
 
 
 @dataclass(frozen=True)
@@ -127,6 +132,8 @@ class ConditionRow:
     worse: Literal["low", "high", "both"]
     smallest_change: float = 0.0
     """The smallest change that matters, in the figure's unit; 0 where none is stated."""
+    expanded: float = math.nan
+    """Expanded uncertainty (k = 2) of the last day's figures, in their unit; NaN for not known."""
 
 
 @dataclass(frozen=True)

@@ -24,6 +24,8 @@ from monitor.costing import SpanCosts, span_costs
 from monitor.drift.message import cost_sentence
 from monitor.flags import Flag, describe
 from monitor.store.batch import LEFT_OUT_COLUMNS
+from monitor.store.handle import SITE_SUBJECT
+from monitor.uncertainty import COVERAGE
 
 if TYPE_CHECKING:
     from monitor.equipment.base import Figure, Item
@@ -122,9 +124,12 @@ class Gathered:
         """The ledger's lines over a span."""
         tables = by_subject(self.store.means("site", start, end))
         table = next(iter(tables.values()), pd.DataFrame())
-        return tuple(self._line(key, table) for key in LEDGER_LABELS)
+        u = self.store.uncertainties("site", start, end)
+        return tuple(self._line(key, table, u) for key in LEDGER_LABELS)
 
-    def _line(self, key: LedgerKey, table: pd.DataFrame) -> LedgerLine:
+    def _line(
+        self, key: LedgerKey, table: pd.DataFrame, u: dict[tuple[str, str], float]
+    ) -> LedgerLine:
         live = _value(table, f"{_COLUMN[key]}_live_kw", "mean")
         covered = _value(table, f"{_COLUMN[key]}_live_kw", "covered_s")
         mwh = live * covered / 3.6e6
@@ -137,6 +142,7 @@ class Gathered:
             live_mwh=mwh,
             cost=self.cost(mwh) if paid else None,
             co2_t=mwh * self.site.file.economics.co2 / 1e3 if paid else None,
+            expanded_kw=COVERAGE * u.get((SITE_SUBJECT, f"{_COLUMN[key]}_live_kw"), np.nan),
         )
 
     def ledger_trend(self, start: pd.Timestamp, end: pd.Timestamp) -> pd.DataFrame:
@@ -154,6 +160,18 @@ class Gathered:
     def equipment_means(self) -> pd.DataFrame:
         """Means of every equipment figure over the span."""
         return self.store.means("equipment", self.start, self.end)
+
+    @cached_property
+    def _span_uncertainties(self) -> dict[tuple[str, str], float]:
+        return self.store.uncertainties("equipment", self.start, self.end)
+
+    @cached_property
+    def _newest_uncertainties(self) -> dict[tuple[str, str], float]:
+        return self.store.uncertainties("equipment", self._last_day, self.end)
+
+    @property
+    def _last_day(self) -> pd.Timestamp:
+        return max(self.start, self.end - pd.Timedelta(days=1))
 
     def equipment_rows(self) -> tuple[EquipmentRow, ...]:
         """Every piece of equipment, the most destroyed exergy first."""
@@ -197,6 +215,8 @@ class Gathered:
             energy_imbalance_kw=_value(table, "energy_imbalance_kw", "mean"),
             running_share=1.0 - flags.get(Flag.OFF, 0.0),
             flags=tuple((describe(bit), told[bit]) for bit in sorted(told)),
+            destroyed_expanded_kw=COVERAGE
+            * self._span_uncertainties.get((item.id, "destroyed_live_kw"), np.nan),
         )
 
     def _flag_shares(self, kind: Literal["stream", "equipment"]) -> dict[str, dict[Flag, float]]:
@@ -255,13 +275,13 @@ class Gathered:
             since=None if alarm is None else self.local(alarm.raised),
             worse=figure.worse,
             smallest_change=figure.smallest_change,
+            expanded=COVERAGE * self._newest_uncertainties.get((item.id, figure.name), np.nan),
         )
 
     def _latest(self, equipment: str, figure: str) -> float:
         """Weighted mean over the last day of the span, for figures that nobody judges."""
-        day = max(self.start, self.end - pd.Timedelta(days=1))
         rolled = self.store.rollups(
-            "equipment", "hour", day, self.end, subject=equipment, figures=[figure]
+            "equipment", "hour", self._last_day, self.end, subject=equipment, figures=[figure]
         )
         weight = rolled["weight"].to_numpy()
         if not len(rolled) or weight.sum() <= 0:

@@ -9,6 +9,7 @@ import numpy.typing as npt
 import pandas as pd
 import sqlalchemy as sa
 
+from monitor.flags import NOT_JUDGED
 from monitor.store import schema
 from monitor.store.batch import (
     CONDITION_COLUMNS,
@@ -19,7 +20,7 @@ from monitor.store.batch import (
 )
 from monitor.store.bulk import Scope, fetch
 from monitor.store.engine import reading
-from monitor.store.handle import Instant, Kind, SiteHandle, seconds, utc
+from monitor.store.handle import SITE_SUBJECT, Instant, Kind, SiteHandle, seconds, utc
 from monitor.store.rolling import Owners, load_figures
 from monitor.store.spans import Spans
 
@@ -240,6 +241,57 @@ class Reads(SiteHandle):
             names=["subject", "figure"],
         )
         return frame.sort_index()
+
+    def uncertainties(
+        self, kind: Literal["equipment", "site"], start: Instant, end: Instant
+    ) -> dict[tuple[str, str], float]:
+        """Standard uncertainties of means over a stretch, by subject and figure.
+
+        Those of the instruments' classes, which do not average out: the mean of the cells' own,
+        exact where the plant runs alike and an upper bound else. Condition figures count in the
+        cells that may be judged, as in their means. What has none is not there.
+        """
+        first, last = seconds(start), seconds(end)
+        with reading(self.engine, "read uncertainties") as connection:
+            if kind == "site":
+                return self._ledger_uncertainties(connection, first, last)
+            scope = self._scope("equipment", None, "time", first, last, {})
+            names, figures = self._names("equipment"), self._figure_names
+            found = {}
+            for where in scope.conditions("t"):
+                for owner, u in fetch(
+                    connection,
+                    "select subject_id, avg(u_destroyed_live_kw) from equipment_figures t "  # noqa: S608
+                    f"where {where} group by subject_id",
+                    2,
+                ):
+                    found[names[int(owner)], "destroyed_live_kw"] = float(u)
+                for owner, figure, u in fetch(
+                    connection,
+                    "select subject_id, figure_id, avg(u_value) from condition_figures t "  # noqa: S608
+                    f"where {where} and (flag & {int(NOT_JUDGED)}) = 0 "
+                    "group by subject_id, figure_id",
+                    3,
+                ):
+                    found[names[int(owner)], figures[int(figure)]] = float(u)
+        return {key: u for key, u in found.items() if np.isfinite(u)}
+
+    def _ledger_uncertainties(
+        self, connection: sa.Connection, start: int, end: int
+    ) -> dict[tuple[str, str], float]:
+        columns = [name for name in LEDGER_COLUMNS if name.startswith("u_")]
+        means = ", ".join(f"avg({name})" for name in columns)
+        (row,) = fetch(
+            connection,
+            f"select {means} from ledger_figures t where site_id = {self.site_id} "  # noqa: S608
+            f"and time >= {start} and time < {end}",
+            len(columns),
+        )
+        return {
+            (SITE_SUBJECT, name.removeprefix("u_")): float(u)
+            for name, u in zip(columns, row, strict=True)
+            if np.isfinite(u)
+        }
 
     def flag_counts(
         self, kind: Literal["stream", "equipment"], start: Instant, end: Instant
