@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 from monitor.checking.lines import VERDICTS, Cause, Line
 from monitor.checking.source_lines import clock_words
-from monitor.checking.tag_lines import out_of_range
+from monitor.checking.tag_lines import out_of_range, unreadable
 from monitor.checking.typical import references
 
 if TYPE_CHECKING:
@@ -19,6 +20,11 @@ if TYPE_CHECKING:
     from monitor.site.load import Site
 
 __all__ = ["Found", "causes", "explained"]
+
+_SHOWN = 3
+_MANY = 3
+_SURE = 0.6
+"""Whole contradictions that a suspect must explain before its figures are called wrong."""
 
 
 @dataclass(frozen=True)
@@ -69,10 +75,13 @@ def causes(site: Site, lines: Sequence[Line], found: Found = _NOTHING) -> tuple[
 
 
 def _sources(site: Site, lines: Sequence[Line], shifts: Mapping[str, Offset]) -> Iterable[Cause]:
+    columns = {x.subject for x in lines if x.kind == "tag" and x.reason.startswith("unreadable")}
     for line in lines:
         if line.kind != "source" or line.verdict == "ok":
             continue
         own = [name for name, tag in site.used_tags().items() if tag.source == line.subject]
+        if line.reason.startswith("passed over") and set(own) & columns:
+            continue  # the tag's own line says more
         dead = {x.subject for x in lines if x.kind == "tag" and x.verdict == "wrong"} & set(own)
         offset = shifts.get(line.subject)
         reason = line.reason if offset is None else clock_words(offset)
@@ -89,17 +98,41 @@ def _sources(site: Site, lines: Sequence[Line], shifts: Mapping[str, Offset]) ->
 
 def _tags(site: Site, lines: Sequence[Line]) -> Iterable[Cause]:
     """Tags that are odd by themselves, with the streams and equipment that hang on them."""
+    by_format = _unreadable_sources(site, lines)
+    for source, tags in by_format.items():
+        first = next(line for line in lines if line.subject == tags[0] and line.kind == "tag")
+        yield Cause(
+            "source",
+            source,
+            f"{len(tags)} of its tags are unreadable, {tags[0]} for one: {first.reason}",
+            explains=tuple(("tag", tag) for tag in tags),
+        )
+    within = {tag for tags in by_format.values() for tag in tags}
     silent = {x.subject for x in lines if x.kind == "source" and x.verdict == "wrong"}
     for line in lines:
         tag = site.tags.get(line.subject)
         if line.kind != "tag" or line.verdict == "ok" or tag is None:
             continue
-        if tag.source in silent and not line.figures:
+        if line.subject in within or (tag.source in silent and not line.figures):
             continue
         if out_of_range(line):
             continue  # another unit may explain it, which says more
         explains = _hanging(site, line.subject, lines) if line.verdict == "wrong" else ()
         yield Cause("tag", line.subject, line.reason, line.verdict, explains=explains)
+
+
+def _unreadable_sources(site: Site, lines: Sequence[Line]) -> dict[str, list[str]]:
+    """Sources of which so many tags cannot be read that it is the format, with these tags."""
+    found: dict[str, list[str]] = {}
+    for line in lines:
+        if line.kind == "tag" and unreadable(line):
+            found.setdefault(site.tags[line.subject].source, []).append(line.subject)
+    used = [tag.source for tag in site.used_tags().values()]
+    return {
+        source: tags
+        for source, tags in found.items()
+        if len(tags) >= _MANY and len(tags) > used.count(source) / 2
+    }
 
 
 def _hanging(site: Site, tag: str, lines: Sequence[Line]) -> tuple[tuple[str, str], ...]:
@@ -129,9 +162,9 @@ def _of_twin(site: Site, twin: Twin, suspected: Mapping[str, Suspect]) -> Cause:
         else "has the same readings to the last digit"
     )
     copy, of = twin.copy, twin.of
-    if of in suspected and copy not in suspected:
+    suspect = suspected.get(copy) or suspected.get(of)
+    if suspect is not None and copy not in _blamed(suspect):
         copy, of = of, copy
-    suspect = suspected.get(copy)
     reason = f"duplicated: it {how}, as {of} does; check its source_name"
     return Cause(
         "tag",
@@ -144,22 +177,33 @@ def _of_twin(site: Site, twin: Twin, suspected: Mapping[str, Suspect]) -> Cause:
     )
 
 
+def _blamed(suspect: Suspect) -> set[str]:
+    """The tags of which any could be the one."""
+    return {tag for guess in (suspect.guess, *suspect.rivals) for tag in guess.tags}
+
+
 def _of_suspect(one: Suspect) -> Cause:
     first, *crossed = one.guess.tags
     others = [tag for rival in one.rivals for tag in rival.tags]
     rivals = "".join(f"; or {r.tags[0]} {r.words}" for r in one.rivals)
-    what = ", ".join(dict.fromkeys(f"{what} of {subject}" for _, subject, what in one.explains[:3]))
-    more = f" and {len(one.explains) - 3} more" if len(one.explains) > 3 else ""  # noqa: PLR2004
-    reason = f"{one.guess.words}{rivals}; with that put right {what}{more} would come out"
+    eased = list(dict.fromkeys(f"{_short(what)} of {subject}" for _, subject, what in one.explains))
+    shown = ", ".join(eased[:_SHOWN])
+    more = f" and {len(eased) - _SHOWN} more" if len(eased) > _SHOWN else ""
+    sure = one.guess.how != "off" and one.gain > _SURE
     return Cause(
         "tag",
         first,
-        reason,
-        "look" if one.guess.how == "off" else "wrong",
+        f"{one.guess.words}{rivals}; with that put right {shown}{more} would come out",
+        "wrong" if sure else "look",
         guess=True,
         explains=(*_lines_of(one), *(("tag", tag) for tag in crossed)),
         others=tuple(dict.fromkeys([*crossed, *others])),
     )
+
+
+def _short(what: str) -> str:
+    """A contradiction without the streams between which it lies."""
+    return re.split(" (?:from|to|at) ", what, maxsplit=1)[0]
 
 
 def _lines_of(one: Suspect) -> tuple[tuple[str, str], ...]:

@@ -52,7 +52,7 @@ _WATER_CAPACITY, _STEAM_CAPACITY = 4.2e3, 2.2e3
 # Figure, lowest and highest value [%] of machines that run, and what beyond them counts as one.
 _EFFICIENCIES = (
     ("turbine", "eta_s_", 35.0, 93.0, 4.0),
-    ("pump", "thermodynamic_efficiency", 20.0, 92.0, 6.0),
+    ("pump", "thermodynamic_efficiency", 30.0, 92.0, 6.0),
     ("boiler", "fuel_efficiency", 62.0, 97.0, 3.0),
     ("boiler", "blowdown_share", -1.0, 10.0, 3.0),
 )
@@ -98,18 +98,26 @@ def contradictions(
         np.full(count, reference.reference_temperature),
         np.full(count, reference.reference_pressure),
     )
+    # What does not flow has no share of anything: no number, or one without bound.
+    with np.errstate(divide="ignore", invalid="ignore"):
+        found = list(_all(site, trial, dead, at_rest))
+        return [replace(one, size=np.asarray(np.maximum(one.size, 0.0))) for one in found]
+
+
+def _all(
+    site: Site, trial: Trial, dead: DeadState, at_rest: frozenset[str]
+) -> Iterator[Contradiction]:
     errors = _flow_errors(site, trial)
-    found: list[Contradiction] = [*_ranges(site, trial), *_surroundings(site, trial)]
+    yield from _ranges(site, trial)
+    yield from _surroundings(site, trial)
     for stream in site.streams.values():
-        found += _at_stream(site, trial, stream.id, errors)
+        yield from _at_stream(site, trial, stream.id, errors)
     for item in site.items.values():
         drawn = trial.drawn[item.id]
-        found += _balanced(site, item, drawn, errors)
-        found += _possible(item, drawn, dead)
-        found += _pressures(site, item, trial, at_rest)
-        found += _phases(item, trial)
-    with np.errstate(invalid="ignore"):
-        return [replace(one, size=np.asarray(np.maximum(one.size, 0.0))) for one in found]
+        yield from _balanced(site, item, drawn, errors)
+        yield from _possible(item, drawn, dead)
+        yield from _pressures(site, item, trial, at_rest)
+        yield from _phases(item, trial)
 
 
 def _ranges(site: Site, trial: Trial) -> Iterator[Contradiction]:

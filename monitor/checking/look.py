@@ -155,10 +155,12 @@ def _look(
             lines.append(tag_line(site, tag, seen))
     normal = typical(site, parts, day.start, day.end)
     believed = {n: v for n, v in normal.raw.items() if n not in _unusable(lines)}
-    found, contradicted = suspects(site, replace(normal, raw=believed))
+    pairs = twins(site, parts)
+    doubted = {name for pair in pairs for name in (pair.copy, pair.of)}
+    found, contradicted = suspects(site, replace(normal, raw=believed), sorted(doubted))
     lines += stream_lines(site, batch)
     lines += equipment_lines(site, batch, contradicted)
-    told = causes(site, lines, Found(shifts, twins(site, parts), found, odd_datums(site, normal)))
+    told = causes(site, lines, Found(shifts, pairs, found, odd_datums(site, normal)))
     return Checked(told, tuple(explained(lines, told)))
 
 

@@ -15,7 +15,7 @@ from monitor.site.tags import FLOWS
 from monitor.site.units import PressureDatum, Quantity, parse_unit
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Mapping
+    from collections.abc import Collection, Iterator, Mapping
 
     from monitor.checking.typical import Typical
     from monitor.site.load import Site
@@ -41,11 +41,16 @@ _PRESSURE_FACTORS = (0.7, 0.8, 0.9, 1.1, 1.25, 1.4)
 _KELVINS = (-80.0, -40.0, -20.0, -10.0, 10.0, 20.0, 40.0, 80.0)
 _PLAIN = 0.12
 """Cost of a reading that is merely off: a named mistake explains as much with less."""
-_SWAP, _SWAP_ALIKE = 0.04, 0.10
+_SWAP, _SWAP_ALIKE, _SWAP_FAR = 0.04, 0.10, 0.14
 _ODD = 0.05
 _OTHER_DATUM = 0.03
 """On top, for another unit and another datum at once."""
 _SAME = 1e-3
+_TOGETHER, _LEAST_TOGETHER = 0.15, 3
+_REST = 0.01
+_ANYTHING = 49
+_FLOWING_SHARES = (0.05, 0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.9)
+"""Of a meter's range, tried where it shows nothing at all."""
 
 How = Literal["unit", "datum", "swap", "off"]
 
@@ -69,12 +74,19 @@ class Guess:
     supposition: Supposition
 
 
-def guesses(site: Site, day: Typical) -> list[Guess]:
-    """List every misreading worth a trial."""
+def guesses(site: Site, day: Typical, doubted: Collection[str] = ()) -> list[Guess]:
+    """List every misreading worth a trial.
+
+    Args:
+        site: the site.
+        day: its typical readings.
+        doubted: tags that may show anything else, since they show what another one does.
+    """
     tags = {n: t for n, t in site.used_tags().items() if n in day.raw}
     usual = Counter((t.unit.quantity, t.unit.text) for t in tags.values())
     found = [g for name, tag in tags.items() for g in _of_tag(name, tag, tags, usual, day)]
-    return found + list(_crossed(site, tags, day))
+    found += [g for name in doubted if name in tags for g in _anything(name, tags[name])]
+    return [*found, *_restated_together(tags, day), *_crossed(site, tags, day)]
 
 
 def _of_tag(
@@ -118,6 +130,12 @@ def _unit_words(tag: Tag, text: str, how: How) -> str:
 
 def _off(name: str, tag: Tag, raw: float) -> Iterator[Guess]:
     quantity = tag.unit.quantity
+    if quantity in FLOWS and tag.range is not None and raw < tag.range[0] + _REST * _span(tag):
+        for share in _FLOWING_SHARES:
+            value = tag.range[0] + share * _span(tag)
+            words = "shows no flow where the balances have one"
+            yield Guess((name,), "off", words, _PLAIN, Supposition({name: value}))
+        return
     if quantity in FLOWS or quantity is Quantity.POWER:
         for factor in _FACTORS:
             words = f"seems to read about {1 / factor:.2g} times what flows"
@@ -135,26 +153,56 @@ def _off(name: str, tag: Tag, raw: float) -> Iterator[Guess]:
             yield Guess((name,), "off", words, _PLAIN, Supposition({name: moved}))
 
 
+def _anything(name: str, tag: Tag) -> Iterator[Guess]:
+    """Values over a tag's whole range; likelier than a misreading, the tag being in doubt."""
+    if tag.range is not None:
+        for share in np.linspace(0.02, 0.98, _ANYTHING):
+            value = tag.range[0] + float(share) * _span(tag)
+            yield Guess((name,), "off", "shows another one's", 0.0, Supposition({name: value}))
+
+
+def _span(tag: Tag) -> float:
+    low, high = tag.range or (0.0, 0.0)
+    return high - low
+
+
+def _restated_together(tags: Mapping[str, Tag], day: Typical) -> Iterator[Guess]:
+    """All tags of one source and unit in another unit: a tag list that was filled in by column."""
+    alike: dict[tuple[str, str], list[str]] = {}
+    for name, tag in tags.items():
+        alike.setdefault((tag.source, tag.unit.text), []).append(name)
+    for (_, text), names in alike.items():
+        unit = parse_unit(text)
+        for other in _UNITS.get(unit.quantity, ()) if len(names) >= _LEAST_TOGETHER else ():
+            if other == text:
+                continue
+            values = {
+                n: relative(unit, parse_unit(other), day.raw[n], day.barometer) for n in names
+            }
+            words = f"and all {len(names)} tags beside it that say {text} look like {other}"
+            restated = Supposition(values, frozenset(names))
+            yield Guess(tuple(names), "unit", words, _TOGETHER, restated)
+
+
 def _crossed(site: Site, tags: Mapping[str, Tag], day: Typical) -> Iterator[Guess]:
     """Two tags, each with the other's numbers: p and T of a stream, or two alike side by side."""
-    pairs: set[tuple[str, str]] = set()
+    near: set[tuple[str, str]] = set()
     for stream in site.streams.values():
         read = {str(reference.tag) for _, reference in references(stream)}
-        pairs.update(itertools.combinations(sorted(read & tags.keys()), 2))
+        near.update(itertools.combinations(sorted(read & tags.keys()), 2))
     for name, beside in neighbours(site).items():
-        pairs.update(
-            (min(name, other), max(name, other))
-            for other in beside
-            if name in tags
-            and other in tags
-            and tags[name].unit.quantity is tags[other].unit.quantity
-        )
-    for one, other in sorted(pairs):
+        near.update((min(name, other), max(name, other)) for other in beside)
+    for one, other in itertools.combinations(sorted(tags), 2):
+        alike = tags[one].unit.quantity is tags[other].unit.quantity
+        beside_it = (one, other) in near
         a, b = day.raw[one], day.raw[other]
-        if not np.isclose(a, b, rtol=0.02):
-            words = (
-                f"looks as if {one} and {other} were crossed: each fits with the other's readings"
-            )
-            alike = tags[one].unit.quantity is tags[other].unit.quantity
-            cost = _SWAP_ALIKE if alike else _SWAP
-            yield Guess((one, other), "swap", words, cost, Supposition({one: b, other: a}))
+        of_stream = beside_it and _p_and_t(tags[one], tags[other])
+        if not (alike or of_stream) or np.isclose(a, b, rtol=0.02):
+            continue
+        cost = _SWAP if of_stream else _SWAP_ALIKE if beside_it else _SWAP_FAR
+        words = f"looks as if {one} and {other} were crossed: each fits with the other's readings"
+        yield Guess((one, other), "swap", words, cost, Supposition({one: b, other: a}))
+
+
+def _p_and_t(one: Tag, other: Tag) -> bool:
+    return {one.unit.quantity, other.unit.quantity} == {Quantity.PRESSURE, Quantity.TEMPERATURE}

@@ -27,7 +27,7 @@ _GAS_CONSTANT = 461.526
 """[J/(kg K)] of water, IAPWS R7-97(2012), table 1."""
 _LEAST_Z, _MOST_Z = 0.6, 1.02
 """Compressibility of steam in a plant below 200 bar: outside, p or T is in doubt."""
-_MISSING_LOOK, _HALF = 0.1, 0.5
+_MISSING_LOOK, _HALF = 0.15, 0.5
 _AT_SATURATION = 0.01
 
 

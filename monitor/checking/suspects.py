@@ -18,7 +18,7 @@ from monitor.checking.readings_otherwise import guesses
 from monitor.checking.typical import Supposition, try_out
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Collection, Sequence
 
     from monitor.checking.contradictions import Contradiction
     from monitor.checking.readings_otherwise import Guess
@@ -57,14 +57,28 @@ class Suspect:
     rivals: tuple[Guess, ...]
 
 
-def suspects(site: Site, day: Typical) -> tuple[list[Suspect], list[Contradiction]]:
+def suspects(
+    site: Site, day: Typical, doubted: Collection[str] = ()
+) -> tuple[list[Suspect], list[Contradiction]]:
     """Find the misreadings that explain a day's contradictions.
+
+    Args:
+        site: the site.
+        day: its typical readings.
+        doubted: tags that show what another one does.
 
     Returns:
         The suspects, the first explaining most; and the contradictions as the readings stand, of
         size (1,).
     """
-    tried = guesses(site, day)
+    # Suppositions go far from any plant: what overflows there is no state, and counts as such.
+    with np.errstate(all="ignore"):
+        return _search(site, day, guesses(site, day, doubted))
+
+
+def _search(
+    site: Site, day: Typical, tried: Sequence[Guess]
+) -> tuple[list[Suspect], list[Contradiction]]:
     still = resting(try_out(site, day, [Supposition({})]))
     believed: dict[str, float] = {}
     restated: frozenset[str] = frozenset()

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
+import pandas as pd
 
 from connectors.base import Quality
 from monitor.checking.exports import doubts, texts_of
@@ -17,14 +18,12 @@ from monitor.readings.condition import RANGE_ABOVE, RANGE_BELOW, at_rest
 if TYPE_CHECKING:
     from collections.abc import Iterator
 
-    import pandas as pd
-
     from connectors.base import Probe
     from monitor.equipment.base import FloatArray
     from monitor.site.load import Site
     from monitor.site.tags import Tag
 
-__all__ = ["TagDay", "out_of_range", "tag_line"]
+__all__ = ["TagDay", "out_of_range", "tag_line", "unreadable"]
 
 HOUR = 3600
 LEAST_GOOD = 0.9
@@ -32,6 +31,8 @@ LEAST_GOOD = 0.9
 _UNREADABLE = 0.5
 """Share of cells without a number from which the column, not the instrument, is in doubt."""
 _STUCK_WRONG, _STUCK_LOOK = 0.4, 0.1
+_UNCOVERED = 0.15
+"""Share of the day without a value that an outage of some hours leaves, and no more."""
 _SILENT = 3600.0
 """[s] A tag that ends so long before its source, and longer than its hold, has gone silent."""
 
@@ -76,6 +77,7 @@ def tag_line(site: Site, tag: Tag, seen: TagDay) -> Line:
         "outside_share": float(outside.mean()),
         "stuck_share": seen.stuck,
         "longest_gap_s": gap,
+        "uncovered_share": _uncovered(part, tag, seen),
         "silent_s": _silent(part, value, quality, seen.end),
     }
     found = (
@@ -90,6 +92,18 @@ def tag_line(site: Site, tag: Tag, seen: TagDay) -> Line:
 def out_of_range(line: Line) -> bool:
     """Whether a tag delivers numbers, but none within its range: its unit may be another."""
     return line.verdict == "wrong" and line.figures.get("outside_share") == 1.0
+
+
+def _uncovered(part: pd.DataFrame, tag: Tag, seen: TagDay) -> float:
+    """Share of the day that lies further behind a reading than the tag's hold."""
+    seconds = pd.DatetimeIndex(part["time"]).as_unit("us").asi8 / 1e6
+    gaps = np.diff(np.concatenate([[float(seen.start)], seconds, [float(seen.end)]]))
+    return float(np.maximum(gaps - tag.hold, 0.0).sum() / (seen.end - seen.start))
+
+
+def unreadable(line: Line) -> bool:
+    """Whether most of a tag's cells hold no number."""
+    return float(str(line.figures.get("number_share", 1.0))) < _UNREADABLE
 
 
 def _silent(
@@ -110,9 +124,16 @@ def _findings(
     site: Site, tag: Tag, usable: FloatArray, figures: Figures
 ) -> Iterator[tuple[Verdict, str]]:
     """What is not as it should be with a tag, the gravest first."""
-    outside, good, numbers, silent, gap = (
+    outside, good, numbers, silent, gap, uncovered = (
         float(str(figures[key]))
-        for key in ("outside_share", "good_share", "number_share", "silent_s", "longest_gap_s")
+        for key in (
+            "outside_share",
+            "good_share",
+            "number_share",
+            "silent_s",
+            "longest_gap_s",
+            "uncovered_share",
+        )
     )
     if numbers < _UNREADABLE:
         yield "wrong", _unreadable(site, tag, numbers)
@@ -135,12 +156,13 @@ def _findings(
         yield "look", "the historian calls many of its readings bad or uncertain"
     if stuck is not None:
         yield stuck
-    if gap > tag.hold:
+    if uncovered > _UNCOVERED:
         yield (
             "look",
             (
-                f"longest gap {gap / 60:.0f} min, longer than its hold of {tag.hold / 60:.0f} min; "
-                "a historian that reports by exception needs a longer hold"
+                f"its hold of {tag.hold / 60:.0f} min leaves {100 * uncovered:.0f} % of the day "
+                f"without a value, longest gap {gap / 60:.0f} min; a historian that reports by "
+                "exception needs a longer hold"
             ),
         )
 

@@ -78,10 +78,12 @@ def _equal(one: pd.DataFrame, other: pd.DataFrame) -> bool:
 
 
 def _ordered(site: Site, one: str, other: str) -> tuple[str, str]:
-    """The tag whose own name is further from what it asks the historian for comes first."""
+    """The tag whose name and description are further from what it asks for comes first."""
 
     def likeness(name: str) -> float:
-        asked = site.tags[name].historian_name
-        return difflib.SequenceMatcher(None, name.casefold(), asked.casefold()).ratio()
+        tag = site.tags[name]
+        asked, said = tag.historian_name.casefold(), tag.description.casefold()
+        named = difflib.SequenceMatcher(None, name.casefold(), asked).ratio()
+        return 1.0 if asked in said else named
 
     return (one, other) if likeness(one) < likeness(other) else (other, one)

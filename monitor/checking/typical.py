@@ -35,6 +35,7 @@ if TYPE_CHECKING:
 __all__ = ["Supposition", "Trial", "Typical", "references", "relative", "try_out", "typical"]
 
 _MOSTLY = 0.9
+_PRESENT, _ENOUGH = 0.7, 0.5
 _RUNNING_SHARE = 0.05
 _LEAST_BAROMETER, _MOST_BAROMETER = 55e3, 110e3
 """[Pa] What a barometer can show where people live; else the reference stands in."""
@@ -124,14 +125,24 @@ def typical(site: Site, parts: Mapping[str, pd.DataFrame], start: int, end: int)
     held = {n: _held(tags[n], part, grid) for n, part in parts.items() if n in tags}
     means = {name: one[0] for name, one in held.items()}
     raw: dict[str, float] = {}
+    together = _together(means, grid.count)
     for name, mean in means.items():
-        counts = np.isfinite(mean) & _running(site, name, means, grid.count)
+        counts = together & np.isfinite(mean) & _running(site, name, means, grid.count)
         counts = counts if counts.any() else np.isfinite(mean)
         if counts.any():
             middle = np.mean if tags[name].unit.quantity in _MEANS else np.median
             raw[name] = float(middle(mean[counts]))
     barometer = _barometer(site, raw)
     return Typical(raw, barometer, _stored(site, held, barometer, grid))
+
+
+def _together(
+    means: Mapping[str, FloatArray], count: int
+) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+    """Cells in which all tags have a value that mostly have one: an outage shifts no mean then."""
+    known = [np.isfinite(mean) for mean in means.values() if np.isfinite(mean).mean() > _PRESENT]
+    common = np.logical_and.reduce(known) if known else np.zeros(count, dtype=np.bool_)
+    return np.asarray(common if common.mean() > _ENOUGH else np.ones(count, dtype=np.bool_))
 
 
 def _held(tag: Tag, part: pd.DataFrame, grid: Grid) -> tuple[FloatArray, FloatArray]:
