@@ -16,6 +16,7 @@ from monitor.store.batch import (
     LEDGER_COLUMNS,
     STREAM_COLUMNS,
 )
+from monitor.store.runs import Run
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -25,17 +26,23 @@ if TYPE_CHECKING:
 
 __all__ = ["Format", "What", "columns_of", "export", "tables"]
 
-What = Literal["streams", "equipment", "conditions", "ledger", "alarms"]
+What = Literal["streams", "equipment", "conditions", "ledger", "alarms", "runs"]
 Format = Literal["csv", "parquet"]
 DAY = 86400
+_ALL = 1_000_000_000
 
 _COLUMNS: dict[str, tuple[str, ...]] = {
-    "streams": ("time", "subject", *STREAM_COLUMNS, "flag"),
-    "equipment": ("time", "subject", *EQUIPMENT_COLUMNS, "flag"),
-    "conditions": ("time", "subject", "figure", *CONDITION_COLUMNS, "flag"),
-    "ledger": ("time", *LEDGER_COLUMNS, "flag"),
+    "streams": ("time", "subject", *STREAM_COLUMNS, "flag", "run_id"),
+    "equipment": ("time", "subject", *EQUIPMENT_COLUMNS, "flag", "run_id"),
+    "conditions": ("time", "subject", "figure", *CONDITION_COLUMNS, "flag", "run_id"),
+    "ledger": ("time", *LEDGER_COLUMNS, "flag", "run_id"),
     "alarms": ("alarm_id", *(n for n in AlarmRecord.__dataclass_fields__ if n != "alarm_id")),
 }
+_COLUMNS["runs"] = tuple(Run.__dataclass_fields__)
+_RUN_TIMES = ("started", "ended", "window_start", "window_end")
+_KEYS = ("time", "subject", "figure")
+# What a spreadsheet takes for the begin of a formula.
+_FORMULA = ("=", "+", "-", "@", "\t", "\n")
 _ALARM_TIMES = ("raised", "cleared", "acknowledged", "shelved_until")
 
 
@@ -52,7 +59,8 @@ def export(store: SiteStore, what: What, start: int, end: int, kind: Format, out
         what: which figures.
         start: integer UTC seconds.
         end: integer UTC seconds, not included.
-        kind: CSV has times as ISO 8601 in UTC and nothing where a figure is absent.
+        kind: CSV has times as ISO 8601 in UTC and nothing where a figure is absent; text that a
+            spreadsheet would take for a formula has an apostrophe before it.
         out: a binary file; is not closed.
 
     Returns:
@@ -66,7 +74,9 @@ def export(store: SiteStore, what: What, start: int, end: int, kind: Format, out
         out.write((",".join(columns_of(what)) + "\n").encode())
         for table in tables(store, what, start, end):
             text = io.StringIO()
-            table.to_csv(text, index=False, header=False, date_format="%Y-%m-%dT%H:%M:%SZ")
+            _no_formulas(table).to_csv(
+                text, index=False, header=False, date_format="%Y-%m-%dT%H:%M:%SZ"
+            )
             out.write(text.getvalue().encode())
             rows += len(table)
         return rows
@@ -89,16 +99,62 @@ def tables(store: SiteStore, what: What, start: int, end: int) -> Iterator[pd.Da
     if what == "alarms":
         yield _alarms(store, start, end)
         return
+    if what == "runs":
+        yield _runs(store, start, end)
+        return
     first = start
     while True:
         last = min(first + DAY, end)
-        frame = _figures(store, what, first, last).reset_index()
+        frame = _with_runs(store, what, first, last)
         yield frame[list(columns_of(what))].astype(
             {name: "str" for name in ("subject", "figure") if name in frame.columns}
         )
         first = last
         if first >= end:
             return
+
+
+def _with_runs(
+    store: SiteStore,
+    what: Literal["streams", "equipment", "conditions", "ledger"],
+    start: int,
+    end: int,
+) -> pd.DataFrame:
+    """Figures with the number of the run that made each: see the runs for program and site file."""
+    frame = _figures(store, what, start, end).reset_index()
+    keys = [key for key in _KEYS if key in frame.columns]
+    runs = store.run_numbers(what, start, end)
+    # As text on both sides: the store deals in categories.
+    named = {key: "str" for key in keys if key != "time"}
+    return frame.astype(named).merge(runs.astype(named), how="left", on=keys)
+
+
+def _no_formulas(table: pd.DataFrame) -> pd.DataFrame:
+    """Put an apostrophe before text that would be a formula: names come from historians."""
+    text = {
+        # The writer does not quote a lone carriage return, which would begin another row.
+        name: table[name].str.replace("\r\n?", "\n", regex=True)
+        for name in table.columns
+        if pd.api.types.is_string_dtype(table[name].dtype)
+    }
+    begins = {
+        name: cells.str.startswith(_FORMULA).fillna(value=False) for name, cells in text.items()
+    }
+    return table.assign(**{n: cells.where(~begins[n], "'" + cells) for n, cells in text.items()})
+
+
+def _runs(store: SiteStore, start: int, end: int) -> pd.DataFrame:
+    """Runs that began in a stretch, or computed a part of it."""
+    runs = [
+        run for run in store.runs(_ALL)
+        if start <= run.started < end
+        or (run.window_start is not None and run.window_end is not None
+            and run.window_start < end and start < run.window_end)
+    ]  # fmt: skip
+    frame = pd.DataFrame([vars(run) for run in reversed(runs)], columns=list(columns_of("runs")))
+    for name in _RUN_TIMES:
+        frame[name] = pd.to_datetime(frame[name].astype("Int64"), unit="s", utc=True)
+    return frame
 
 
 def _figures(store: SiteStore, what: What, start: int, end: int) -> pd.DataFrame:

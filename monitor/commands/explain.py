@@ -65,6 +65,10 @@ def explain(
             when = int(newest.timestamp())
         with open_sources(at.site) as sources:
             found = work(at.site, at.store, sources, subject, figure, when)
+        made = at.store.made_by(
+            "stream" if subject in at.site.streams else "equipment", subject, figure, found.start
+        )
+        same = made is None or made.site_hash == at.site.hash
     if as_json:
         write_json(
             asdict(found)
@@ -73,10 +77,18 @@ def explain(
                 "end": utc_text(found.end),
                 "by_steps": found.by_steps,
                 "agrees": found.agrees,
+                "made_by": None if made is None else asdict(made),
+                "same_site_file": same,
             }
         )
     else:
         _print(found, zone)
+        if made is not None:
+            changed = "" if same else "; the site file has changed since"
+            typer.echo(
+                f"{'made by':16} run {made.run_id} ({made.job}), lostwork {made.version}, "
+                f"site file {made.site_hash[:12]}{changed}"
+            )
     if not found.agrees:
         raise typer.Exit(ExitCode.FOUND_WRONG)
 

@@ -32,8 +32,8 @@ def export(
     ],
     end: Annotated[str, typer.Option("--to", help="End; left out: now.")] = "now",
     what: Annotated[
-        Literal["streams", "equipment", "conditions", "ledger", "alarms"],
-        typer.Option("--what", help="Which figures."),
+        Literal["streams", "equipment", "conditions", "ledger", "alarms", "runs"],
+        typer.Option("--what", help="Which figures; or the runs that made them."),
     ] = "ledger",
     kind: Annotated[
         Literal["csv", "parquet"], typer.Option("--format", help="File format.")
@@ -42,7 +42,8 @@ def export(
 ) -> None:
     """Write stored figures as CSV or Parquet.
 
-    Units stand in the column names, times are UTC.
+    Units stand in the column names, times are UTC. The run_id of a figure is that of the run that
+    made it, whose program version and site-file hash --what runs gives.
 
     Example: lostwork export site.toml --from 2026-03-01 --what equipment --out march.csv
     """
