@@ -264,6 +264,9 @@ def _ways(site: Site, sample: Sample, stream: Stream) -> dict[str, int]:
             ways[reference.tag] = _pass_of(site.tags[reference.tag], sample)
         if sample.barometer_tag and _on_barometer(site, reference):
             ways[sample.barometer_tag] = _BAROMETER
+    test = stream.throttling_test
+    if sample.barometer_tag and test is not None and test.pressure is None:
+        ways[sample.barometer_tag] = _BAROMETER  # the sample expands into the surroundings
     return ways
 
 

@@ -156,6 +156,25 @@ def test_a_dry_sample_leaves_the_stream_superheated(tmp_path):
     )
 
 
+def _doubt(batch):
+    return last(batch.streams, "in", "u_exergy_live_kw")
+
+
+def test_the_gauges_of_every_way_have_their_part_in_the_uncertainty(tmp_path):
+    """A kelvin of superheat is a kelvin of temperature; a doubtful sample leaves the phase open."""
+    by_temperature = run(
+        _site(tmp_path, pressure="P", temperature="T"), AMBIENT | {"P": 12.0, "T": BOILING + 30.0}
+    )
+    by_superheat = run(
+        _site(tmp_path, pressure="P", superheat="D"), AMBIENT | {"P": 12.0, "D": 30.0}
+    )
+    assert _doubt(by_superheat) == pytest.approx(_doubt(by_temperature), rel=0.05)
+    tested = _site(tmp_path, pressure="P", throttling_test={"temperature": "T"})
+    sure, unsure = (run(tested, AMBIENT | {"P": 12.0, "T": t}) for t in (120.0, 101.0))
+    assert _flag(unsure) == Flag.NEAR_SATURATION
+    assert _doubt(unsure) > 5.0 * _doubt(sure)
+
+
 @pytest.mark.parametrize(
     ("stated", "unit", "said"),
     [
