@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 import pandas as pd
@@ -13,6 +14,7 @@ from monitor.demo.design import CELSIUS, DESIGN, LD12_FULL, given
 from monitor.demo.files import config_folder, read_tags
 from monitor.demo.instruments import true_value
 from monitor.demo.load import TONNE_PER_HOUR
+from monitor.demo.vessel import Vessel
 from monitor.demo.weather import Weather
 from monitor.figures import compute, lead_in
 from monitor.site.load import load_site
@@ -47,6 +49,8 @@ class Worn:
     """Efficiency lost by B1 [1]."""
     design: dict[str, object] | None = None
     """Fixed numbers of the plant that are other than they were."""
+    standing_loss: float = Vessel.standing_loss
+    """Heat that the accumulator loses [W/K]."""
 
 
 def swings(shift=0.0, **moved):
@@ -134,12 +138,13 @@ def figures_at(site, points, worn=None):
         baseline takes them at.
     """
     worn = worn or Worn()
-    kept = network.DESIGN
+    kept = network.DESIGN, network.Vessel
     network.DESIGN = replace(DESIGN, **(worn.design or {}))
+    network.Vessel = partial(Vessel, standing_loss=worn.standing_loss)
     try:
         plant = simulate(PLAN, operating(points, worn))
     finally:
-        network.DESIGN = kept
+        network.DESIGN, network.Vessel = kept
     tags, times = read_tags(), plant.times
     table = pd.DataFrame(
         {
