@@ -14,14 +14,20 @@ if TYPE_CHECKING:
 __all__ = ["FileOrder"]
 
 
+_FIRST_STEPS = 8
+"""An export from the newest to the oldest reading shows so many steps back before any forward."""
+
+
 class FileOrder:
     """The latest time of each tag so far, as a file is read from its start.
 
     What is out of order is a property of the file: the order is that of its rows from the first
-    one on, whichever part of them a window asks for.
+    one on, whichever part of them a window asks for. A file that begins by going back only is one
+    that lists the newest reading first: there the rows that go forward are out of order.
     """
 
     def __init__(self) -> None:
+        self._goes_back: bool | None = None
         self._latest = np.zeros(0, dtype=np.int64)
         self._highest = NO_TIME
 
@@ -29,6 +35,7 @@ class FileOrder:
         """Return the order as it is here, to go on from later."""
         other = FileOrder()
         other._latest, other._highest = self._latest.copy(), self._highest
+        other._goes_back = self._goes_back
         return other
 
     def late(
@@ -48,6 +55,12 @@ class FileOrder:
         late = np.zeros(len(first), dtype=np.bool_)
         if not len(first):
             return late
+        if self._goes_back is None:
+            steps = np.diff(first)
+            steps = steps[steps != 0][:_FIRST_STEPS]
+            self._goes_back = len(steps) == _FIRST_STEPS and bool((steps < 0).all())
+        if self._goes_back:
+            first, second = -second, -first
         self._reach(int(tag.max()) + 1)
         sorted_on = int(first[0]) >= self._highest and bool((first[1:] >= first[:-1]).all())
         if sorted_on:

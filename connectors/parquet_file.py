@@ -18,17 +18,19 @@ import pyarrow.parquet as pq
 
 from connectors.base import ConnectorError, Quality
 from connectors.parquet_columns import distinct_texts, is_text
+from connectors.parquet_pieces import Piece
 from connectors.tidy import Rows, first_few
 from connectors.times import NO_TIME
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Sequence
+    from collections.abc import Hashable, Iterator, Sequence
     from pathlib import Path
 
     import numpy.typing as npt
 
     from connectors.parquet_columns import Cells, ColumnReader
     from connectors.parquet_options import ParquetOptions
+    from connectors.parquet_pieces import PieceCache
     from connectors.tidy import ProblemCount
     from connectors.times import ParsedTimes
 
@@ -86,6 +88,8 @@ class ParquetFile:
         handle: the same, opened.
         options: what the site file says.
         reader: reads its columns.
+        cache: keeps decoded pieces of row groups.
+        state: tells this state of the file from others, for the cache.
 
     Raises:
         ConnectorError: a column is not there, or not of a fitting type.
@@ -98,8 +102,11 @@ class ParquetFile:
         handle: BinaryIO,
         options: ParquetOptions,
         reader: ColumnReader,
+        cache: PieceCache,
+        state: Hashable,
     ) -> None:
         self._path, self._options, self._reader = path, options, reader
+        self._cache, self._state = cache, state
         self._file = pq.ParquetFile(handle)
         self._schema = self._file.schema_arrow
         self._check_columns()
@@ -153,15 +160,44 @@ class ParquetFile:
         if options.layout == "wide":
             names = [name for name in wanted.names if name in self._schema.names]
             names = [name for name in names if name != options.time_column]
-            for batch in self._batches([group], [options.time_column, *names]):
-                times = self._times(batch, unheard)
-                yield self._wide(batch, times, names, wanted, problems)
+            for piece in self._pieces(group, [options.time_column, *names], wanted, unheard):
+                yield self._wide(piece.batch, piece.times, names, wanted, problems)
             return
         columns = [options.time_column, options.tag_column, options.value_column]
         columns += [options.quality_column] if options.quality_column else []
+        for piece in self._pieces(group, columns, wanted, unheard):
+            yield self._long(piece, wanted, unheard, problems)
+
+    def _pieces(
+        self, group: Group, columns: list[str], wanted: Wanted, unheard: ProblemCount | None
+    ) -> Iterator[Piece]:
+        """Yield a row group's pieces, from memory or by decoding them."""
+        key = (self._path, self._state, group.number, *columns)
+        kept = self._cache.get(key)
+        if kept is not None:
+            yield from kept
+            return
+        # The next window needs those that reach beyond this one.
+        reaches = group.first < wanted.start or group.last >= wanted.end
+        fresh: list[Piece] = []
+        size = 0 if reaches else self._cache.limit + 1
         for batch in self._batches([group], columns):
-            times = self._times(batch, unheard)
-            yield self._long(batch, times, wanted, unheard, problems)
+            piece = self._piece(batch, unheard)
+            size += piece.nbytes
+            fresh = [*fresh, piece] if size <= self._cache.limit else []
+            yield piece
+        if fresh:
+            self._cache.put(key, fresh)
+
+    def _piece(self, batch: pa.RecordBatch, unheard: ProblemCount | None) -> Piece:
+        options = self._options
+        times = self._times(batch, unheard)
+        is_long = options.layout == "long"
+        done = {options.time_column, options.tag_column} if is_long else {options.time_column}
+        values = batch.select([name for name in batch.schema.names if name not in done])
+        if not is_long:
+            return Piece(values, times, [], np.zeros(0, dtype=np.int64))
+        return Piece(values, times, *distinct_texts(batch.column(options.tag_column)))
 
     def _concerns(self, group: Group, wanted: Wanted) -> bool:
         if group.first >= wanted.end or group.last < wanted.start:
@@ -184,17 +220,16 @@ class ParquetFile:
 
     def _long(
         self,
-        batch: pa.RecordBatch,
-        times: ParsedTimes,
+        piece: Piece,
         wanted: Wanted,
         unheard: ProblemCount | None,
         problems: ProblemCount,
     ) -> Rows:
         options, name = self._options, self._path.name
-        words, at = distinct_texts(batch.column(options.tag_column))
+        batch, times = piece.batch, piece.times
         book, others = wanted.book, len(wanted.names)
-        codes = [book.setdefault(word, len(book)) if word else -1 for word in words]
-        tag = np.array(codes, dtype=np.int32)[at]
+        codes = [book.setdefault(word, len(book)) if word else -1 for word in piece.words]
+        tag = np.array(codes, dtype=np.int32)[piece.tag_at]
         has_time = times.first != NO_TIME
         if unheard is not None:
             unheard.add(name, _NO_TAG, int((has_time & (tag < 0)).sum()))

@@ -14,6 +14,7 @@ from connectors.csv_index import Extent
 from connectors.parquet_columns import ColumnReader
 from connectors.parquet_file import Group, ParquetFile, Wanted
 from connectors.parquet_options import ParquetOptions
+from connectors.parquet_pieces import PieceCache
 from connectors.paths import matching_files, unreadable
 from connectors.tidy import ProblemCount, Rows, join_rows, settle_doubled_hour, tidy
 from connectors.times import DOUBLED_HOUR_REACH, from_microseconds, microseconds
@@ -30,6 +31,9 @@ if TYPE_CHECKING:
 __all__ = ["ParquetKind", "ParquetSource"]
 
 T = TypeVar("T")
+
+_CACHE = 96 << 20
+"""[bytes] Decoded rows kept in memory: some 3 million readings."""
 
 _TAGS_OF = 4_000_000
 """Rows whose tags a probe reads; older row groups are left out beyond these."""
@@ -53,10 +57,12 @@ class ParquetSource:
     Args:
         options: what the site file says.
         folder: where relative paths start.
+        cache_limit: bound of the memory for decoded rows [bytes].
     """
 
-    def __init__(self, options: ParquetOptions, folder: Path) -> None:
+    def __init__(self, options: ParquetOptions, folder: Path, *, cache_limit: int = _CACHE) -> None:
         self._options, self._folder = options, folder
+        self._cache = PieceCache(cache_limit)
         self._reader = ColumnReader(options)
         self._known: dict[Path, _Known] = {}
 
@@ -122,6 +128,7 @@ class ParquetSource:
     def close(self) -> None:
         """Forget what is known of the files; none is kept open."""
         self._known.clear()
+        self._cache.clear()
 
     def _each(
         self,
@@ -160,7 +167,7 @@ class ParquetSource:
                     known = self._known[path] = _Known(extent)
                 elif known.error is not None:
                     raise known.error
-                file = ParquetFile(path, handle, self._options, self._reader)
+                file = ParquetFile(path, handle, self._options, self._reader, self._cache, extent)
                 if known.groups is None:
                     known.groups = file.groups(problems)
                 return work(file, known.groups)

@@ -71,7 +71,8 @@ class SqlOptions(QualityOptions):
         default="timestamp",
         description="'timestamp' (as the table's column says, with a time zone or local time in "
         "time_zone), 'timestamp_zoned', 'timestamp_local', 'epoch_s', 'epoch_ms', 'epoch_us' or "
-        "'text_iso'. A query needs one of the others than 'timestamp'.",
+        "'text_iso' (a blank or a T before the time of day; all times of the column in one offset, "
+        "or none). A query needs one of the others than 'timestamp'.",
     )
     time_zone: Annotated[str, AfterValidator(check_zone)] = Field(
         default="UTC",

@@ -103,3 +103,13 @@ def test_the_hour_that_comes_twice_is_not_out_of_order(tmp_path, minutes):
     assert list(readings["time"]) == list(utc)
     assert late_ones(readings) == set()
     assert np.array_equal(readings["value"], np.arange(len(utc)))
+
+
+def test_an_export_that_lists_the_newest_first_is_in_order(tmp_path):
+    rows = [(minute, tag) for minute in reversed(range(40)) for tag in TAGS]
+    rows[60], rows[90] = rows[90], rows[60]  # (19, a) and (9, a)
+    (tmp_path / "x.csv").write_text(text_of(rows))
+    source = open_source("csv", {"path": "x.csv"}, tmp_path)
+    late = late_ones(source.read(TAGS, window(0, 60)).readings)
+    assert late == {(minute, "a") for minute in range(10, 20)}
+    assert late_ones(source.read(TAGS, window(12, 14)).readings) == {(12, "a"), (13, "a")}

@@ -14,6 +14,8 @@ from hypothesis import strategies as st
 import connectors.parquet_file
 from connectors import open_source
 from connectors.base import READING_COLUMNS, ConnectorError, Quality, Window
+from connectors.parquet_options import ParquetOptions
+from connectors.parquet_source import ParquetSource
 
 DAY = Window(pd.Timestamp("2026-01-31", tz="UTC"), pd.Timestamp("2026-02-01", tz="UTC"))
 MINUTES = pd.date_range("2026-01-31 06:00", periods=60, freq="min", tz="UTC")
@@ -81,7 +83,7 @@ def test_row_groups_of_other_tags_are_not_read(tmp_path, read_groups):
 def test_times_kept_as_texts_are_indexed_once(tmp_path, read_groups):
     texts = [t.strftime("%Y-%m-%d %H:%M:%S") for t in MINUTES]
     write(tmp_path, time=texts, tag=["a"] * 60, value=np.arange(60.0))
-    reader = source(tmp_path)
+    reader = ParquetSource(ParquetOptions(path="*.parquet"), tmp_path, cache_limit=0)
     for _ in range(2):
         read_groups.clear()
         assert len(reader.read(["a"], window("2026-01-31 06:12", "2026-01-31 06:13")).readings) == 1
@@ -251,3 +253,33 @@ def test_large_row_groups_are_turned_piece_by_piece(tmp_path, monkeypatch):
     monkeypatch.setattr(connectors.parquet_file, "_BATCH", 7)
     write_minutes(tmp_path, group=60)
     assert [v for *_, v, _ in rows(source(tmp_path).read(["b"], DAY))] == list(range(1, 60, 2))
+
+
+@pytest.mark.parametrize("limit", [0, 20_000, 96 << 20])
+@pytest.mark.parametrize("layout", ["long", "wide"])
+def test_row_groups_kept_in_memory_give_the_readings_of_the_file_as_it_is(tmp_path, layout, limit):
+    times = pd.date_range("2026-01-31", periods=1440, freq="1min", tz="UTC")
+    path = tmp_path / "x.parquet"
+
+    def write(scale):
+        wide = pd.DataFrame({tag: np.arange(1440.0) * scale for tag in "abc"}, index=times)
+        wide = wide.rename_axis("time")
+        table = wide.reset_index()
+        if layout == "long":
+            table = table.melt(id_vars="time", var_name="tag").sort_values("time")
+        table.to_parquet(path, row_group_size=1000, index=False)
+
+    write(1.0)
+    options = ParquetOptions(path="x.parquet", layout=layout)
+    source = ParquetSource(options, tmp_path, cache_limit=limit)
+    for scale in (1.0, 2.0):
+        if scale > 1.0:
+            write(scale)
+            os.utime(path, ns=(1, 1))
+        for tags in (["a", "b"], ["c"], ["a", "b"]):
+            for low in range(0, 1440, 180):
+                span = Window(times[low], times[low] + pd.Timedelta(hours=3))
+                found = source.read(tags, span).readings
+                expected = np.tile(np.arange(low, low + 180.0) * scale, len(tags))
+                assert list(found["value"]) == list(expected)
+                assert list(found["tag"]) == list(np.repeat(tags, 180))
