@@ -1,15 +1,15 @@
 """Every stream and signal again with the instruments moved, one at a time: rows of states.
 
 Row 0 is as read; each further row has one source higher by its standard uncertainty. A stream reads
-one pressure, one temperature and one flow at most, so that all pressures are moved in one pass
-through the steam tables, then all temperatures, all else, and the barometer: what each stream makes
-of its own gauge stands apart from the others (the colouring of sparse Jacobians: Curtis, Powell and
-Reid, IMA J. Appl. Math. 13 (1974) 117, from memory). Flows that come from balances are then found
-row by row.
+few tags, so that many tags of which no stream reads two are moved in one pass through the steam
+tables (all pressures, say, then all temperatures): what each stream makes of its own gauge stands
+apart from the others (the colouring of sparse Jacobians: Curtis, Powell and Reid, IMA J. Appl.
+Math. 13 (1974) 117, from memory). Flows that come from balances are then found row by row.
 """
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import TYPE_CHECKING
@@ -33,7 +33,7 @@ if TYPE_CHECKING:
     from monitor.equipment.base import FloatArray, Item
     from monitor.flags import FlagArray
     from monitor.site.load import Site
-    from monitor.site.models import Reference, Stream, Tag
+    from monitor.site.models import Reference, Stream
     from monitor.site.units import Unit
 
 __all__ = ["Moved", "Sample", "in_order", "move", "rows_of"]
@@ -52,8 +52,8 @@ _FIELDS = (
     "chemical",
 )
 _FLOW, _PRESSURE, _DRYNESS = (_FIELDS.index(n) for n in ("mass_flow", "pressure", "dryness"))
-_AS_READ, _PRESSURES, _TEMPERATURES, _OTHERS, _BAROMETER = range(5)
-_PASSES = 5
+_AS_READ, _BAROMETER = 0, 1
+_ANOTHER_PHASE = 0.5
 # A phase that is not told lies anywhere between the two saturated ones: a rectangular distribution
 # has its width over the root of 12 as standard uncertainty (GUM, 4.3.7 and 4.3.8).
 _RECTANGULAR = 1.0 / np.sqrt(12.0)
@@ -211,11 +211,13 @@ def move(site: Site, sample: Sample) -> Moved:
 
 def _measured(site: Site, sample: Sample) -> dict[str, _Rows]:
     """What the instruments alone give; unknowns that balances give are NaN."""
-    states = stream_states(site, _passes(site, sample))
+    passes = _passes(site, sample)
+    states = stream_states(site, _gauges(site, sample, passes))
+    count = 1 + max(passes.values())
     found = {}
     for name, state in states.items():
-        values = _values(state, _PASSES, sample.count)
-        ways = _ways(site, sample, site.streams[name])
+        values = _values(state, count, sample.count)
+        ways = _ways(site, sample, site.streams[name], passes)
         near = (state.flag[: sample.count] & Flag.NEAR_SATURATION) != 0
         if near.any():
             _hold_phase(values, near)
@@ -226,16 +228,33 @@ def _measured(site: Site, sample: Sample) -> dict[str, _Rows]:
     return found
 
 
-def _passes(site: Site, sample: Sample) -> Gauges:
-    """The gauges five times over: as read, and moved together where no stream reads two."""
-    names = [name for name in site.used_tags() if name in sample.means]
-    means = np.stack([sample.means[name] for name in names])
-    moved = np.repeat(means[:, None], _PASSES, axis=1)
-    barometer = np.repeat(sample.barometer[None], _PASSES, axis=0)
+def _passes(site: Site, sample: Sample) -> dict[str, int]:
+    """The pass in which each tag of a stream is moved: never two tags of one stream in one."""
+    beside: dict[str, dict[str, None]] = {}
+    for stream in site.streams.values():
+        tags = dict.fromkeys(r.tag for _, r, _ in stream.references() if r.tag is not None)
+        for tag in tags:
+            beside.setdefault(tag, {}).update(tags)
+    passes = {sample.barometer_tag: _BAROMETER}
+    for tag, others in beside.items():
+        taken = {passes[other] for other in others if other in passes}
+        free = next(p for p in itertools.count(_BAROMETER + 1) if p not in taken)
+        passes.setdefault(tag, free)
+    return passes
+
+
+def _gauges(site: Site, sample: Sample, passes: Mapping[str, int]) -> Gauges:
+    """The gauges of all passes, one after the other: as read, then moved."""
+    names = list(sample.means)
+    count = 1 + max(passes.values())
+    means = np.array([sample.means[name] for name in names])
+    moved = np.repeat(means[:, None], count, axis=1)
+    barometer = np.repeat(sample.barometer[None], count, axis=0)
     for place, name in enumerate(names):
-        tag = site.tags[name]
-        u = standard_uncertainty(tag, means[place])
-        moved[place, _pass_of(tag, sample)] += u
+        if name not in passes:
+            continue
+        u = standard_uncertainty(site.tags[name], means[place])
+        moved[place, passes[name]] += u
         if name == sample.barometer_tag:
             barometer[_BAROMETER] += u
     barometer = barometer.reshape(-1)
@@ -249,19 +268,12 @@ def _passes(site: Site, sample: Sample) -> Gauges:
     return Gauges(tags, barometer, idle, flag)
 
 
-def _pass_of(tag: Tag, sample: Sample) -> int:
-    if tag.name == sample.barometer_tag:
-        return _BAROMETER
-    by_quantity = {Quantity.PRESSURE: _PRESSURES, Quantity.TEMPERATURE: _TEMPERATURES}
-    return by_quantity.get(tag.unit.quantity, _OTHERS)
-
-
-def _ways(site: Site, sample: Sample, stream: Stream) -> dict[str, int]:
+def _ways(site: Site, sample: Sample, stream: Stream, passes: Mapping[str, int]) -> dict[str, int]:
     """The tags that a stream reads, each with the pass that moved it."""
     ways: dict[str, int] = {}
     for _, reference, _ in stream.references():
         if reference.tag is not None:
-            ways[reference.tag] = _pass_of(site.tags[reference.tag], sample)
+            ways[reference.tag] = passes[reference.tag]
         if sample.barometer_tag and _on_barometer(site, reference):
             ways[sample.barometer_tag] = _BAROMETER
     test = stream.throttling_test
@@ -281,17 +293,20 @@ def _on_barometer(site: Site, reference: Reference) -> bool:
 
 def _hold_phase(values: FloatArray, near: np.ndarray[tuple[int], np.dtype[np.bool_]]) -> None:
     """Beside saturation a gauge's move must not boil the stream: its phase is a source itself."""
-    other = near & (values[_DRYNESS] != values[_DRYNESS, _AS_READ])
+    dryness = values[_DRYNESS]
+    other = near & (np.abs(dryness - dryness[_AS_READ]) > _ANOTHER_PHASE)
     as_read = np.broadcast_to(values[:, :1], values.shape)
     values[:, other] = as_read[:, other]
 
 
 def _phase_source(site: Site, name: str) -> str:
-    """Streams that read the same two gauges are in doubt together: named after the first."""
-    own = site.streams[name]
-    gauges = own.pressure, own.temperature
-    first = next(s.id for s in site.streams.values() if (s.pressure, s.temperature) == gauges)
-    return STATE_OF + first
+    """Streams that read the same gauges are in doubt together: named after the first."""
+
+    def gauges(stream: Stream) -> list[tuple[str, Reference]]:
+        return [(key, reference) for key, reference, _ in stream.references() if key != "flow"]
+
+    own = gauges(site.streams[name])
+    return STATE_OF + next(s.id for s in site.streams.values() if gauges(s) == own)
 
 
 def _with_phase(
