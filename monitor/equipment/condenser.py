@@ -13,6 +13,7 @@ Source: Heat Exchange Institute practice for UA and TTD (from memory); Bejan, Ts
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
 from typing import TYPE_CHECKING, Annotated, cast
 
@@ -33,13 +34,20 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.heat_transfer import conductance, share
-from monitor.equipment.working import Working, boiling_at, conductance_of, difference, heat_taken
+from monitor.equipment.working import (
+    Working,
+    boiling_at,
+    conductance_of,
+    difference,
+    heat_taken,
+    ratio,
+)
 from monitor.flags import Flag
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Mapping
 
     from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
@@ -77,6 +85,21 @@ class CondenserOptions(Options):
             warmer = cooling.temperature - self.design_cooling_temperature
             ua = ua * (1.0 + self.ua_per_kelvin * warmer)
         return ua
+
+    def clean_working(self, cooling: Mapping[str, float]) -> Working:
+        """`expected_ua` of one cell as a step [kW/K]."""
+        ua, parts = (math.nan if self.design_ua is None else self.design_ua / 1e3), []
+        parts.append(f"{ua:.4f}")
+        if self.design_cooling_flow is not None:
+            flow = max(cooling["mass_flow_kg_s"], 0.0)
+            ua *= math.sqrt(flow / self.design_cooling_flow)
+            parts.append(f"sqrt({flow:.4f} / {self.design_cooling_flow:.4f})")
+        if self.design_cooling_temperature is not None:
+            warmer = cooling["temperature_degc"] + 273.15 - self.design_cooling_temperature
+            ua *= 1.0 + self.ua_per_kelvin * warmer
+            parts.append(f"(1 + {self.ua_per_kelvin:g} * {warmer:.4f})")
+        formula = "UA_clean = UA_design sqrt(m / m_design) [1 + a (T_in - T_design)]"
+        return Working("UA of clean tubes", formula, " * ".join(parts), ua, "kW/K")
 
 
 class Condenser(Kind):
@@ -175,7 +198,7 @@ class Condenser(Kind):
         }
 
     def working(self, at: AtHand, figure: str) -> Iterator[Working]:
-        """Steps to heat transfer, terminal difference and duty."""
+        """Steps to one figure."""
         cold, warm = at.only("cooling_in"), at.only("cooling_out")
         duty = heat_taken(cold, warm)
         if figure == "duty":
@@ -183,11 +206,33 @@ class Condenser(Kind):
             return
         boiling = boiling_at(at.only("steam")["pressure_bar"])
         ends = [boiling.value - row["temperature_degc"] for row in (cold, warm)]
+        approach = difference(
+            "terminal temperature difference",
+            "T_sat - T_cooling,out",
+            boiling.value,
+            warm["temperature_degc"],
+        )
         if figure == "ttd":
-            yield boiling
-            leaving = warm["temperature_degc"]
-            name = "terminal temperature difference"
-            yield difference(name, "T_sat - T_cooling,out", boiling.value, leaving)
-        elif figure == "ua":
-            yield from (duty, boiling)
-            yield from conductance_of(duty.value, *ends)
+            yield from (boiling, approach)
+            return
+        *mean, measured = conductance_of(duty.value, *ends)
+        if figure == "ua":
+            yield from (duty, boiling, *mean, measured)
+            return
+        clean = cast("CondenserOptions", at.item.options).clean_working(cold)
+        if figure == "cleanliness":
+            yield from (duty, boiling, *mean, replace(measured, is_figure=False), clean)
+            yield from ratio("cleanliness", "UA / UA_clean", measured.value, clean.value)
+            return
+        rise = warm["temperature_degc"] - cold["temperature_degc"]
+        exponent = clean.value * rise / duty.value if duty.value else math.nan
+        expected = Working(
+            "terminal temperature difference of clean tubes",
+            "(T_out - T_in) / (exp(UA_clean (T_out - T_in) / Q) - 1)",
+            f"{rise:.4f} / (exp({exponent:.5f}) - 1)",
+            rise / math.expm1(exponent) if exponent else math.nan,
+            "K",
+        )
+        yield from (duty, boiling, replace(approach, is_figure=False), clean, expected)
+        name, formula = "above that of clean tubes", "TTD - TTD_clean"
+        yield difference(name, formula, approach.value, expected.value)

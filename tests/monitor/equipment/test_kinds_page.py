@@ -39,7 +39,7 @@ START = 1_770_000_000 // 3600 * 3600
 # What an example's valve, open or closed, leaves without a value.
 ABSENT = {("letdown", "passing_flow")}
 # Judged figures that are a reading as it stands, or rest on more than the streams' stored states.
-WITHOUT_STEPS = {("vent", "passing_flow"), ("condenser", "cleanliness"), ("turbine", "eta_s_1"),
+WITHOUT_STEPS = {("vent", "passing_flow"), ("turbine", "eta_s_1"),
                  ("turbine", "eta_s_2")}  # fmt: skip
 
 
