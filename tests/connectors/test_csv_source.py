@@ -363,9 +363,9 @@ def test_a_file_that_grew_is_read_only_from_its_old_end(tmp_path, monkeypatch):
     parsed = []
     original = connectors.csv_index.BlockParser.parse
 
-    def spy(self, raw, line, problems):
+    def spy(self, raw, line, problems, order=None):
         parsed.append((raw, line))
-        return original(self, raw, line, problems)
+        return original(self, raw, line, problems, order)
 
     monkeypatch.setattr(connectors.csv_index.BlockParser, "parse", spy)
     append(path, "2026-01-31 06:02:00,62-PT-001,43,Good\n")
