@@ -38,7 +38,7 @@ _UNITS = {
 }  # fmt: skip
 _FACTORS = (0.25, 0.33, 0.5, 0.67, 0.8, 0.9, 1.11, 1.25, 1.5, 2.0, 3.0, 4.0)
 _PRESSURE_FACTORS = (0.7, 0.8, 0.9, 1.1, 1.25, 1.4)
-_KELVINS = (-80.0, -40.0, -20.0, -10.0, 10.0, 20.0, 40.0, 80.0)
+_KELVINS = (-80.0, -40.0, -20.0, -10.0, -5.0, 5.0, 10.0, 20.0, 40.0, 80.0)
 _PLAIN = 0.12
 """Cost of a reading that is merely off: a named mistake explains as much with less."""
 _SWAP, _SWAP_ALIKE, _SWAP_FAR = 0.04, 0.10, 0.14
@@ -179,7 +179,10 @@ def _restated_together(tags: Mapping[str, Tag], day: Typical) -> Iterator[Guess]
             values = {
                 n: relative(unit, parse_unit(other), day.raw[n], day.barometer) for n in names
             }
-            words = f"and all {len(names)} tags beside it that say {text} look like {other}"
+            words = (
+                f"it and the {len(names) - 1} other tags of its source that say {text} look like "
+                f"{other}"
+            )
             restated = Supposition(values, frozenset(names))
             yield Guess(tuple(names), "unit", words, _TOGETHER, restated)
 

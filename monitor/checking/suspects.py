@@ -32,7 +32,7 @@ _MOST = 4
 """Suspects named at most: with more faults than that, the first ones must be put right first."""
 _LEAST = 0.42
 """What a suspect must explain, net of its cost: most of one clear contradiction."""
-_AS_GOOD = 0.12
+_AS_GOOD = 0.2
 """Net explanations that differ by less are as good as each other."""
 _KNEE = 2.0
 """Size at which a contradiction counts half; it counts one at the most."""

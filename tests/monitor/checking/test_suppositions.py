@@ -103,6 +103,27 @@ def test_a_meter_that_is_off_by_no_unit_is_said_to_be_off(site, day):
     assert found[0].guess.words == "seems to read about 1.5 times what flows"
 
 
+def test_a_flow_meter_that_shows_nothing_is_told_by_the_balances(site, day):
+    found, _ = suspects(site, _with(day, FT_1002=0.0))
+    assert found[0].guess.tags == ("FT-1002",)
+    assert found[0].guess.words == "shows no flow where the balances have one"
+
+
+def test_two_generators_crossed_are_named_together(site, day):
+    crossed = {"JT_4101": day.raw["JT-4201"], "JT_4201": day.raw["JT-4101"]}
+    found, _ = suspects(site, _with(day, **crossed))
+    assert found[0].guess.tags == ("JT-4101", "JT-4201")
+
+
+def test_a_balance_that_cannot_tell_two_meters_apart_names_both(site, day):
+    # Nothing but the condenser's balance rests on its cooling water, on both sides alike.
+    warmer = _with(day, TT_4302=day.raw["TT-4302"] + 4.6)
+    found, _ = suspects(site, warmer)
+    named = {t for g in (found[0].guess, *found[0].rivals) for t in g.tags}
+    assert "TT-4302" in named
+    assert len(named) > 1
+
+
 def test_what_physics_cannot_tell_is_not_made_up(site, day):
     # One bar at the feed pump's 82, and the valve of a line that is shut: nothing depends on them.
     for raw in ({"PT_3004": day.raw["PT-3004"] - 1.0}, {"TT_5101": day.raw["TT-5101"] - 60.0}):

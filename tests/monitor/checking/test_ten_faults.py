@@ -193,10 +193,9 @@ def test_a_column_that_cannot_be_read_is_named_with_what_it_holds(faulty, tag, t
 
 def test_a_missing_decimal_comma_is_named_as_what_it_is(faulty):
     faulty.edit('decimal = ","\n', "")
-    checked = look_at(faulty)
-    assert "utilities" in {cause.subject for cause in checked.causes}
-    told = " ".join(cause.reason for cause in checked.causes)
-    assert "seems to be written with decimal = ',', not '.'" in told
+    (cause,) = look_at(faulty).causes
+    assert (cause.kind, cause.subject) == ("source", "utilities")
+    assert "seems to be written with decimal = ',', not '.'" in cause.reason
 
 
 # the command
