@@ -55,9 +55,13 @@ def _example(kind, folder):
 
 
 def _computed(site, ambient=12.0):
+    return _window(site, {"TA": ambient}).batch
+
+
+def _window(site, readings):
     times = np.arange(START - lead_in(site), START + 3601, 60)
     names = list(READ)
-    values = [ambient if n == "TA" else READ[n][1] for n in names]
+    values = [readings.get(n, READ[n][1]) for n in names]
     table = pd.DataFrame(
         {
             "tag": pd.Categorical.from_codes(
@@ -68,7 +72,7 @@ def _computed(site, ambient=12.0):
             "quality": np.full(len(names) * len(times), np.uint8(Quality.GOOD)),
         }
     )
-    return compute(site, ReadResult(table), START, START + 3600).batch
+    return compute(site, ReadResult(table), START, START + 3600, with_budgets=True)
 
 
 def test_the_page_has_every_kind_in_order():
@@ -143,3 +147,31 @@ def test_another_ambient_moves_the_live_figures_and_leaves_the_reference(kind, t
     pd.testing.assert_frame_equal(warm[columns], cold[columns], rtol=1e-12)
     if warm["exergy_in_live_kw"].abs().max() > 0:
         assert not np.allclose(warm["exergy_in_live_kw"], cold["exergy_in_live_kw"], rtol=1e-3)
+
+
+@pytest.mark.parametrize("kind", sorted(KINDS))
+def test_a_tags_part_in_an_uncertainty_is_what_its_reading_does(kind, tmp_path):
+    """Each tag higher by its class (by default 1 % of a pressure, 1.5 K), all computed again."""
+    site = _example(kind, tmp_path)
+    base = _window(site, {})
+    found = base.uncertainties
+    for tag in site.used_tags():
+        unit, value = READ[tag]
+        moved = _window(site, {tag: value + (1.5 if unit == "degC" else 0.01 * value)}).batch
+        budgets = {("it", "destroyed_live_kw"): (found.destroyed["it"], 1e-3)}
+        budgets |= {key: (one, 1.0) for key, one in found.conditions.items()}
+        budgets |= {(s, "exergy_live_kw"): (one, 1e-3) for s, one in found.exergy.items()}
+        for (subject, figure), (budget, scale) in budgets.items():
+            before, after = (_first(batch, subject, figure) for batch in (base.batch, moved))
+            told = dict(budget.ranked(0)).get(tag, 0.0) * scale
+            if np.isfinite(before):
+                size = 1e-9 * (1 + abs(before))
+                assert told == pytest.approx(after - before, rel=1e-6, abs=size, nan_ok=True)
+
+
+def _first(batch, subject, figure):
+    for table in (batch.equipment, batch.streams):
+        if figure in table.columns and subject in set(table["subject"]):
+            return table.loc[table["subject"] == subject, figure].iloc[0]
+    table = batch.conditions
+    return table.loc[(table["subject"] == subject) & (table["figure"] == figure), "value"].iloc[0]

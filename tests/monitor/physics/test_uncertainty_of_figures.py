@@ -6,6 +6,8 @@ them leave the standard deviation uncertain by 0.7 %. Derivatives are those of t
 
 from __future__ import annotations
 
+from pathlib import Path
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -17,6 +19,7 @@ from physics_site import START, build, rows, run
 from connectors.base import ReadResult
 from monitor.figures import compute, lead_in
 from monitor.flags import Flag
+from monitor.uncertainty.classes import DEFAULTS
 
 DRAWS = 10_000
 AMBIENT = {"TA": 15.0, "PA": 1.013}
@@ -288,6 +291,12 @@ def test_beside_saturation_the_phase_itself_is_uncertain(tmp_path):
     assert (found["flag"] & int(Flag.NEAR_SATURATION) != 0).all()
     width = 10 * (dry.h - wet.h - 288.15 * (dry.s - wet.s))
     np.testing.assert_allclose(found["u_exergy_live_kw"], width / np.sqrt(12), rtol=0.02)
+
+
+def test_the_defaults_of_classes_are_told_to_whoever_writes_a_site_file():
+    text = (Path(__file__).parents[3] / "config" / "README.md").read_text(encoding="utf-8")
+    section = text.split("### Uncertainties")[1].split("###")[0]
+    assert all(f"`{words}`" in section for words in DEFAULTS.values())
 
 
 def test_figures_say_which_instruments_state_no_class(tmp_path):
