@@ -281,9 +281,11 @@ def write_days(folder, days, units=1):
 
 def counted():
     """Tags, streams, pieces of equipment, as the issue counts them."""
-    streams = set(itertools.chain.from_iterable(
-        [s] if isinstance(s, str) else s
-        for _, ports in EQUIPMENT.values()
-        for s in ports.values()
-    ))
+    streams = set(
+        itertools.chain.from_iterable(
+            [s] if isinstance(s, str) else s
+            for _, ports in EQUIPMENT.values()
+            for s in ports.values()
+        )
+    )
     return len(design()) + len(AMBIENT), len(streams), len(EQUIPMENT)

@@ -21,7 +21,7 @@ import structlog
 from connectors.base import ConnectorError, Window
 from monitor.ahead import on_cluster, on_processes
 from monitor.changed import Changed
-from monitor.cycle import compute_window, run_window, store_window
+from monitor.cycle import compute_window, run_news, run_window, store_window
 from monitor.errors import WrongUseError
 from monitor.log import logger
 from monitor.sources import open_sources
@@ -34,6 +34,7 @@ if TYPE_CHECKING:
     from connectors.base import Connector, Problem
     from monitor.cycle import ComputedWindow
     from monitor.figures import Computed
+    from monitor.seen import Seen
     from monitor.site.load import Site
     from monitor.store.site import SiteStore
 
@@ -199,6 +200,7 @@ def catch_up(
     *,
     stop: Callable[[], bool] = lambda: False,
     run_kind: str = "cycle",
+    seen: Seen | None = None,
 ) -> list[Computed]:
     """Compute what came since the last time, and the look-back before it again.
 
@@ -214,6 +216,8 @@ def catch_up(
         now: the wall clock, UTC seconds.
         stop: asked between windows; what is left is for the next time.
         run_kind: the run's name in the store.
+        seen: what the newest figures were made of, kept from one call to the next, so that hours
+            of the look-back with no new reading are not computed again.
 
     Returns:
         The windows in order; empty when there is nothing new.
@@ -239,11 +243,14 @@ def catch_up(
     changed = Changed.since(store, start, min(reached, end))
     with recorded_run(site, store, run_kind, start, end) as (run_id, tally):
         length = min(window_length(site, end - start), DAY)
-        cut, skipped = windows(start, end, length), 0
+        live = seen is not None and end - start <= length
+        cut, skipped = [(start, end)] if live else windows(start, end, length), 0
         for first, last in cut:
             if stop():
                 break
-            if done and not done[-1].readings and (first, last) != cut[-1]:
+            if live and seen is not None:
+                computed = run_news(site, store, sources, first, last, run_id, seen)
+            elif done and not done[-1].readings and (first, last) != cut[-1]:
                 computed = compute_window(site, sources, first, last)
                 if not computed.readings:
                     skipped += 1

@@ -14,10 +14,18 @@ if TYPE_CHECKING:
     from collections.abc import Iterable, Mapping, Sequence
 
     from connectors.base import Connector
+    from monitor.seen import Seen
     from monitor.site.load import Site
     from monitor.store.site import SiteStore
 
-__all__ = ["ComputedWindow", "compute_window", "read_window", "run_window", "store_window"]
+__all__ = [
+    "ComputedWindow",
+    "compute_window",
+    "read_window",
+    "run_news",
+    "run_window",
+    "store_window",
+]
 
 
 def run_window(
@@ -45,6 +53,43 @@ def run_window(
     computed = compute_window(site, sources, start, end)
     store_window(site, store, computed, run_id)
     return computed
+
+
+def run_news(
+    site: Site,
+    store: SiteStore,
+    sources: Mapping[str, Connector],
+    start: int,
+    end: int,
+    run_id: int,
+    seen: Seen,
+) -> ComputedWindow:
+    """As `run_window`, but leave out the hours in front whose readings are those of before.
+
+    Args:
+        site: as for `run_window`.
+        store: likewise.
+        sources: likewise.
+        start: likewise; the window that is computed may begin later.
+        end: likewise.
+        run_id: likewise.
+        seen: what the stored figures were made of; brought up to date.
+
+    Raises:
+        ConnectorError, StoreError: as `run_window`.
+    """
+    read = read_window(site, sources, start, end)
+    first = start - lead_in(site)
+    newest = _newest(site, sources, read.readings, start)
+    begin = seen.news_from(site, read.readings, first, start, end)
+    wanted = read
+    if begin > start:
+        since = pd.Timestamp(begin - lead_in(site), unit="s", tz="UTC").as_unit("us")
+        wanted = ReadResult(read.readings[read.readings["time"] >= since], read.problems)
+    found = ComputedWindow(**vars(compute(site, wanted, begin, end)), newest=newest)
+    store_window(site, store, found, run_id)
+    seen.remember(site, read.readings, first, start, end)
+    return found
 
 
 @dataclass(frozen=True)

@@ -30,6 +30,7 @@ from monitor.judging import judge_site, plant_now
 from monitor.log import logger
 from monitor.notify.notifier import NOTIFICATIONS, Notifier
 from monitor.reloading import SiteWatch
+from monitor.seen import Seen
 from monitor.store import schema
 from monitor.store.engine import reading
 from monitor.store.errors import InstanceRunning, StoreError
@@ -93,6 +94,7 @@ class Daemon:
     reloaded: Callable[[], None] | None = field(default=None, init=False)
     _open: ExitStack = field(default_factory=ExitStack, init=False)
     _sources: Mapping[str, Connector] | None = field(default=None, init=False)
+    _seen: Seen = field(default_factory=Seen, init=False)
     _stale_from: int | None = field(default=None, init=False)
     _judged: bool = field(default=False, init=False)
     _unreported: int | None = field(default=None, init=False)
@@ -267,7 +269,14 @@ class Daemon:
         begun = time.perf_counter()
         sources = self._opened()
         try:
-            done = catch_up(self.site, self.store, sources, self.clock(), stop=self.stop.is_set)
+            done = catch_up(
+                self.site,
+                self.store,
+                sources,
+                self.clock(),
+                stop=self.stop.is_set,
+                seen=self._seen,
+            )
         except ConnectorError:
             # A historian that was away is opened anew when it is back.
             self.close()

@@ -129,5 +129,6 @@ def hold_on_grid(seconds: FloatArray, values: FloatArray, grid: Grid, hold: floa
 
 def _merged(one: FloatArray, other: FloatArray) -> FloatArray:
     """Distinct values of two ascending arrays: a stable sort only merges the two runs."""
-    both = np.sort(np.concatenate([one, other]), kind="stable")
-    return both[np.append(True, both[1:] != both[:-1])]
+    both: FloatArray = np.sort(np.concatenate([one, other]), kind="stable")
+    distinct = np.append(True, both[1:] != both[:-1])
+    return np.asarray(both[distinct])
