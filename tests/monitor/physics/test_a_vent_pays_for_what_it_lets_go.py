@@ -1,4 +1,4 @@
-"""The cost of steam that a vent lets go is charged whole: what it destroys and what then is lost."""
+"""The cost of steam that a vent lets go is charged whole, destroyed and lost together."""
 
 from __future__ import annotations
 
