@@ -187,7 +187,7 @@ class Turbine(Kind):
         return figures
 
     def working(self, at: AtHand, figure: str) -> Iterator[Working]:
-        """Steps to one figure; none to an efficiency of several expansions side by side."""
+        """Steps to one figure."""
         if figure == "steam_rate":
             flow, power = at.only("inlet")["mass_flow_kg_s"], at.only("power")["energy_kw"]
             yield from ratio("steam per kWh", "3600 m / W", 3600.0 * flow, power, "kg/kWh")
@@ -196,24 +196,43 @@ class Turbine(Kind):
             h_f, h_g = enthalpies_at_boiling(exhaust["pressure_bar"])
             wet = h_g - exhaust["enthalpy_kj_kg"]
             yield from ratio("moisture", "1 - x = (h_g - h) / (h_g - h_f)", wet, h_g - h_f)
-        elif not at.item.ports.get("induction"):
+        else:
             yield from self._expansion(at, int(figure.rsplit("_", 1)[1]))
 
     def _expansion(self, at: AtHand, number: int) -> Iterator[Working]:
-        """One section, Moran and Shapiro eq. 6.46."""
+        """One section, Moran and Shapiro eq. 6.46; what joins it expands beside the main flow."""
         ports = at.item.ports
         line = [*ports["inlet"], *ports.get("extraction", ()), *ports["exhaust"]]
         names = line[number - 1 : number + 1]
         before, after = (at.streams[s] for s in names)
-        end = isentropic_end(before, after["pressure_bar"], names)
-        yield end
-        h1, h2 = before["enthalpy_kj_kg"], after["enthalpy_kj_kg"]
+        h2, joining = after["enthalpy_kj_kg"], _joining(at.item, number)
+        flows = _flow_of_section(at.item, number) or ((1.0, names[0]),)
+        main = math.fsum(sign * at.streams[s]["mass_flow_kg_s"] for sign, s in flows)
+        given, available, numbers = 0.0, 0.0, []
+        for name in (names[0], *joining):
+            state = at.streams[name]
+            end = isentropic_end(state, after["pressure_bar"], (name, names[1]))
+            yield end
+            h1 = state["enthalpy_kj_kg"]
+            flow = main if name == names[0] else state["mass_flow_kg_s"]
+            flow = flow if joining else 1.0
+            given, available = given + flow * (h1 - h2), available + flow * (h1 - end.value)
+            weight = f"{flow:.5f} * " if joining else ""
+            numbers.append(
+                (f"{weight}({h1:.4f} - {h2:.4f})", f"{weight}({h1:.4f} - {end.value:.4f})")
+            )
         loss = cast("TurbineOptions", at.item.options).loss_per_moisture
-        value = 100 * (h1 - h2) / (h1 - end.value) if h1 > end.value else math.nan
+        value = 100 * given / available if available > 0 else math.nan
+        above, below = (" + ".join(terms) for terms in zip(*numbers, strict=True))
+        formula = (
+            "sum m (h_in - h_out) / sum m (h_in - h_s)"
+            if joining
+            else ("(h_in - h_out) / (h_in - h_s)")
+        )
         yield Working(
             "isentropic efficiency",
-            "eta_s = (h_in - h_out) / (h_in - h_s)",
-            f"({h1:.4f} - {h2:.4f}) / ({h1:.4f} - {end.value:.4f})",
+            f"eta_s = {formula}",
+            f"[{above}] / [{below}]" if joining else f"{above} / {below}",
             value,
             "%",
             is_figure=not loss,
@@ -252,6 +271,18 @@ def _flow_of_section(item: Item, number: int) -> tuple[tuple[float, str], ...]:
         flows.append((1.0 if stream in admitted else -1.0, stream))
         passed += stream not in admitted
     return tuple(flows) if len(flows) > 1 else ()
+
+
+def _joining(item: Item, number: int) -> tuple[str, ...]:
+    """Streams admitted within a section."""
+    admitted = item.ports.get("induction", ())
+    passed, found = 1, []
+    for stream in cast("TurbineOptions", item.options).order:
+        if stream not in admitted:
+            passed += 1
+        elif passed == number:
+            found.append(stream)
+    return tuple(found)
 
 
 @dataclass(frozen=True)

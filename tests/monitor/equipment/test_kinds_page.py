@@ -38,9 +38,8 @@ READ = {"TA": ("degC", 12.0), "PT-1": ("bar(a)", 12.3), "PT-2": ("bar(a)", 12.1)
 START = 1_770_000_000 // 3600 * 3600
 # What an example's valve, open or closed, leaves without a value.
 ABSENT = {("letdown", "passing_flow")}
-# Judged figures that are a reading as it stands, or rest on more than the streams' stored states.
-WITHOUT_STEPS = {("vent", "passing_flow"), ("turbine", "eta_s_1"),
-                 ("turbine", "eta_s_2")}  # fmt: skip
+# A reading as it stands, while its valve is closed.
+WITHOUT_STEPS = {("vent", "passing_flow")}
 
 
 def _example(kind, folder):
