@@ -9,14 +9,19 @@ import numpy as np
 from monitor.checking.lines import VERDICTS, Figures, Line, Verdict, number
 from monitor.checking.ports import PRESSURE_FALLS, STEAM_PORTS, WATER_PORTS
 from monitor.equipment.solve import spare_measurements
+from monitor.flags import Flag
+from monitor.uncertainty import COVERAGE
+from monitor.uncertainty.told import contributions, excess, suspect
 
 if TYPE_CHECKING:
     from collections.abc import Iterator, Mapping, Sequence
 
+    import pandas as pd
+
     from monitor.checking.contradictions import Contradiction
     from monitor.equipment.base import Item
+    from monitor.figures import Computed
     from monitor.site.load import Site
-    from monitor.store.batch import FigureBatch
 
 __all__ = ["equipment_lines"]
 
@@ -26,21 +31,23 @@ RISE_LOOK, RISE_WRONG = 0.03, 0.15
 """Rises of absolute pressure where none can be: two gauges explain less than the first."""
 FLOWING = 0.1
 """[kg/s] Above it a stream runs; one at rest may stand at any pressure."""
+_OFTEN = 0.05
+"""Share of cells that contradict the second law from which a person should look."""
 _DOUBTFUL = 2.5
 """Multiples of its tolerance from which a contradiction is worth a look by itself."""
 
 
 def equipment_lines(
-    site: Site, batch: FigureBatch, contradicted: Sequence[Contradiction]
+    site: Site, window: Computed, contradicted: Sequence[Contradiction]
 ) -> Iterator[Line]:
     """Tell of every piece of equipment: balances over the day, pressures and phases.
 
     Args:
         site: the site.
-        batch: the day's figures.
+        window: the day's figures, with their uncertainty budgets.
         contradicted: what the day's typical readings say against physics, of size (1,).
     """
-    doubts = _doubts(contradicted)
+    batch, doubts = window.batch, _doubts(contradicted)
     within = {(one.subject, one.what) for one in contradicted if one.size[0] <= 1.0}
     streams = batch.streams.groupby("subject")[["mass_flow_kg_s", "energy_kw"]].mean().abs()
     running = batch.streams[batch.streams["mass_flow_kg_s"] > FLOWING]
@@ -63,6 +70,8 @@ def equipment_lines(
             f"{_percent(shares['energy_imbalance_share'])}, closure "
             f"{_percent(shares['closure_share'])}; destroys {destroyed:.4g} kW"
         )
+        u = means["u_destroyed_live_kw"]
+        found += f" +/- {COVERAGE * u:.4g} kW" if np.isfinite(u) else ""
         spare = spare_measurements(item)
         found += "".join(
             f"; {balance} balance spare: any one of {', '.join(tags)} could be left to it"
@@ -71,15 +80,36 @@ def equipment_lines(
         figures: Figures = {k: number(v) for k, v in shares.items()}
         figures |= {f"spare_{balance}": " ".join(tags) for balance, tags in spare.items()}
         figures |= {"destroyed_live_kw": number(destroyed), "exergy_in_live_kw": number(entered)}
+        figures |= {"u_destroyed_live_kw": number(u)}
         verdict, reason = _judge_equipment(
             shares, destroyed, entered, {w for i, w in within if i == item.id}
         )
         for told in (_judge_phase(item, dryness), _judge_pressure(item, bar)):
             if told[0] != "ok" and VERDICTS.index(told[0]) >= VERDICTS.index(verdict):
                 verdict, reason = told
+        if verdict == "ok":
+            verdict, reason = _judge_second_law(site, window, item.id, cells)
         if verdict == "ok" and item.id in doubts:
             verdict, reason = "look", doubts[item.id]
         yield Line("equipment", item.id, verdict, found, reason, figures)
+
+
+def _judge_second_law(
+    site: Site, window: Computed, item: str, cells: pd.DataFrame
+) -> tuple[Verdict, str]:
+    """Whether its readings often contradict the second law, and which one to doubt first."""
+    flags = cells["flag"].to_numpy(dtype=np.int64)
+    share = float(((flags & Flag.SECOND_LAW) != 0).mean())
+    if share <= _OFTEN or window.uncertainties is None:
+        return "ok", ""
+    reason = f"destroys less than nothing in {_percent(share)} of the day's cells"
+    budget = window.uncertainties.destroyed[item]
+    destroyed = cells["destroyed_live_kw"].to_numpy(dtype=np.float64)
+    worst = int(np.nanargmin(destroyed))
+    hour = (int(cells["time"].to_numpy()[worst]) - window.batch.start) // 3600
+    lines = contributions(budget, 1e-3, site.tags, hour)
+    culprit = suspect(lines, excess(float(destroyed[worst]), "kW"))
+    return "look", reason if culprit is None else f"{reason}; {culprit.sentence}"
 
 
 def _judge_equipment(

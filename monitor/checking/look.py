@@ -137,7 +137,8 @@ def _look(
         read.readings[times >= _utc(day.start - lead_in(site))].reset_index(drop=True),
         read.problems,
     )
-    batch = compute(site, needed, day.start, day.end).batch
+    window = compute(site, needed, day.start, day.end, with_budgets=True)
+    batch = window.batch
     for source_id, probe in probes.items():
         own = [n for n, tag in site.used_tags().items() if tag.source == source_id]
         rows = sum(len(parts[n]) for n in own if n in parts)
@@ -159,7 +160,7 @@ def _look(
     doubted = {name for pair in pairs for name in (pair.copy, pair.of)}
     found, contradicted = suspects(site, replace(normal, raw=believed), sorted(doubted))
     lines += stream_lines(site, batch)
-    lines += equipment_lines(site, batch, contradicted)
+    lines += equipment_lines(site, window, contradicted)
     told = causes(site, lines, Found(shifts, pairs, found, odd_datums(site, normal)))
     return Checked(told, tuple(explained(lines, told)))
 
