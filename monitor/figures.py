@@ -40,6 +40,7 @@ if TYPE_CHECKING:
     from monitor.readings.condition import Conditioned, Gridded
     from monitor.site.load import Site
     from monitor.site.models import Reference
+    from monitor.thermo.arrays import BoolArray
 
 __all__ = [
     "Accounted",
@@ -226,13 +227,21 @@ class Accounted:
     classes_stated: bool
 
 
-def _accounted(site: Site, drawn: Drawn, ambient: Ambient, uncertain: Uncertainties) -> Accounted:
+def _accounted(
+    site: Site,
+    drawn: Drawn,
+    ambient: Ambient,
+    uncertain: Uncertainties,
+    load: FloatArray,
+    moving: BoolArray,
+) -> Accounted:
     counted = balances(drawn)
     live = account(drawn, counted, ambient.live)
     reference = account(drawn, counted, ambient.reference)
-    load = drawn.item.kind.load(drawn)
     flag = sum_flags((*drawn.facing("in"), *drawn.facing("out")), tuple(drawn.signals.values()))
-    flag = np.asarray(flag | ambient.flag | _running(site, drawn.item, load), dtype=np.int32)
+    flag = np.asarray(
+        flag | ambient.flag | _running(site, drawn.item, load, moving), dtype=np.int32
+    )
     u = uncertain.standard(uncertain.destroyed[drawn.item.id])
     stated = not uncertain.by_default[drawn.item.id]
     passing = np.maximum(np.abs(live.exergy_in), np.abs(live.exergy_out))
@@ -279,19 +288,22 @@ def stated_uncertainty(
     return stated.amount if stated.basis == "absolute" else stated.amount * np.abs(values)
 
 
-def _running(site: Site, item: Item, load: FloatArray) -> FlagArray:
+def _running(site: Site, item: Item, load: FloatArray, moving: BoolArray) -> FlagArray:
     """Out of service, just started, or unsteady: states of the plant, not faults of readings."""
     off = load < item.options.off_below
     return np.asarray(
         _bits(off, Flag.OFF)
         | _bits(just_started(off, _steady_cells(site)), Flag.STARTING)
-        | _bits(_unsteady(site, load) & ~off, Flag.UNSTEADY)
+        | _bits(moving & ~off, Flag.UNSTEADY)
     )
 
 
-def _unsteady(site: Site, values: FloatArray) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+def _moving(site: Site, rates: Mapping[str, FloatArray]) -> dict[str, BoolArray]:
+    """Which of some rates are not steady; all at once, since many small calls cost more."""
     general = site.file.site
-    return unsteady(values, _steady_cells(site), general.steady_limit, general.steady_drift)
+    limits = (general.steady_limit, general.steady_drift)
+    found = unsteady(np.stack(list(rates.values())), _steady_cells(site), *limits)
+    return dict(zip(rates, found, strict=True))
 
 
 def _steady_cells(site: Site) -> int:
@@ -310,16 +322,19 @@ def _figures(
     conditioned: Conditioned,
     problems: tuple[Problem, ...],
 ) -> Computed:
-    accounted = [_accounted(site, d, plant.ambient, uncertain) for d in plant.drawn.values()]
+    loads = {name: drawn.item.kind.load(drawn) for name, drawn in plant.drawn.items()}
+    unsteady_loads = _moving(site, loads)
+    accounted = [
+        _accounted(site, drawn, plant.ambient, uncertain, loads[name], unsteady_loads[name])
+        for name, drawn in plant.drawn.items()
+    ]
     quality = conditioned.quality
     quality = quality[(quality["hour"] >= grid.start) & (quality["hour"] < grid.end)]
-    moving = {
-        state.id: _bits(
-            _unsteady(site, state.mass_flow if state.medium == "water" else state.energy),
-            Flag.UNSTEADY,
-        )
+    rates = {
+        state.id: state.mass_flow if state.medium == "water" else state.energy
         for state in plant.states.values()
     }
+    moving = {name: _bits(bad, Flag.UNSTEADY) for name, bad in _moving(site, rates).items()}
     batch = FigureBatch(
         start=grid.start,
         end=grid.end,

@@ -28,7 +28,7 @@ def unsteady(values: FloatArray, cells: int, spread_limit: float, drift_limit: f
     """Find cells at whose end the trailing window scatters or drifts too much.
 
     Args:
-        values: means over the cells, NaN where missing, shape (n,).
+        values: means over the cells, NaN where missing, shape (..., n).
         cells: length of the trailing window, the cell itself included.
         spread_limit: largest less smallest value, relative to the newest.
         drift_limit: rise or fall of the least-squares line over the window, relative likewise.
@@ -40,27 +40,37 @@ def unsteady(values: FloatArray, cells: int, spread_limit: float, drift_limit: f
 
 def spread(values: FloatArray, cells: int) -> FloatArray:
     """Largest less smallest value of each trailing window; missing cells are passed over."""
-    recent = _windows(values, cells)
-    return np.asarray(np.fmax.reduce(recent, axis=1) - np.fmin.reduce(recent, axis=1))
+    low, high = values.copy(), values.copy()
+    for back in range(1, min(cells, values.shape[-1])):
+        np.fmin(low[..., back:], values[..., :-back], out=low[..., back:])
+        np.fmax(high[..., back:], values[..., :-back], out=high[..., back:])
+    return high - low
 
 
 def drift(values: FloatArray, cells: int) -> FloatArray:
     """Rise of the least-squares line over each trailing window, from its first known cell.
 
     Returns:
-        Shape (n,), in the values' unit; NaN where fewer than three cells have a value, or the
-        newest has none.
+        The values' shape and unit; NaN where fewer than three cells have a value, or the newest
+        has none.
     """
-    recent = _windows(values, cells) - values[:, None]
-    n, sx, sy, sxx, sxy = (np.zeros(len(values)) for _ in range(5))
-    first = np.full(len(values), float(cells - 1))
+    count = values.shape[-1]
+    before = np.full((*values.shape[:-1], cells - 1), np.nan)
+    padded = np.concatenate([before, values], axis=-1)
+    n, sx, sy, sxx, sxy = (np.zeros(values.shape) for _ in range(5))
+    first = np.full(values.shape, float(cells - 1))
     # Offset by offset, so that a cell's sums do not depend on the window that computed them.
     for place in range(cells):
-        y = recent[:, place]
+        y = padded[..., place : place + count] - values
         known = np.isfinite(y)
-        first = np.where(known, np.minimum(first, place), first)
-        y, x = np.where(known, y, 0.0), np.where(known, float(place), 0.0)
-        n, sx, sy, sxx, sxy = n + known, sx + x, sy + y, sxx + x * x, sxy + x * y
+        y[~known] = 0.0
+        x = known * float(place)
+        np.minimum(first, float(place), out=first, where=known)
+        n += known
+        sx += x
+        sy += y
+        sxx += x * x
+        sxy += x * y
     enough = n >= _LEAST_FOR_A_LINE
     across = np.where(enough, n * sxx - sx * sx, np.nan)
     return np.asarray((n * sxy - sx * sy) / across * (cells - 1 - first))
@@ -70,8 +80,3 @@ def just_started(off: BoolArray, cells: int) -> BoolArray:
     """Find cells in service that have one out of service in their trailing window."""
     recent = np.convolve(off, np.ones(cells), mode="full")[: len(off)]
     return np.asarray(~off & (recent > 0))
-
-
-def _windows(values: FloatArray, cells: int) -> FloatArray:
-    padded = np.concatenate([np.full(cells - 1, np.nan), values])
-    return np.lib.stride_tricks.sliding_window_view(padded, cells)
