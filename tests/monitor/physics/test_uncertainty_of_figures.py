@@ -17,6 +17,7 @@ from iapws import IAPWS97
 from physics_site import START, build, rows, run
 
 from connectors.base import ReadResult
+from monitor.checking.equipment_lines import equipment_lines
 from monitor.figures import compute, lead_in
 from monitor.flags import Flag
 from monitor.uncertainty.classes import DEFAULTS
@@ -331,3 +332,30 @@ def test_an_impossible_efficiency_within_its_uncertainty_contradicts_nothing(
     assert ((eta - 100 > 2 * u) == flagged).all()
     flags = _value(batch, "tg", "eta_s_1", "flag").astype(int)
     assert ((flags & int(Flag.SECOND_LAW) != 0) == flagged).all()
+
+
+@pytest.mark.parametrize(("warmer", "told"), [(1.0, ""), (6.0, "TO may read too high")])
+def test_check_doubts_the_thermometer_that_warms_a_header(tmp_path, warmer, told):
+    """Steam that leaves warmer than it came: 6 K are far beyond two thermometers, 1 K is not."""
+    thermometers = {"TI": "0.5 K", "TO": "0.8 K"}
+    site = build(
+        tmp_path,
+        {
+            "in": {"flow": "F", "pressure": "12 bar(a)", "temperature": "TI"},
+            "out": {"flow": "balance", "pressure": "12 bar(a)", "temperature": "TO"},
+        },
+        {"h": {"kind": "header", "ports": {"inlet": "in", "outlet": "out"}}},
+        AMBIENT_TAGS
+        | {n: {"unit": "degC", "uncertainty": u} for n, u in thermometers.items()}
+        | {"F": {"unit": "t/h", "uncertainty": "0.5 t/h"}},
+    )
+    values = AMBIENT | {"F": 40.0, "TI": 250.0, "TO": 250.0 + warmer}
+    times = np.arange(START - lead_in(site), START + 3601, 60)
+    read = _readings(times, {n: (lambda t, v=v: np.full(len(t), v)) for n, v in values.items()})
+    window = compute(site, read, START, START + 3600, with_budgets=True)
+    (line,) = equipment_lines(site, window, ())
+    assert " +/- " in line.found
+    assert line.verdict == ("look" if told else "ok")
+    assert told in line.reason
+    # All of the excess, by the thermometer with the largest part: 6 K in steps of 0.8 K.
+    assert not told or ": 7." in line.reason
