@@ -5,10 +5,14 @@ from __future__ import annotations
 import os
 import shlex
 import shutil
+import sqlite3
 import subprocess
+import threading
+import uuid
 from pathlib import Path
 
 import pandas as pd
+import psycopg
 import pytest
 import sqlalchemy as sa
 
@@ -278,3 +282,78 @@ def test_what_takes_a_restart_is_said_and_not_taken_up(build, watch, tmp_path, o
     plant.edit(new, old)
     watched.follow("2026-01-11T02:31:00Z")
     assert watched.told("site file") == ONE_FAULT
+
+
+# --- a historian on a server, and copies of a store in use ----------------------------------------
+
+
+@pytest.mark.slow
+@pytest.mark.postgres
+def test_a_historian_on_a_server_that_is_stopped_for_three_days_is_caught_up_with(
+    make_plant, watch, same, tmp_path, postgres_url, postgres_server, monkeypatch
+):
+    def make(folder):
+        return make_plant(folder, days=5.5, every="10min", interval=60)
+
+    # It is tried three times each hour all the same.
+    monkeypatch.setattr("connectors.sql_engine._WAITS", (0.0, 0.0))
+
+    plant = make(tmp_path / "site")
+    historian(plant, postgres_url.replace("postgresql://", "postgresql+psycopg://"))
+    watched = watch(plant)
+    watched.follow("2026-01-11T06:01:00Z")
+    server = Server(postgres_server)
+    server.stop()
+    try:
+        watched.follow("2026-01-14T06:01:00Z")
+        assert not watched.daemon.stop.is_set()
+        cause = watched.daemon.health.jobs["cycle"].cause
+        assert "tried 3 times" in cause
+        assert fails(watched, "cycle") == cause
+    finally:
+        server.start()
+    watched.follow("2026-01-15T00:01:00Z")
+    assert watched.told("cycle") == ONE_FAULT
+    same(plant, "2026-01-15T00:01:00Z", make=make)
+
+
+def copied(plant, store, tmp_path, postgres_server):
+    """A copy of a store in use, made as config/sizing.md says; the URL of what it gives back."""
+    if store.startswith("sqlite"):
+        with sqlite3.connect(plant.folder / "figures.sqlite") as reader:
+            reader.execute("vacuum into ?", (str(plant.folder / "copy.sqlite"),))
+        reader.close()
+        return "sqlite:///copy.sqlite"
+    tools = Path(shlex.split((postgres_server.socket_folder / "data" / "postmaster.opts")
+                             .read_text())[0]).parent  # fmt: skip
+    source, target, dump = store.rsplit("/", 1)[1], f"copy_{uuid.uuid4().hex}", tmp_path / "dump"
+    from_ = postgres_server.dsn(source)
+    subprocess.run([tools / "pg_dump", "-Fc", "-f", dump, from_], check=True, timeout=60)
+    with psycopg.connect(postgres_server.dsn("postgres"), autocommit=True) as server:
+        server.execute(f"create database {target}")
+    subprocess.run(
+        [tools / "pg_restore", "-d", postgres_server.dsn(target), dump], check=True, timeout=60
+    )
+    return postgres_server.url(target)
+
+
+@pytest.mark.slow
+@pytest.mark.postgres
+def test_a_copy_made_while_the_daemon_writes_carries_on_from_where_it_was(
+    build, watch, same, tmp_path, store_url, postgres_server
+):
+    store = "sqlite:///figures.sqlite" if store_url.startswith("sqlite") else store_url
+    plant = build(tmp_path / "site", store=store)
+    watched = watch(plant)
+    writing = threading.Thread(target=watched.follow, args=("2026-01-11T06:01:00Z",))
+    writing.start()
+    copy = copied(plant, store, tmp_path, postgres_server)
+    writing.join()
+    # The store is lost, and the copy takes its place.
+    watched.daemon.close()
+    watched.daemon.lock.release()
+    plant.edit(f'url = "{store}"', f'url = "{copy}"')
+    restored = watch(plant, "2026-01-11T06:01:00Z")
+    restored.follow(END)
+    assert restored.told("cycle") == []
+    same(plant, END, copy)
