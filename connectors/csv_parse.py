@@ -189,7 +189,7 @@ class BlockParser:
             data = _decoded(data, note)
         lines = _line_ends(data)
         if self._comment is not None:
-            data = self._comment.sub(b"", data)
+            data = self._comment.sub(b"\n", data)  # the parser passes over empty lines
         if not data or data.isspace():
             return Parsed(join_rows([]), Span(), lines)
         columns = self._value_columns()
@@ -214,10 +214,16 @@ class BlockParser:
             types = dict.fromkeys(types, _TEXT)
             table, refused = self._read(data, types, len(data) + 1)
             self._as_text.update(at for at in columns if not _all_numbers(table[_name(at)]))
-        if b'"' in data and table.num_rows + refused.count != _lines(data):
+        quote = True
+        if b'"' in data and table.num_rows + refused.count != len(_full_lines(data)):
             note.count(_STRAY_QUOTE, 1)
-            types = dict.fromkeys(types, _TEXT)
-            table, refused = self._read(data, types, len(data) + 1, quote=False)
+            types, quote = dict.fromkeys(types, _TEXT), False
+            table, refused = self._read(data, types, len(data) + 1, quote=quote)
+        if refused.count:
+            # Only a single thread that reads it in one piece tells which rows these are.
+            text = dict.fromkeys(types, _TEXT)
+            _, refused = self._parse_text(data, text, len(data) + 1, quote=quote, threads=False)
+        note.laid_out(data, table.num_rows, refused)
         note.refused(_WRONG_CELLS, refused)
         return table
 
@@ -385,40 +391,80 @@ class BlockParser:
 
 
 class _Refused:
-    """Counts the rows that have the wrong number of cells."""
+    """Counts the rows that have the wrong number of cells.
+
+    Attributes:
+        count: how many.
+        texts: the first few.
+        numbers: which of the lines that hold anything they are, from 0 on; none where the parser
+            does not tell.
+    """
 
     def __init__(self) -> None:
         self.count = 0
         self.texts: list[str] = []
+        self.numbers: list[int] = []
 
     def __call__(self, row: Any) -> str:  # noqa: ANN401 - the parser's own row type
         self.count += 1
         if len(self.texts) < FEW:
             self.texts.append(str(row.text))
+        if row.number is not None:
+            self.numbers.append(row.number - 1)
         return "skip"
 
 
-@dataclass(frozen=True)
+@dataclass
 class _Note:
+    """Notes a block's problems with the lines they stand on.
+
+    Attributes:
+        file: the file's name.
+        line: the number of the block's first line.
+        problems: what is passed over is counted there.
+    """
+
     file: str
     line: int
     problems: ProblemCount
+    _layout: tuple[bytes, int, _Refused] | None = None
+    _lines: tuple[npt.NDArray[np.int64], npt.NDArray[np.int64]] | None = None
+
+    def laid_out(self, data: bytes, rows: int, refused: _Refused) -> None:
+        """Note how many rows the parser made of the lines, and which it refused."""
+        self._layout = data, rows, refused
+
+    def _places(self) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.int64]]:
+        """Return the lines of the rows, and those of the refused ones.
+
+        They are worked out when there is something to tell: counting takes longer than parsing.
+        """
+        if self._lines is None:
+            data, rows, refused = self._layout or (b"", 0, _Refused())
+            full = _full_lines(data)
+            if len(full) != rows + len(refused.numbers):  # a quoted cell holds a line end
+                full = np.arange(rows + len(refused.numbers))
+            numbers = np.array(refused.numbers, dtype=np.int64)
+            self._lines = self.line + np.delete(full, numbers), self.line + full[numbers]
+        return self._lines
 
     def rows(
         self, what: str, rows: npt.NDArray[np.bool_], text: Callable[[int], object] = lambda _: ""
     ) -> None:
         count = int(np.count_nonzero(rows))
         if count:
-            examples = first_few(rows, text, lambda row: f"line {self.line + row}")
+            examples = first_few(rows, text, lambda row: f"line {self._places()[0][row]}")
             self.problems.add(self.file, what, count, examples)
 
     def count(self, what: str, count: int) -> None:
         self.problems.add(self.file, what, count, [Example(f"line {self.line}")])
 
     def refused(self, what: str, refused: _Refused) -> None:
-        # The parser works in pieces, and does not say on which line it is.
-        examples = [Example(f"after line {self.line}", text[:40]) for text in refused.texts]
-        self.problems.add(self.file, what, refused.count, examples)
+        if refused.count:
+            lines = self._places()[1].tolist()
+            found = zip(lines, refused.texts, strict=False)
+            examples = [Example(f"line {line}", text[:40]) for line, text in found]
+            self.problems.add(self.file, what, refused.count, examples)
 
 
 def _name(at: int) -> str:
@@ -448,8 +494,8 @@ def _decoded(data: bytes, note: _Note) -> bytes:
     return data
 
 
-def _lines(data: bytes) -> int:
-    """Count the lines that hold anything, as the parser ends them: by LF, CR LF or CR alone."""
+def _full_lines(data: bytes) -> npt.NDArray[np.int64]:
+    """Return which lines hold anything, as the parser ends them: by LF, CR LF or CR alone."""
     text = np.frombuffer(data, dtype=np.uint8)
     feeds, returns = text == ord("\n"), text == ord("\r")
     paired = np.zeros(len(text), dtype=np.bool_)
@@ -459,7 +505,7 @@ def _lines(data: bytes) -> int:
     stops = np.concatenate([ends, [len(text)]])
     lengths = stops - starts
     lengths[:-1] -= feeds[ends] & paired[ends - 1] & (ends > 0)
-    return int(np.count_nonzero(lengths))
+    return np.flatnonzero(lengths)
 
 
 def _line_ends(data: bytes) -> int:

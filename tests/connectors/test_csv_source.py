@@ -252,11 +252,11 @@ def test_bad_rows_are_counted_with_the_place_of_the_first_and_reported_once(tmp_
     assert len(result.readings) == 4
     assert {(p.where, str(p), p.count) for p in result.problems} == {
         (
-            "export.csv:after line 2",
+            "export.csv:line 7",
             (
                 "row dropped: more or fewer cells than the header"
-                " (first: after line 2 '2026-01-31 07:00:00,62-PT-001',"
-                " after line 2 '2026-01-31 07:02:00,62-PT-001,1,5,Good')"
+                " (first: line 7 '2026-01-31 07:00:00,62-PT-001',"
+                " line 9 '2026-01-31 07:02:00,62-PT-001,1,5,Good')"
             ),
             2,
         ),
@@ -264,15 +264,46 @@ def test_bad_rows_are_counted_with_the_place_of_the_first_and_reported_once(tmp_
             "export.csv:line 6",
             (
                 "row dropped: its time cannot be read"
-                " (first: line 6 'yesterday', line 8 '2026-13-31 07:00:00')"
+                " (first: line 6 'yesterday', line 10 '2026-13-31 07:00:00')"
             ),
             2,
         ),
-        ("export.csv:line 7", "row dropped: it names no tag (first: line 7)", 1),
+        ("export.csv:line 8", "row dropped: it names no tag (first: line 8)", 1),
     }
     # Every row of the file is either a reading or counted with its reason.
     assert len(result.readings) + sum(p.count for p in result.problems) == 9
     assert reader.read(TAGS, DAY).problems == ()
+
+
+@settings(
+    max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture]
+)
+@given(
+    body=st.lists(
+        st.sampled_from(["good", "short", "no time", "word", "", "# remark"]), max_size=25
+    ),
+    block=st.sampled_from([80, 300, 10_000]),
+)
+def test_every_example_names_the_line_that_it_stands_on(tmp_path, monkeypatch, body, block):
+    monkeypatch.setattr(connectors.csv_index, "BLOCK", block)
+    lines = ["time,tag,value,quality"]
+    for at, word in enumerate(body):
+        time = f"2026-01-31 06:{at:02}:00"
+        lines.append(
+            {
+                "good": f"{time},62-PT-001,1.5,Good",
+                "short": f"{time},62-PT-001",
+                "no time": f"never {at},62-PT-001,1.5,Good",
+                "word": f"{time},62-PT-001,about {at},Good",
+            }.get(word, word)
+        )
+    write(tmp_path, "\n".join(lines) + "\n")
+    problems = source(tmp_path, comment="#").read(TAGS, DAY).problems
+    assert sum(p.count for p in problems) == sum(w in {"short", "no time", "word"} for w in body)
+    for problem in problems:
+        for example in problem.examples:
+            assert example.text in lines[int(example.place.removeprefix("line ")) - 1]
+            assert example.text
 
 
 def test_of_a_problem_the_first_few_are_kept_over_all_blocks(tmp_path, monkeypatch):
@@ -571,7 +602,7 @@ def test_a_parser_that_fails_among_threads_is_asked_again_without(tmp_path, monk
     result = source(tmp_path, quality_column="quality").read(TAGS, DAY)
     assert rows(result) == EXPECTED
     assert counts(result) == {"row dropped": 1}
-    assert asked == [True, False]
+    assert asked == [True, False, False]  # the last one tells which row was refused
 
 
 def test_a_header_that_is_no_csv_is_cut_all_the_same(tmp_path):
