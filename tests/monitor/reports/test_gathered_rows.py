@@ -44,6 +44,25 @@ def test_the_ledger_adds_up_and_its_totals_are_rates_times_time(overview):
     assert lines["imbalance"].co2_t is None
 
 
+def test_rows_carry_the_expanded_uncertainty_of_their_instruments(reported, overview):
+    """Twice the mean of the cells' own, which is what fully correlated errors leave of a mean."""
+    gathered = reported.gathered
+    cells = gathered.store.ledger(gathered.start, gathered.end)
+    lines = {line.key: line for line in overview.ledger}
+    for key in ("supplied", "used", "lost", "destroyed", "imbalance"):
+        own = 2 * cells[f"u_{key}_live_kw"].mean()
+        assert lines[key].expanded_kw == pytest.approx(own, rel=1e-9)
+    assert np.isnan(lines["stored"].expanded_kw)
+    for row in overview.equipment:
+        cells = gathered.store.equipment(row.id, gathered.start, gathered.end)
+        own = 2 * cells["u_destroyed_live_kw"].mean()
+        assert row.destroyed_expanded_kw == pytest.approx(own, rel=1e-9)
+        assert own > 0
+    rows = [row for row in overview.conditions if np.isfinite(row.current)]
+    assert rows
+    assert all(row.expanded > 0 for row in rows)
+
+
 def test_the_trend_of_the_ledger_has_the_ledgers_mean(overview):
     trend = overview.ledger_trend
     assert len(trend) == 6 * 24
