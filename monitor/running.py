@@ -161,19 +161,19 @@ class Runner:
         """Why the site has to end: another instance computes it now."""
         return None if self.daemon is None else self.daemon.lost_lock
 
-    def try_to_begin(self) -> Exception | None:
-        """Begin, or tell why not, once for each cause."""
+    def try_to_begin(self) -> None:
+        """Begin, or tell why not."""
         try:
             self.begin()
         except Exception as error:  # noqa: BLE001 - a bad site holds up no other
-            # Who runs changes seldom, and a store that is away may come back.
-            if str(error) != self._told:
-                self._told = str(error)
-                self._tell(error)
-            return error
-        return None
+            self.tell(error)
 
-    def _tell(self, error: Exception) -> None:
+    def tell(self, error: Exception) -> None:
+        """Tell why the site cannot begin, once for each cause."""
+        # Who runs changes seldom, and a store that is away may come back.
+        if str(error) == self._told:
+            return
+        self._told = str(error)
         if isinstance(error, InstanceRunning):
             logger().info("standing by", site_file=self.name, cause=str(error))
             return
@@ -320,16 +320,19 @@ def _end(runners: Sequence[Runner]) -> None:
 
 def _begin(runners: Sequence[Runner], stop: threading.Event, *, standby: bool) -> None:
     """Begin the sites; nothing that can run is an error, unless it is waited for."""
-    failures = []
+    failures: list[tuple[Runner, Exception]] = []
     for runner in runners:
         if stop.is_set():
             return
-        error = runner.try_to_begin()
-        if error is not None:
-            failures.append(error)
-    waited_for = standby and isinstance(failures and failures[0], (InstanceRunning, StoreError))
+        try:
+            runner.begin()
+        except Exception as error:  # noqa: BLE001 - as in `try_to_begin`
+            failures.append((runner, error))
+    waited_for = standby and failures and isinstance(failures[0][1], (InstanceRunning, StoreError))
     if len(failures) == len(runners) and not waited_for:
-        raise failures[0]
+        raise failures[0][1]
+    for runner, why in failures:
+        runner.tell(why)
 
 
 def _live(runners: Sequence[Runner], stop: threading.Event) -> None:
