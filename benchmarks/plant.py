@@ -185,10 +185,10 @@ def _streams(pre):
         if stream in {"cw_in", "makeup"}:
             keys["counts_as"] = "supplied"
         lines.append(_table("stream", keys))
-    for stream in POWER:
-        lines.append(
-            _table("stream", {"id": pre + stream, "medium": "power", "power": f"{pre}{stream}_j"})
-        )
+    lines += [
+        _table("stream", {"id": pre + stream, "medium": "power", "power": f"{pre}{stream}_j"})
+        for stream in POWER
+    ]
     for stream, boundary in (("u1_heat", "120 degC"), ("u2_heat", "90 degC")):
         heat = {"medium": "heat", "heat": "balance", "boundary_temperature": boundary}
         lines.append(_table("stream", {"id": pre + stream, **heat, "counts_as": "used"}))
