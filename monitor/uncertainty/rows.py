@@ -247,7 +247,8 @@ def _gauges(site: Site, sample: Sample, passes: Mapping[str, int]) -> Gauges:
     """The gauges of all passes, one after the other: as read, then moved."""
     names = list(sample.means)
     count = 1 + max(passes.values())
-    means = np.array([sample.means[name] for name in names])
+    # The shapes are stated since a site of fixed values alone has no tag to take them from.
+    means = np.array([sample.means[name] for name in names]).reshape(-1, sample.count)
     moved = np.repeat(means[:, None], count, axis=1)
     barometer = np.repeat(sample.barometer[None], count, axis=0)
     for place, name in enumerate(names):
@@ -263,7 +264,7 @@ def _gauges(site: Site, sample: Sample, passes: Mapping[str, int]) -> Gauges:
     idle = np.append(barometer, barometer[-1])
     tags = {
         name: Gridded(values, idle, flag)
-        for name, values in zip(names, moved.reshape(len(names), -1), strict=True)
+        for name, values in zip(names, moved.reshape(-1, count * sample.count), strict=True)
     }
     return Gauges(tags, barometer, idle, flag)
 

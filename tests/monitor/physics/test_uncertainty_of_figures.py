@@ -212,6 +212,28 @@ def test_instruments_without_error_leave_no_uncertainty(tmp_path):
     assert (batch.ledger["u_destroyed_live_kw"] == 0).all()
 
 
+def test_a_site_of_fixed_values_alone_has_figures_and_no_uncertainty(tmp_path):
+    """Throttled from 12 bar, 250 degC to 3 bar: I = m T0 (s2 - s1), h2 = h1, by iapws."""
+    site = build(
+        tmp_path,
+        {
+            "in": {"pressure": "12 bar(a)", "temperature": "250 degC", "flow": "5 kg/s"},
+            "out": {"pressure": "3 bar(a)", "flow": "balance", "enthalpy": "balance"},
+        },
+        {"valve": {"kind": "letdown", "ports": {"inlet": "in", "outlet": "out"}}},
+        dead={"temperature": "15 degC", "pressure": "1 bar(a)"},
+    )
+    assert site.used_tags() == {}
+    batch = run(site, AMBIENT)
+    before = IAPWS97(P=1.2, T=523.15)
+    after = IAPWS97(P=0.3, h=before.h)
+    expected = 5 * 288.15 * (after.s - before.s)
+    # The reference's p,h state is a backward equation's: 0.03 K, IAPWS R7-97, table 1.
+    assert batch.equipment["destroyed_live_kw"].to_numpy() == pytest.approx(expected, rel=1e-4)
+    assert (batch.equipment["u_destroyed_live_kw"] == 0).all()
+    assert (batch.ledger["u_destroyed_live_kw"] == 0).all()
+
+
 def test_a_tag_that_does_not_touch_the_equipment_changes_nothing(tmp_path):
     def both(folder, u):
         folder.mkdir()
