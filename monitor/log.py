@@ -22,7 +22,7 @@ if TYPE_CHECKING:
 
     from structlog.typing import EventDict, FilteringBoundLogger, Processor, WrappedLogger
 
-__all__ = ["LogFileError", "also_to", "configure", "logger"]
+__all__ = ["LogFileError", "also_to", "configure", "logger", "printable"]
 
 
 class LogFileError(LostworkError):
@@ -42,11 +42,7 @@ def configure(*, json: bool = False, debug: bool = False) -> None:
         structlog.processors.add_log_level,
         structlog.processors.TimeStamper(fmt="iso", utc=True, key="time"),
         structlog.processors.format_exc_info,
-        _to_files(
-            structlog.processors.JSONRenderer(default=str)
-            if json
-            else structlog.processors.LogfmtRenderer(key_order=["time", "level", "event"])
-        ),
+        _to_files(structlog.processors.JSONRenderer(default=str) if json else _logfmt),
     ]
     structlog.configure(
         processors=processors,
@@ -63,6 +59,27 @@ def configure(*, json: bool = False, debug: bool = False) -> None:
 def logger() -> FilteringBoundLogger:
     """A logger that follows `configure`, whenever that was called."""
     return cast("FilteringBoundLogger", structlog.get_logger())
+
+
+def printable(text: str) -> str:
+    """Write what a terminal would obey, instead of showing it, as an escape.
+
+    Names of files and tags come from elsewhere. Line breaks stay.
+    """
+    if text.isprintable():
+        return text
+    return "".join(
+        c if c.isprintable() or c == "\n" else c.encode("unicode_escape").decode() for c in text
+    )
+
+
+_LOGFMT = structlog.processors.LogfmtRenderer(key_order=["time", "level", "event"])
+
+
+def _logfmt(wrapped: WrappedLogger, name: str, event: EventDict) -> str:
+    """``key=value`` pairs on one line, whatever stands in the values."""
+    shown = {k: printable(v) if isinstance(v, str) else v for k, v in event.items()}
+    return _LOGFMT(wrapped, name, shown)
 
 
 @contextlib.contextmanager

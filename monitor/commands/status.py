@@ -12,6 +12,7 @@ from monitor.commands.exits import ExitCode
 from monitor.commands.group import write_json
 from monitor.commands.opening import open_site, opened_to_read
 from monitor.commands.times import duration_seconds, local, utc_text
+from monitor.log import printable
 from monitor.standing import span, standing, standing_without_store
 from monitor.store.errors import StoreError
 
@@ -53,7 +54,7 @@ def status(
         write_json(_document(found))
     else:
         for label, text in _rows(found, zone):
-            typer.echo(f"{label:16} {text}")
+            typer.echo(printable(f"{label:16} {text}"))
     if found.unhealthy:
         raise typer.Exit(ExitCode.FOUND_WRONG)
 

@@ -6,11 +6,13 @@ import json
 
 import pytest
 import structlog
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 from monitor import log
-from monitor.cycle import compute_window
 from monitor.site.load import load_site
 from monitor.store.errors import StoreError
+from monitor.store.site import SiteStore
 
 
 @pytest.fixture(autouse=True)
@@ -75,11 +77,13 @@ def test_each_line_of_a_cycle_names_its_run_and_site(make_plant, drive, tmp_path
     driven = drive(plant, "2026-01-10T12:01Z")
     log.configure(json=True)
 
-    def telling(*arguments):
-        log.logger().info("in a window")
-        return compute_window(*arguments)
+    write = SiteStore.write
 
-    monkeypatch.setattr("monitor.cycle.compute_window", telling)
+    def telling(*arguments, **options):
+        log.logger().info("in a window")
+        return write(*arguments, **options)
+
+    monkeypatch.setattr(SiteStore, "write", telling)
     path = tmp_path / "site.log"
     with log.also_to(path, "mill_race", 10**6, 1):
         driven.daemon.cycle()
@@ -87,6 +91,26 @@ def test_each_line_of_a_cycle_names_its_run_and_site(make_plant, drive, tmp_path
     (line, *_) = [x for x in lines if x["event"] == "in a window"]
     assert line["run"] == driven.at.store.runs()[0].run_id
     assert line["site"] == "mill_race"
+
+
+@pytest.mark.parametrize("json_lines", [False, True])
+def test_a_hostile_name_makes_no_line_of_its_own_and_moves_no_cursor(capsys, json_lines):
+    log.configure(json=json_lines)
+    # A line break that fakes an entry, escape sequences, a bell, a right-to-left override.
+    name = "a\nlevel=error event=fake\r\x1b[2J\x1b]0;title\x07\u202egnp.csv"
+    log.logger().warning("passed over in a source", where=name)
+    (line,) = capsys.readouterr().err.split("\n")[:-1]
+    assert line.isprintable()
+    if json_lines:
+        assert json.loads(line)["where"] == name
+
+
+@settings(suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(text=st.text())
+def test_what_is_printable_stays_and_nothing_else_does(text):
+    shown = log.printable(text)
+    assert all(c.isprintable() or c == "\n" for c in shown)
+    assert shown == text or not text.replace("\n", "").isprintable()
 
 
 @pytest.mark.parametrize("size", ['"10"', "10", '"0 MB"', '"ten MB"', '"10 MiB"'])
