@@ -97,6 +97,8 @@ class PortSpec:
     `monitor.economics`: what leaves on the fuel's side is what the fuel brought and was not spent
     (a turbine's exhaust); what enters on the product's side is what the product was before (a
     boiler's feed water); a loss is what leaves for nothing. Empty: in is fuel, out is product.
+
+    ``fluid`` names which of the fluids that a wall keeps apart it is of; empty where all mix.
     """
 
     name: str
@@ -105,6 +107,7 @@ class PortSpec:
     most: int | None = 1
     media: frozenset[Medium] = WATER
     role: Literal["fuel", "product", "loss", ""] = ""
+    fluid: str = ""
 
     @property
     def side(self) -> Literal["fuel", "product", "loss"]:
@@ -246,6 +249,10 @@ class Item:
     def states(self, stream: str, key: str) -> object:
         """What the site file says of a stream under a key; None for nothing."""
         return getattr(self.statements.get(stream), key, None)
+
+    def fluid(self, stream: str) -> str:
+        """Which of the fluids that a wall keeps apart a stream is of; empty where all mix."""
+        return next((p.fluid for p in self.kind.ports if stream in self.ports.get(p.name, ())), "")
 
     def ids(self, direction: Literal["in", "out"]) -> tuple[str, ...]:
         """Stream ids at all ports that face one way, in the order of the kind's ports."""

@@ -42,11 +42,11 @@ class ClosedFeedwaterHeater(Kind):
     name = "closed_feedwater_heater"
     title = "Closed feedwater heater"
     ports = (
-        PortSpec("steam", "in", most=None),
-        PortSpec("drain_in", "in", least=0, most=None),
-        PortSpec("feedwater_in", "in", role="product"),
-        PortSpec("drain", "out", role="fuel"),
-        PortSpec("feedwater_out", "out"),
+        PortSpec("steam", "in", most=None, fluid="steam"),
+        PortSpec("drain_in", "in", least=0, most=None, fluid="steam"),
+        PortSpec("feedwater_in", "in", role="product", fluid="feedwater"),
+        PortSpec("drain", "out", role="fuel", fluid="steam"),
+        PortSpec("feedwater_out", "out", fluid="feedwater"),
     )
     fuel_and_product = (
         "fuel: exergy given up from steam and drains in to the drain out; "

@@ -108,10 +108,10 @@ class Condenser(Kind):
     name = "condenser"
     title = "Condenser"
     ports = (
-        PortSpec("steam", "in", most=None),
-        PortSpec("cooling_in", "in", role="product"),
-        PortSpec("condensate", "out", role="fuel"),
-        PortSpec("cooling_out", "out"),
+        PortSpec("steam", "in", most=None, fluid="steam"),
+        PortSpec("cooling_in", "in", role="product", fluid="cooling"),
+        PortSpec("condensate", "out", role="fuel", fluid="steam"),
+        PortSpec("cooling_out", "out", fluid="cooling"),
     )
     options = CondenserOptions
     fuel_and_product = (

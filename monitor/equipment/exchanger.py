@@ -58,10 +58,10 @@ class Exchanger(Kind):
     name = "exchanger"
     title = "Heat exchanger"
     ports = (
-        PortSpec("hot_in", "in"),
-        PortSpec("cold_in", "in", role="product"),
-        PortSpec("hot_out", "out", role="fuel"),
-        PortSpec("cold_out", "out"),
+        PortSpec("hot_in", "in", fluid="hot"),
+        PortSpec("cold_in", "in", role="product", fluid="cold"),
+        PortSpec("hot_out", "out", role="fuel", fluid="hot"),
+        PortSpec("cold_out", "out", fluid="cold"),
     )
     options = ExchangerOptions
     fuel_and_product = (

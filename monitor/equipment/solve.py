@@ -4,6 +4,10 @@ A site file may call a flow, an enthalpy or a rate of power or heat ``balance``.
 equipment offers one mass balance and one energy balance (the latter unless its residual is its heat
 loss). `plan` finds, once and before anything runs, an order in which every unknown has a balance to
 come from; `complete` carries the plan out on whole windows.
+
+Where a wall keeps two fluids apart (a condenser's tubes) and flows of both are unknown, each fluid
+closes by itself. Mass and energy together would find them too, but a per cent of error in the duty
+would appear as cooling water that turns into condensate.
 """
 
 from __future__ import annotations
@@ -19,7 +23,7 @@ from monitor.flags import Flag, FlagArray
 from monitor.site.models import Reference
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Collection, Sequence
+    from collections.abc import Callable, Collection, Mapping, Sequence
 
     from monitor.equipment.base import Drawn, Item
 
@@ -62,10 +66,13 @@ class Needs:
 
 @dataclass(frozen=True)
 class Step:
-    """One balance used for one unknown (or both balances for two flows)."""
+    """One balance used for one unknown (or both balances for two flows).
+
+    ``mass of its fluid`` is that of one of two fluids; that of both together is still to be had.
+    """
 
     equipment: str
-    balance: Literal["mass", "energy", "mass and energy"]
+    balance: Literal["mass", "mass of its fluid", "energy", "mass and energy"]
     unknowns: tuple[Unknown, ...]
 
 
@@ -101,7 +108,35 @@ def plan(items: Sequence[Item], needs: Needs) -> Plan:
             open_unknowns -= set(step.unknowns)
             free_balances[item.id] -= set(step.balance.split(" and "))
             progress = True
+        if not progress:
+            # Only now: what other equipment tells of a flow leaves this balance to be a check.
+            steps += (apart := _steps_apart(items, open_unknowns, free_balances)[:1])
+            open_unknowns -= {unknown for step in apart for unknown in step.unknowns}
+            progress = bool(apart)
     return Plan(tuple(steps), frozenset(open_unknowns))
+
+
+def _steps_apart(
+    items: Sequence[Item], open_unknowns: set[Unknown], free: Mapping[str, set[str]]
+) -> list[Step]:
+    """Flows that are the only unknown one of their fluid, while one of the other is unknown too."""
+    found = []
+    for item in items:
+        flows = _flows_at(item, open_unknowns)
+        fluids = [item.fluid(stream) for _, stream in flows]
+        if "mass" not in free[item.id] or len(set(fluids)) == 1:
+            continue
+        found += [
+            Step(item.id, "mass of its fluid", (flow,))
+            for flow, fluid in zip(flows, fluids, strict=True)
+            if fluids.count(fluid) == 1
+        ]
+    return found
+
+
+def _flows_at(item: Item, open_unknowns: set[Unknown]) -> tuple[Unknown, ...]:
+    streams = {*item.ids("in"), *item.ids("out")}
+    return tuple(sorted(u for u in open_unknowns if u[0] == "flow" and u[1] in streams))
 
 
 def spare_balances(item: Item, steps: Sequence[Step]) -> frozenset[str]:
@@ -153,15 +188,15 @@ def _offered(item: Item) -> set[str]:
 
 def _step_at(item: Item, open_unknowns: set[Unknown], free: set[str]) -> Step | None:
     streams = {*item.ids("in"), *item.ids("out")}
-    here = sorted(u for u in open_unknowns if u[1] in streams)
-    flows = tuple(u for u in here if u[0] == "flow")
-    others = tuple(u for u in here if u[0] != "flow")
+    flows = _flows_at(item, open_unknowns)
+    others = tuple(u for u in open_unknowns if u[1] in streams and u[0] != "flow")
     if "mass" in free and len(flows) == 1:
         return Step(item.id, "mass", flows)
     if "energy" in free and not flows and len(others) == 1:
         return Step(item.id, "energy", others)
     # Two flows alone would only be found to be zero: something at the equipment must be known.
-    enough = len(streams) > len(flows)
+    mix = len({item.fluid(stream) for _, stream in flows}) == 1
+    enough = len(streams) > len(flows) and mix
     if free == {"mass", "energy"} and len(flows) == 2 and not others and enough:  # noqa: PLR2004
         return Step(item.id, "mass and energy", flows)
     return None
@@ -186,8 +221,8 @@ def complete(
     """
     for step in steps:
         drawn = draw(step.equipment)
-        if step.balance == "mass":
-            found = _flow_from_mass(drawn, step.unknowns[0][1])
+        if step.balance in ("mass", "mass of its fluid"):
+            found = _flow_from_mass(drawn, step.unknowns[0][1], step.balance)
         elif step.balance == "energy":
             found = _from_energy(drawn, step.unknowns[0], with_enthalpy)
         else:
@@ -230,9 +265,16 @@ def _water_only(states: Sequence[StreamState]) -> tuple[StreamState, ...]:
     return tuple(s for s in states if s.medium == "water")
 
 
-def _flow_from_mass(drawn: Drawn, stream: str) -> dict[str, StreamState]:
+def _flow_from_mass(drawn: Drawn, stream: str, balance: str) -> dict[str, StreamState]:
     split = _split(drawn, stream)
     water = _Split(split.unknown, split.sign, _water_only(split.inlets), _water_only(split.outlets))
+    if balance == "mass of its fluid":
+        own = drawn.item.fluid(stream)
+        inlets, outlets = (
+            tuple(s for s in side if drawn.item.fluid(s.id) == own)
+            for side in (water.inlets, water.outlets)
+        )
+        water = _Split(split.unknown, split.sign, inlets, outlets)
     flow = split.sign * (water.net("mass_flow") - content_rates(drawn).mass)
     flag = _flag_of(drawn, (*water.inlets, *water.outlets))
     return {stream: with_flow(split.unknown, flow, flag)}

@@ -155,3 +155,39 @@ def test_traps_throttle_into_the_condensate_line(tmp_path):
     batch = run(site, AMBIENT)
     assert last(batch.streams, "l", "mass_flow_kg_s") == pytest.approx(0.2)
     _check(batch, T0 * 0.2 * (flashed.s - hot.s))
+
+
+def _condenser(folder, cooling, condensate="balance"):
+    wet, drip = {"pressure": "0.06 bar(a)", "dryness": 0.9}, {"pressure": "0.06 bar(a)"}
+    streams = {
+        "wet": wet | {"flow": "20 kg/s"},
+        "drip": drip | {"phase": "liquid", "flow": condensate},
+        "cw_in": _pt(2, 15, cooling),
+        "cw_out": _pt(1.8, 27),
+    }
+    ports = {"steam": "wet", "condensate": "drip", "cooling_in": "cw_in", "cooling_out": "cw_out"}
+    return build(folder, streams, {"it": {"kind": "condenser", "ports": ports}})
+
+
+# Steam gives up 20 (h_wet - h_drip); a kg of cooling water takes h_out - h_in.
+GIVEN_UP = 20 * (water(0.06, x=0.9).h - water(0.06, x=0).h)
+TAKEN = water(1.8, 27).h - water(2, 15).h
+
+
+@pytest.mark.parametrize("error", [0.9, 1.0, 1.05])
+def test_a_wrong_meter_turns_no_cooling_water_into_condensate(tmp_path, error):
+    """A wall is between them: each fluid closes by itself, and the error is in the energy."""
+    cooling = error * GIVEN_UP / TAKEN
+    batch = run(_condenser(tmp_path, cooling), AMBIENT)
+    assert last(batch.streams, "drip", "mass_flow_kg_s") == pytest.approx(20.0, rel=1e-12)
+    assert last(batch.streams, "cw_out", "mass_flow_kg_s") == pytest.approx(cooling, rel=1e-12)
+    residual = last(batch.equipment, "it", "energy_imbalance_kw")
+    assert residual == pytest.approx((1 - error) * GIVEN_UP, rel=1e-6, abs=1e-2)
+
+
+def test_cooling_water_without_a_meter_follows_from_the_duty(tmp_path):
+    batch = run(_condenser(tmp_path, "balance"), AMBIENT)
+    for stream in ("cw_in", "cw_out"):
+        flow = last(batch.streams, stream, "mass_flow_kg_s")
+        assert flow == pytest.approx(GIVEN_UP / TAKEN, rel=1e-7)
+    assert last(batch.streams, "drip", "mass_flow_kg_s") == pytest.approx(20.0, rel=1e-9)
