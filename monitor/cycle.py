@@ -81,7 +81,9 @@ def run_news(
     read = read_window(site, sources, start, end)
     first = start - lead_in(site)
     newest = _newest(site, sources, read.readings, start)
-    begin = seen.news_from(site, read.readings, first, start, end)
+    edge = store.newest()
+    stored = 0 if edge is None else int(edge.timestamp()) + store.interval_s
+    begin = seen.news_from(site, read.readings, first, start, end, stored)
     wanted = read
     if begin > start:
         since = pd.Timestamp(begin - lead_in(site), unit="s", tz="UTC").as_unit("us")

@@ -37,7 +37,7 @@ class Seen:
         self._parts: dict[int, int] = {}
 
     def news_from(
-        self, site: Site, readings: pd.DataFrame, first: int, start: int, end: int
+        self, site: Site, readings: pd.DataFrame, first: int, start: int, end: int, stored: int
     ) -> int:
         """The full hour at or after ``start`` from which figures can differ from the stored ones.
 
@@ -47,6 +47,8 @@ class Seen:
             first: where the lead-in begins, integer UTC seconds.
             start: of the window.
             end: of the window.
+            stored: end of the newest figures that the store has: a database that crashed, or was
+                put back from a copy, may have lost the last of what it had taken.
         """
         known = self._site == site.hash and self._start <= start <= self._end <= end
         if not known:
@@ -57,7 +59,7 @@ class Seen:
             for part in now.keys() | self._parts.keys()
             if part >= first and now.get(part) != self._parts.get(part)
         ]
-        return max(start, min([*changed, self._end]) // _HOUR * _HOUR)
+        return max(start, min([*changed, self._end, stored]) // _HOUR * _HOUR)
 
     def remember(
         self, site: Site, readings: pd.DataFrame, first: int, start: int, end: int
