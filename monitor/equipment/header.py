@@ -4,7 +4,8 @@ The energy that the outlets do not carry leaves as heat (``heat_loss = "balance"
 mass that they do not carry is the unaccounted flow: a leak, an open drain, or a flow meter. Where
 inlets have gauges of their own, each is the end of a pipe to the header with p_in - p_out = K m^2 v
 (Darcy: turbulent flow), which flow and density have been taken out of. Of several pipes
-K = sum m (p_in - p_out) / sum m^3 v: each weighs as the power that it dissipates.
+K = sum m (p_in - p_out) / sum m^3 v: each weighs with m^3 v, the power that it dissipates but for
+the density, which the pipes share.
 Source: Bejan, Tsatsaronis, Moran (1996), chapter 3.2 (mass, energy, exergy of a control volume).
 """
 

@@ -1,7 +1,8 @@
 """Whole cycles: what each component destroys, from entropy alone, sums to the exergy of the fuel.
 
 The second way knows no exergy: states by the iapws package, entropy out less entropy in times T0,
-heat that leaves at T0 in whole. Fuel's exergy = net work + what the surroundings get + destroyed.
+heat that leaves at T0 in whole, heat to a process at Tb with Q / Tb. Fuel's exergy = net work +
+what the process and the surroundings get + destroyed.
 """
 
 from __future__ import annotations
@@ -15,29 +16,38 @@ LHV, RATIO = 40_000.0, 1.05
 CLOSE = {"rel": 1e-7, "abs": 1e-3}
 
 
-def _by_entropy(flows, equipment, powers, burnt):
-    """Destruction [kW] of each component from masses, enthalpies and entropies alone."""
+def _by_entropy(flows, equipment, powers, burnt, heat=("", 0.0, T0)):
+    """Destruction [kW] of each component from masses, enthalpies and entropies alone.
+
+    ``heat``: who delivers how much heat [kW] at which temperature [K].
+    """
     found = {}
+    user, delivered, Tb = heat
     for name, (inlets, outlets, shafts) in equipment.items():
         s_in, s_out = (sum(flows[i][0] * flows[i][1].s for i in ids) for ids in (inlets, outlets))
         h_in, h_out = (sum(flows[i][0] * flows[i][1].h for i in ids) for ids in (inlets, outlets))
         work = sum(powers.get(shaft, 0.0) for shaft in shafts)
+        given = delivered if name == user else 0.0
         lost = burnt + h_in - h_out if name == "boiler" else 0.0
         if name != "boiler":
-            # Every other component is adiabatic: the test's own states must close.
-            assert h_in - h_out - work == pytest.approx(0.0, abs=1e-6 * abs(h_in))
-        found[name] = T0 * (s_out - s_in) + lost
+            # Every other component loses no heat: the test's own states must close.
+            assert h_in - h_out - work - given == pytest.approx(0.0, abs=1e-6 * abs(h_in))
+        found[name] = T0 * (s_out - s_in + given / Tb) + lost
     found["boiler"] += (RATIO - 1) * burnt
     return found
 
 
-def _site(folder, flows, equipment, powers, burnt):
+def _site(folder, flows, equipment, powers, burnt, heat=None):
     streams = {"oil": {"medium": "fuel", "flow": f"{burnt / LHV:.12f} kg/s",
                        "lower_heating_value": "40 MJ/kg", "exergy_ratio": RATIO}}  # fmt: skip
     for name, (flow, _, keys) in flows.items():
         streams[name] = {"flow": f"{flow:.12f} kg/s", **keys}
     for name, work in powers.items():
         streams[name] = {"medium": "power", "power": f"{abs(work):.9f} kW"}
+    if heat is not None:
+        _, delivered, Tb = heat
+        streams["heat"] = {"medium": "heat", "heat": f"{delivered:.9f} kW", "counts_as": "used",
+                           "boundary_temperature": f"{Tb - 273.15:.9f} degC"}  # fmt: skip
     return build(folder, streams, equipment)
 
 
@@ -50,10 +60,10 @@ def _px(p, x):
     return water(p, x=x), {"pressure": f"{p} bar(a)", **keys}
 
 
-def _check(tmp_path, flows, ports, kinds, powers, burnt):
+def _check(tmp_path, flows, ports, kinds, powers, burnt, heat=None):
     """Compare component by component, and the sum with the fuel."""
-    by_entropy = _by_entropy(flows, ports, powers, burnt)
-    site = _site(tmp_path, flows, kinds, powers, burnt)
+    by_entropy = _by_entropy(flows, ports, powers, burnt, *([] if heat is None else [heat]))
+    site = _site(tmp_path, flows, kinds, powers, burnt, heat)
     batch = run(site, AMBIENT)
     for name, expected in by_entropy.items():
         got = last(batch.equipment, name, "destroyed_live_kw")
@@ -64,7 +74,10 @@ def _check(tmp_path, flows, ports, kinds, powers, burnt):
     gained = sum(
         sign * flows[name][0] * exergy(flows[name][1])
         for sign, name in ((1, "cw_out"), (-1, "cw_in"))
+        if name in flows
     )
+    if heat is not None:
+        gained += heat[1] * (1 - T0 / heat[2])
     net = sum(powers.values())
     total = sum(last(batch.equipment, name, "destroyed_live_kw") for name in by_entropy)
     assert total + net + gained == pytest.approx(RATIO * burnt, rel=1e-6)
@@ -159,3 +172,43 @@ def test_reheat_from_one_boiler_through_two_turbines(tmp_path):
     }  # fmt: skip
     _, net = _check(tmp_path, flows, ports, kinds, powers, burnt)
     assert net == pytest.approx(heat - m * (exhaust[0].h - drip[0].h), rel=1e-9)
+
+
+def test_back_pressure_with_a_process_user(tmp_path):
+    """Live steam 60 bar, 470 degC; exhaust at 4 bar into a dryer at 120 degC, whose condensate
+    comes back all."""
+    m = 25.0
+    live, exhaust, drip, feed = _pt(60, 470), _pt(4, 175), _pt(3.8, 105), _pt(75, 106)
+    powers = {
+        "shaft": m * (live[0].h - exhaust[0].h),
+        "p": -m * (feed[0].h - drip[0].h),
+    }
+    heat = ("dryer", m * (exhaust[0].h - drip[0].h), 393.15)
+    burnt = m * (live[0].h - feed[0].h) / 0.91
+    flows = {"live": (m, *live), "back": (m, *exhaust), "drip": (m, *drip), "feed": (m, *feed)}
+    ports = {
+        "boiler": (["feed"], ["live"], []),
+        "turbine": (["live"], ["back"], ["shaft"]),
+        "dryer": (["back"], ["drip"], []),
+        "pump": (["drip"], ["feed"], ["p"]),
+    }
+    kinds = {
+        "boiler": {"kind": "boiler", "ports": {"fuel": "oil", "feedwater": "feed",
+                   "steam": "live"}},
+        "turbine": {"kind": "turbine", "ports": {"inlet": "live", "exhaust": "back",
+                    "power": "shaft"}},
+        "dryer": {"kind": "user", "ports": {"steam": "back", "condensate": "drip",
+                  "heat": "heat"}},
+        "pump": {"kind": "pump", "ports": {"inlet": "drip", "power": "p", "outlet": "feed"}},
+    }  # fmt: skip
+    batch, net = _check(tmp_path, flows, ports, kinds, powers, burnt, heat)
+    # First law: all that the boiler puts in is work or process heat.
+    assert net + heat[1] == pytest.approx(0.91 * burnt, rel=1e-9)
+    # Second law for the whole: what is used of the fuel's exergy.
+    used = (net + heat[1] * (1 - T0 / heat[2])) / (RATIO * burnt)
+    ledger = batch.ledger.iloc[-1]
+    # The ledger supplies the pump's power too, and uses the turbine's.
+    pumped = -powers["p"]
+    told = (ledger["used_live_kw"] - pumped) / (ledger["supplied_live_kw"] - pumped)
+    assert told == pytest.approx(used, rel=1e-9)
+    assert 0.25 < used < 0.45
