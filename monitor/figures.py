@@ -32,6 +32,7 @@ from monitor.streams import Gauges, signals_of, stream_states, with_enthalpy
 from monitor.tables import condition_table, equipment_table, ledger_table, stream_table
 from monitor.thermo.dead_state import DeadState, dead_state, live_ambient
 from monitor.uncertainty import COVERAGE, Hourly, Uncertainties, propagate
+from monitor.uncertainty.classes import standard_uncertainty
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -275,17 +276,12 @@ def _moved_contents(site: Site, drawn: Drawn) -> list[Content]:
     return moved
 
 
-def stated_uncertainty(
-    site: Site, reference: Reference, values: FloatArray
-) -> FloatArray | float | None:
+def stated_uncertainty(site: Site, reference: Reference, values: FloatArray) -> FloatArray | None:
     """Standard uncertainty of values [SI] by their tag's class; None where it states none."""
     tag = site.tags.get(reference.tag or "")
-    stated = None if tag is None else tag.stated_uncertainty
-    if tag is None or stated is None:
+    if tag is None or not tag.uncertainty:
         return None
-    if stated.basis == "range" and tag.range is not None:
-        return stated.amount * (tag.range[1] - tag.range[0]) * tag.unit.scale
-    return stated.amount if stated.basis == "absolute" else stated.amount * np.abs(values)
+    return standard_uncertainty(tag, values)
 
 
 def _running(site: Site, item: Item, load: FloatArray, moving: BoolArray) -> FlagArray:
