@@ -24,18 +24,20 @@ class FileOrder:
     What is out of order is a property of the file: the order is that of its rows from the first
     one on, whichever part of them a window asks for. A file that begins by going back only is one
     that lists the newest reading first: there the rows that go forward are out of order.
+
+    Args:
+        goes_back: whether the newest reading comes first; None when the next rows shall tell.
     """
 
-    def __init__(self) -> None:
-        self._goes_back: bool | None = None
+    def __init__(self, *, goes_back: bool | None = None) -> None:
+        self._goes_back = goes_back
         self._latest = np.zeros(0, dtype=np.int64)
         self._highest = NO_TIME
 
     def copy(self) -> FileOrder:
         """Return the order as it is here, to go on from later."""
-        other = FileOrder()
+        other = FileOrder(goes_back=self._goes_back)
         other._latest, other._highest = self._latest.copy(), self._highest
-        other._goes_back = self._goes_back
         return other
 
     def late(

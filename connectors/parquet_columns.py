@@ -35,12 +35,14 @@ class Cells:
         value: the numbers, NaN where there is none.
         there: where the cell is not null.
         not_understood: neither a number nor a known word for no value.
+        other_mark: of these, the ones that are numbers with a decimal comma.
         text: what stands in a cell, by its position.
     """
 
     value: npt.NDArray[np.float64]
     there: npt.NDArray[np.bool_]
     not_understood: npt.NDArray[np.bool_]
+    other_mark: npt.NDArray[np.bool_]
     text: Callable[[int], str]
 
 
@@ -106,7 +108,7 @@ class ColumnReader:
             value = _floats(column)
             infinite = np.isinf(value)
             value = np.where(infinite, np.nan, value)
-            return Cells(value, there, infinite, lambda _: "infinity")
+            return Cells(value, there, infinite, np.zeros_like(infinite), lambda _: "infinity")
         if not is_text(column.type):
             raise ConnectorError(
                 f"{file}: column '{name}' holds no values but {column.type}; leave the tag out or "
@@ -115,7 +117,11 @@ class ColumnReader:
         texts = column.cast(pa.string()).fill_null("")
         read = self._numbers.read(texts)
         return Cells(
-            read.value, there & ~read.empty, read.not_understood, lambda row: str(texts[row])
+            value=read.value,
+            there=there & ~read.empty,
+            not_understood=read.not_understood,
+            other_mark=read.other_mark,
+            text=lambda row: str(texts[row]),
         )
 
     def qualities(self, column: pa.Array) -> tuple[npt.NDArray[np.uint8], npt.NDArray[np.bool_]]:

@@ -10,6 +10,7 @@ from __future__ import annotations
 import bisect
 import difflib
 from dataclasses import dataclass
+from functools import partial
 from typing import TYPE_CHECKING, Any, BinaryIO
 
 import numpy as np
@@ -19,17 +20,19 @@ import pyarrow.parquet as pq
 from connectors.base import ConnectorError, Quality
 from connectors.parquet_columns import distinct_texts, is_text
 from connectors.parquet_pieces import Piece
-from connectors.tidy import Rows, first_few
+from connectors.tidy import Rows, first_few, place_of
 from connectors.times import NO_TIME
 
 if TYPE_CHECKING:
-    from collections.abc import Hashable, Iterator, Sequence
+    from collections.abc import Callable, Hashable, Iterator, Sequence
     from pathlib import Path
 
     import numpy.typing as npt
 
+    from connectors.order import FileOrder
     from connectors.parquet_columns import Cells, ColumnReader
     from connectors.parquet_options import ParquetOptions
+    from connectors.parquet_order import GroupOrder
     from connectors.parquet_pieces import PieceCache
     from connectors.tidy import ProblemCount
     from connectors.times import ParsedTimes
@@ -43,6 +46,7 @@ _NO_TIME = "row dropped: its time cannot be read"
 _MISSING_HOUR = "row dropped: its local time does not exist, the clock was put forward"
 _NO_TAG = "row dropped: it names no tag"
 _NOT_A_NUMBER = "value is not a number: the reading is kept as bad"
+_OTHER_MARK = "value has a decimal comma: the reading is kept as bad; export numbers, not texts"
 _UNKNOWN_QUALITY = "quality word is in no list: the reading counts as uncertain"
 
 
@@ -90,6 +94,7 @@ class ParquetFile:
         reader: reads its columns.
         cache: keeps decoded pieces of row groups.
         state: tells this state of the file from others, for the cache.
+        order: the order of the rows of this state of the file.
 
     Raises:
         ConnectorError: a column is not there, or not of a fitting type.
@@ -104,10 +109,20 @@ class ParquetFile:
         reader: ColumnReader,
         cache: PieceCache,
         state: Hashable,
+        order: GroupOrder,
     ) -> None:
         self._path, self._options, self._reader = path, options, reader
-        self._cache, self._state = cache, state
-        self._file = pq.ParquetFile(handle)
+        self._cache, self._state, self._order = cache, state, order
+        # Texts that repeat come as they are stored, each of them once.
+        repeating = [options.time_column]
+        if options.layout == "long":
+            repeating += [options.tag_column]
+            repeating += [options.quality_column] if options.quality_column else []
+        metadata = pq.read_metadata(handle)
+        there = {metadata.schema.column(at).path for at in range(metadata.num_columns)}
+        self._file = pq.ParquetFile(
+            handle, metadata=metadata, read_dictionary=[n for n in repeating if n in there]
+        )
         self._schema = self._file.schema_arrow
         self._check_columns()
         self._is_local = reader.is_local(self._schema.field(options.time_column).type)
@@ -151,25 +166,36 @@ class ParquetFile:
                 continue
             counted = None if group.reported else problems
             group.reported = True
-            yield from self._group_rows(group, wanted, counted, problems)
+            yield from self._group_rows(group, groups, wanted, counted, problems)
 
     def _group_rows(
-        self, group: Group, wanted: Wanted, unheard: ProblemCount | None, problems: ProblemCount
+        self,
+        group: Group,
+        groups: Sequence[Group],
+        wanted: Wanted,
+        unheard: ProblemCount | None,
+        problems: ProblemCount,
     ) -> Iterator[Rows]:
         options = self._options
         if options.layout == "wide":
             names = [name for name in wanted.names if name in self._schema.names]
             names = [name for name in names if name != options.time_column]
-            for piece in self._pieces(group, [options.time_column, *names], wanted, unheard):
-                yield self._wide(piece.batch, piece.times, names, wanted, problems)
+            columns = [options.time_column, *names]
+            for piece in self._pieces(group, groups, columns, wanted, unheard):
+                yield self._wide(piece.within(wanted.start, wanted.end), names, wanted, problems)
             return
         columns = [options.time_column, options.tag_column, options.value_column]
         columns += [options.quality_column] if options.quality_column else []
-        for piece in self._pieces(group, columns, wanted, unheard):
-            yield self._long(piece, wanted, unheard, problems)
+        for piece in self._pieces(group, groups, columns, wanted, unheard):
+            yield self._long(piece.within(wanted.start, wanted.end), wanted, problems)
 
     def _pieces(
-        self, group: Group, columns: list[str], wanted: Wanted, unheard: ProblemCount | None
+        self,
+        group: Group,
+        groups: Sequence[Group],
+        columns: list[str],
+        wanted: Wanted,
+        unheard: ProblemCount | None,
     ) -> Iterator[Piece]:
         """Yield a row group's pieces, from memory or by decoding them."""
         key = (self._path, self._state, group.number, *columns)
@@ -181,23 +207,47 @@ class ParquetFile:
         reaches = group.first < wanted.start or group.last >= wanted.end
         fresh: list[Piece] = []
         size = 0 if reaches else self._cache.limit + 1
+        order = self._order.before(group.number, groups, self._look)
+        row = sum(self.rows_of(other) for other in groups[: group.number]) + 1
         for batch in self._batches([group], columns):
-            piece = self._piece(batch, unheard)
+            piece = self._piece(batch, order, row, unheard)
+            row += len(batch)
             size += piece.nbytes
             fresh = [*fresh, piece] if size <= self._cache.limit else []
             yield piece
         if fresh:
             self._cache.put(key, fresh)
 
-    def _piece(self, batch: pa.RecordBatch, unheard: ProblemCount | None) -> Piece:
+    def _look(self, group: Group) -> Iterator[tuple[ParsedTimes, list[str], npt.NDArray[np.int64]]]:
+        """Yield what the order of a row group hangs on."""
         options = self._options
-        times = self._times(batch, unheard)
+        is_long = options.layout == "long"
+        columns = [options.time_column, *([options.tag_column] if is_long else [])]
+        for batch in self._batches([group], columns):
+            yield self._times(batch, 0, None), *self._tags_of(batch)
+
+    def _tags_of(self, batch: pa.RecordBatch) -> tuple[list[str], npt.NDArray[np.int64]]:
+        if self._options.layout == "wide":
+            return [], np.zeros(0, dtype=np.int64)
+        return distinct_texts(batch.column(self._options.tag_column))
+
+    def _piece(
+        self, batch: pa.RecordBatch, order: FileOrder, row: int, unheard: ProblemCount | None
+    ) -> Piece:
+        options = self._options
+        times = self._times(batch, row, unheard)
         is_long = options.layout == "long"
         done = {options.time_column, options.tag_column} if is_long else {options.time_column}
         values = batch.select([name for name in batch.schema.names if name not in done])
-        if not is_long:
-            return Piece(values, times, [], np.zeros(0, dtype=np.int64))
-        return Piece(values, times, *distinct_texts(batch.column(options.tag_column)))
+        words, tag_at = self._tags_of(batch)
+        if unheard is not None and "" in words:
+            nameless = np.array([not word for word in words], dtype=np.bool_)[tag_at]
+            lost = nameless & (times.first != NO_TIME)
+            examples = first_few(lost, lambda _: "", lambda at: f"row {row + at}")
+            unheard.add(self._path.name, _NO_TAG, int(lost.sum()), examples)
+        late = self._order.late(order, times, words, tag_at)
+        ordered = bool((times.first[1:] >= times.first[:-1]).all())
+        return Piece(values, times, words, tag_at, late, ordered)
 
     def _concerns(self, group: Group, wanted: Wanted) -> bool:
         if group.first >= wanted.end or group.last < wanted.start:
@@ -207,22 +257,22 @@ class ParquetFile:
         at = bisect.bisect_left(wanted.names, group.tags[0])
         return at < len(wanted.names) and wanted.names[at] <= group.tags[1]
 
-    def _times(self, batch: pa.RecordBatch, problems: ProblemCount | None) -> ParsedTimes:
+    def _times(self, batch: pa.RecordBatch, row: int, problems: ProblemCount | None) -> ParsedTimes:
+        """Read a batch's times; ``row`` is the number of its first row in the file."""
         times = self._reader.times(batch.column(self._options.time_column), str(self._path))
         if problems is not None:
             missing = times.in_missing_hour
             lost = (times.first == NO_TIME) & ~missing
             column = batch.column(self._options.time_column)
-            examples = first_few(lost, lambda row: column[row])
-            problems.add(self._path.name, _MISSING_HOUR, int(missing.sum()))
-            problems.add(self._path.name, _NO_TIME, int(lost.sum()), examples)
+            for what, rows in ((_MISSING_HOUR, missing), (_NO_TIME, lost)):
+                examples = first_few(rows, column.__getitem__, lambda at: f"row {row + at}")
+                problems.add(self._path.name, what, int(rows.sum()), examples)
         return times
 
     def _long(
         self,
         piece: Piece,
         wanted: Wanted,
-        unheard: ProblemCount | None,
         problems: ProblemCount,
     ) -> Rows:
         options, name = self._options, self._path.name
@@ -230,55 +280,68 @@ class ParquetFile:
         book, others = wanted.book, len(wanted.names)
         codes = [book.setdefault(word, len(book)) if word else -1 for word in piece.words]
         tag = np.array(codes, dtype=np.int32)[piece.tag_at]
-        has_time = times.first != NO_TIME
-        if unheard is not None:
-            unheard.add(name, _NO_TAG, int((has_time & (tag < 0)).sum()))
-        keep = _inside(times, wanted) & (tag >= 0) & ((tag < others) | times.doubled)
+        keep = (tag >= 0) & (tag < others)
+        if times.second is not times.first:
+            keep |= (tag >= 0) & times.doubled
         rows = np.flatnonzero(keep)
-        kept = batch.take(pa.array(rows)) if len(rows) < len(keep) else batch
+        kept = batch
+        if len(rows) < len(keep):
+            kept, times, tag = batch.take(pa.array(rows)), times.take(rows), tag[rows]
         cells = self._reader.cells(
             kept.column(options.value_column), options.value_column, str(self._path)
         )
-        asked = tag[rows] < others
-        self._count_words(cells, asked, problems)
+        asked = tag < others
+
+        def place(row: int) -> str:
+            return place_of(wanted.names[tag[row]], int(times.first[row]))
+
+        self._count_words(cells, asked, place, problems)
         quality = np.full(len(rows), Quality.GOOD, dtype=np.uint8)
         if options.quality_column:
             words = kept.column(options.quality_column)
             quality, unknown = self._reader.qualities(words)
             unknown &= asked
-            examples = first_few(unknown, lambda row: words[row])
+            examples = first_few(unknown, words.__getitem__, place)
             problems.add(name, _UNKNOWN_QUALITY, int(unknown.sum()), examples)
         quality[np.isnan(cells.value)] = Quality.BAD
-        return _rows(times.take(rows), tag[rows], cells.value, quality)
+        late = None if piece.late is None else piece.late[rows]
+        return _rows(times, tag, cells.value, quality, late)
 
     def _wide(
         self,
-        batch: pa.RecordBatch,
-        times: ParsedTimes,
+        piece: Piece,
         names: Sequence[str],
         wanted: Wanted,
         problems: ProblemCount,
     ) -> Rows:
-        rows = np.flatnonzero(_inside(times, wanted))
-        kept = batch.take(pa.array(rows)) if len(rows) < batch.num_rows else batch
-        cells = [self._reader.cells(kept.column(n), n, str(self._path)) for n in names]
-        for part in cells:
-            self._count_words(part, np.ones(len(rows), dtype=np.bool_), problems)
-        shape = (len(rows), len(names))
+        times, first = piece.times, piece.times.first
+        cells = [self._reader.cells(piece.batch.column(n), n, str(self._path)) for n in names]
+        for name, part in zip(names, cells, strict=True):
+            place = partial(_place_in, name, first)
+            self._count_words(part, np.ones(len(first), dtype=np.bool_), place, problems)
+        shape = (len(first), len(names))
         there = np.column_stack([c.there for c in cells]) if cells else np.zeros(shape, np.bool_)
         value = np.column_stack([c.value for c in cells]) if cells else np.zeros(shape)
         row, column = np.nonzero(there)
         tag = np.array([wanted.book[name] for name in names], dtype=np.int32)[column]
         value = value[there]
         quality = np.where(np.isnan(value), Quality.BAD, Quality.GOOD).astype(np.uint8)
-        return _rows(times.take(rows[row]), tag, value, quality)
+        late = None if piece.late is None else piece.late[row]
+        return _rows(times.take(row), tag, value, quality, late)
 
     def _count_words(
-        self, cells: Cells, asked: npt.NDArray[np.bool_], problems: ProblemCount
+        self,
+        cells: Cells,
+        asked: npt.NDArray[np.bool_],
+        place: Callable[[int], str],
+        problems: ProblemCount,
     ) -> None:
         unknown = cells.not_understood & asked
-        examples = first_few(unknown, cells.text)
-        problems.add(self._path.name, _NOT_A_NUMBER, int(unknown.sum()), examples)
+        if unknown.any():
+            comma = unknown & cells.other_mark
+            for what, rows in ((_NOT_A_NUMBER, unknown & ~comma), (_OTHER_MARK, comma)):
+                examples = first_few(rows, cells.text, place)
+                problems.add(self._path.name, what, int(rows.sum()), examples)
 
     def _batches(self, groups: Sequence[Group], columns: list[str]) -> Iterator[pa.RecordBatch]:
         numbers = [group.number for group in groups]
@@ -298,8 +361,10 @@ class ParquetFile:
             if (times.first != NO_TIME).all():
                 return Group(number, int(times.first[0]), int(times.second[1]), tags)
         group = Group(number, 1, 0, tags, reported=True)
+        row = sum(self._file.metadata.row_group(n).num_rows for n in range(number)) + 1
         for batch in self._batches([group], [options.time_column]):
-            times = self._times(batch, problems)
+            times = self._times(batch, row, problems)
+            row += len(batch)
             there = times.first != NO_TIME
             if there.any():
                 low, high = int(times.first[there].min()), int(times.second[there].max())
@@ -343,8 +408,8 @@ class ParquetFile:
             )
 
 
-def _inside(times: ParsedTimes, wanted: Wanted) -> npt.NDArray[np.bool_]:
-    return (times.first >= wanted.start) & (times.first < wanted.end)
+def _place_in(name: str, first: npt.NDArray[np.int64], row: int) -> str:
+    return place_of(name, int(first[row]))
 
 
 def _rows(
@@ -352,6 +417,10 @@ def _rows(
     tag: npt.NDArray[np.int32],
     value: npt.NDArray[np.float64],
     quality: npt.NDArray[np.uint8],
+    late: npt.NDArray[np.bool_] | None,
 ) -> Rows:
-    doubled = np.flatnonzero(times.doubled)
-    return Rows(tag, times.first, value, quality, doubled, times.second[doubled])
+    doubled = np.zeros(0, dtype=np.int64)
+    if times.second is not times.first:
+        doubled = np.flatnonzero(times.doubled)
+    late_at = np.zeros(0, dtype=np.int64) if late is None else np.flatnonzero(late)
+    return Rows(tag, times.first, value, quality, doubled, times.second[doubled], late_at)

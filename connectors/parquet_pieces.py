@@ -6,10 +6,11 @@ from collections import OrderedDict
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+import pyarrow as pa
+
 if TYPE_CHECKING:
-    import numpy as np
     import numpy.typing as npt
-    import pyarrow as pa
 
     from connectors.times import ParsedTimes
 
@@ -25,12 +26,16 @@ class Piece:
         times: of each row.
         words: the distinct tag names; none in layout ``wide``.
         tag_at: which of them each row has.
+        late: which rows stand after later ones of their tag, None when none does.
+        ordered: the rows stand in the order of time.
     """
 
     batch: pa.RecordBatch
     times: ParsedTimes
     words: list[str]
     tag_at: npt.NDArray[np.int64]
+    late: npt.NDArray[np.bool_] | None
+    ordered: bool
 
     @property
     def nbytes(self) -> int:
@@ -38,7 +43,31 @@ class Piece:
         times = self.times
         second = 0 if times.second is times.first else times.second.nbytes
         parsed = times.first.nbytes + second + times.in_missing_hour.nbytes
-        return int(self.batch.nbytes) + parsed + int(self.tag_at.nbytes)
+        late = 0 if self.late is None else self.late.nbytes
+        return int(self.batch.nbytes) + parsed + int(self.tag_at.nbytes) + late
+
+    def within(self, start: int, end: int) -> Piece:
+        """Return the rows of a span of time, without a look at the others if they are in order.
+
+        Args:
+            start: [us] of the span.
+            end: [us] of the span; it is half open.
+        """
+        first = self.times.first
+        inside: Any
+        if self.ordered:
+            low, high = np.searchsorted(first, [start, end]).tolist()
+            inside, count, batch = slice(low, high), high - low, self.batch.slice(low, high - low)
+        else:
+            inside = np.flatnonzero((first >= start) & (first < end))
+            count = len(inside)
+            batch = self.batch if count == len(first) else self.batch.take(pa.array(inside))
+        if count == len(first):
+            return self
+        late = None if self.late is None else self.late[inside]
+        # In layout wide there are no tags beside the rows.
+        tag_at = self.tag_at[inside] if self.words else self.tag_at
+        return Piece(batch, self.times.take(inside), self.words, tag_at, late, self.ordered)
 
 
 class PieceCache:

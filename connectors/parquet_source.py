@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
@@ -14,6 +14,7 @@ from connectors.csv_index import Extent
 from connectors.parquet_columns import ColumnReader
 from connectors.parquet_file import Group, ParquetFile, Wanted
 from connectors.parquet_options import ParquetOptions
+from connectors.parquet_order import GroupOrder
 from connectors.parquet_pieces import PieceCache
 from connectors.paths import matching_files, unreadable
 from connectors.tidy import ProblemCount, Rows, join_rows, settle_doubled_hour, tidy
@@ -48,6 +49,7 @@ class _Known:
 
     extent: Extent
     groups: list[Group] | None = None
+    order: GroupOrder = field(default_factory=GroupOrder)
     error: ConnectorError | None = None
 
 
@@ -167,7 +169,9 @@ class ParquetSource:
                     known = self._known[path] = _Known(extent)
                 elif known.error is not None:
                     raise known.error
-                file = ParquetFile(path, handle, self._options, self._reader, self._cache, extent)
+                file = ParquetFile(
+                    path, handle, self._options, self._reader, self._cache, extent, known.order
+                )
                 if known.groups is None:
                     known.groups = file.groups(problems)
                 return work(file, known.groups)

@@ -23,6 +23,8 @@ if TYPE_CHECKING:
 __all__ = ["Sheet", "read_sheet"]
 
 _HEAD = 1 << 19
+_SQLITE = b"SQLite format 3\x00"
+"""Begins every file of that database (its file format, section 1.3.1)."""
 _MOST_LINES = 2_000
 _DELIMITERS = (";", "\t", "|", ",")
 """In this order: commas may be decimal marks where one of the others cuts the lines."""
@@ -80,6 +82,11 @@ def _text(path: Path) -> tuple[str, str]:
         raise unreadable(path, error) from error
     if not head.strip():
         raise ConnectorError(f"{path} is empty")
+    if head.startswith(_SQLITE):
+        raise ConnectorError(
+            f"{path} is a SQLite database; only CSV and Parquet exports are looked into: write a "
+            f"[[source]] table with kind = 'sql' and url = 'sqlite:///{path}'"
+        )
     codec = _encoding(head)
     text = head.decode("utf-8-sig" if codec == "utf-8" else codec, errors="replace")
     # The last line may be cut, and the cut may go through a character.

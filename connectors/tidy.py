@@ -11,7 +11,7 @@ import numpy as np
 import pandas as pd
 
 from connectors.base import FEW, Example, Mark, Problem, Quality
-from connectors.times import from_microseconds, resolve_doubled_hour
+from connectors.times import NO_TIME, from_microseconds, resolve_doubled_hour
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Iterator, Sequence
@@ -23,6 +23,7 @@ __all__ = [
     "Rows",
     "first_few",
     "join_rows",
+    "place_of",
     "settle_doubled_hour",
     "tidy",
 ]
@@ -129,6 +130,19 @@ def first_few(
     """
     for at in np.flatnonzero(rows)[:FEW].tolist():
         yield Example(place(at), str(text(at)).strip()[:_LONGEST])
+
+
+def place_of(tag: str, time: int) -> str:
+    """Say which reading is meant, where a source has no lines to count.
+
+    Args:
+        tag: its tag.
+        time: [us] UTC; without one it is the tag alone.
+    """
+    if time == NO_TIME:
+        return tag
+    moment = pd.Timestamp(time, unit="us", tz="UTC")
+    return f"{tag} {moment:%Y-%m-%d %H:%M:%S} UTC"
 
 
 def join_rows(parts: Sequence[Rows]) -> Rows:

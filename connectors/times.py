@@ -89,7 +89,7 @@ class ParsedTimes:
             return np.zeros(len(self.first), dtype=np.bool_)
         return cast("npt.NDArray[np.bool_]", self.first != self.second)
 
-    def take(self, rows: npt.NDArray[np.int32] | npt.NDArray[np.intp]) -> ParsedTimes:
+    def take(self, rows: npt.NDArray[np.int32] | npt.NDArray[np.intp] | slice) -> ParsedTimes:
         """Return the times of these rows."""
         first = self.first[rows]
         second = first if self.second is self.first else self.second[rows]

@@ -7,15 +7,20 @@ import random
 
 import numpy as np
 import pandas as pd
+import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 import connectors.csv_index
+import connectors.parquet_file
 from connectors import open_source
 from connectors.base import Mark, Window
 from connectors.csv_options import CsvOptions
 from connectors.csv_source import CsvSource
+from connectors.parquet_options import ParquetOptions
+from connectors.parquet_source import ParquetSource
 
 START = pd.Timestamp("2026-01-31", tz="UTC")
 TAGS = ["a", "b", "c"]
@@ -80,6 +85,71 @@ def test_what_is_out_of_order_is_a_property_of_the_file(
     for ends in itertools.pairwise(sorted({0, 60, *edges})):
         found |= late_ones(source.read(TAGS, window(*ends)).readings)
     assert found == by_hand(rows)
+
+
+@QUIET
+@given(
+    seed=st.integers(0, 999),
+    swaps=st.sampled_from([0, 0, 1, 5, 30]),
+    by_tag=st.booleans(),
+    group=st.sampled_from([7, 20, 45, 1000]),
+    batch=st.sampled_from([11, 1 << 18]),
+    edges=st.lists(st.integers(1, 59), max_size=4),
+    memory=st.sampled_from([0, 1 << 20]),
+    stated=st.booleans(),
+)
+def test_what_is_out_of_order_in_a_parquet_file_is_a_property_of_the_file(
+    tmp_path_factory, monkeypatch, seed, swaps, by_tag, group, batch, edges, memory, stated
+):
+    monkeypatch.setattr(connectors.parquet_file, "_BATCH", batch)
+    folder = tmp_path_factory.mktemp("order")
+    dice = random.Random(seed)  # noqa: S311 - no secret, a test's own dice
+    rows = [(minute, tag) for minute in range(60) for tag in TAGS]
+    if by_tag:
+        rows.sort(key=lambda row: row[1])
+    for _ in range(swaps):
+        one, other = dice.randrange(len(rows)), dice.randrange(len(rows))
+        rows[one], rows[other] = rows[other], rows[one]
+    write_parquet(folder, rows, group, write_statistics=stated)
+    source = ParquetSource(ParquetOptions(path="x.parquet"), folder, cache_limit=memory)
+    spans = list(itertools.pairwise(sorted({0, 60, *edges})))
+    dice.shuffle(spans)
+    found = set()
+    for ends in spans:
+        found |= late_ones(source.read(TAGS, window(*ends)).readings)
+    assert found == by_hand(rows)
+    assert found == late_ones(source.read(TAGS, window(0, 60)).readings)
+
+
+def write_parquet(folder, rows, group, **options):
+    table = {
+        "time": [START + pd.Timedelta(minutes=minute) for minute, _ in rows],
+        "tag": [tag for _, tag in rows],
+        "value": [float(minute) for minute, _ in rows],
+    }
+    pq.write_table(pa.table(table), folder / "x.parquet", row_group_size=group, **options)
+
+
+@pytest.mark.parametrize("group", [10, 200])
+def test_a_parquet_file_that_lists_the_newest_first_is_in_order(tmp_path, group):
+    rows = [(minute, tag) for minute in reversed(range(40)) for tag in TAGS]
+    rows[60], rows[66] = rows[66], rows[60]  # (19, a) and (17, a)
+    write_parquet(tmp_path, rows, group)
+    source = open_source("parquet", {"path": "x.parquet"}, tmp_path)
+    late = late_ones(source.read(TAGS, window(0, 60)).readings)
+    assert late == {(18, "a"), (19, "a")}
+    assert late_ones(source.read(TAGS, window(19, 20)).readings) == {(19, "a")}
+
+
+def test_rows_of_a_wide_parquet_file_are_in_order_or_not_as_a_whole(tmp_path):
+    minutes = (0, 1, 5, 3, 4, 6)
+    cells = {tag: [float(m) for m in minutes] for tag in ("a", "b")}
+    table = pa.table({"time": [START + pd.Timedelta(minutes=m) for m in minutes], **cells})
+    pq.write_table(table, tmp_path / "x.parquet", row_group_size=3)
+    source = open_source("parquet", {"path": "x.parquet", "layout": "wide"}, tmp_path)
+    late = {(3, "a"), (3, "b"), (4, "a"), (4, "b")}
+    assert late_ones(source.read(["a", "b"], window(3, 5)).readings) == late
+    assert late_ones(source.read(["a", "b"], window(0, 60)).readings) == late
 
 
 def test_rows_of_a_wide_export_are_in_order_or_not_as_a_whole(tmp_path):

@@ -115,6 +115,37 @@ def test_wrong_rows_are_counted(tmp_path):
     assert not any(p.what.startswith("row dropped") for p in reader.read(["a"], DAY).problems)
 
 
+@pytest.mark.parametrize("group", [1, 3, 100])
+def test_of_each_problem_the_first_few_are_named_with_tag_and_time(tmp_path, group):
+    write(
+        tmp_path,
+        group=group,
+        time=["2026-01-31 06:00", "never", "2026-01-31 06:01", "2026-01-31 06:02", "soon"],
+        tag=["a", "a", None, "b", "b"],
+        value=["about 3", "1", "1", "41,5", "2"],
+        quality=["Good", "Good", "Good", "so so", "Good"],
+    )
+    problems = source(tmp_path, quality_column="quality").read(["a", "b"], DAY).problems
+    first = "2026-01-31 06:00:00 UTC"
+    found = {(p.what.split(":")[0], *((e.place, e.text) for e in p.examples)) for p in problems}
+    assert found == {
+        ("value is not a number", (f"a {first}", "about 3")),
+        ("value has a decimal comma", ("b 2026-01-31 06:02:00 UTC", "41,5")),
+        ("row dropped", ("row 2", "never"), ("row 5", "soon")),
+        ("row dropped", ("row 3", "")),
+        ("quality word is in no list", ("b 2026-01-31 06:02:00 UTC", "so so")),
+    }
+
+
+def test_of_a_wide_file_the_column_and_time_of_a_problem_are_named(tmp_path):
+    write(tmp_path, time=MINUTES[:3], a=["1", "2", "x"], b=["1,5", "2", "3"])
+    problems = source(tmp_path, layout="wide").read(["a", "b"], DAY).problems
+    assert {p.where for p in problems} == {
+        "export.parquet:a 2026-01-31 06:02:00 UTC",
+        "export.parquet:b 2026-01-31 06:00:00 UTC",
+    }
+
+
 def test_a_file_of_null_times_alone_is_counted(tmp_path):
     write(tmp_path, time=pa.nulls(3, pa.timestamp("us", "UTC")), tag=["a"] * 3, value=[1.0] * 3)
     result = source(tmp_path).read(["a"], DAY)

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import contextlib
 import csv
 import io
 import os
+import sqlite3
 import tomllib
 
 import awkward
@@ -174,6 +176,23 @@ def test_a_file_that_is_not_there_or_not_whole_is_told(tmp_path):
     awkward.parquet(tmp_path, pd.DataFrame({"a": [1], "b": ["x"]}))
     with pytest.raises(ConnectorError, match="no column of times"):
         sniff(tmp_path / "export.parquet")
+
+
+def test_a_database_in_a_file_is_told_from_an_export_without_a_table(tmp_path):
+    with contextlib.closing(sqlite3.connect(tmp_path / "history.sqlite")) as database:
+        database.execute("create table reading (time text, tag text, value real)")
+        database.commit()
+    with pytest.raises(ConnectorError, match="is a SQLite database.*kind = 'sql'"):
+        sniff(tmp_path / "history.sqlite")
+
+
+def test_flows_of_us_plants_are_known_by_their_short_names(tmp_path):
+    text = "time;gas;steam;make-up\n;scfh;kpph;pph\n"
+    text += "".join(f"2026-01-31 06:{m:02d};5,5;30,1;900,5\n" for m in range(9))
+    found = sniff(write(tmp_path, text))
+    listed = csv.DictReader(io.StringIO(found.tag_list("dcs"), newline=""))
+    units = {row["name"]: row["unit"] for row in listed}
+    assert units == {"gas": "scf/h", "steam": "klb/h", "make-up": "lb/h"}
 
 
 @pytest.mark.parametrize("name", ["export [1].csv", "a*b?.csv", "tags \"of\" 'x'.csv"])
