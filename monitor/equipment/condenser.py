@@ -33,7 +33,7 @@ from monitor.equipment.base import (
     measured,
     total,
 )
-from monitor.equipment.heat_transfer import conductance, share
+from monitor.equipment.heat_transfer import conductance, flag_where, share
 from monitor.equipment.working import (
     Working,
     boiling_at,
@@ -42,7 +42,6 @@ from monitor.equipment.working import (
     heat_taken,
     ratio,
 )
-from monitor.flags import Flag
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturation_temperature
 
@@ -53,6 +52,9 @@ if TYPE_CHECKING:
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Condenser", "CondenserOptions"]
+
+_THERMOMETERS = 4.2
+"""Two thermometers of the default class, 1.5 K, differ by less: 2 sqrt(2) times it [K]."""
 
 
 class CondenserOptions(Options):
@@ -183,10 +185,13 @@ class Condenser(Kind):
         crossed = ~((approach_in > approach_out) & (approach_out > 0))
         ua = np.where(crossed, np.nan, conductance(duty, approach_in, approach_out))
         expected = cast("CondenserOptions", drawn.item.options).expected_ua(cold)
-        measured = np.isfinite(approach_in) & np.isfinite(approach_out)
-        flag = np.where(crossed & measured, np.int32(Flag.SECOND_LAW), np.int32(0))
+        rise = warm.temperature - cold.temperature
+        # Cooling water that heats the steam: hotter than it, or cooled by it. An idle condenser's
+        # two thermometers differ a little either way.
+        flag = flag_where(
+            ((duty > 0) & (approach_out <= 0)) | ((rise < -_THERMOMETERS) & (approach_out > 0))
+        )
         with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-            rise = warm.temperature - cold.temperature
             clean = rise / np.expm1(expected * rise / duty)
         ones = np.ones_like(duty)
         return {

@@ -147,6 +147,23 @@ def test_heat_that_would_flow_uphill_is_flagged_wherever_it_shows():
     assert figures["ua"].flag[0] & figures["effectiveness"].flag[0] & Flag.SECOND_LAW
 
 
+@pytest.mark.parametrize(
+    ("out_C", "flagged"), [(17.6, False), (18.0, False), (28.0, False), (8.0, True), (46.0, True)]
+)
+def test_only_heat_that_flows_uphill_contradicts_a_condenser(out_C, flagged):
+    """18 degC in; steam at 0.08 bar boils at 41.5 degC. A thermometer's error is no contradiction;
+    water cooled by steam (two thermometers swapped) is one."""
+    ports = {
+        "steam": water("st", 8.0, p_bar=0.08, x=0.9),
+        "cooling_in": water("ci", 500.0, p_bar=2.5, T_C=18.0),
+        "condensate": water("hw", 8.0, p_bar=0.08, x=0.0),
+        "cooling_out": water("co", 500.0, p_bar=2.5, T_C=out_C),
+    }
+    figures = figures_of(drawn("condenser", ports))
+    for figure in ("ttd", "ua"):
+        assert bool(figures[figure].flag[0] & Flag.SECOND_LAW) is flagged
+
+
 # Vessels that store
 
 
