@@ -15,7 +15,7 @@ import pandas as pd
 
 from connectors.base import Quality
 from monitor.cycle import read_window
-from monitor.equipment.working import AtHand
+from monitor.equipment.working import AtHand, CellSignal
 from monitor.equipment.working import Working as Step
 from monitor.errors import WrongUseError
 from monitor.figures import Computed, compute, lead_in
@@ -240,12 +240,21 @@ class _Cell:
     def at_hand(self, item: Item) -> AtHand:
         """What the steps of a condition figure may use."""
         row = self._row(item.id, EQUIPMENT_COLUMNS[0])
-        return AtHand(
-            item=item,
-            streams={s: self.state(s).figures for s in (*item.ids("in"), *item.ids("out"))},
-            account={n: float(row[n]) for n in EQUIPMENT_COLUMNS},
-            ambient=float(self._row(SITE_SUBJECT, "t0_degc")["t0_degc"]),
-        )
+        plant = self.window.plant
+        if plant is None:
+            raise TypeError("a figure is explained from a window with its states and signals")
+        # The window ends with the cell that is explained.
+        signals = {
+            key: CellSignal(float(s.value[-1]), float(s.edges[-2]), float(s.edges[-1]))
+            for key, s in plant.drawn[item.id].signals.items()
+        }
+        streams = {
+            s: {**self.state(s).figures, "volume_m3_kg": float(plant.states[s].volume[-1])}
+            for s in (*item.ids("in"), *item.ids("out"))
+        }
+        account = {n: float(row[n]) for n in EQUIPMENT_COLUMNS}
+        interval = float(self.site.file.site.interval)
+        return AtHand(item, streams, account, self.dead("live"), signals, interval)
 
     def dead(self, figure: str) -> DeadState:
         table = self.site.file.dead_state

@@ -74,6 +74,7 @@ class Computed:
         readings, bad, missing: readings inside the window; those left out; cells without a value.
         problems: what the sources passed over.
         uncertainties: what each instrument contributes to each figure; None unless asked for.
+        plant: the states and signals behind the figures; None unless asked for.
     """
 
     batch: FigureBatch
@@ -82,6 +83,7 @@ class Computed:
     missing: int
     problems: tuple[Problem, ...] = ()
     uncertainties: Uncertainties | None = None
+    plant: Plant | None = None
 
 
 def lead_in(site: Site) -> int:
@@ -109,7 +111,7 @@ def compute(
         read: readings from ``start - lead_in(site)`` to ``end`` inclusive.
         start: UTC s, on a full hour.
         end: UTC s, on the grid.
-        with_budgets: hand out the uncertainty budgets too, which nobody stores.
+        with_budgets: hand out the uncertainty budgets, states and signals too, which nobody stores.
     """
     if start % _HOUR:
         raise ValueError(f"a window starts on a full hour, not at {start}")
@@ -124,7 +126,7 @@ def compute(
     hourly = Hourly.of(kept, grid.count, _HOUR // interval)
     uncertain = propagate(site, tags, ambient, hourly)
     computed = _figures(site, plant, uncertain, grid, conditioned, read.problems)
-    return replace(computed, uncertainties=uncertain) if with_budgets else computed
+    return replace(computed, uncertainties=uncertain, plant=plant) if with_budgets else computed
 
 
 @dataclass(frozen=True)

@@ -16,6 +16,7 @@ Source: Bejan, Tsatsaronis, Moran (1996), eq. 3.8 (physical exergy of a closed s
 
 from __future__ import annotations
 
+import math
 from typing import TYPE_CHECKING, Annotated, cast
 
 import numpy as np
@@ -35,13 +36,15 @@ from monitor.equipment.base import (
     total,
 )
 from monitor.equipment.saturated_vessel import exergy_rise, saturated_content
+from monitor.equipment.working import Working, ratio
 from monitor.site.models import Reference
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturated
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Iterator, Mapping
 
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Accumulator", "AccumulatorOptions"]
@@ -159,3 +162,92 @@ class Accumulator(Kind):
                 loss / (liquid.temperature - dead.temperature), ones, flag
             ),
         }
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure: what the vessel holds, then its exergy or what its balance misses.
+
+        No steps to a loss while the vessel is at work.
+        """
+        level, pressure = at.signals["level"], at.signals["pressure"]
+        held = [
+            _content_working(at, when, share, p)
+            for when, share, p in (
+                ("begin", level.before, pressure.before),
+                ("end", level.after, pressure.after),
+            )
+        ]
+        if figure == "stored_exergy":
+            yield from held[1]
+            yield _exergy_working(at, [step.value for step in held[1]])
+            return
+        if abs(at.account["load_kg_s"]) >= at.item.options.off_below:
+            return
+        liquid = saturated(pressure.value)[0]
+        h_f, T = float(liquid.enthalpy) / 1e3, float(liquid.temperature) - 273.15
+        for steps in held:
+            yield from steps[:2]
+        (m1, u1, _), (m2, u2, _) = ([step.value for step in steps] for steps in held)
+        rows = (*((1.0, r) for r in at.at("charge")), *((-1.0, r) for r in at.at("discharge")))
+        flowing = [(sign * r["mass_flow_kg_s"], r["enthalpy_kj_kg"]) for sign, r in rows]
+        passing = math.fsum(m * (h - h_f) for m, h in flowing if m)
+        rise = ((u2 - u1) * 1e3 - h_f * (m2 - m1)) / at.interval
+        loss = Working(
+            "standing heat loss",
+            "Q = sum m (h - h_f) in - out - (dU - h_f dm) / dt",
+            f"{passing:.4f} - ({1e3 * (u2 - u1):.4f} - {h_f:.4f} * {m2 - m1:.6f}) / "
+            f"{at.interval:g}",
+            passing - rise,
+            "kW",
+            is_figure=figure == "standing_loss",
+        )
+        yield loss
+        if figure == "heat_loss_coefficient":
+            name, formula = "heat-loss coefficient", "Q / (T_sat - T0)"
+            yield from ratio(name, formula, loss.value, T - at.ambient, "kW/K")
+
+
+def _content_working(at: AtHand, when: str, share: float, p: float) -> list[Working]:
+    """Mass [kg], internal energy [MJ] and entropy [MJ/K] of what the vessel holds."""
+    volume = cast("AccumulatorOptions", at.item.options).volume
+    sides = saturated(p)
+    masses = [
+        volume * part / float(side.volume)
+        for part, side in zip((share, 1.0 - share), sides, strict=True)
+    ]
+    energies, entropies = (
+        [float(getattr(side, name)) for side in sides] for name in ("internal_energy", "entropy")
+    )
+    where = f"at the cell's {when}"
+    told = (
+        ("mass", "V [y / v_f + (1 - y) / v_g]", [1.0, 1.0], 1.0, "kg"),
+        ("internal energy", "m_f u_f + m_g u_g", energies, 1e6, "MJ"),
+        ("entropy", "m_f s_f + m_g s_g", entropies, 1e6, "MJ/K"),
+    )
+    numbers = f"V = {volume:g} m^3, y = {100 * share:.4f} %, p = {p / 1e5:.5f} bar(a)"
+    return [
+        Working(
+            f"{name} held {where}",
+            formula,
+            numbers,
+            math.fsum(m * x for m, x in zip(masses, each, strict=True)) / scale,
+            unit,
+        )
+        for name, formula, each, scale, unit in told
+    ]
+
+
+def _exergy_working(at: AtHand, held: list[float]) -> Working:
+    """E = U + p0 V - T0 S - g0 m."""
+    mass, energy, entropy = held
+    volume = cast("AccumulatorOptions", at.item.options).volume
+    p0, T0, g0 = (float(x) for x in (at.dead.pressure, at.dead.temperature, at.dead.gibbs))
+    stored = 1e6 * energy + p0 * volume - T0 * 1e6 * entropy - g0 * mass
+    return Working(
+        "exergy stored, at the cell's end",
+        "E = (U + p0 V - T0 S - g0 m) / 3.6",
+        f"({energy:.4f} + {p0 * volume / 1e6:.5f} - {T0:.2f} * {entropy:.7f} - "
+        f"({g0 / 1e6:.8f}) * {mass:.4f}) MJ / 3.6",
+        stored / 3.6e6,
+        "kWh",
+        is_figure=True,
+    )

@@ -9,6 +9,7 @@ Source: Kotas, The Exergy Method of Thermal Plant Analysis (1985), chapter 5 (st
 
 from __future__ import annotations
 
+import math
 from functools import cache
 from typing import TYPE_CHECKING, Literal
 
@@ -148,7 +149,7 @@ class Boiler(Kind):
         }
 
     def working(self, at: AtHand, figure: str) -> Iterator[Working]:
-        """Steps to one figure, but the exergetic efficiency: its dead state is not the day's."""
+        """Steps to one figure."""
         burnt = at.total("energy_kw", "fuel")
         feed = at.total("energy_kw", "feedwater")
         if figure == "fuel_efficiency":
@@ -158,6 +159,30 @@ class Boiler(Kind):
         elif figure == "blowdown_share":
             part, whole = (at.total("mass_flow_kg_s", port) for port in ("blowdown", "feedwater"))
             yield from ratio("share of the feed water", "m_blowdown / m_feedwater", part, whole)
+        elif figure == "exergetic_efficiency":
+            yield from _exergetic_working(at)
         elif figure == "loss_share":
             lost = at.total("energy_kw", "loss")
             yield from ratio("share of the fuel", "Q_loss / (m_fuel LHV)", lost, burnt)
+
+
+def _exergetic_working(at: AtHand) -> Iterator[Working]:
+    """Steps to psi at the standard day: m (h - T0 s - g0) of the water, the fuel's own exergy."""
+    T0, g0 = float(_standard().temperature), float(_standard().gibbs) / 1e3
+
+    def of(*ports: str) -> tuple[float, str]:
+        rows = [r for r in at.at(*ports) if r["mass_flow_kg_s"]]
+        terms = [
+            (r["mass_flow_kg_s"], r["enthalpy_kj_kg"] - T0 * r["entropy_kj_kgk"] - g0) for r in rows
+        ]
+        text = " + ".join(f"{m:.5f} * {e:.4f}" for m, e in terms)
+        return math.fsum(m * e for m, e in terms), text or "0"
+
+    formula = f"sum m (h - T0 s - g0), T0 = {T0:.2f} K, g0 = {g0:.5f} kJ/kg at 1.01325 bar(a)"
+    made, brought = of("steam", "blowdown"), of("feedwater")
+    yield Working("exergy of steam and blowdown", formula, made[1], made[0], "kW")
+    yield Working("exergy of the feed water", formula, brought[1], brought[0], "kW")
+    # A fuel's exergy knows no dead state: beta times its heating value.
+    fuel = at.total("exergy_live_kw", "fuel")
+    name, formula = "exergetic efficiency", "(E_steam + E_blowdown - E_feedwater) / E_fuel"
+    yield from ratio(name, formula, made[0] - brought[0], fuel)

@@ -102,6 +102,5 @@ class Deaerator(OpenFeedwaterHeater):
         if figure == "vent_share":
             part, whole = (at.total("mass_flow_kg_s", port) for port in ("vent", "feedwater"))
             yield from ratio("vent, share of the feed water", "m_vent / m_feedwater", part, whole)
-        elif figure != "ttd" or not at.item.options.signals():
-            # With a gauge of its own the vessel's pressure is no stream's.
+        else:
             yield from super().working(at, figure)

@@ -177,6 +177,42 @@ class Header(Kind):
             formula = "Q / (T - T0), Q the energy residual of the header"
             excess = mean.value - at.ambient
             yield from ratio("heat-loss coefficient", formula, lost, excess, "kW/K")
+        else:
+            yield from _loss_working(at)
+
+
+def _loss_working(at: AtHand) -> Iterator[Working]:
+    """Steps to K."""
+    chosen = cast("HeaderOptions", at.item.options).pressure_loss_from
+    outlets = [s for s in at.at("outlet") if s["mass_flow_kg_s"] > 0]
+    flow = math.fsum(s["mass_flow_kg_s"] for s in outlets)
+    weighted = math.fsum(s["mass_flow_kg_s"] * s["pressure_bar"] for s in outlets)
+    behind = Working(
+        "mean pressure of the outlets",
+        "sum(m p) / sum(m)",
+        f"{weighted:.6f} / {flow:.5f}",
+        weighted / flow if flow else math.nan,
+        "bar(a)",
+    )
+    yield behind
+    power, measure, terms = 0.0, 0.0, []
+    for name in chosen or at.item.ports["inlet"]:
+        pipe = at.streams[name]
+        m, p, v = (pipe[n] for n in ("mass_flow_kg_s", "pressure_bar", "volume_m3_kg"))
+        if m > 0:
+            power += m * (p - behind.value) * 1e5
+            measure += m**3 * v
+            terms.append((f"{m:.4f} * ({p:.5f} - {behind.value:.5f})", f"{m:.4f}^3 * {v:.6f}"))
+    if measure > 0:
+        above, below = (" + ".join(side) for side in zip(*terms, strict=True))
+        yield Working(
+            "pressure-loss coefficient",
+            "K = sum m (p_in - p_out) / sum m^3 v, 1 bar = 1e5 Pa",
+            f"1e5 [{above}] / [{below}]",
+            power / measure,
+            "1/m^4",
+            is_figure=True,
+        )
 
 
 def _pressure_loss(drawn: Drawn) -> FloatArray:

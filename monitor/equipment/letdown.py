@@ -13,6 +13,7 @@ Analysis (1985), chapter 4.2 (throttling).
 
 from __future__ import annotations
 
+import math
 from typing import TYPE_CHECKING, Annotated, Literal, cast
 
 import numpy as np
@@ -29,7 +30,12 @@ from monitor.equipment.base import (
     measured,
     total,
 )
-from monitor.equipment.valve import ValveOptions, passing_figure, passing_flow
+from monitor.equipment.valve import (
+    ValveOptions,
+    passing_figure,
+    passing_flow,
+    passing_working,
+)
 from monitor.equipment.working import Working, isentropic_end
 from monitor.site.units import Quantity
 from monitor.thermo.water import state_ps
@@ -129,10 +135,14 @@ class Letdown(Kind):
         return found | passing_flow(drawn, inlet.mass_flow)
 
     def working(self, at: AtHand, figure: str) -> Iterator[Working]:
-        """Steps to the work bypassed."""
-        if figure != "work_bypassed":
-            return
+        """Steps to one figure."""
         inlet, outlet = at.only("inlet"), at.only("outlet")
+        if figure == "passing_flow":
+            yield from passing_working(at)
+            return
+        if figure == "flow_coefficient":
+            yield from _coefficient_working(at)
+            return
         names = (at.item.ports["inlet"][0], at.item.ports["outlet"][0])
         end = isentropic_end(inlet, outlet["pressure_bar"], names)
         yield end
@@ -145,6 +155,43 @@ class Letdown(Kind):
             "kW",
             is_figure=True,
         )
+
+
+def _coefficient_working(at: AtHand) -> Iterator[Working]:
+    """Steps to Kv; none while the valve is closed or nothing can flow."""
+    options = cast("LetdownOptions", at.item.options)
+    inlet, position = at.only("inlet"), at.signals["position"].value
+    p1, p2 = inlet["pressure_bar"], at.only("outlet")["pressure_bar"]
+    choked = _STEAM_EXPONENT / 1.4 * options.choking_ratio
+    x = min(1.0 - p2 / p1, choked)
+    if not (position >= options.closed_below and x > 0):
+        return
+    expansion = Working(
+        "expansion factor",
+        "Y = 1 - x / (3 F_k x_T), x = dp / p1 not above F_k x_T",
+        f"1 - {x:.6f} / (3 * {choked:.6f})",
+        1.0 - x / (3.0 * choked),
+        "",
+    )
+    linear = options.characteristic == "linear"
+    opening = Working(
+        "share of the flow coefficient at the position",
+        "position" if linear else "R^(position - 1)",
+        f"{position:.5f}" if linear else f"{options.rangeability:g}^({position:.5f} - 1)",
+        position if linear else options.rangeability ** (position - 1.0),
+        "",
+    )
+    yield from (expansion, opening)
+    flow, volume = inlet["mass_flow_kg_s"], inlet["volume_m3_kg"]
+    root = math.sqrt(x * p1 * 1e5 / volume)
+    yield Working(
+        "flow coefficient",
+        "Kv = 36000 m / [Y sqrt(x p1 rho1) share]",
+        f"36000 * {flow:.5f} / ({expansion.value:.6f} * {root:.3f} * {opening.value:.6f})",
+        36000.0 * flow / (expansion.value * root * opening.value),
+        "m^3/h",
+        is_figure=True,
+    )
 
 
 def _flow_coefficient(

@@ -122,7 +122,8 @@ class OpenFeedwaterHeater(Kind):
         """Steps to one figure."""
         out = at.only("feedwater")
         if figure == "ttd":
-            boiling = boiling_at(out["pressure_bar"])
+            inside = at.signals.get("pressure")
+            boiling = boiling_at(out["pressure_bar"] if inside is None else inside.value / 1e5)
             yield boiling
             name = "terminal temperature difference"
             yield difference(name, "T_sat - T_out", boiling.value, out["temperature_degc"])

@@ -30,7 +30,12 @@ from monitor.equipment.base import (
 )
 from monitor.equipment.heat_transfer import flag_where
 from monitor.equipment.nozzle import Orifice, zeuner_exponent
-from monitor.equipment.working import Working, enthalpies_at_boiling, ratio
+from monitor.equipment.working import (
+    Working,
+    enthalpies_at_boiling,
+    ratio,
+    through_an_orifice,
+)
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturated
 
@@ -146,10 +151,13 @@ class TrapGroup(Kind):
         return found
 
     def working(self, at: AtHand, figure: str) -> Iterator[Working]:
-        """Steps to the blow-through."""
-        if figure == "orifice_flow" or len(at.at("inlet")) > 1:
-            return
+        """Steps to one figure; to the blow-through of a group with one inlet."""
         inlet = at.only("inlet")
+        if figure == "orifice_flow":
+            yield from self._orifices(at)
+            return
+        if len(at.at("inlet")) > 1:
+            return
         h_f, h_g = enthalpies_at_boiling(inlet["pressure_bar"])
         live, formula = inlet["enthalpy_kj_kg"] - h_f, "x = (h - h_f) / (h_g - h_f)"
         if figure == "blow_through":
@@ -157,3 +165,26 @@ class TrapGroup(Kind):
         else:
             flow = 3.6 * inlet["mass_flow_kg_s"] * max(live, 0.0)
             yield from ratio("blow-through", f"3.6 m x, {formula}", flow, h_g - h_f, "t/h")
+
+    def _orifices(self, at: AtHand) -> Iterator[Working]:
+        """Saturated steam through the orifices of the failed traps."""
+        options = cast("TrapGroupOptions", at.item.options)
+        p, one = at.only("inlet")["pressure_bar"], np.ones(())
+        volume = float(saturated(p * 1e5)[1].volume)
+        *steps, flow = through_an_orifice(
+            options.orifice or 0.0,
+            options.discharge_coefficient,
+            (p, volume),
+            at.only("outlet")["pressure_bar"],
+            float(zeuner_exponent(one, superheated=0.0 * one)),
+        )
+        yield from (*steps, flow)
+        count = options.failed_traps or 0.0
+        yield Working(
+            "blow-through that the failed traps would pass",
+            "3.6 n m",
+            f"3.6 * {count:g} * {flow.value:.6f}",
+            3.6 * count * flow.value,
+            "t/h",
+            is_figure=True,
+        )

@@ -11,13 +11,17 @@ from typing import TYPE_CHECKING, Annotated, cast
 import numpy as np
 
 from monitor.equipment.base import ConditionFigure, Figure, Options, measured
+from monitor.equipment.working import Working
 from monitor.site.models import Reference
 from monitor.site.units import Quantity
 
 if TYPE_CHECKING:
-    from monitor.equipment.base import Drawn, FloatArray, Item
+    from collections.abc import Iterator
 
-__all__ = ["ValveOptions", "passing_figure", "passing_flow"]
+    from monitor.equipment.base import Drawn, FloatArray, Item
+    from monitor.equipment.working import AtHand
+
+__all__ = ["ValveOptions", "passing_figure", "passing_flow", "passing_working"]
 
 
 class ValveOptions(Options):
@@ -68,3 +72,21 @@ def passing_flow(drawn: Drawn, flow: FloatArray) -> dict[str, ConditionFigure]:
     closed = cast("ValveOptions", drawn.item.options).is_closed(position.value)
     passing = np.where(closed, flow * 3.6, np.nan)
     return {"passing_flow": ConditionFigure(passing, np.ones_like(flow), position.flag)}
+
+
+def passing_working(at: AtHand) -> Iterator[Working]:
+    """The step to the passing flow; none while the valve is open."""
+    position, limit = (
+        at.signals["position"].value,
+        cast("ValveOptions", at.item.options).closed_below,
+    )
+    if position < limit:
+        flow = at.only("inlet")["mass_flow_kg_s"]
+        yield Working(
+            "passing flow when closed",
+            "3.6 m while the position is below closed_below",
+            f"3.6 * {flow:.6f}; position {100 * position:.3f} % < {100 * limit:g} %",
+            3.6 * flow,
+            "t/h",
+            is_figure=True,
+        )

@@ -25,11 +25,20 @@ from monitor.equipment.base import (
     measured,
 )
 from monitor.equipment.nozzle import Orifice, zeuner_exponent
-from monitor.equipment.valve import ValveOptions, passing_figure, passing_flow
+from monitor.equipment.valve import (
+    ValveOptions,
+    passing_figure,
+    passing_flow,
+    passing_working,
+)
+from monitor.equipment.working import Working, boiling_at, through_an_orifice
 from monitor.site.units import Quantity
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from monitor.equipment.working import AtHand
     from monitor.thermo.dead_state import DeadState
 
 __all__ = ["Vent", "VentOptions"]
@@ -103,3 +112,25 @@ class Vent(Kind):
             )
             found["orifice_flow"] = ConditionFigure(flow * 3.6, ones, nothing)
         return found
+
+    def working(self, at: AtHand, figure: str) -> Iterator[Working]:
+        """Steps to one figure."""
+        if figure == "passing_flow":
+            yield from passing_working(at)
+            return
+        inlet = at.only("inlet")
+        boiling = boiling_at(inlet["pressure_bar"])
+        yield boiling
+        superheat = np.asarray(inlet["temperature_degc"] - boiling.value)
+        k = float(zeuner_exponent(np.asarray(inlet["dryness"]), superheated=superheat))
+        options = cast("VentOptions", at.item.options)
+        *steps, flow = through_an_orifice(
+            options.orifice or 0.0,
+            options.discharge_coefficient,
+            (inlet["pressure_bar"], inlet["volume_m3_kg"]),
+            at.only("outlet")["pressure_bar"],
+            k,
+        )
+        yield from (*steps, flow)
+        name, numbers = "flow that the orifice would pass", f"3.6 * {flow.value:.6f}"
+        yield Working(name, "3.6 m", numbers, 3.6 * flow.value, "t/h", is_figure=True)

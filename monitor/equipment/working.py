@@ -21,9 +21,11 @@ if TYPE_CHECKING:
     import numpy.typing as npt
 
     from monitor.equipment.base import Item
+    from monitor.thermo.dead_state import DeadState
 
 __all__ = [
     "AtHand",
+    "CellSignal",
     "Working",
     "boiling_at",
     "conductance_of",
@@ -32,6 +34,7 @@ __all__ = [
     "heat_taken",
     "isentropic_end",
     "ratio",
+    "through_an_orifice",
 ]
 
 
@@ -51,20 +54,43 @@ class Working:
 
 
 @dataclass(frozen=True)
+class CellSignal:
+    """A signal of the equipment's own in one cell [SI, pressures absolute].
+
+    Attributes:
+        value: its mean.
+        before, after: its values at the cell's ends.
+    """
+
+    value: float
+    before: float
+    after: float
+
+
+@dataclass(frozen=True)
 class AtHand:
     """What the steps may use in one cell.
 
     Attributes:
         item: the equipment.
-        streams: the stored figures of its streams, by stream and column.
+        streams: the stored figures of its streams, by stream and column, with ``volume_m3_kg``.
         account: the stored figures of the equipment itself, by column.
-        ambient: T0 [degC].
+        dead: the live dead state.
+        signals: the equipment's own, by option.
+        interval: length of the cell [s].
     """
 
     item: Item
     streams: Mapping[str, Mapping[str, float]]
     account: Mapping[str, float]
-    ambient: float
+    dead: DeadState
+    signals: Mapping[str, CellSignal]
+    interval: float
+
+    @property
+    def ambient(self) -> float:
+        """T0 [degC]."""
+        return float(self.dead.temperature) - 273.15
 
     def at(self, *ports: str) -> list[Mapping[str, float]]:
         """The streams at some ports, in order."""
@@ -153,6 +179,32 @@ def conductance_of(duty: float, one_end: float, other_end: float) -> Iterator[Wo
         duty / mean if mean else math.nan,
         "kW/K",
         is_figure=True,
+    )
+
+
+def through_an_orifice(
+    diameter: float, coefficient: float, before: tuple[float, float], behind: float, k: float
+) -> Iterator[Working]:
+    """Steam through a hole: pressure ratio, then flow. ``before``: p [bar] and v [m^3/kg]."""
+    p, v = before
+    critical = (2.0 / (k + 1.0)) ** (k / (k - 1.0))
+    r = min(max(behind / p, critical), 1.0)
+    yield Working(
+        "pressure ratio",
+        "r = p2 / p1, not below the critical (2 / (k + 1))^(k / (k - 1))",
+        f"{behind:.4f} / {p:.4f}, k = {k:.4f}, critical {critical:.5f}",
+        r,
+        "",
+    )
+    area = math.pi / 4.0 * diameter**2
+    expansion = max(r ** (2.0 / k) - r ** ((k + 1.0) / k), 0.0)
+    flux = math.sqrt(2.0 * k / (k - 1.0) * p * 1e5 / v * expansion)
+    yield Working(
+        "flow through one orifice",
+        "m = C A sqrt(2 k / (k - 1) p / v (r^(2/k) - r^((k+1)/k)))",
+        f"C = {coefficient:g}, A = {area:.6e} m^2, v = {v:.6f} m^3/kg",
+        coefficient * area * flux,
+        "kg/s",
     )
 
 
