@@ -182,7 +182,7 @@ def test_a_database_in_a_file_is_told_from_an_export_without_a_table(tmp_path):
     with contextlib.closing(sqlite3.connect(tmp_path / "history.sqlite")) as database:
         database.execute("create table reading (time text, tag text, value real)")
         database.commit()
-    with pytest.raises(ConnectorError, match="is a SQLite database.*kind = 'sql'"):
+    with pytest.raises(ConnectorError, match=r"is a SQLite database.*kind = 'sql'"):
         sniff(tmp_path / "history.sqlite")
 
 
