@@ -28,6 +28,8 @@ from monitor.thermo.water import saturation_temperature
 if TYPE_CHECKING:
     from collections.abc import Iterator, Mapping
 
+    import numpy.typing as npt
+
     from monitor.checking.typical import Trial
     from monitor.equipment.base import Drawn, FloatArray, Item, StreamState
     from monitor.site.load import Site
@@ -195,13 +197,24 @@ def _at_stream(
     if state.medium != "water":
         return
     outside = (state.flag & Flag.OUT_OF_REGION) != 0
-    near = (state.flag & Flag.NEAR_SATURATION) != 0
+    near = ((state.flag & Flag.NEAR_SATURATION) != 0) & _may_be_near(site, state)
     assumed = ((state.flag & Flag.SIDE_ASSUMED) != 0) & ((state.flag & Flag.UNCERTAIN) != 0)
     size = np.where(outside, _CLEAR, np.where(near | assumed, _DOUBTED, 0.0))
     yield Contradiction("stream", stream, "state", size)
     if says.enthalpy == "balance":
         # What a balance finds must be a state of water: NaN tells that it is none.
         yield Contradiction("stream", stream, "state by balance", 0.0 * state.entropy)
+
+
+def _may_be_near(site: Site, state: StreamState) -> npt.NDArray[np.bool_]:
+    """Whether nearness to saturation is a stream's own; a flow from a balance brings others'."""
+    says = site.streams[state.id]
+    if says.throttling_test is not None:
+        return np.ones(len(state.flag), dtype=bool)
+    if says.temperature is None or says.phase is not None:
+        return np.zeros(len(state.flag), dtype=bool)
+    away = np.abs(state.temperature - saturation_temperature(state.pressure))
+    return np.asarray(away <= site.file.site.saturation_band)
 
 
 def _thermal_error(site: Site, state: StreamState) -> FloatArray:

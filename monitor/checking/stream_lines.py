@@ -44,13 +44,16 @@ def stream_lines(site: Site, batch: FigureBatch) -> Iterator[Line]:
         flags = cells["flag"].to_numpy(dtype=np.int64)
         figures: Figures = {name: number(means[name]) for name in (*_SHOWN, "exergy_live_kw")}
         figures["flags"] = describe(_all(flags))
-        verdict, reason = _judge(days[str(stream_id)], site.file.site.saturation_band)
+        band = site.file.site.saturation_band
+        verdict, reason = _judge(days[str(stream_id)], band)
         if stream.medium == "water":
             superheat = _superheat(means["pressure_bar"], means["temperature_degc"])
             z = _compressibility(means, superheat)
             figures["superheat_k"] = number(superheat)
             figures["compressibility"] = number(z)
             found = _words(means, superheat, z)
+            if reason == _unfixed(band) and abs(superheat) > 2 * band:
+                reason = "its flow or state is found from a stream that is near saturation"
             if verdict == "ok" and (z < _LEAST_Z or z > _MOST_Z):
                 verdict, reason = "look", _far_from_ideal(z)
         else:
@@ -109,15 +112,19 @@ def _judge(flags: npt.NDArray[np.int64], band: float) -> tuple[Verdict, str]:
     if missing > _HALF:
         return "wrong", "its state or flow is missing for most of the day"
     if share(Flag.NEAR_SATURATION) > _MISSING_LOOK:
-        return "look", (
-            f"within {band:g} K of saturation p and T do not fix the state; add dryness, phase, or "
-            "enthalpy = 'balance'"
-        )
+        return "look", _unfixed(band)
     if share(Flag.SIDE_ASSUMED | Flag.UNCERTAIN) > _HALF and share(Flag.SIDE_ASSUMED) > _HALF:
         return "look", "p and T tell another phase than the site file states"
     if missing > _MISSING_LOOK:
         return "look", f"its state or flow is missing for {100 * missing:.0f} % of the day"
     return "ok", ""
+
+
+def _unfixed(band: float) -> str:
+    return (
+        f"within {band:g} K of saturation p and T do not fix the state; add dryness, phase, or "
+        "enthalpy = 'balance'"
+    )
 
 
 def _all(flags: npt.NDArray[np.int64]) -> int:

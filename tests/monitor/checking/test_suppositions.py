@@ -182,3 +182,73 @@ def test_a_file_that_is_as_stated_is_not_doubted(site):
 def test_typical_readings_take_means_of_flows_while_they_run(day):
     assert np.isfinite(list(day.raw.values())).all()
     assert len(day.raw) == 64
+
+
+NEAR_BOILING = """
+[site]
+id = "one"
+name = "One pump behind a deaerator"
+[dead_state]
+temperature = "15 degC"
+pressure = "1.01325 bar(a)"
+[[source]]
+id = "one"
+kind = "csv"
+path = "readings.csv"
+"""
+
+
+def _behind_a_deaerator(tmp_path):
+    tags = {"F": "t/h", "P1": "bar(a)", "T1": "degC", "P2": "bar(a)", "T2": "degC", "J": "kW"}
+    text = NEAR_BOILING + "".join(
+        f'[[tag]]\nname = "{name}"\nsource = "one"\nunit = "{unit}"\n'
+        for name, unit in tags.items()
+    )
+    text += """
+[[stream]]
+id = "water"
+flow = "F"
+pressure = "P1"
+temperature = "T1"
+[[stream]]
+id = "power"
+medium = "power"
+power = "J"
+[[stream]]
+id = "fed"
+flow = "balance"
+pressure = "P2"
+temperature = "T2"
+[[equipment]]
+id = "pump"
+kind = "pump"
+ports = { inlet = "water", power = "power", outlet = "fed" }
+"""
+    (tmp_path / "site.toml").write_text(text, encoding="utf-8")
+    return load_site(tmp_path / "site.toml")
+
+
+def _just_below_boiling() -> dict[str, float]:
+    boiling = IAPWS97(P=0.125, x=0).T - 273.15
+    return {"F": 17.0, "P1": 1.25, "T1": boiling - 0.5, "P2": 40.0, "T2": boiling, "J": 33.0}
+
+
+def test_a_vessel_that_is_truly_near_boiling_gets_no_gauge_blamed(tmp_path):
+    """Half a kelvin below saturation at 1.25 bar: right for a deaerator, whatever follows it."""
+    site = _behind_a_deaerator(tmp_path)
+    found, told = suspects(site, Typical(_just_below_boiling(), 101325.0, {}))
+    assert found == []
+    doubted = {one.subject for one in told if one.what == "state" and one.size[0] > 0}
+    assert doubted == {"water"}
+
+
+def test_what_a_stream_near_boiling_feeds_is_not_called_near_boiling_itself(tmp_path):
+    site = _behind_a_deaerator(tmp_path)
+    times = pd.date_range("2026-01-10", periods=288, freq="5min")
+    rows = [
+        f"{t:%Y-%m-%dT%H:%M:%SZ},{n},{v}" for t in times for n, v in _just_below_boiling().items()
+    ]
+    (tmp_path / "readings.csv").write_text("\n".join(["time,tag,value", *rows]), encoding="utf-8")
+    reasons = {line.subject: line.reason for line in check(site).lines if line.kind == "stream"}
+    assert reasons["water"].startswith("within 2 K of saturation p and T do not fix the state")
+    assert reasons["fed"].startswith("its flow or state is found from a stream that is near")
