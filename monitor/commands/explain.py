@@ -149,6 +149,8 @@ def _uncertainty(found: Explanation) -> None:
 
     _section("uncertainty (of the instruments' classes, the same all hour)")
     told = [line for line in found.budget if not line.share < _LEAST_SHARE]
+    # Two percentages differ by points.
+    unit = "points" if found.unit == "%" else found.unit
     rows = [
         (
             line.source,
@@ -158,14 +160,14 @@ def _uncertainty(found: Explanation) -> None:
         )
         for line in told
     ]
-    heads = ("source", "standard uncertainty", f"moves it by, {found.unit}", "% of variance")
+    heads = ("source", "standard uncertainty", f"moves it by, {unit}", "% of variance")
     print_table([Column(h, right=h not in heads[:2]) for h in heads], rows)
     if len(told) < len(found.budget):
         typer.echo(f"and {len(found.budget) - len(told)} more that hardly move it")
     if math.isfinite(found.uncertainty):
         typer.echo(
-            f"u = {found.uncertainty:.3g} {found.unit}; expanded (k = {COVERAGE:g}): "
-            f"+/- {COVERAGE * found.uncertainty:.2g} {found.unit}"
+            f"u = {_plain(found.uncertainty, 3)} {unit}; expanded (k = {COVERAGE:g}): "
+            f"+/- {_plain(COVERAGE * found.uncertainty, 2)} {unit}"
         )
     if found.suspect:
         typer.echo(f"It contradicts the second law. {found.suspect}.")
@@ -173,6 +175,12 @@ def _uncertainty(found: Explanation) -> None:
 
 def _section(title: str) -> None:
     typer.echo(f"\n{title}")
+
+
+def _plain(value: float, digits: int) -> str:
+    """So many digits that count, without a power of ten where whole digits say it."""
+    text = f"{value:.{digits}g}"
+    return f"{float(text):.0f}" if "e+" in text else text
 
 
 def _digits(value: float) -> str:

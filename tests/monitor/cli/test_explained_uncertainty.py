@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 
 import numpy as np
 import pytest
@@ -64,5 +65,15 @@ def test_explain_tells_the_budget_of_an_efficiency(computed, lostwork):
     assert math.fsum(line["share"] for line in told["budget"]) == pytest.approx(1.0)
     assert told["suspect"] == ""
     ran = lostwork("explain", computed.path, "TG1", "eta_s_1", "--at", NOON)
-    assert "expanded (k = 2): +/- " in ran.out
+    u = told["uncertainty"]
+    assert f"u = {u:.3g} points; expanded (k = 2): +/- {2 * u:.2g} points" in ran.out
+    assert "moves it by, points" in ran.out
     assert "% of variance" in ran.out
+
+
+def test_a_large_uncertainty_is_told_in_whole_digits(computed, lostwork):
+    ran = lostwork("explain", computed.path, "live_steam", "exergy_live_kw", "--at", NOON)
+    told_so = r"^u = (\S+) kW; expanded \(k = 2\): \+/- (\S+) kW$"
+    (told,) = re.findall(told_so, ran.out, re.MULTILINE)
+    assert float(told[1]) > 100
+    assert all(re.fullmatch(r"[0-9.]+", number) for number in told)
