@@ -152,8 +152,11 @@ class AlarmRow:
     message: str
     """What changed and why it is so, without the equipment's name and the cost beside it."""
     cost_per_day: float | None
+    """As it was when the alarm was raised, like the message."""
     set_aside: bool = False
     """Shelved, suppressed by design or out of service: known, and not to be acted on now."""
+    newest: str = ""
+    """Of an alarm that stands: what its figure was in the newest judged hour; empty for none."""
 
 
 @dataclass(frozen=True)

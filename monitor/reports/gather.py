@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Literal, cast
 import numpy as np
 import pandas as pd
 
+from dashboards.formats import fitting
 from dashboards.views import (
     AlarmRow,
     ConditionRow,
@@ -315,7 +316,24 @@ class Gathered:
             message=self._own_words(alarm, item),
             cost_per_day=alarm.cost_per_day,
             set_aside=alarm.state in _SET_ASIDE,
+            newest=self._newest_words(alarm, item),
         )
+
+    def _newest_words(self, alarm: AlarmRecord, item: Item | None) -> str:
+        """How a figure that is out stands now: its alarm's message tells of when it was raised."""
+        figures = {f.name: f for f in item.kind.figures(item)} if item else {}
+        figure = figures.get(alarm.figure)
+        if figure is None or alarm.cleared is not None:
+            return ""
+        points = self.drift_points(alarm.subject, alarm.figure)
+        judged = points[points["judged"].astype(bool)] if len(points) else points
+        if not len(judged):
+            return ""
+        measured, expected = (
+            fitting(float(judged[name].iloc[-1]), figure.unit, figure.smallest_change)
+            for name in ("measured", "expected")
+        )
+        return f"in the newest judged hour {measured}, expected {expected}"
 
     def _own_words(self, alarm: AlarmRecord, item: Item | None) -> str:
         """The message without what stands beside it on a page: the name and the cost."""

@@ -183,7 +183,7 @@ def _alarm_sentences(gathered: Gathered, alarms: tuple[AlarmRow, ...]) -> list[s
     cost = sum(a.cost_per_day for a in active if a.cost_per_day is not None)
     worth = (
         f", {'together ' if len(active) > 1 else ''}about "
-        f"{quantity(cost, gathered.site.file.economics.currency, 2)} a day"
+        f"{quantity(cost, gathered.site.file.economics.currency, 2)} a day when raised"
         if cost > 0
         else ""
     )
@@ -220,8 +220,9 @@ def shift_text(view: ShiftView) -> str:
         + (
             ""
             if a.cost_per_day is None
-            else f" {quantity(a.cost_per_day, view.currency, 2)} a day."
+            else f" {quantity(a.cost_per_day, view.currency, 2)} a day when raised."
         )
+        + (f" {a.newest[:1].upper()}{a.newest[1:]}." if a.newest else "")
         for a in view.alarms
         if a.cleared is None
     ]
@@ -235,4 +236,4 @@ def _plain(value: float, decimals: int) -> str:
     if not np.isfinite(value):
         return "-"
     # Adding zero takes the sign from a zero.
-    return f"{round(value, decimals) + 0.0:,.{decimals}f}"
+    return f"{round(value, decimals) + 0.0:,.{decimals}f}".replace(",", " ")

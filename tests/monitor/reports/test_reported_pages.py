@@ -5,6 +5,7 @@ from __future__ import annotations
 import html
 import json
 import re
+from dataclasses import replace
 from html.parser import HTMLParser
 
 import numpy as np
@@ -106,7 +107,9 @@ def test_the_summary_says_what_changed_what_it_costs_and_what_stands(late):
         plain[0],
     )
     assert re.match(r"Most of it in Turbine TG1: [\d.]+ kW, \d+ % of the site's\.$", plain[1])
-    assert plain[2] == ("1 alarm is open, about 180 EUR a day: Turbine TG1, isentropic efficiency.")
+    assert plain[2] == (
+        "1 alarm is open, about 180 EUR a day when raised: Turbine TG1, isentropic efficiency."
+    )
 
 
 def test_an_alarm_of_this_shift_is_called_new(reported):
@@ -121,9 +124,26 @@ def test_the_terminal_gets_plain_spaces_alarms_and_no_minus_nought(late):
     text = shift_text(late)
     assert text.startswith("Mill Race Works, late shift, 2026-01-15 14:00 to 22:00 Europe/Berlin\n")
     assert "- Turbine TG1: isentropic efficiency is 79." in text
-    assert "180 EUR a day." in text
+    assert "180 EUR a day when raised." in text
     assert not set(text) & {"\u202f", "\u00a0"}
     assert not re.search(r"-0(\.0)?\s", text)
+
+
+def test_an_open_alarm_tells_beside_its_message_how_the_figure_stands_now(reported, late):
+    (alarm,) = late.alarms
+    points = reported.store.drift_points("TG1", "eta_s_1", 0, 1 << 40)
+    last = points[points["judged"].astype(bool)].iloc[-1]
+    assert alarm.newest.replace("\u00a0", " ") == (
+        f"in the newest judged hour {last['measured']:.1f} %, expected {last['expected']:.1f} %"
+    )
+    assert "In the newest judged hour" in shift_text(late)
+
+
+def test_a_table_for_a_terminal_sets_thousands_apart_as_its_sentences_do(late):
+    grown = [replace(line, live_kw=12345.6) for line in late.ledger]
+    text = shift_text(replace(late, ledger=tuple(grown)))
+    assert "12 346" in text
+    assert "12,346" not in text
 
 
 def test_a_shift_without_figures_says_where_to_look(reported):
