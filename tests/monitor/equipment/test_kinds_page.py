@@ -10,6 +10,7 @@ import pandas as pd
 import pytest
 
 from connectors.base import Quality, ReadResult
+from dashboards.formats import unit_of_change
 from monitor.economics import supplied_prices, unit_costs
 from monitor.equipment import KINDS
 from monitor.explain import explain
@@ -82,6 +83,11 @@ def test_the_page_has_every_kind_in_order():
     assert list(SECTIONS) == sorted(KINDS)
 
 
+def _judged(figure):
+    least = f"{figure.smallest_change:g} {unit_of_change(figure.unit)}"
+    return f"yes, from {least}" if figure.judged else "shown only"
+
+
 @pytest.mark.parametrize("kind", sorted(KINDS))
 def test_a_kinds_drawing_has_its_ports_and_its_table_its_figures(kind, tmp_path):
     (drawing,) = re.findall(r"```text\n(.*?)```", SECTIONS[kind], flags=re.DOTALL)
@@ -91,9 +97,7 @@ def test_a_kinds_drawing_has_its_ports_and_its_table_its_figures(kind, tmp_path)
     assert KINDS[kind].fuel_and_product[1:] in SECTIONS[kind]
     item = _example(kind, tmp_path).items["it"]
     told = re.findall(r"^\| `(\w+)` \| (\S+) \|.*\| (.+) \|$", SECTIONS[kind], flags=re.MULTILINE)
-    listed = [
-        (f.name, f.unit, "yes" if f.judged else "shown only") for f in item.kind.figures(item)
-    ]
+    listed = [(f.name, f.unit, _judged(f)) for f in item.kind.figures(item)]
     assert sorted(told) == sorted(listed)
 
 
