@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -56,9 +57,9 @@ _UNITS = {
     "degF": "°F",
     "C": "°C",
     "F": "°F",
-    "m^3": "m³",
     "m3": "m³",
 }
+_POWER = re.compile(r"\^(-?\d+)")
 _SUPERSCRIPTS = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 
 
@@ -231,8 +232,10 @@ def money_column(values: Iterable[float | None], currency: str) -> Column:
 
 
 def unit_text(unit: str) -> str:
-    """Write a unit as a page shows it (``degC`` as °C, a pure number as nothing)."""
-    return shorten(_UNITS.get(unit.strip(), unit.strip()), _LONGEST_UNIT)
+    """Write a unit as a page shows it (``degC`` as °C, ``m^3/h`` as m³/h, a number as nothing)."""
+    known = _UNITS.get(unit.strip(), unit.strip())
+    raised = _POWER.sub(lambda power: power[1].translate(_SUPERSCRIPTS), known)
+    return shorten(raised, _LONGEST_UNIT)
 
 
 def day(time: pd.Timestamp) -> str:

@@ -64,6 +64,13 @@ def test_a_number_and_its_unit_do_not_part():
     assert formats.quantity(math.nan, "kW") == "–"
 
 
+@pytest.mark.parametrize(
+    ("unit", "shown"), [("m^3/h", "m³/h"), ("1/m^4", "1/m⁴"), ("kg m^-2", "kg m⁻²"), ("kW", "kW")]
+)
+def test_powers_in_a_unit_are_raised(unit, shown):
+    assert formats.unit_text(unit) == shown
+
+
 def test_a_difference_always_has_its_sign():
     assert [formats.signed(x) for x in (1.5, -1.5, 0.0, math.nan)] == ["+1.50", "−1.50", "0", "–"]
     assert formats.signed(-0.25, 2, "K") == f"−0.25{NO_BREAK}K"
