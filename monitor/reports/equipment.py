@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, cast
 import numpy as np
 import pandas as pd
 
+from dashboards.formats import unit_of_change
 from dashboards.views import EquipmentView, ResidualView, TrendView
 from monitor.reports.expansion import expansion_view
 
@@ -113,7 +114,7 @@ def _residuals(gathered: Gathered, item: Item, figure: Figure) -> ResidualView |
         alarms=raised,
         events=gathered.events(gathered.start, gathered.end, item.id),
         reference=_reference(gathered, baseline),
-        design=_design(gathered, figure),
+        design=_design(gathered, item, figure),
     )
 
 
@@ -125,13 +126,14 @@ def _reference(
     return gathered.local(baseline.reference_start), gathered.local(baseline.reference_end)
 
 
-def _design(gathered: Gathered, figure: Figure) -> str:
+def _design(gathered: Gathered, item: Item, figure: Figure) -> str:
     drift = gathered.site.file.drift
     days = drift.false_alarm_every / 86400.0
     return (
         f"EWMA with weight {drift.weight:g}; limits designed for one false alarm in {days:.0f} "
         "days of judged hours (average run length, Crowder 1987), widened for autocorrelation "
-        f"and never narrower than {figure.smallest_change:g} {figure.unit}."
+        f"and never narrower than {gathered.smallest_change(item, figure):g} "
+        f"{unit_of_change(figure.unit)}."
     )
 
 

@@ -275,9 +275,19 @@ class Gathered:
             state=state,
             since=None if alarm is None else self.local(alarm.raised),
             worse=figure.worse,
-            smallest_change=figure.smallest_change,
+            smallest_change=self.smallest_change(item, figure),
             expanded=COVERAGE * self._newest_uncertainties.get((item.id, figure.name), np.nan),
         )
+
+    def smallest_change(self, item: Item, figure: Figure) -> float:
+        """The smallest change worth a person's time: the site's own, or else the kind's."""
+        stated = [
+            own.smallest_change
+            for own in self.site.file.drift.figure
+            if (own.equipment, own.figure) == (item.id, figure.name)
+        ]
+        own = stated[-1] if stated else None
+        return figure.smallest_change if own is None else own
 
     def _latest(self, equipment: str, figure: str) -> float:
         """Weighted mean over the last day of the span, for figures that nobody judges."""
@@ -323,14 +333,15 @@ class Gathered:
         """How a figure that is out stands now: its alarm's message tells of when it was raised."""
         figures = {f.name: f for f in item.kind.figures(item)} if item else {}
         figure = figures.get(alarm.figure)
-        if figure is None or alarm.cleared is not None:
+        if item is None or figure is None or alarm.cleared is not None:
             return ""
         points = self.drift_points(alarm.subject, alarm.figure)
         judged = points[points["judged"].astype(bool)] if len(points) else points
         if not len(judged):
             return ""
+        smallest = self.smallest_change(item, figure)
         measured, expected = (
-            fitting(float(judged[name].iloc[-1]), figure.unit, figure.smallest_change)
+            fitting(float(judged[name].iloc[-1]), figure.unit, smallest)
             for name in ("measured", "expected")
         )
         return f"in the newest judged hour {measured}, expected {expected}"

@@ -15,6 +15,7 @@ from monitor.reports.dead_state import dead_state_view
 from monitor.reports.equipment import equipment_view
 from monitor.reports.expansion import expansion_view
 from monitor.reports.overview import flow_links, node_names, overview_view
+from monitor.site.models import DriftFigure
 
 SECONDS = 6 * 86400
 DAY = pd.Timedelta(days=1)
@@ -232,6 +233,21 @@ def test_a_turbines_page_has_its_chart_trends_and_streams(reported, overview):
     assert power["exergy"] > 5000.0
     assert inlet["pressure"] == pytest.approx(62.0, abs=0.05)
     assert inlet["temperature"] == pytest.approx(470.0, abs=0.2)
+
+
+@pytest.mark.parametrize(("stated", "said"), [(None, "0.7"), (2.5, "2.5")])
+def test_a_charts_page_tells_the_smallest_change_that_counts_at_this_site(reported, stated, said):
+    own = DriftFigure(equipment="TG1", figure="eta_s_1", smallest_change=stated)
+    file = reported.site.file
+    drift = file.drift.model_copy(update={"figure": [own]})
+    site = replace(reported.site, file=file.model_copy(update={"drift": drift}))
+    gathered = replace(reported.gathered, site=site)
+    rows = gathered.condition_rows("TG1")
+    (row,) = [row for row in rows if row.figure == "eta_s_1"]
+    assert row.smallest_change == float(said)
+    (costs,) = [row for row in gathered.equipment_rows() if row.id == "TG1"]
+    (chart,) = equipment_view(gathered, site.items["TG1"], costs, rows).residuals
+    assert chart.design.endswith(f"and never narrower than {said} points.")
 
 
 def test_only_what_expands_steam_to_power_has_an_expansion_line(reported):
