@@ -258,8 +258,9 @@ class _Cluster:
         while not wait([future], _PATIENCE_S).done:
             try:
                 alone = 0.0 if self._client.nthreads() else alone + _PATIENCE_S
-            except OSError:
-                # The connection is gone: Dask cancels the window when it gives up.
+            except (OSError, AttributeError):
+                # The connection is gone: Dask cancels the window when it gives up. A client that
+                # has given up has no scheduler (None) to ask, whenever between two lines that is.
                 alone += _PATIENCE_S
             if alone >= _ALONE_S:
                 raise WorkersError(

@@ -61,7 +61,7 @@ and tag, or a cell where that is shorter, is reckoned with."""
 _LONGEST = 7
 """[days] Of a window, so that what is done shows, and little is lost when it ends midway."""
 _PARTS = 10
-"""Windows that a stretch of many days is cut into at least: processes share it evenly."""
+"""Windows at least, where a stretch of many days is shared by processes."""
 
 
 @dataclass
@@ -108,15 +108,20 @@ def windows(start: int, end: int, length: int = DAY) -> list[tuple[int, int]]:
         length: [s] of a window: hours that divide a day, or whole days, from midnight UTC on.
     """
     step = min(length, DAY)
-    cuts = [start, *range((start // step + 1) * step, end, length), end]
+    cuts = [start, *range(start // step * step + length, end, length), end]
     return [(a, b) for a, b in itertools.pairwise(cuts) if a < b]
 
 
-def window_length(site: Site, stretch: int) -> int:
+def window_length(site: Site, stretch: int, parts: int = 1) -> int:
     """How long the windows of a stretch are best [s], see `windows`.
 
     As long as the overhead of each wants it, as short as memory and progress want it: a week of
     5-minute figures, two days of 1-minute figures, and hours where a site has thousands of tags.
+
+    Args:
+        site: the site.
+        stretch: [s]
+        parts: windows of whole days at least, where the stretch has so many days.
     """
     interval = int(site.file.site.interval)
     readings = len(site.used_tags()) * DAY / min(interval, 60)
@@ -124,7 +129,7 @@ def window_length(site: Site, stretch: int) -> int:
     if most < 1:
         return next((h for h in (12, 8, 6) if h <= most * 24), 4) * HOUR
     enough = _CELLS * interval // DAY
-    share = math.ceil(stretch / DAY / _PARTS)
+    share = math.ceil(stretch / DAY / parts)
     return max(min(int(most), enough, share, _LONGEST), 1) * DAY
 
 
@@ -181,7 +186,8 @@ def backfill(
             f"figures from before {since:%Y-%m-%d} have expired; begin there or later, or set "
             "[store] keep_cells to a longer time"
         )
-    cut = windows(first, last, window_length(site, last - first))
+    parts = _PARTS if cluster or workers > 1 else 1
+    cut = windows(first, last, window_length(site, last - first, parts))
     with recorded_run(site, store, run_kind, first, last) as (run_id, tally):
         with _computed(site, cut, workers, cluster) as stream:
             for computed in stream:

@@ -201,8 +201,10 @@ class Writes(SiteHandle):
         if not len(names):
             return np.empty(0, dtype=np.int64)
         ids = np.array([self._figure_id(str(name)) for name in names], dtype=np.int64)[codes]
-        pairs = np.unique(np.stack([owner, ids], axis=1), axis=0).tolist()
-        unknown = [pair for pair in pairs if tuple(pair) not in self._condition_figures]
+        # One number a pair: rows of a table are told apart ten times more slowly.
+        step = int(ids.max()) + 1
+        pairs = sorted(divmod(int(number), step) for number in pd.unique(owner * step + ids))
+        unknown = [pair for pair in pairs if pair not in self._condition_figures]
         if unknown:
             of, figure = unknown[0]
             name = self._names("equipment")[of]
