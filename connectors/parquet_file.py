@@ -11,7 +11,7 @@ import bisect
 import difflib
 from dataclasses import dataclass
 from functools import partial
-from typing import TYPE_CHECKING, Any, BinaryIO
+from typing import TYPE_CHECKING, Any, BinaryIO, NamedTuple
 
 import numpy as np
 import pyarrow as pa
@@ -59,6 +59,7 @@ class Group:
         first, last: [us] its span of time, empty when ``first`` > ``last``.
         tags: the first and last of its tag names in the order of texts, None when not known.
         reported: what is wrong with its times has been counted.
+        named: so have the rows that name no tag.
     """
 
     number: int
@@ -66,6 +67,14 @@ class Group:
     last: int
     tags: tuple[str, str] | None
     reported: bool = False
+    named: bool = False
+
+
+class _Unheard(NamedTuple):
+    """Where what is wrong with a row group is counted, None once it has been."""
+
+    times: ProblemCount | None
+    tags: ProblemCount | None
 
 
 @dataclass(frozen=True)
@@ -164,16 +173,18 @@ class ParquetFile:
         for group in groups:
             if not self._concerns(group, wanted):
                 continue
-            counted = None if group.reported else problems
-            group.reported = True
-            yield from self._group_rows(group, groups, wanted, counted, problems)
+            unheard = _Unheard(
+                None if group.reported else problems, None if group.named else problems
+            )
+            group.reported = group.named = True
+            yield from self._group_rows(group, groups, wanted, unheard, problems)
 
     def _group_rows(
         self,
         group: Group,
         groups: Sequence[Group],
         wanted: Wanted,
-        unheard: ProblemCount | None,
+        unheard: _Unheard,
         problems: ProblemCount,
     ) -> Iterator[Rows]:
         options = self._options
@@ -195,7 +206,7 @@ class ParquetFile:
         groups: Sequence[Group],
         columns: list[str],
         wanted: Wanted,
-        unheard: ProblemCount | None,
+        unheard: _Unheard,
     ) -> Iterator[Piece]:
         """Yield a row group's pieces, from memory or by decoding them."""
         key = (self._path, self._state, group.number, *columns)
@@ -231,20 +242,18 @@ class ParquetFile:
             return [], np.zeros(0, dtype=np.int64)
         return distinct_texts(batch.column(self._options.tag_column))
 
-    def _piece(
-        self, batch: pa.RecordBatch, order: FileOrder, row: int, unheard: ProblemCount | None
-    ) -> Piece:
+    def _piece(self, batch: pa.RecordBatch, order: FileOrder, row: int, unheard: _Unheard) -> Piece:
         options = self._options
-        times = self._times(batch, row, unheard)
+        times = self._times(batch, row, unheard.times)
         is_long = options.layout == "long"
         done = {options.time_column, options.tag_column} if is_long else {options.time_column}
         values = batch.select([name for name in batch.schema.names if name not in done])
         words, tag_at = self._tags_of(batch)
-        if unheard is not None and "" in words:
+        if unheard.tags is not None and "" in words:
             nameless = np.array([not word for word in words], dtype=np.bool_)[tag_at]
             lost = nameless & (times.first != NO_TIME)
             examples = first_few(lost, lambda _: "", lambda at: f"row {row + at}")
-            unheard.add(self._path.name, _NO_TAG, int(lost.sum()), examples)
+            unheard.tags.add(self._path.name, _NO_TAG, int(lost.sum()), examples)
         late = self._order.late(order, times, words, tag_at)
         ordered = bool((times.first[1:] >= times.first[:-1]).all())
         return Piece(values, times, words, tag_at, late, ordered)

@@ -40,8 +40,8 @@ _MOST_PARAMETERS = {"sqlite": 900, "postgresql": 10_000, "mysql": 10_000, "maria
 _MOST_PARAMETERS |= {"mssql": 2_000, "oracle": 900}
 _FEW_PARAMETERS = 500
 
-_MOST_CELLS = 300_000
-"""Cells fetched at a time at most."""
+_MOST_CELLS = 60_000
+"""Cells fetched at a time at most: what the processor keeps near by."""
 
 _STEPS = 20_000
 """SQLite's steps between two looks at the clock: some hundred microseconds."""
