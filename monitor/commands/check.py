@@ -13,6 +13,7 @@ from monitor.commands.group import write_json
 from monitor.commands.opening import open_site
 from monitor.commands.tables import Column, print_table
 from monitor.errors import WrongUseError
+from monitor.log import printable
 
 if TYPE_CHECKING:
     from monitor.checking import Cause, Checked, Verdict
@@ -107,7 +108,7 @@ def _print(site: Site, checked: Checked, count: Counter[Verdict]) -> None:
     if checked.causes:
         typer.echo("\nlook here first:")
         for place, cause in enumerate(checked.causes[:_MOST_CAUSES], start=1):
-            typer.echo(f"{place}. {_sentence(cause)}")
+            typer.echo(printable(f"{place}. {_sentence(cause)}"))
         if len(checked.causes) > _MOST_CAUSES:
             typer.echo(f"and {len(checked.causes) - _MOST_CAUSES} more, in the lines above")
         typer.echo("")

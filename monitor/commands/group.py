@@ -10,6 +10,7 @@ import typer
 from typer.core import TyperGroup
 
 from monitor.commands.exits import ExitCode, ended_by
+from monitor.log import printable
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -65,7 +66,7 @@ def fail(sentence: str, code: ExitCode) -> NoReturn:
 
 def say(sentence: str = "") -> None:
     """Say something on stderr: progress, notes, errors."""
-    typer.echo(sentence, err=True)
+    typer.echo(printable(sentence), err=True)
 
 
 def write_json(content: object) -> None:

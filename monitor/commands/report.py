@@ -12,6 +12,7 @@ from monitor.commands.group import say, write_json
 from monitor.commands.opening import Opened, opened_to_read
 from monitor.commands.progress import Progress
 from monitor.errors import WrongUseError
+from monitor.log import printable
 
 if TYPE_CHECKING:
     from monitor.site.shifts import Span
@@ -70,7 +71,7 @@ def report(
                 }
             )
         else:
-            typer.echo(shift_text(view))
+            typer.echo(printable(shift_text(view)))
         if write:
             path = write_shift_report(at.site, at.store, span, now, pages_folder(at.site))
             say(f"page: {path}")

@@ -8,6 +8,8 @@ from typing import TYPE_CHECKING
 
 import typer
 
+from monitor.log import printable
+
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
@@ -30,11 +32,11 @@ class Column:
 
 
 def print_table(columns: Sequence[Column], rows: Sequence[Sequence[str]]) -> None:
-    """Print a table; text from sites and historians is data, never markup."""
+    """Print a table; text from sites and historians is data, never markup nor a control code."""
+    texts = [[printable(str(cell).replace("\n", " ")) for cell in row] for row in rows]
     if sys.stdout.isatty():
-        _print_rich(columns, rows)
+        _print_rich(columns, texts)
         return
-    texts = [[str(cell).replace("\n", " ") for cell in row] for row in rows]
     heads = [column.title for column in columns]
     widths = [
         max(len(line[k]) for line in [heads, *texts]) if k < len(columns) - 1 else 0

@@ -56,6 +56,16 @@ def test_text_of_a_site_is_never_taken_for_markup(plant):
     assert "[red]TT-0001" in shown
 
 
+def test_a_terminal_never_obeys_a_name(plant):
+    """A file's or a tag's name that clears the screen or sets the window's title."""
+    plant.edit('name = "TT-0001"', 'name = "TT\\u001b[2J\\u001b]0;owned\\u0007"')
+    plant.edit('temperature = "TT-0001"', 'temperature = "TT\\u001b[2J\\u001b]0;owned\\u0007"')
+    _, shown = on_a_terminal("check", plant.path)
+    assert "\x1b[2J" not in shown
+    assert "\x1b]0;" not in shown
+    assert "TT\\x1b[2J" in shown
+
+
 def test_a_backfill_shows_a_bar_on_a_terminal(plant):
     code, shown = on_a_terminal(
         "backfill", plant.path, "--from", "2026-01-10T00:00Z", "--to", "2026-01-12T00:00Z"
