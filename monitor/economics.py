@@ -13,6 +13,12 @@ cost of capital, by four rules:
   the fuel's side, less what a vessel stores at the fuel's unit cost, is what the products cost
   (the P rule).
 
+A condenser whose cooling water goes to waste makes nothing that anyone pays for: it is there so
+that the turbine can expand further. What it costs is charged to the products of what sends it its
+steam (the turbine's power), and the water that it warms costs nothing: so what comes in is paid for
+by what is used. Steam that a turbine did not let out (dumped from a header) has nobody to charge;
+there the water carries the cost away, as if it were used.
+
 These are linear equations, one a stream, solved together, so loops (condensate back to the boiler)
 need nothing of their own. What is destroyed or lost in a piece of equipment is charged at the unit
 cost of the fuel that it takes. Emissions are passed on in the same way.
@@ -22,7 +28,8 @@ stands in, and `UnitCosts.flat` says for which stream and why.
 
 Source: Bejan, Tsatsaronis, Moran, Thermal Design and Optimization (1996), chapter 8 (exergy
 costing, auxiliary relations, cost of exergy destruction); the F and P rules by that name after
-Lazzaretto and Tsatsaronis, Energy 31, 1257 (2006).
+Lazzaretto and Tsatsaronis, Energy 31, 1257 (2006), who charge dissipative components to those that
+they serve.
 """
 
 from __future__ import annotations
@@ -131,6 +138,9 @@ def unit_costs(
             system.price(stream, prices.supplied.get(stream, prices.flat))
     for item in site.items.values():
         _rules_of(system, item, (stored or {}).get(item.id, 0.0))
+    for item in site.items.values():
+        if item.kind.dissipates and not _is_wanted(site, item):
+            _charge_those_served(system, site, item)
     for stream in site.producer:
         if math.isnan(rates.get(stream, math.nan)):
             system.flat_price(stream, "its exergy rate is absent")
@@ -207,6 +217,12 @@ def _positive(rate: float) -> float:
     return rate if rate > 0 else 0.0
 
 
+def _is_wanted(site: Site, item: Item) -> bool:
+    """Whether any product of a piece of equipment goes on to something, or counts as used."""
+    products = _at(item, "out", "product")
+    return any(s in site.consumer or site.counts_as_used(s) for s in products)
+
+
 def _at(
     item: Item, direction: Literal["in", "out"], side: Literal["fuel", "product", "loss"]
 ) -> list[str]:
@@ -247,6 +263,29 @@ class _System:
         for part, weight in parts.items():
             self.weights[self.index[stream], self.index[part]] += weight
 
+    def charge(self, worthless: list[str], payers: Mapping[str, list[str]]) -> None:
+        """Move the cost of streams that are worth nothing to the products of others.
+
+        Args:
+            worthless: what one piece of equipment makes.
+            payers: by each stream of its fuel, the products of whoever sends it. Who sends more
+                exergy pays more; where there is none to pay, the cost stays.
+        """
+        if any(stream in self.flat for stream in worthless):
+            return
+        rows = [self.index[stream] for stream in worthless]
+        costs = np.array([self.rates[stream] for stream in worthless]) @ self.weights[rows]
+        brought, charged = self.total(payers), 0.0
+        for stream, products in payers.items():
+            made = self.total(products)
+            if made <= self.nothing or any(product in self.flat for product in products):
+                continue
+            share = self.rates[stream] / brought
+            for product in products:
+                self.weights[self.index[product]] += share / made * costs
+            charged += share
+        self.weights[rows] *= max(1.0 - charged, 0.0)
+
     def solved(self, kept: Iterable[str]) -> UnitCosts:
         """Solve; where the balances have no single solution, every stream but ``kept`` is flat."""
         matrix = np.eye(len(self.index)) - self.weights
@@ -285,3 +324,13 @@ def _rules_of(system: _System, item: Item, stored: float) -> None:
             # What is spent of the fuel costs its mean; what the product was before, its own.
             system.mix(stream, {s: share * spent / made for s, share in mean.items()})
             system.mix(stream, {s: system.rates[s] / made for s in before})
+
+
+def _charge_those_served(system: _System, site: Site, item: Item) -> None:
+    """Charge a condenser to the products of what lets its steam out on the fuel's side."""
+    payers: dict[str, list[str]] = {}
+    for stream in _at(item, "in", "fuel"):
+        sender = site.items.get(site.producer.get(stream, ""))
+        let_out = sender is not None and stream in _at(sender, "out", "fuel")
+        payers[stream] = _at(sender, "out", "product") if sender is not None and let_out else []
+    system.charge(_at(item, "out", "product"), payers)

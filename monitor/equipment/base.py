@@ -347,6 +347,8 @@ class Kind(ABC):
     options: ClassVar[type[Options]] = Options
     fuel_and_product: ClassVar[str]
     """What counts as fuel and as product, in a sentence."""
+    dissipates: ClassVar[bool] = False
+    """Whether it only carries heat away for the sake of others, so that these bear its cost."""
 
     @abstractmethod
     def load(self, drawn: Drawn) -> FloatArray:

@@ -120,6 +120,8 @@ class Condenser(Kind):
         "fuel: exergy given up by the steam; product: exergy gained by the cooling water"
     )
 
+    dissipates = True
+
     def load(self, drawn: Drawn) -> FloatArray:
         """Flow of steam into the condenser [kg/s]."""
         return total([s.mass_flow for s in drawn.at("steam")])

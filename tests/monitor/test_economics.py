@@ -293,6 +293,87 @@ def _ring():
     )
 
 
+CONDENSING = {
+    "gas": 100.0, "pumping": 0.5, "steam": 44.0, "electricity": 32.0, "exhaust": 6.0,
+    "condensate": 0.3, "feed": 0.7, "cold": 0.4, "warm": 2.4,
+}  # fmt: skip
+
+
+def _condensing(folder, further="", warm=""):
+    """Boiler, turbine, condenser and pump; prices and streams as in the other example."""
+    stream = '[[stream]]\nid = "{}"\npressure = "1 bar(a)"\nphase = "liquid"\nflow = "1 kg/s"\n'
+    head = SITE.split("[[equipment]]", maxsplit=1)[0]
+    streams = [f"[[stream]]{part}" for part in head.split("[[stream]]")]
+    kept = [s for s in streams if any(f'id = "{k}"' in s for k in CONDENSING)]
+    text = SITE.split("[[stream]]", maxsplit=1)[0] + "".join(
+        [
+            *kept,
+            stream.format("cold") + "price = 10.0\n",
+            stream.format("warm") + warm,
+            further,
+            '[[equipment]]\nid = "boiler"\nkind = "boiler"\n',
+            'ports = { fuel = "gas", feedwater = "feed", steam = "steam" }\n',
+            '[[equipment]]\nid = "turbine"\nkind = "turbine"\n',
+            'ports = { inlet = "steam", exhaust = "exhaust", power = "electricity" }\n',
+            '[[equipment]]\nid = "condenser"\nkind = "condenser"\nports = { cooling_in = "cold",',
+            f" steam = {['exhaust', 'dumped'] if further else ['exhaust']},".replace("'", '"'),
+            ' condensate = "condensate", cooling_out = "warm" }\n',
+            '[[equipment]]\nid = "pump"\nkind = "pump"\n',
+            'ports = { inlet = "condensate", power = "pumping", outlet = "feed" }\n',
+        ]
+    )
+    path = folder / "site.toml"
+    path.write_text(text, encoding="utf-8")
+    return load_site(path)
+
+
+def test_power_pays_for_the_condenser_whose_water_goes_to_waste(tmp_path):
+    """Own example. F rule: c(exhaust) = c(condensate) = c(steam) = c.
+
+    Pump: 0.7 c(feed) = 0.3 c + 0.5 * 60. Boiler: 44 c = 100 * 30 + 0.7 c(feed), so 43.7 c = 3030.
+    The turbine spends 44 - 6, the condenser 6 - 0.3, and cooling water of 0.4 costs 10:
+    32 c(power) = 38 c + 5.7 c + 4 = 3030 + 4, which is all that comes in.
+    """
+    site = _condensing(tmp_path)
+    prices = supplied_prices(site)
+    got = unit_costs(site, CONDENSING, prices)
+    c = 3030 / 43.7
+    assert got.streams["exhaust"] == pytest.approx(c)
+    assert got.streams["electricity"] == pytest.approx(3034 / 32)
+    assert got.streams["warm"] == pytest.approx(0.0, abs=1e-9)
+    assert got.flat == {}
+    # What is destroyed and lost there is charged as before, to tell where to look.
+    assert fuel_unit_costs(site, CONDENSING, got, prices)["condenser"] == pytest.approx(c)
+    rates = {k: 1e3 * v for k, v in CONDENSING.items()}
+    lost = cost_of_losses(site, rates, got, prices)
+    assert lost == {"warm": pytest.approx((2.4 - 0.4) * c + 0.4 * 10)}
+
+
+def test_cooling_water_that_heats_a_town_pays_for_its_steam_itself(tmp_path):
+    site = _condensing(tmp_path, warm='counts_as = "used"\n')
+    got = unit_costs(site, CONDENSING, supplied_prices(site)).streams
+    c = 3030 / 43.7
+    assert got["electricity"] == pytest.approx(38 * c / 32)
+    assert got["warm"] == pytest.approx((5.7 * c + 4) / 2.4)
+
+
+def test_steam_that_no_turbine_let_out_is_not_charged_to_its_power(tmp_path):
+    """Another 2 of steam at 50 come from outside: a quarter of what the condenser takes."""
+    dumped = '[[stream]]\nid = "dumped"\npressure = "1 bar(a)"\nphase = "vapour"\nflow = "1 kg/s"\n'
+    site = _condensing(tmp_path, further=dumped)
+    got = unit_costs(site, CONDENSING | {"dumped": 2.0}, supplied_prices(site)).streams
+    spent = 7.7 * (6 * got["steam"] + 2 * 50) / 8 + 4
+    assert 32 * got["electricity"] == pytest.approx(38 * got["steam"] + 0.75 * spent)
+    assert 2.4 * got["warm"] == pytest.approx(0.25 * spent)
+
+
+def test_a_turbine_at_rest_is_charged_nothing(tmp_path):
+    site = _condensing(tmp_path)
+    got = unit_costs(site, CONDENSING | {"electricity": 0.0}, supplied_prices(site))
+    assert got.streams["electricity"] == 50.0
+    assert got.streams["warm"] > 0
+
+
 def test_a_price_belongs_to_what_enters_the_site(tmp_path):
     path = tmp_path / "site.toml"
     path.write_text(
