@@ -131,8 +131,9 @@ def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Sit
     streams = {s.id: s for s in file.stream}
     items = _items(file, streams, issues)
     producer, consumer = _ends(items.values(), issues)
+    named = {s for e in file.equipment for port in e.ports for s in e.streams_at(port)}
     for stream in file.stream:
-        check_stream(stream, producer, consumer, issues)
+        check_stream(stream, producer, consumer, issues, named)
     needs = _needs(streams.values())
     planned = plan(list(items.values()), needs)
     items = {
@@ -143,7 +144,9 @@ def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Sit
         )
         for k, v in items.items()
     }
-    for kind, stream_id in sorted(planned.unsolved):
+    # Equipment that could not be built has balances too: what seems unsolved may not be.
+    whole = len(items) == len(file.equipment) and named <= producer.keys() | consumer.keys()
+    for kind, stream_id in sorted(planned.unsolved) if whole or not issues else ():
         issues.append(_unsolved(kind, stream_id, items.values(), planned.unsolved))
     site = Site(
         path=path,
@@ -164,7 +167,8 @@ def _joined(path: Path, digest: str, file: SiteFile, issues: list[Issue]) -> Sit
     for tag in file.tag:
         table = f"[[tag]] {tag.name!r}"
         issues += [Issue(table, "meter", text) for text in meter_complaints(tag)]
-    for own in file.drift.figure:
+    unbuilt = {e.id for e in file.equipment} - items.keys()
+    for own in (f for f in file.drift.figure if f.equipment not in unbuilt):
         _check_drift_figure(own.equipment, own.figure, items, issues)
     return site
 
@@ -206,8 +210,10 @@ def _items(file: SiteFile, streams: Mapping[str, Stream], issues: list[Issue]) -
         where = f"[[equipment]] {table.id!r}"
         kind = KINDS.get(table.kind)
         if kind is None:
-            known = ", ".join(KINDS)
-            issues.append(Issue(where, "kind", f"'{table.kind}' is not one of {known}"))
+            near = difflib.get_close_matches(table.kind, KINDS, n=1)
+            hint = f"; did you mean '{near[0]}'?" if near else ""
+            text = f"'{table.kind}' is not one of {', '.join(KINDS)}{hint}"
+            issues.append(Issue(where, "kind", text))
             continue
         options = _options(where, kind, dict(table.model_extra or {}), issues)
         ports = {name: table.streams_at(name) for name in table.ports}

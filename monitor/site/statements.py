@@ -10,7 +10,7 @@ from monitor.thermo.fuels import FuelError, exergy_ratio
 from monitor.thermo.water import saturation_temperature
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Mapping
+    from collections.abc import Collection, Iterator, Mapping
 
 __all__ = ["check_stream"]
 
@@ -19,12 +19,24 @@ _SATURATION_ERROR = 0.5
 
 
 def check_stream(
-    stream: Stream, producer: Mapping[str, str], consumer: Mapping[str, str], issues: list[Issue]
+    stream: Stream,
+    producer: Mapping[str, str],
+    consumer: Mapping[str, str],
+    issues: list[Issue],
+    named: Collection[str],
 ) -> None:
-    """Add what is wrong with one stream's table to the issues."""
+    """Add what is wrong with one stream's table to the issues.
+
+    Args:
+        stream: the table.
+        producer: the equipment that each stream leaves.
+        consumer: the equipment that each stream enters.
+        issues: where to add.
+        named: streams that any port names; equipment with a mistake of its own meets none yet.
+    """
     produced, consumed = stream.id in producer, stream.id in consumer
     table = f"[[stream]] {stream.id!r}"
-    if not produced and not consumed:
+    if stream.id not in named:
         issues.append(Issue(table, "", "meets no equipment; name it in a port or remove it"))
     if produced and consumed and stream.counts_as:
         issues.append(Issue(table, "counts_as", "the stream stays inside the site; leave it out"))

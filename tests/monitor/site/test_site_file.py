@@ -116,6 +116,26 @@ def test_all_errors_come_at_once_and_not_the_first_only(site_of):
     assert "'letdwon' is not one of" in told
 
 
+@pytest.mark.parametrize(
+    ("old", "new"),
+    [
+        ('kind = "letdown"', 'kind = "letdwon"'),
+        ('kind = "letdown"', 'kind = "letdown"\ncolour = "red"'),
+        ("outlet =", "outlets ="),
+    ],
+)
+def test_a_mistake_in_equipment_is_not_told_again_of_its_streams(site_of, old, new):
+    told = _told(site_of(HEAD, TAGS, PLANT, replace=[(old, new)]))
+    assert "meets no equipment" not in told
+    assert "cannot be found" not in told
+
+
+def test_a_misspelt_kind_is_told_with_the_one_that_comes_nearest(site_of):
+    told = _told(site_of(HEAD, TAGS, PLANT, replace=[('kind = "letdown"', 'kind = "letdwon"')]))
+    assert "did you mean 'letdown'?" in told
+    assert "1 error" in told
+
+
 def test_errors_inside_tables_come_at_once_too(site_of):
     told = _told(
         site_of(
