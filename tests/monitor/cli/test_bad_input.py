@@ -61,7 +61,7 @@ def test_a_flow_that_no_balance_can_give_is_told_before_anything_runs(plant, los
     ran = lostwork("once", plant.path)
     assert ran.code == ExitCode.SITE_FILE
     assert "live_steam" in ran.err
-    assert "one more measurement" in ran.err
+    assert "measure the flow of 'live_steam'" in ran.err
     assert not (plant.folder / "figures.sqlite").exists()
 
 
@@ -154,6 +154,7 @@ def test_a_source_that_fails_half_way_keeps_the_windows_before(plant, lostwork, 
         return computed(site, sources, start, end)
 
     monkeypatch.setattr(backfill, "compute_window", until_midnight)
+    monkeypatch.setattr(backfill, "window_length", lambda *_: backfill.DAY)
     ran = lostwork("backfill", plant.path, *STRETCH, "--workers", "1")
     assert ran.code == ExitCode.SOURCE
     assert "the historian went away" in ran.err
