@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import partial
 from itertools import compress
 from typing import TYPE_CHECKING, Any
 
@@ -12,11 +13,11 @@ import pyarrow as pa
 from connectors.base import Quality
 from connectors.numbers import NumberReader, floats
 from connectors.quality import QualityWords
-from connectors.tidy import Rows, first_few
+from connectors.tidy import Rows, first_few, place_of
 from connectors.times import NO_TIME
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Callable, Mapping, Sequence
 
     import numpy.typing as npt
 
@@ -30,6 +31,10 @@ __all__ = ["CellReader"]
 _NO_TIME = "row dropped: its time cannot be read"
 _MISSING_HOUR = "row dropped: its local time does not exist, the clock was put forward"
 _NOT_A_NUMBER = "value is not a number: the reading is kept as bad"
+_OTHER_MARK = (
+    "value is a text with a decimal comma: the reading is kept as bad; hand it over as a number "
+    "(a query may replace the comma)"
+)
 _UNKNOWN_QUALITY = "quality word is in no list: the reading counts as uncertain"
 
 
@@ -46,16 +51,26 @@ class CellReader:
         self._numbers = NumberReader(".", "", self._words)
 
     def times(
-        self, cells: Sequence[Any], times: SqlTimes, problems: ProblemCount
+        self,
+        cells: Sequence[Any],
+        times: SqlTimes,
+        problems: ProblemCount,
+        place: Callable[[int], str] = lambda _: "",
     ) -> tuple[ParsedTimes, npt.NDArray[np.bool_]]:
-        """Return times, and where there is one; what is not understood is counted."""
+        """Return times, and where there is one; what is not understood is counted.
+
+        Args:
+            cells: as they were fetched.
+            times: reads them.
+            problems: what is passed over is counted here.
+            place: says where a row stands.
+        """
         parsed = times.parse(cells)
         there = parsed.first != NO_TIME
         missing = parsed.in_missing_hour
-        problems.add(self._where, _MISSING_HOUR, int(missing.sum()))
-        lost = ~there & ~missing
-        examples = first_few(lost, cells.__getitem__)
-        problems.add(self._where, _NO_TIME, int(lost.sum()), examples)
+        for what, rows in ((_MISSING_HOUR, missing), (_NO_TIME, ~there & ~missing)):
+            examples = first_few(rows, cells.__getitem__, place)
+            problems.add(self._where, what, int(rows.sum()), examples)
         return parsed, there
 
     def long(
@@ -85,9 +100,15 @@ class CellReader:
             columns, tag = [list(compress(cells, asked)) for cells in columns], tag[known]
         if not len(tag):
             return _rows(times.parse([]), tag, np.zeros(0), np.zeros(0, dtype=np.uint8))
-        parsed, there = self.times(columns[0], times, problems)
-        value, _ = self._values(columns[2], problems)
-        quality = self._qualities(columns[3] if len(columns) > 3 else None, len(value), problems)  # noqa: PLR2004
+        names = columns[1]
+        parsed, there = self.times(columns[0], times, problems, lambda row: str(names[row]))
+
+        def place(row: int) -> str:
+            return place_of(str(names[row]), int(parsed.first[row]))
+
+        value, _ = self._values(columns[2], problems, place)
+        words = columns[3] if len(columns) > 3 else None  # noqa: PLR2004
+        quality = self._qualities(words, len(value), problems, place)
         quality[np.isnan(value)] = Quality.BAD
         rows = _rows(parsed, tag, value, quality)
         return rows if there.all() else rows.keep(there)
@@ -98,6 +119,7 @@ class CellReader:
         codes: Sequence[int],
         times: SqlTimes,
         problems: ProblemCount,
+        names: Sequence[str],
     ) -> Rows:
         """Turn rows of a time and a value for each tag; a null is no reading.
 
@@ -106,9 +128,13 @@ class CellReader:
             codes: the tag's code of each column of values.
             times: reads the times.
             problems: what is passed over is counted here.
+            names: those of the columns of values.
         """
         parsed, has_time = self.times(columns[0], times, problems)
-        cells = [self._values(column, problems) for column in columns[1:]]
+        cells = [
+            self._values(column, problems, partial(_place_in, name, parsed.first))
+            for name, column in zip(names, columns[1:], strict=True)
+        ]
         shape = (len(cells), len(has_time))
         there = np.array([part[1] for part in cells], dtype=np.bool_).reshape(shape) & has_time
         column, row = np.nonzero(there)
@@ -118,7 +144,7 @@ class CellReader:
         return _rows(parsed.take(row), tag, value, quality)
 
     def _values(
-        self, cells: Sequence[Any], problems: ProblemCount
+        self, cells: Sequence[Any], problems: ProblemCount, place: Callable[[int], str]
     ) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.bool_]]:
         """Return numbers, NaN where there is none, and where there is a cell at all.
 
@@ -128,22 +154,27 @@ class CellReader:
             value = floats(cells)
         except (TypeError, ValueError):
             parsed = self._numbers.read(pa.array(["" if c is None else str(c) for c in cells]))
-            unknown = parsed.not_understood
-            examples = first_few(unknown, cells.__getitem__)
-            problems.add(self._where, _NOT_A_NUMBER, int(unknown.sum()), examples)
+            unknown, comma = parsed.not_understood, parsed.other_mark
+            for what, rows in ((_NOT_A_NUMBER, unknown & ~comma), (_OTHER_MARK, comma)):
+                examples = first_few(rows, cells.__getitem__, place)
+                problems.add(self._where, what, int(rows.sum()), examples)
             return parsed.value, ~parsed.empty
         there = np.ones(len(value), dtype=np.bool_)
         if np.isnan(value).any():
             there = np.asarray(_objects(cells) != None, dtype=np.bool_)  # noqa: E711 - by cell
         infinite = np.isinf(value)
         if infinite.any():
-            examples = first_few(infinite, cells.__getitem__)
+            examples = first_few(infinite, cells.__getitem__, place)
             problems.add(self._where, _NOT_A_NUMBER, int(infinite.sum()), examples)
             value[infinite] = np.nan
         return value, there
 
     def _qualities(
-        self, cells: Sequence[Any] | None, count: int, problems: ProblemCount
+        self,
+        cells: Sequence[Any] | None,
+        count: int,
+        problems: ProblemCount,
+        place: Callable[[int], str],
     ) -> npt.NDArray[np.uint8]:
         if cells is None:
             return np.full(count, Quality.GOOD, dtype=np.uint8)
@@ -151,9 +182,13 @@ class CellReader:
         words = [_word(cell) for cell in distinct]
         classes, unknown = self._words.classify(words)
         rows = unknown[at]
-        examples = first_few(rows, lambda row: words[at[row]])
+        examples = first_few(rows, lambda row: words[at[row]], place)
         problems.add(self._where, _UNKNOWN_QUALITY, int(rows.sum()), examples)
         return classes[at]
+
+
+def _place_in(name: str, first: npt.NDArray[np.int64], row: int) -> str:
+    return place_of(name, int(first[row]))
 
 
 def _rows(

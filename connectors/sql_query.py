@@ -129,7 +129,11 @@ class QueryReader:
             asked = [at for at, name in enumerate(found) if at != time and name in position]
             codes = [position[found[at]] for at in asked]
             return self._cells.wide(
-                [cells[at] for at in (time, *asked)], codes, self._times, problems
+                [cells[at] for at in (time, *asked)],
+                codes,
+                self._times,
+                problems,
+                [found[at] for at in asked],
             )
         places = [time, self._place(found, "tag_column"), self._place(found, "value_column")]
         places += [self._place(found, "quality_column")] if options.quality_column else []

@@ -126,11 +126,11 @@ class TableReader:
             batch = asked[at : at + _MOST_COLUMNS]
             columns = [self._raw(found.readings.columns[name]) for _, name in batch]
             statement = select(found.time, *columns).where(*condition)
-            codes = [code for code, _ in batch]
+            codes, called = [code for code, _ in batch], [name for _, name in batch]
             # Only one of the batches tells of times that cannot be read.
             heard = problems if at == 0 else ProblemCount()
             for _, cells in self._database.stream(connection, statement):
-                parts.append(self._cells.wide(cells, codes, found.times, heard))
+                parts.append(self._cells.wide(cells, codes, found.times, heard, called))
         return join_rows(parts)
 
     def _wide_tags(self, found: _Found) -> set[str]:

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 import pyarrow as pa
-from sqlalchemy import BigInteger, DateTime, String, or_, select
+from sqlalchemy import BigInteger, DateTime, String, and_, or_, select
 
 from connectors.base import ConnectorError
 from connectors.numbers import floats
@@ -28,10 +28,13 @@ if TYPE_CHECKING:
 __all__ = ["SqlTimes"]
 
 _REACH = pd.Timedelta(microseconds=DOUBLED_HOUR_REACH)
-_FARTHEST_OFFSET = pd.Timedelta(hours=26)
+# The clocks of the world, by the IANA time zone database: 12 h behind UTC to 14 h before it.
+_BEHIND, _BEFORE = pd.Timedelta(hours=12), pd.Timedelta(hours=14)
 _PER_SECOND = {"epoch_s": 1, "epoch_ms": 1_000, "epoch_us": 1_000_000}
 _MINUTE = len("2026-01-31T06:00")
 _DATE = len("2026-01-31")
+_ANY_DATE = "____-__-__"
+_A_MINUTE = dt.timedelta(minutes=1)
 _ISO = re.compile(r"\d{4}-\d{2}-\d{2}([T ]|$)")
 
 
@@ -80,10 +83,15 @@ class SqlTimes:
         """Return what a row must fulfil to be in the window, or close to it.
 
         Local times and texts are asked for with a margin: the exact cut is made on UTC afterwards.
+
+        Raises:
+            ConnectorError: the column holds no times of its kind.
         """
         if self.kind != "text_iso":
             return self._between(*self.bounds(window))
-        return self._text_between(connection, *self._wall_clock(window))
+        self._check_texts(connection)
+        start, end = self._wall_clock(window)
+        return self._text_between(start, end, *self._any_clock(window, start, end))
 
     def bounds(self, window: Window) -> tuple[Any, Any]:
         """Return the least time that may be in the window, and the first that cannot.
@@ -101,7 +109,7 @@ class SqlTimes:
         start, end = self._wall_clock(window)
         if self.kind == "local":
             return start.to_pydatetime(), end.to_pydatetime()
-        low, high = start - _FARTHEST_OFFSET, end + _FARTHEST_OFFSET
+        low, high = self._any_clock(window, start, end)
         return low.isoformat(sep=" ")[:_MINUTE], high.isoformat(sep="T")[:_MINUTE]
 
     @property
@@ -136,15 +144,23 @@ class SqlTimes:
         margin = _REACH if around[0] != around[1] else pd.Timedelta(0)
         return self.reader.wall_clock(start) - margin, self.reader.wall_clock(end) + margin
 
-    def _text_between(
-        self, connection: Connection, start: pd.Timestamp, end: pd.Timestamp
-    ) -> tuple[ColumnElement[bool], ...]:
-        """Compare texts as texts, whether a blank or a T stands before the time of day.
+    @staticmethod
+    def _any_clock(
+        window: Window, low: pd.Timestamp, high: pd.Timestamp
+    ) -> tuple[pd.Timestamp, pd.Timestamp]:
+        """Return bounds that hold the window as any clock of the world shows it.
 
-        A blank sorts before a T, so that one range holds the window in both forms: from its start
-        with a blank to its end with a T. What lies in it too, the first day's earlier times with a
-        T and the last day's later ones with a blank, is taken out again.
+        Args:
+            window: the window.
+            low: where the zone's own clock begins to be asked for.
+            high: where that ends.
         """
+        start, end = (t.tz_convert("UTC").tz_localize(None) for t in (window.start, window.end))
+        earliest, latest = min(start - _BEHIND, low), max(end + _BEFORE, high)
+        # A minute more on both sides: a date alone sorts before its midnight.
+        return earliest.floor("min") - _A_MINUTE, latest.ceil("min") + _A_MINUTE
+
+    def _check_texts(self, connection: Connection) -> None:
         example = connection.execute(
             select(self.column).where(self.column.is_not(None)).limit(1)
         ).scalar()
@@ -154,19 +170,46 @@ class SqlTimes:
                 f"column '{self.name}' holds times such as {text[:40]!r}, which are no ISO "
                 "texts; correct the source's time_kind (epoch_s and epoch_ms are for numbers)"
             )
-        plain = text[_DATE:].rstrip("Zz").replace("+00:00", "")
-        if "+" in plain or "-" in plain or (self.zone != "UTC" and plain != text[_DATE:]):
-            start, end = start - _FARTHEST_OFFSET, end + _FARTHEST_OFFSET
-        first, last = start.floor("min"), end.ceil("min") + dt.timedelta(minutes=1)
+
+    def _text_between(
+        self, start: pd.Timestamp, end: pd.Timestamp, earliest: pd.Timestamp, latest: pd.Timestamp
+    ) -> tuple[ColumnElement[bool], ...]:
+        """Compare texts as texts, whether a blank or a T stands before the time of day.
+
+        A blank sorts before a T, so that one range holds the window in both forms: from its start
+        with a blank to its end with a T. What lies in it too, the first day's earlier times with a
+        T and the last day's later ones with a blank, is taken out again.
+
+        A text with an offset may show another clock than those around it: out of all that lie
+        within the reach of any clock, those with an offset are taken.
+        """
+        column = self.column
+        first, last = start.floor("min"), end.ceil("min") + _A_MINUTE
         first_day, last_day = f"{first:%Y-%m-%d}", f"{last:%Y-%m-%d}"
         since, until = f"{first:%H:%M}", f"{last:%H:%M}"
         # A date alone is its midnight, and sorts before all times of its day.
         low = first_day if since == "00:00" else f"{first_day} {since}"
-        return (
-            *self._between(low, f"{last_day}T{until}"),
-            or_(self.column < f"{first_day}T", self.column >= f"{first_day}T{since}"),
-            or_(self.column < f"{last_day} {until}", self.column >= f"{last_day}T"),
+        # What holds for most rows comes first: a database stops there.
+        plain = and_(
+            column >= low,
+            or_(column >= f"{first_day}T{since}", column < f"{first_day}T"),
+            or_(
+                column < f"{last_day} {until}",
+                and_(column >= f"{last_day}T", column < f"{last_day}T{until}"),
+            ),
         )
+        return (
+            *self._between(f"{earliest:%Y-%m-%d %H:%M}", f"{latest:%Y-%m-%dT%H:%M}"),
+            or_(plain, self._has_offset()),
+        )
+
+    def _has_offset(self) -> ColumnElement[bool]:
+        """Say of a text whether it shows another clock than the zone's."""
+        column = self.column
+        with_sign = or_(column.like(f"{_ANY_DATE}%+%"), column.like(f"{_ANY_DATE}%-%"))
+        if self.zone in {"UTC", "Etc/UTC"}:
+            return and_(with_sign, column.not_like("%+00:00"))
+        return or_(with_sign, column.like("%Z"), column.like("%z"))
 
     def _between(
         self, low: object, high: object

@@ -1,6 +1,8 @@
 from __future__ import annotations
 
+import random
 import sqlite3
+from contextlib import closing
 
 import numpy as np
 import pandas as pd
@@ -197,6 +199,64 @@ def test_texts_with_a_blank_and_with_a_t_are_both_found_at_the_windows_edges(
         ("date", asked[asked.hour * 60 + asked.minute == 0]),
     ):
         assert list(found["time"][found["tag"] == tag].dt.tz_localize(None)) == list(expected)
+
+
+OFFSETS = ("", "Z", "+01:00", "-05:00", "+14:00", "-12:00", "+05:45", "+0000", "+02")
+
+
+@pytest.mark.parametrize("zone", ["UTC", "Europe/Vienna", "Pacific/Kiritimati"])
+@pytest.mark.parametrize("first", ["", "+01:00"])
+def test_texts_of_many_clocks_in_one_column_are_found_in_the_window_that_they_mean(
+    database, source, zone, first
+):
+    dice = random.Random(zone + first)  # noqa: S311 - no secret, a test's own dice
+    times = pd.date_range("2026-01-29", "2026-02-03", freq="17min", tz="UTC")
+    cells = [(_text(times[0], first, zone, "T"), "a", 0.0, "Good")]
+    cells += [
+        (_text(time, dice.choice(OFFSETS), zone, dice.choice(" T")), "a", float(at), "Good")
+        for at, time in enumerate(times)
+    ]
+    fill(database, "text", cells[:1] + dice.sample(cells[1:], len(times)))
+    reader = source(database, time_kind="text_iso", time_zone=zone)
+    for start, hours in (("2026-01-31", 24), ("2026-01-31 05:00", 1), ("2026-01-30 11:30", 30)):
+        low = pd.Timestamp(start, tz="UTC")
+        high = low + pd.Timedelta(hours=hours)
+        found = reader.read(["a"], Window(low, high)).readings
+        assert list(found["time"]) == list(times[(times >= low) & (times < high)])
+
+
+def _text(time, offset, zone, separator):
+    """A moment as a clock of some offset shows it; without one, as the zone's does."""
+    shown = time.tz_convert(zone).tz_localize(None)
+    if offset:
+        shown = pd.Timestamp(f"{time:%Y-%m-%d %H:%M}")
+        if offset[0] in "+-":
+            hours = int(offset[:3])
+            minutes = int(offset[-2:]) if len(offset) > 3 else 0
+            shown += pd.Timedelta(hours=hours) + pd.Timedelta(minutes=minutes)
+    return f"{shown:%Y-%m-%d{separator}%H:%M:%S}{offset}"
+
+
+def test_of_each_problem_the_first_few_are_named_with_tag_and_time(database, source):
+    times = ["2026-01-31 06:00:00", "2026-01-31 06:01:00", "2026-01-31 06:02:00"]
+    cells = [("about 3", "Good"), ("41,5", "Good"), ("1", "so so")]
+    rows = [(time, "a", *cell) for time, cell in zip(times, cells, strict=True)]
+    fill(database, "timestamp", rows, "value text")
+    problems = source(database).read(["a", "b"], DAY).problems
+    assert [(p.what.split(":")[0], *((e.place, e.text) for e in p.examples)) for p in problems] == [
+        ("value is not a number", ("a 2026-01-31 06:00:00 UTC", "about 3")),
+        ("value is a text with a decimal comma", ("a 2026-01-31 06:01:00 UTC", "41,5")),
+        ("quality word is in no list", ("a 2026-01-31 06:02:00 UTC", "so so")),
+    ]
+
+
+def test_of_a_wide_table_the_column_and_time_of_a_problem_are_named(database, tmp_path):
+    create = "create table readings (time timestamp, a text, b text)"
+    execute(database, create, rows=[("2026-01-31 06:00:00", "1", "1,5")])
+    options = {"url": database, "table": "readings", "layout": "wide"}
+    with closing(SqlSource(parse_options("sql", options), tmp_path)) as reader:
+        (problem,) = reader.read(["a", "b"], DAY).problems
+    assert problem.where.endswith(":b 2026-01-31 06:00:00 UTC")
 
 
 def test_times_that_are_numbers_where_texts_are_expected_are_told(database, source):
