@@ -138,8 +138,9 @@ def _condition_blocks(a: Accounted, ambient: Ambient, uncertain: Uncertainties) 
         got = values[figure.name]
         u = uncertain.standard(uncertain.conditions[item.id, figure.name])
         own = got.flag
-        if a.classes_stated and figure.unit == "%":
-            own = np.where(_possible(got.value, u), own & ~np.int32(Flag.SECOND_LAW), own)
+        if a.classes_stated and figure.unit in _LEAST_AND_MOST:
+            possible = _possible(got.value, u, *_LEAST_AND_MOST[figure.unit])
+            own = np.where(possible, own & ~np.int32(Flag.SECOND_LAW), own)
         running = np.int32(Flag.OFF | Flag.STARTING | Flag.UNSTEADY)
         flag = np.asarray((a.flag if figure.needs_load else a.flag & ~running) | own)
         absent = np.where(np.isfinite(got.value), np.int32(0), np.int32(Flag.MISSING))
@@ -148,9 +149,15 @@ def _condition_blocks(a: Accounted, ambient: Ambient, uncertain: Uncertainties) 
     return blocks
 
 
-def _possible(share: FloatArray, u: FloatArray) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
-    """Where a share [%] is outside 0 to 100 by no more than its instruments explain."""
-    beyond = np.maximum(share - 100.0, -share)
+# What a share or a temperature difference that drives heat can be.
+_LEAST_AND_MOST = {"%": (0.0, 100.0), "K": (0.0, np.inf)}
+
+
+def _possible(
+    value: FloatArray, u: FloatArray, least: float, most: float
+) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+    """Where a figure is outside what can be by no more than its instruments explain."""
+    beyond = np.maximum(value - most, least - value)
     return np.asarray((beyond > 0) & (beyond <= COVERAGE * u))
 
 

@@ -356,6 +356,31 @@ def test_an_impossible_efficiency_within_its_uncertainty_contradicts_nothing(
     assert ((flags & int(Flag.SECOND_LAW) != 0) == flagged).all()
 
 
+@pytest.mark.parametrize(("above", "flagged"), [(0.6, False), (3.0, True)])
+def test_cooling_water_hotter_than_steam_within_its_thermometer_contradicts_nothing(
+    tmp_path, above, flagged
+):
+    """Steam at 0.08 bar boils at 41.51 degC (iapws); the outlet's thermometer is good to 0.5 K."""
+    boiling = IAPWS97(P=0.008, x=0).T - 273.15
+    ports = {"steam": "wet", "condensate": "drip", "cooling_in": "ci", "cooling_out": "co"}
+    site = build(
+        tmp_path,
+        {
+            "wet": {"pressure": "0.08 bar(a)", "dryness": 0.9, "flow": "10 kg/s"},
+            "drip": {"pressure": "0.08 bar(a)", "phase": "liquid", "flow": "10 kg/s"},
+            "ci": {"pressure": "2 bar(a)", "temperature": "30 degC", "flow": "400 kg/s"},
+            "co": {"pressure": "2 bar(a)", "temperature": "T", "flow": "400 kg/s"},
+        },
+        {"c": {"kind": "condenser", "ports": ports}},
+        AMBIENT_TAGS | {"T": {"unit": "degC", "uncertainty": "0.5 K"}},
+    )
+    batch = run(site, AMBIENT | {"T": boiling + above})
+    assert _value(batch, "c", "ttd") == pytest.approx(-above, abs=1e-4)
+    assert _value(batch, "c", "ttd", "u_value") == pytest.approx(0.5, rel=1e-9)
+    flags = _value(batch, "c", "ttd", "flag").astype(int)
+    assert ((flags & int(Flag.SECOND_LAW) != 0) == flagged).all()
+
+
 @pytest.mark.parametrize(("warmer", "told"), [(1.0, ""), (6.0, "TO may read too high")])
 def test_check_doubts_the_thermometer_that_warms_a_header(tmp_path, warmer, told):
     """Steam that leaves warmer than it came: 6 K are far beyond two thermometers, 1 K is not."""
