@@ -123,8 +123,9 @@ def _best_of(hours: pd.DataFrame, basis: str, block: int) -> tuple[float, float]
     destroyed = np.add.reduceat(hours["destroyed"].to_numpy(dtype=np.float64), starts)
     based = np.add.reduceat(hours[basis].to_numpy(dtype=np.float64), starts)
     ratios = destroyed[based > 0] / based[based > 0]
-    best = float(np.quantile(ratios, _BEST_SHARE)) if ratios.size else np.nan
-    return float(hours["load"].median()), best
+    best = np.quantile(ratios, _BEST_SHARE) if ratios.size else np.nan
+    # Less than nothing is destroyed by no machine: that is the instruments' error.
+    return float(hours["load"].median()), float(np.maximum(best, 0.0))
 
 
 def avoidable(best: Best, hours: pd.DataFrame) -> Avoidable:

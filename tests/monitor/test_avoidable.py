@@ -60,6 +60,23 @@ def test_a_machine_that_is_better_than_before_has_nothing_to_avoid():
     assert avoidable(best_demonstrated(hours()), hours(ratio=0.15)).share == 0.0
 
 
+def test_less_than_nothing_was_demonstrated_by_no_machine():
+    """At low load the readings were impossible: that excuses nothing at high load, and takes
+    nothing off what has to be destroyed there.
+
+    Now 0.3 of the product: at low load all of it is avoidable, at high load a third.
+    """
+    was = hours()
+    low = was["load"] < was["load"].median()
+    was["destroyed"] = np.where(low, -0.4, 0.2) * was["product"]
+    best = best_demonstrated(was)
+    assert best.ratios[[0, -1]] == pytest.approx([0.0, 0.2])
+    now = [hours(48, ratio=0.3, load=load) for load in (21.0, 29.0)]
+    assert [avoidable(best, one).share for one in now] == pytest.approx([1.0, 1 / 3])
+    both = (21 * 1.0 + 29 / 3) / (21 + 29)
+    assert avoidable(best, pd.concat(now)).share == pytest.approx(both)
+
+
 def test_destruction_that_goes_with_the_load_is_not_taken_for_waste():
     was = hours()
     was["destroyed"] *= was["load"] / 25.0
