@@ -118,8 +118,8 @@ class Gathered:
         return span_costs(self.site, self.store, self.start, self.end)
 
     def cost(self, mwh: float) -> float:
-        """What so much exergy costs at the site's flat price, in its currency."""
-        return mwh * self.site.file.economics.exergy_price
+        """What so much exergy costs at the mean price of what is supplied, in the currency."""
+        return mwh * self.costs.mean_price
 
     def ledger(self, start: pd.Timestamp, end: pd.Timestamp) -> tuple[LedgerLine, ...]:
         """The ledger's lines over a span."""
@@ -142,7 +142,7 @@ class Gathered:
             reference_kw=_value(table, f"{_COLUMN[key]}_reference_kw", "mean"),
             live_mwh=mwh,
             cost=self.cost(mwh) if paid else None,
-            co2_t=mwh * self.site.file.economics.co2 / 1e3 if paid else None,
+            co2_t=mwh * self.costs.mean_emission / 1e3 if paid else None,
             expanded_kw=COVERAGE * u.get((SITE_SUBJECT, f"{_COLUMN[key]}_live_kw"), np.nan),
         )
 
@@ -251,8 +251,7 @@ class Gathered:
         return tuple(sorted(rows, key=lambda r: order[r.state]))
 
     def _condition_row(self, item: Item, figure: Figure) -> ConditionRow:
-        points = self.drift_points(item.id, figure.name)
-        judged = points[points["judged"].astype(bool)] if len(points) else points
+        judged = self._judged_points(item.id, figure.name)
         last = judged.iloc[-1] if len(judged) else None
         if not figure.judged:
             state: Literal["steady", "drifting", "no baseline", "not judged"] = "not judged"
@@ -303,6 +302,17 @@ class Gathered:
         """Hourly points of one control chart over the span, UTC index."""
         return self.store.drift_points(equipment, figure, self.start, self.end)
 
+    def _judged_points(self, equipment: str, figure: str) -> pd.DataFrame:
+        """Those of the baseline that is in force at the span's end: an event retires the others."""
+        points = self.drift_points(equipment, figure)
+        if points.empty:
+            return points
+        of = points["baseline_id"]
+        # Without one now, nothing is equal to it.
+        same = (of == of.iloc[-1]).fillna(value=False).astype(bool)
+        kept: pd.DataFrame = points[points["judged"].astype(bool) & same]
+        return kept
+
     @cached_property
     def _open_alarms(self) -> dict[tuple[str, str], AlarmRecord]:
         return {(a.subject, a.figure): a for a in self.store.open_alarms() if a.cleared is None}
@@ -335,8 +345,7 @@ class Gathered:
         figure = figures.get(alarm.figure)
         if item is None or figure is None or alarm.cleared is not None:
             return ""
-        points = self.drift_points(alarm.subject, alarm.figure)
-        judged = points[points["judged"].astype(bool)] if len(points) else points
+        judged = self._judged_points(alarm.subject, alarm.figure)
         if not len(judged):
             return ""
         smallest = self.smallest_change(item, figure)

@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import shutil
 from collections import defaultdict
 from dataclasses import replace
 
 import numpy as np
 import pandas as pd
 import pytest
+from typer.testing import CliRunner
 
+from monitor.cli import app
+from monitor.commands.opening import opened_to_read
 from monitor.drift.message import cost_sentence
 from monitor.reports.costs import costs_view
 from monitor.reports.dead_state import dead_state_view
@@ -88,7 +92,7 @@ def test_what_is_destroyed_costs_what_the_chain_before_it_was_paid(reported, ove
     for row in costs.equipment:
         assert row.unit_cost == pytest.approx(unit_cost[row.id], rel=1e-9)
         assert row.cost_per_day == pytest.approx(row.destroyed_kw * 0.024 * row.unit_cost)
-        assert row.flat_per_day == pytest.approx(row.destroyed_kw * 0.024 * 50.0)
+        assert row.mean_per_day == pytest.approx(row.destroyed_kw * 0.024 * 50.0)
         assert row.fuel_kw == 0.0  # the site burns none
     by_machine = {row.id: row.cost_per_day for row in costs.equipment}
     assert {row.id: row.cost_per_day for row in overview.equipment} == by_machine
@@ -248,6 +252,25 @@ def test_a_charts_page_tells_the_smallest_change_that_counts_at_this_site(report
     (costs,) = [row for row in gathered.equipment_rows() if row.id == "TG1"]
     (chart,) = equipment_view(gathered, site.items["TG1"], costs, rows).residuals
     assert chart.design.endswith(f"and never narrower than {said} points.")
+
+
+def test_after_a_wash_no_figure_is_shown_against_the_baseline_before_it(reported, tmp_path):
+    """On a copy: an event is for good."""
+    shutil.copytree(reported.site.path.parent, tmp_path / "washed")
+    path = tmp_path / "washed" / reported.site.path.name
+    at = ["--at", "2026-01-15T12:00Z"]
+    ran = CliRunner().invoke(app, ["event", "add", str(path), "TG1", "wash", *at])
+    assert ran.exit_code == 0, ran.stderr
+    with opened_to_read(path) as washed:
+        gathered = replace(reported.gathered, site=washed.site, store=washed.store)
+        (row,) = [row for row in gathered.condition_rows("TG1") if row.figure == "eta_s_1"]
+        assert gathered.drift_points("TG1", "eta_s_1")["judged"].any()
+        assert all(alarm.cleared is not None for alarm in gathered.open_alarms())
+    assert row.state == "no baseline"
+    assert np.isnan(row.expected)
+    assert np.isnan(row.residual)
+    before = next(r for r in reported.gathered.condition_rows("TG1") if r.figure == "eta_s_1")
+    assert row.current == pytest.approx(before.current, abs=0.5)
 
 
 def test_only_what_expands_steam_to_power_has_an_expansion_line(reported):
