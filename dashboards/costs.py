@@ -43,10 +43,14 @@ def write_costs(view: CostsView, folder: Path) -> Path:
         ranking=_ranking(view.equipment, view.currency),
         avoidable_kw=_sum(row.avoidable_kw for row in view.equipment),
         avoidable_per_day=_sum(row.avoidable_per_day for row in view.equipment),
-        chances=[row for row in _by_avoidable(view.equipment) if row.avoidable_per_day > 0],
+        chances=[row for row in _by_avoidable(view.equipment) if row.avoidable_kw > _RESIDUE],
         notes=[row for row in view.streams if row.note],
     )
     return write_atomically(Path(folder) / COSTS_FILE, content)
+
+
+_RESIDUE = 1e-6
+"""[kW] What sums of doubles leave is no chance, though it may be all that a main destroys."""
 
 
 def _by_avoidable(rows: Sequence[CostRow]) -> list[CostRow]:

@@ -283,8 +283,8 @@ class CostRow:
     unit_cost: float
     """Cost of the exergy that it takes as its fuel, in the site's currency per MWh."""
     cost_per_day: float
-    flat_per_day: float
-    """The same destruction at the site's one exergy price."""
+    mean_per_day: float
+    """The same destruction at the mean price of what is supplied, as in the ledger."""
     fuel_kw: float
     """Fuel that the chain burns for what is destroyed here, by its lower heating value."""
     co2_t_per_day: float
@@ -336,8 +336,8 @@ class CostsView:
     """In the order of the site file."""
     supplied_per_day: float
     """What all that enters costs."""
-    flat_price: float
-    """The site's one price, currency per MWh of exergy."""
+    mean_price: float
+    """Mean price of what is supplied, currency per MWh of exergy."""
     reference: tuple[pd.Timestamp, pd.Timestamp] | None
     """The reference period that the best was demonstrated in; None while there is none."""
     currency: str

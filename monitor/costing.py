@@ -64,14 +64,31 @@ class SpanCosts:
     emissions: ChainCosts
     fuel: ChainCosts
 
-    def supplied_per_day(self, site: Site) -> float:
+    @property
+    def supplied_per_day(self) -> float:
         """What all that enters the site costs a day, in its currency."""
-        prices = self.money.prices.supplied
-        return sum(
-            prices[s] * rate * 24 / 1e3
-            for s, rate in self.rates.items()
-            if s not in site.producer and rate > 0
-        )
+        return self._supplied_cost(self.money.prices) * 24 / 1e3
+
+    @property
+    def mean_price(self) -> float:
+        """Mean cost of the exergy that enters the site, per MWh: with it a ledger adds up."""
+        return self._mean(self.money.prices)
+
+    @property
+    def mean_emission(self) -> float:
+        """Mean CO2 of the exergy that enters the site [kg/MWh]."""
+        return self._mean(self.emissions.prices)
+
+    def _mean(self, prices: Prices) -> float:
+        entering = sum(self._entering(prices).values())
+        return self._supplied_cost(prices) / entering if entering > 0 else prices.flat
+
+    def _supplied_cost(self, prices: Prices) -> float:
+        return sum(prices.supplied[s] * rate for s, rate in self._entering(prices).items())
+
+    def _entering(self, prices: Prices) -> dict[str, float]:
+        """Exergy rates of the streams that bring some into the site [kW]."""
+        return {s: self.rates[s] for s in prices.supplied if self.rates.get(s, 0.0) > 0}
 
 
 def span_costs(site: Site, store: SiteStore, start: Instant, end: Instant) -> SpanCosts:

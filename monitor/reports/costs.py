@@ -46,8 +46,8 @@ def costs_view(gathered: Gathered) -> CostsView:
         equipment=tuple(sorted(rows, key=lambda r: -np.nan_to_num(r.cost_per_day, nan=-np.inf))),
         losses=_loss_rows(gathered),
         streams=_stream_rows(gathered),
-        supplied_per_day=costs.supplied_per_day(gathered.site),
-        flat_price=gathered.site.file.economics.exergy_price,
+        supplied_per_day=costs.supplied_per_day,
+        mean_price=costs.mean_price,
         reference=demonstrated.reference_local,
         currency=gathered.site.file.economics.currency,
     )
@@ -63,7 +63,7 @@ def _cost_row(gathered: Gathered, item: Item, destroyed: float, part: Avoidable)
         destroyed_kw=destroyed,
         unit_cost=unit_cost,
         cost_per_day=mwh * unit_cost,
-        flat_per_day=gathered.cost(mwh),
+        mean_per_day=mwh * costs.mean_price,
         fuel_kw=destroyed * costs.fuel.equipment[item.id],
         co2_t_per_day=mwh * costs.emissions.equipment[item.id] / 1e3,
         # The reference dead state says which part; the live one how much that is.

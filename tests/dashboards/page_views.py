@@ -478,7 +478,7 @@ def costs(**changes: Any) -> CostsView:
                 destroyed_kw=kw,
                 unit_cost=18.0 + 9.0 * place,
                 cost_per_day=kw * 0.024 * (18.0 + 9.0 * place),
-                flat_per_day=kw * 0.96,
+                mean_per_day=kw * 0.96,
                 fuel_kw=kw * (0.9 + 0.3 * place),
                 co2_t_per_day=kw * 0.004,
                 avoidable_kw=NAN if place == 1 else 0.03 * kw,
@@ -498,7 +498,7 @@ def costs(**changes: Any) -> CostsView:
             StreamCostRow("Vent", 0.0, 40.0, NAN, 200.0, 0.0, "'vent' makes no product"),
         ),
         supplied_per_day=41_300.0,
-        flat_price=40.0,
+        mean_price=40.0,
         reference=(START, START + pd.Timedelta(days=14)),
         currency="EUR",
     )
@@ -507,7 +507,7 @@ def costs(**changes: Any) -> CostsView:
 
 def empty_costs() -> CostsView:
     return costs(
-        equipment=(), losses=(), streams=(), supplied_per_day=0.0, reference=None, flat_price=0.0
+        equipment=(), losses=(), streams=(), supplied_per_day=0.0, reference=None, mean_price=0.0
     )
 
 

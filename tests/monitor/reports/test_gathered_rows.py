@@ -19,6 +19,7 @@ from monitor.reports.dead_state import dead_state_view
 from monitor.reports.equipment import equipment_view
 from monitor.reports.expansion import expansion_view
 from monitor.reports.overview import flow_links, node_names, overview_view
+from monitor.site.load import load_site
 from monitor.site.models import DriftFigure
 
 SECONDS = 6 * 86400
@@ -97,6 +98,23 @@ def test_what_is_destroyed_costs_what_the_chain_before_it_was_paid(reported, ove
     by_machine = {row.id: row.cost_per_day for row in costs.equipment}
     assert {row.id: row.cost_per_day for row in overview.equipment} == by_machine
     assert costs.supplied_per_day == pytest.approx(kw["live_steam"] * 0.024 * 50.0)
+
+
+def test_the_ledgers_costs_add_up_to_what_the_supply_costs(reported, tmp_path):
+    """With a price of its own the steam is no longer costed at the site's 50 EUR/MWh."""
+    text = reported.site.path.read_text(encoding="utf-8")
+    priced = text.replace('id = "live_steam"', 'id = "live_steam"\nprice = 30.0\nco2 = 90.0')
+    path = tmp_path / "site.toml"
+    path.write_text(priced, encoding="utf-8")
+    gathered = replace(reported.gathered, site=load_site(path))
+    lines = {line.key: line for line in gathered.ledger(gathered.start, gathered.end)}
+    assert lines["supplied"].cost == pytest.approx(lines["supplied"].live_mwh * 30.0)
+    assert lines["supplied"].co2_t == pytest.approx(lines["supplied"].live_mwh * 0.090)
+    view = costs_view(gathered)
+    assert lines["supplied"].cost == pytest.approx(
+        view.supplied_per_day * SECONDS / 86400, rel=1e-6
+    )
+    assert view.mean_price == pytest.approx(30.0)
 
 
 def test_a_tonne_of_steam_costs_what_its_exergy_does(reported, costs):
