@@ -11,8 +11,9 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 import numpy as np
-import numpy.typing as npt
 import pandas as pd
+
+from monitor.readings.digest import words_of
 
 if TYPE_CHECKING:
     from monitor.site.load import Site
@@ -20,12 +21,6 @@ if TYPE_CHECKING:
 __all__ = ["Seen"]
 
 _HOUR, _PART = 3600, 600
-_Words = npt.NDArray[np.uint64]
-# Odd constants that spread the bits (the last two and the shifts: S. Vigna's splitmix64).
-_TIME, _VALUE, _REMARK = (
-    np.uint64(c) for c in (0x9E3779B97F4A7C15, 0xD6E8FEB86659FD93, 0xA0761D6478BD642F)
-)
-_STIR = (np.uint64(0xBF58476D1CE4E5B9), np.uint64(0x94D049BB133111EB))
 
 
 class Seen:
@@ -80,7 +75,7 @@ def _digests(readings: pd.DataFrame, first: int) -> dict[int, int]:
     micros = pd.DatetimeIndex(readings["time"]).as_unit("us").asi8
     part = -((first * 1_000_000 - micros) // (_PART * 1_000_000)) - 1
     after = part >= 0
-    part, words = part[after], _stirred(readings, micros)[after]
+    part, words = part[after], words_of(readings, micros)[after]
     count = np.bincount(part)
     sums = np.zeros(len(count), dtype=np.uint64)
     # The sums of so few bits are whole numbers that a float holds exactly.
@@ -88,19 +83,3 @@ def _digests(readings: pd.DataFrame, first: int) -> dict[int, int]:
         bits = (words >> np.uint64(shift)) & np.uint64(0x3FFFFF)
         sums += np.bincount(part, bits.astype(np.float64)).astype(np.uint64) << np.uint64(shift)
     return {first + k * _PART: int(sums[k]) for k in np.flatnonzero(count).tolist()}
-
-
-def _stirred(readings: pd.DataFrame, micros: npt.NDArray[np.int64]) -> _Words:
-    """A word a reading that hangs on all that a reading is."""
-    tag = readings["tag"].cat
-    names = pd.util.hash_array(tag.categories.to_numpy(dtype=object))
-    words: _Words = names[tag.codes.to_numpy()] + micros.view(np.uint64) * _TIME
-    words ^= readings["value"].to_numpy(np.float64).view(np.uint64) * _VALUE
-    remark = readings["quality"].to_numpy(np.uint64) * np.uint64(256)
-    if "marks" in readings:
-        remark = remark + readings["marks"].fillna(0).to_numpy(np.uint64)
-    words += remark * _REMARK
-    for shift, factor in zip((30, 27), _STIR, strict=True):
-        words ^= words >> np.uint64(shift)
-        words *= factor
-    return words ^ (words >> np.uint64(31))

@@ -18,6 +18,7 @@ import pandas as pd
 from connectors.base import Mark, Quality
 from monitor.flags import Flag, FlagArray
 from monitor.readings.checks import spikes, too_fast, trailing_spread
+from monitor.readings.digest import Words, digests, words_of
 from monitor.readings.grid import Grid, Held, hold_on_grid
 from monitor.site.tags import FLOWS
 from monitor.site.units import PressureDatum, Quantity
@@ -73,7 +74,8 @@ class Conditioned:
     Attributes:
         grid: the cells.
         tags: by tag name.
-        quality: one row a tag and hour: ``tag``, ``hour``, `QUALITY_COLUMNS`.
+        quality: one row a tag and hour: ``tag``, ``hour``, `QUALITY_COLUMNS`, and ``digest``, which
+            tells whether the readings are the same as another time.
     """
 
     grid: Grid
@@ -121,9 +123,11 @@ class _Part:
     value: FloatArray
     quality: npt.NDArray[np.uint8]
     marks: npt.NDArray[np.uint8]
+    words: Words
 
 
-_NOTHING = _Part(np.empty(0), np.empty(0), np.empty(0, dtype=np.uint8), np.empty(0, dtype=np.uint8))
+_NO_BYTES = np.empty(0, dtype=np.uint8)
+_NOTHING = _Part(np.empty(0), np.empty(0), _NO_BYTES, _NO_BYTES, words=np.empty(0, dtype=np.uint64))
 
 
 def _split(readings: pd.DataFrame) -> dict[str, _Part]:
@@ -132,7 +136,10 @@ def _split(readings: pd.DataFrame) -> dict[str, _Part]:
         return {}
     codes = readings["tag"].cat.codes.to_numpy()
     names = readings["tag"].cat.categories
-    seconds = pd.DatetimeIndex(readings["time"]).as_unit("us").asi8 / 1e6
+    micros = pd.DatetimeIndex(readings["time"]).as_unit("us").asi8
+    seconds = micros / 1e6
+    # Without marks: they hang on the export that a reading stands in.
+    words = words_of(readings[["tag", "value", "quality"]], micros)
     values = readings["value"].to_numpy(dtype=np.float64)
     quality = readings["quality"].to_numpy(dtype=np.uint8)
     marks = np.zeros(len(readings), dtype=np.uint8)
@@ -141,9 +148,10 @@ def _split(readings: pd.DataFrame) -> dict[str, _Part]:
         marks = readings["marks"].fillna(0).to_numpy(dtype=np.uint8)
     order = np.lexsort((seconds, codes))
     bounds = np.searchsorted(codes[order], np.arange(len(names) + 1))
-    seconds, values, quality, marks = seconds[order], values[order], quality[order], marks[order]
+    seconds, values, quality = seconds[order], values[order], quality[order]
+    marks, words = marks[order], words[order]
     return {
-        str(name): _Part(seconds[a:b], values[a:b], quality[a:b], marks[a:b])
+        str(name): _Part(seconds[a:b], values[a:b], quality[a:b], marks[a:b], words[a:b])
         for name, a, b in zip(names, bounds, bounds[1:], strict=False)
         if b > a
     }
@@ -325,6 +333,7 @@ def _counts(one: _Judged, grid: Grid, stuck: _BoolArray) -> _Counts:
     return counts | {
         "readings": total,
         "good": total - counts["uncertain"] - sum(counts[name] for name in one.left_out),
+        "digest": digests(seconds, one.part.words, bounds),
         "cells": per_hour(starts),
         "cells_missing": per_hour(starts[one.missing]),
         "cells_held": per_hour(starts[(one.held.fresh == 0) & ~one.missing]),
@@ -340,6 +349,6 @@ def _quality_table(counts: Mapping[str, _Counts], hours: _IntArray) -> pd.DataFr
         "hour": np.tile(hours, len(names)),
     }
     empty = [np.empty(0, dtype=np.int64)]
-    for column in QUALITY_COLUMNS:
+    for column in (*QUALITY_COLUMNS, "digest"):
         table[column] = np.concatenate([c[column] for c in counts.values()] or empty)
     return pd.DataFrame(table)

@@ -113,7 +113,8 @@ class FigureBatch:
             the figure's own unit, ``weight`` its denominator for weighted means (1 where it has
             none).
         ledger: ``time``, `LEDGER_COLUMNS`, ``flag``.
-        tag_quality: ``tag``, ``hour`` (integer UTC seconds), `QUALITY_COLUMNS`; counts.
+        tag_quality: ``tag``, ``hour`` (integer UTC seconds), `QUALITY_COLUMNS`, which are counts,
+            and perhaps ``digest``: it hangs on all readings of the hour, 0 for not known.
     """
 
     start: int

@@ -108,10 +108,11 @@ class Reads(SiteHandle):
         """How the readings of each tag were, hour by hour.
 
         Returns:
-            ``tag``, ``hour`` (UTC), `QUALITY_COLUMNS`, by tag and hour.
+            ``tag``, ``hour`` (UTC), `QUALITY_COLUMNS`, by tag and hour; ``digest``, a number that
+            hangs on all readings of the hour, 0 where it was not kept.
         """
         table, tags = schema.tag_quality, schema.tags
-        columns = [table.c[name] for name in QUALITY_COLUMNS]
+        columns = [table.c[name] for name in (*QUALITY_COLUMNS, "digest")]
         query = (
             sa.select(tags.c.tag, table.c.hour, *columns)
             .join(tags, tags.c.tag_id == table.c.tag_id)
@@ -119,7 +120,7 @@ class Reads(SiteHandle):
             .where(table.c.hour >= seconds(start), table.c.hour < seconds(end))
             .order_by(tags.c.tag, table.c.hour)
         )
-        return self._counted(query, ("tag", "hour", *QUALITY_COLUMNS), "hour")
+        return self._counted(query, ("tag", "hour", *QUALITY_COLUMNS, "digest"), "hour")
 
     def tag_quality_totals(self, start: Instant, end: Instant) -> pd.DataFrame:
         """How the readings of each tag were, over the whole stretch.
@@ -461,7 +462,8 @@ class Reads(SiteHandle):
         with reading(self.engine, "read tag quality") as connection:
             rows = [tuple(row) for row in connection.execute(query)]
         frame = pd.DataFrame(rows, columns=list(columns))
-        frame = frame.astype(dict.fromkeys(QUALITY_COLUMNS, "int64"))
+        counts = [name for name in columns if name not in {"tag", "hour"}]
+        frame = frame.astype(dict.fromkeys(counts, "int64"))
         if time is not None:
             frame[time] = utc(frame[time].astype(np.int64).tolist())
         return frame

@@ -49,7 +49,7 @@ __all__ = [
     "watermarks",
 ]
 
-REVISIONS = ("0001", "0002", "0003", "0004", "0005")
+REVISIONS = ("0001", "0002", "0003", "0004", "0005", "0006")
 """Every schema revision this program knows, oldest first; the last one is what it works with."""
 
 VERSION_TABLE = "lostwork_schema"
@@ -210,6 +210,7 @@ tag_quality = sa.Table(
     _key("tag_id"),
     _key("hour", sa.BigInteger),
     *(_count(name) for name in QUALITY_COLUMNS),
+    sa.Column("digest", sa.BigInteger, nullable=False, server_default="0"),
     _count("run_id"),
     sqlite_with_rowid=False,
 )

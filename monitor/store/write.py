@@ -274,6 +274,7 @@ class Writes(SiteHandle):
             "tag_id": tag_id,
             "hour": hours,
             **{name: frame[name].to_numpy(np.int64) for name in QUALITY_COLUMNS},
+            "digest": np.asarray(frame.get("digest", np.zeros(len(frame))), dtype=np.int64),
             "run_id": np.full(len(frame), run_id),
         }
         _refuse_twice({"tag_id": tag_id, "hour": hours}, "tag_quality")

@@ -91,6 +91,29 @@ def test_pieces_in_any_order_leave_the_store_of_one_clean_pass(
     assert "changed" not in told[0]
 
 
+def test_a_value_that_is_corrected_alone_replaces_the_old_figures_and_the_run_says_so(
+    make_plant, drive, stored, tmp_path
+):
+    plant = plant_in(make_plant, tmp_path / "corrected")
+    wrong = plant.readings.copy()
+    cell = (wrong["tag"] == "FT-6201") & (wrong["time"] == pd.Timestamp("2026-01-10T15:05Z"))
+    wrong.loc[cell, "value"] *= 1.01
+    plant.write(wrong)
+    driven = drive(plant, FIRST)
+    driven.daemon.cycle()
+    before = stored(plant)["stream_figures"]
+    plant.export()
+    driven.clock.set("2026-01-11T00:16Z")
+    driven.daemon.cycle()
+    (corrected, _) = driven.at.store.runs()
+    assert corrected.message.endswith(
+        "readings changed since, computed again: 1 tag of dcs from 2026-01-10 15:00 UTC to "
+        "2026-01-10 16:00 UTC (values alone, as many readings as before)"
+    )
+    after = stored(plant)["stream_figures"]
+    assert not after.head(len(before)).equals(before)
+
+
 def test_a_reading_that_is_corrected_replaces_the_old_figures_and_the_run_says_so(
     make_plant, drive, stored, tmp_path
 ):
