@@ -130,7 +130,10 @@ def _act(
                 ),
             )
         after = at.store.alarm(number)
-        typer.echo(f"alarm {number} of {record.subject} {record.figure} is {after.state}")
+        back = after.shelved_until
+        zone = at.site.file.site.time_zone
+        ends = "" if back is None else f" until {local(back, zone)}"
+        typer.echo(f"alarm {number} of {record.subject} {record.figure} is {after.state}{ends}")
 
 
 def _print(at: Opened, alarms: Sequence[AlarmRecord]) -> None:

@@ -207,10 +207,10 @@ def _after(alarm: Alarm, action: Action) -> AlarmState:
             raise AlarmError(f"a {alarm.state} alarm's condition is already so: cannot {action}")
         return alarm.state
     if key not in _NEXT:
-        possible = [a for a in Action if (alarm.state, a) in _NEXT or (alarm.state, a) in _WAY_BACK]
-        raise AlarmError(
-            f"cannot {action} an alarm that is {alarm.state}; it can: {', '.join(possible)}"
-        )
+        known = [a for a in Action if (alarm.state, a) in _NEXT or (alarm.state, a) in _WAY_BACK]
+        # What the data do, nobody can be told to do.
+        possible = ", ".join(a for a in known if a not in PROCESS_ACTIONS) or "nothing"
+        raise AlarmError(f"cannot {action} an alarm that is {alarm.state}; possible is: {possible}")
     return _NEXT[key]
 
 

@@ -292,6 +292,18 @@ def test_no_sentence_of_the_first_page_is_cut(tmp_path):
     assert "…" not in text.split('<div class="details">')[0]
 
 
+def test_what_sums_of_doubles_leave_is_no_chance_to_save(tmp_path):
+    view = page_views.costs()
+    one, two = view.equipment[0], view.equipment[2]
+    rows = (one, replace(two, destroyed_kw=1e-14, avoidable_kw=1e-14, avoidable_per_day=1e-14))
+    page = dashboards.write_costs(replace(view, equipment=rows), tmp_path)
+    chances = (
+        page.read_text(encoding="utf-8").split("What could be avoided")[1].split("</table>")[0]
+    )
+    assert one.name in chances
+    assert two.name not in chances
+
+
 def test_no_alarm_is_said_in_words(tmp_path):
     page = dashboards.write_overview(page_views.overview(alarms=()), tmp_path)
     assert "Nothing open: no alarm stands." in page.read_text(encoding="utf-8")
