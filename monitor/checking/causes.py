@@ -7,7 +7,7 @@ from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 from monitor.checking.lines import VERDICTS, Cause, Line
-from monitor.checking.source_lines import clock_words
+from monitor.checking.source_lines import FROZEN, clock_words
 from monitor.checking.tag_lines import out_of_range, unreadable
 from monitor.checking.typical import references
 
@@ -108,12 +108,15 @@ def _tags(site: Site, lines: Sequence[Line]) -> Iterable[Cause]:
             explains=tuple(("tag", tag) for tag in tags),
         )
     within = {tag for tags in by_format.values() for tag in tags}
+    frozen = {x.subject for x in lines if x.kind == "source" and x.reason.startswith(FROZEN)}
     silent = {x.subject for x in lines if x.kind == "source" and x.verdict == "wrong"}
     for line in lines:
         tag = site.tags.get(line.subject)
         if line.kind != "tag" or line.verdict == "ok" or tag is None:
             continue
         if line.subject in within or (tag.source in silent and not line.figures):
+            continue
+        if tag.source in frozen and line.reason.startswith("stuck"):
             continue
         if out_of_range(line):
             continue  # another unit may explain it, which says more

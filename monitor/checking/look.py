@@ -22,6 +22,7 @@ from monitor.checking.clocks import offsets
 from monitor.checking.datums import odd_datums
 from monitor.checking.equipment_lines import equipment_lines
 from monitor.checking.exports import doubts
+from monitor.checking.frozen import frozen_for
 from monitor.checking.lines import Checked, Line
 from monitor.checking.source_lines import STOPPED, SourceDay, source_line
 from monitor.checking.stream_lines import stream_lines
@@ -142,7 +143,9 @@ def _look(
     for source_id, probe in probes.items():
         own = [n for n, tag in site.used_tags().items() if tag.source == source_id]
         rows = sum(len(parts[n]) for n in own if n in parts)
-        seen_source = SourceDay(probe, rows, alone=not earlier & set(own))
+        seen_source = SourceDay(
+            probe, rows, not earlier & set(own), frozen_for(site, parts, source_id)
+        )
         lines.append(source_line(site, source_id, seen_source, probes, shifts))
     counted = batch.tag_quality.groupby("tag", observed=True)[["cells", "cells_stuck"]].sum()
     cells, stuck_cells = (counted[c].to_numpy(dtype=np.float64) for c in ("cells", "cells_stuck"))

@@ -17,7 +17,7 @@ if TYPE_CHECKING:
     from monitor.checking.clocks import Offset
     from monitor.site.load import Site
 
-__all__ = ["STOPPED", "SourceDay", "clock_words", "source_line", "span"]
+__all__ = ["FROZEN", "STOPPED", "SourceDay", "clock_words", "source_line", "span"]
 
 STOPPED = 3 * 86400
 """[s] A source this far behind the others has stopped; nearer ones may come once a day."""
@@ -32,6 +32,12 @@ _TEN = 10.0
 _AHEAD_WORDS = (
     "its newest reading lies {} in the future; check time_zone and time_format, and the clock of "
     "the machine that writes it"
+)
+FROZEN = "frozen: all its tags repeat"
+_FROZEN_WORDS = (
+    FROZEN
+    + " their last values to the last digit since {} before its newest reading: what feeds it "
+    "has stopped while it goes on answering; see to the interface, then backfill the time"
 )
 _LAG_WORDS = (
     "it lags {} behind the others: figures that need it come so much later; right for an export "
@@ -48,11 +54,13 @@ class SourceDay:
         probe: a quick look at it.
         rows: readings of the site's tags in the newest day.
         alone: nothing stands in the days before that one.
+        frozen: how long it has repeated its last values [s], None where they move.
     """
 
     probe: Probe
     rows: int
     alone: bool = False
+    frozen: float | None = None
 
 
 def source_line(
@@ -124,6 +132,8 @@ def _findings(
         yield "wrong", _AHEAD_WORDS.format(span(ahead))
     if lag > STOPPED:
         yield "wrong", f"it stopped {span(lag)} before the others"
+    if seen.frozen is not None:
+        yield "wrong", _FROZEN_WORDS.format(span(seen.frozen))
     if seen.rows == 0:
         yield "wrong", "none of the site's tags has a reading in the newest day of data"
     if lag > site.file.site.look_back and offset is None:

@@ -98,6 +98,30 @@ def test_a_tag_that_stands_still_is_stuck(faulty, tag):
     assert verdict_of(checked, "tag", tag) == "wrong"
 
 
+@pytest.mark.parametrize("hours", [3, 6])
+def test_a_source_that_repeats_its_last_values_is_frozen_after_the_stuck_time(faulty, hours):
+    tags = faulty.tags()
+    own = tags.loc[tags["source"] == "utilities", "name"]
+    since = pd.Timestamp("2026-02-27T00:00Z") - pd.Timedelta(hours=hours)
+
+    def freeze(values):
+        held = values.copy()
+        held[times(values) >= since] = values[times(values) < since].iloc[-1]
+        return held
+
+    for tag in own:
+        faulty.write(tag, freeze)
+    checked = look_at(faulty)
+    reasons = {cause.subject: cause.reason for cause in checked.causes}
+    if hours == 3:
+        assert "utilities" not in reasons
+    else:
+        assert reasons["utilities"].startswith("frozen: all its tags repeat their last values")
+        assert "since 6" in reasons["utilities"]
+        assert verdict_of(checked, "source", "utilities") == "wrong"
+        assert not any(reason.startswith("stuck") for reason in reasons.values())
+
+
 # 5. a source whose times are read in another zone
 
 
