@@ -297,7 +297,7 @@ class CostRow:
 
 @dataclass(frozen=True)
 class LossRow:
-    """One stream that leaves the site for nothing."""
+    """One stream that leaves the site for nothing, or heat that a piece of equipment loses."""
 
     name: str
     exergy_kw: float

@@ -84,7 +84,23 @@ def _loss_rows(gathered: Gathered) -> tuple[LossRow, ...]:
         )
         for stream, hourly in costs.money.losses.items()
     ]
+    rows += [row for item in gathered.items if (row := _heat_row(gathered, item)) is not None]
     return tuple(sorted(rows, key=lambda r: -np.nan_to_num(r.cost_per_day, nan=-np.inf)))
+
+
+def _heat_row(gathered: Gathered, item: Item) -> LossRow | None:
+    """Heat that leaves above (or below) T0 by a stated boundary: it is lost, not destroyed."""
+    if item.options.boundary_temperature is None or item.options.heat_loss != "balance":
+        return None
+    costs, mean = gathered.costs, gathered.equipment_means["mean"]
+    exergy = float(cast("float", mean.get((item.id, "heat_loss_exergy_live_kw"), np.nan)))
+    mwh = exergy * _HOURS_PER_DAY / 1e3
+    return LossRow(
+        name=f"Heat lost by {item.name}",
+        exergy_kw=exergy,
+        cost_per_day=mwh * costs.money.equipment[item.id],
+        co2_t_per_day=mwh * costs.emissions.equipment[item.id] / 1e3,
+    )
 
 
 def _stream_rows(gathered: Gathered) -> tuple[StreamCostRow, ...]:

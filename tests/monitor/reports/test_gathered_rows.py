@@ -117,6 +117,25 @@ def test_the_ledgers_costs_add_up_to_what_the_supply_costs(reported, tmp_path):
     assert view.mean_price == pytest.approx(30.0)
 
 
+def test_heat_lost_at_a_stated_temperature_costs_what_its_equipment_is_fed_with(reported, tmp_path):
+    """It is no part of what is destroyed; steam is bought at 50 EUR and 200 kg of CO2 per MWh."""
+    text = reported.site.path.read_text(encoding="utf-8")
+    path = tmp_path / "site.toml"
+    stated = 'id = "HDR62"\nboundary_temperature = "70 degC"\n'
+    path.write_text(text.replace('id = "HDR62"\n', stated), encoding="utf-8")
+    gathered = replace(reported.gathered, site=load_site(path))
+    means = reported.gathered.equipment_means.copy()
+    means.loc[("HDR62", "heat_loss_exergy_live_kw"), "mean"] = 250.0
+    gathered.__dict__["equipment_means"] = means
+    header = gathered.site.items["HDR62"].name
+    (row,) = [row for row in costs_view(gathered).losses if row.name == f"Heat lost by {header}"]
+    assert row.exergy_kw == 250.0
+    assert row.cost_per_day == pytest.approx(0.250 * 24 * 50.0)
+    assert row.co2_t_per_day == pytest.approx(0.250 * 24 * 0.200)
+    names = [row.name for row in costs_view(reported.gathered).losses]
+    assert not any(name.startswith("Heat lost") for name in names)
+
+
 def test_a_tonne_of_steam_costs_what_its_exergy_does(reported, costs):
     means = reported.store.means("stream", reported.gathered.start, reported.gathered.end)["mean"]
     flow = means[("live_steam", "mass_flow_kg_s")] * 3.6
