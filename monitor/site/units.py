@@ -146,6 +146,10 @@ _DIMENSIONS = {
 }
 # "Nm^3" would be a newton metre cubed.
 _NORM = re.compile(r"\b(?P<prefix>k?)(?P<kind>[NS])m(?:\^3|\*\*3|³)")
+# Where M is a thousand in the trade of the US and a million in SI, and MM a million in the trade.
+_THOUSAND_OR_MILLION = re.compile(r"\bM(?P<of>Btu|BTU|scf|lbs?|pounds?)\b")
+_MILLION = re.compile(r"\bMM(?P<of>Btu|BTU|scf|lbs?)\b")
+_TON = re.compile(r"\btons?\b")
 _COMMON = (
     "bar(g)", "bar(a)", "kPa(g)", "kPa(a)", "MPa(a)", "psi(g)", "psi(a)", "mbar(a)", "hPa(a)",
     "mmHg(a)", "mmHg(vac)", "inHg(vac)", "degC", "degF", "K", "t/h", "kg/h", "kg/s", "klb/h",
@@ -192,8 +196,10 @@ def parse_unit(text: str) -> Unit:
     stripped = _JOINED.get(text.strip(), text.strip())
     match = _DATUM.match(stripped)
     base, datum = (match["base"], match["datum"]) if match else (stripped, None)
+    _refuse_two_meanings(text, base)
+    spelt = _MILLION.sub(r"M\g<of>", _NORM.sub(r"\g<prefix>\g<kind>m3", base))
     try:
-        unit = _registry().Unit(_SPELLINGS.get(base, _NORM.sub(r"\g<prefix>\g<kind>m3", base)))
+        unit = _registry().Unit(_SPELLINGS.get(base, spelt))
     except Exception as error:
         near = difflib.get_close_matches(stripped, _COMMON, n=1)
         hint = f"; did you mean '{near[0]}'?" if near else ""
@@ -215,6 +221,20 @@ def parse_unit(text: str) -> Unit:
         offset=zero if measured is Quantity.TEMPERATURE else 0.0,
         datum=PressureDatum(_DATUM_WORDS.get(datum, datum)) if datum else None,
     )
+
+
+def _refuse_two_meanings(text: str, base: str) -> None:
+    two = _THOUSAND_OR_MILLION.search(base)
+    if two:
+        of = two["of"]
+        raise UnitError(
+            f"'{text}': M{of} is a thousand {of} to some and a million to others; write 'k{of}' "
+            f"or 'MM{of}'"
+        )
+    if _TON.search(base):
+        raise UnitError(
+            f"'{text}': a ton is 2000 lb to some and 1000 kg to others; write 'short_ton' or 't'"
+        )
 
 
 def _quantity_of(unit: Any, text: str) -> Quantity:  # noqa: ANN401

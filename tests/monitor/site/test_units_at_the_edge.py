@@ -22,6 +22,7 @@ from monitor.site.units import Quantity, UnitError, duration_s, parse_unit, quan
         ("inHg(a)", 1.0, 3386.3886403, "NIST SP 811 (2008) B.8, conventional mercury"),
         ("cmHg(a)", 1.0, 1333.22387415, "NIST SP 811 (2008) B.8, conventional mercury"),
         ("mbar(a)", 1.0, 100.0, "NIST SP 811 (2008) B.8"),
+        ("short_ton/h", 1.0, 0.25199576111, "NIST SP 811 (2008) B.8: ton, short (2000 lb)"),
         ("MW", 1.0, 1e6, "SI"),
         ("%", 1.0, 0.01, "SI"),
     ],
@@ -55,6 +56,10 @@ def test_gauge_and_vacuum_become_absolute_with_the_barometer(
         ("bar", "pressure without a datum; write 'bar(a)' for absolute, 'bar(g)' for gauge"),
         ("degX", "is not a unit; did you mean 'degF'?"),
         ("t/h(g)", "only a pressure can be absolute or gauge"),
+        ("MBtu/h", "is a thousand Btu to some and a million to others; write 'kBtu' or 'MMBtu'"),
+        ("Mscf/h", "write 'kscf' or 'MMscf'"),
+        ("Mlb/h", "write 'klb' or 'MMlb'"),
+        ("ton/h", "a ton is 2000 lb to some and 1000 kg to others; write 'short_ton' or 't'"),
         ("m/s", "measures nothing this tool knows"),
         ("'; DROP TABLE", "is not a unit"),
     ],
@@ -63,6 +68,19 @@ def test_a_wrong_unit_is_answered_with_what_would_be_right(text, says):
     with pytest.raises(UnitError) as caught:
         parse_unit(text)
     assert says in str(caught.value)
+
+
+@pytest.mark.parametrize(
+    ("text", "si", "source"),
+    [
+        ("MMBtu/h", 2.930711e5, "NIST SP 811 (2008) B.8: 1 Btu_IT/h is 2.930711E-01 W"),
+        ("kBtu/h", 2.930711e2, "NIST SP 811 (2008) B.8"),
+        ("MMscf/h", 1e6 * 0.028316846592 * 273.15 / 288.7055556 / 3600, "ft^3: NIST SP 811 B.8"),
+        ("MMlb/h", 125.9978805556, "NIST SP 811 (2008) B.8"),
+    ],
+)
+def test_a_million_of_the_trade_is_a_million(text, si, source):
+    assert parse_unit(text).scale == pytest.approx(si, rel=1e-6), source
 
 
 def test_a_quantity_of_the_wrong_kind_says_what_is_wanted():
