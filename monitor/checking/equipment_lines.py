@@ -23,7 +23,8 @@ if TYPE_CHECKING:
     from monitor.figures import Computed
     from monitor.site.load import Site
 
-__all__ = ["equipment_lines"]
+_RESIDUE = 1e-9
+__all__ = ["equipment_lines", "kilowatts"]
 
 IMBALANCE_LOOK, IMBALANCE_WRONG = 0.03, 0.15
 """Shares of what goes in: meters of 1 to 2 % explain the first, nothing but an error the second."""
@@ -68,10 +69,10 @@ def equipment_lines(
         found = (
             f"mass {_percent(shares['mass_imbalance_share'])}, energy "
             f"{_percent(shares['energy_imbalance_share'])}, closure "
-            f"{_percent(shares['closure_share'])}; destroys {destroyed:.4g} kW"
+            f"{_percent(shares['closure_share'])}; destroys {kilowatts(destroyed, entered)} kW"
         )
         u = means["u_destroyed_live_kw"]
-        found += f" +/- {COVERAGE * u:.4g} kW" if np.isfinite(u) else ""
+        found += f" +/- {kilowatts(COVERAGE * u, entered, 2)} kW" if np.isfinite(u) else ""
         spare = spare_measurements(item)
         found += "".join(
             f"; {balance} balance spare: any one of {', '.join(tags)} could be left to it"
@@ -164,6 +165,14 @@ def _judge_pressure(item: Item, bar: Mapping[str, float]) -> tuple[Verdict, str]
 
 def _share(part: float, whole: float) -> float:
     return float(part / whole) if whole and np.isfinite(whole) else float("nan")
+
+
+def kilowatts(value: float, entered: float, digits: int = 4) -> str:
+    """A rate in so many digits; what sums of doubles leave of what enters is none."""
+    if abs(value) <= _RESIDUE * abs(entered):
+        return "0"
+    text = f"{value:.{digits}g}"
+    return f"{float(text):.0f}" if "e+" in text else text
 
 
 def _percent(share: float) -> str:

@@ -13,6 +13,7 @@ from iapws import IAPWS97
 
 from monitor.checking import check
 from monitor.checking.contradictions import contradictions
+from monitor.checking.equipment_lines import kilowatts
 from monitor.checking.exports import doubts
 from monitor.checking.readings_otherwise import guesses
 from monitor.checking.suspects import suspects
@@ -252,3 +253,17 @@ def test_what_a_stream_near_boiling_feeds_is_not_called_near_boiling_itself(tmp_
     reasons = {line.subject: line.reason for line in check(site).lines if line.kind == "stream"}
     assert reasons["water"].startswith("within 2 K of saturation p and T do not fix the state")
     assert reasons["fed"].startswith("its flow or state is found from a stream that is near")
+
+
+@pytest.mark.parametrize(
+    ("value", "digits", "said"),
+    [
+        (1.3e-14, 4, "0"),
+        (10444.4, 4, "10440"),
+        (236.1, 2, "240"),
+        (5.3, 2, "5.3"),
+        (-2.5, 4, "-2.5"),
+    ],
+)
+def test_a_rate_is_told_without_powers_of_ten_and_rounding_as_none(value, digits, said):
+    assert kilowatts(value, 326.0, digits) == said
