@@ -77,6 +77,7 @@ def tag_line(site: Site, tag: Tag, seen: TagDay) -> Line:
         "outside_share": float(outside.mean()),
         "stuck_share": seen.stuck,
         "longest_gap_s": gap,
+        "begins_after_s": float(part["time"].iloc[0].timestamp() - seen.start),
         "uncovered_share": _uncovered(part, tag, seen),
         "silent_s": _silent(part, value, quality, seen.end),
     }
@@ -156,7 +157,11 @@ def _findings(
         yield "look", "the historian calls many of its readings bad or uncertain"
     if stuck is not None:
         yield stuck
-    if uncovered > _UNCOVERED:
+    if uncovered > _UNCOVERED and gap <= tag.hold:
+        # No longer hold would reach back before the first reading.
+        begins = float(str(figures["begins_after_s"])) / HOUR
+        yield "look", f"its readings begin {begins:.1f} h after the day looked at does"
+    elif uncovered > _UNCOVERED:
         yield (
             "look",
             (

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import re
 
 import numpy as np
 import pandas as pd
@@ -267,3 +268,21 @@ def test_what_a_stream_near_boiling_feeds_is_not_called_near_boiling_itself(tmp_
 )
 def test_a_rate_is_told_without_powers_of_ten_and_rounding_as_none(value, digits, said):
     assert kilowatts(value, 326.0, digits) == said
+
+
+def test_a_day_that_begins_late_is_not_laid_to_the_holds_of_its_tags(tmp_path):
+    """A historian that was away for four days until five hours ago: no longer hold would help."""
+    site = _behind_a_deaerator(tmp_path)
+    before = pd.date_range("2026-01-06T00:00Z", periods=60, freq="5min")
+    times = before.append(pd.date_range("2026-01-10T19:00Z", "2026-01-11T00:00Z", freq="5min"))
+    readings = _just_below_boiling()
+    # Moving a little all the time, as transmitters do.
+    rows = [
+        f"{t:%Y-%m-%dT%H:%M:%SZ},{n},{v * (1 + 1e-4 * (k % 7)):.5f}"
+        for k, t in enumerate(times)
+        for n, v in readings.items()
+    ]
+    (tmp_path / "readings.csv").write_text("\n".join(["time,tag,value", *rows]), encoding="utf-8")
+    (line,) = [x for x in check(site).lines if (x.kind, x.subject) == ("tag", "F")]
+    assert line.verdict == "look"
+    assert re.fullmatch(r"its readings begin 19\.\d h after the day looked at does", line.reason)
