@@ -190,9 +190,10 @@ class SqlTimes:
         # A date alone is its midnight, and sorts before all times of its day.
         low = first_day if since == "00:00" else f"{first_day} {since}"
         # What holds for most rows comes first: a database stops there.
+        begun = [or_(column >= f"{first_day}T{since}", column < f"{first_day}T")]
         plain = and_(
             column >= low,
-            or_(column >= f"{first_day}T{since}", column < f"{first_day}T"),
+            *(begun if since != "00:00" else []),
             or_(
                 column < f"{last_day} {until}",
                 and_(column >= f"{last_day}T", column < f"{last_day}T{until}"),
@@ -220,7 +221,8 @@ class SqlTimes:
 def _texts(cells: Sequence[Any]) -> pa.Array:
     """Return cells as texts, a null as an empty one."""
     try:
-        return pa.array(list(cells), pa.string()).fill_null("")
+        held = cells if isinstance(cells, list) else list(cells)
+        return pa.array(held, pa.string()).fill_null("")
     except (pa.ArrowException, UnicodeError):
         texts = ["" if cell is None else str(cell) for cell in cells]
         return pa.array(texts, pa.string())

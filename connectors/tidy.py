@@ -209,13 +209,14 @@ def tidy(rows: Rows, tags: Sequence[str]) -> tuple[pd.DataFrame, int]:
     Returns:
         The table that `ReadResult` promises, and how many readings gave way to a later one.
     """
-    order = np.arange(len(rows))
-    if len(rows) and (np.diff(rows.time) < 0).any():
-        order = np.argsort(rows.time, kind="stable")
     # The stable sort of small integers is a radix sort: it costs next to nothing.
-    small = np.int16 if len(tags) < np.iinfo(np.int16).max else np.int32
-    order = order[np.argsort(rows.tag[order].astype(small), kind="stable")]
+    small = rows.tag.astype(np.int16 if len(tags) < np.iinfo(np.int16).max else np.int32)
+    order = np.argsort(small, kind="stable")
     tag, time = rows.tag[order], rows.time[order]
+    if ((time[1:] < time[:-1]) & (tag[1:] == tag[:-1])).any():
+        order = np.argsort(rows.time, kind="stable")
+        order = order[np.argsort(small[order], kind="stable")]
+        tag, time = rows.tag[order], rows.time[order]
     last = np.ones(len(order), dtype=np.bool_)
     last[:-1] = (tag[1:] != tag[:-1]) | (time[1:] != time[:-1])
     replaced = int(len(last) - last.sum())
