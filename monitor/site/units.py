@@ -14,6 +14,8 @@ from enum import StrEnum
 from functools import cache
 from typing import TYPE_CHECKING, Any, cast
 
+from monitor.site.factors import FACTORS
+
 if TYPE_CHECKING:
     import numpy as np
     import numpy.typing as npt
@@ -197,6 +199,28 @@ def parse_unit(text: str) -> Unit:
     match = _DATUM.match(stripped)
     base, datum = (match["base"], match["datum"]) if match else (stripped, None)
     _refuse_two_meanings(text, base)
+    known = FACTORS.get(base)
+    measured, scale, offset = (
+        (Quantity(known[0]), *known[1:]) if known else _by_pint(base, stripped, text)
+    )
+    if (measured is Quantity.PRESSURE) != (datum is not None):
+        if datum is None:
+            raise UnitError(
+                f"'{text}' is a pressure without a datum; write '{base}(a)' for absolute, "
+                f"'{base}(g)' for gauge, '{base}(vac)' for vacuum or '{base}(d)' for a difference"
+            )
+        raise UnitError(f"'{text}': only a pressure can be absolute or gauge")
+    return Unit(
+        text=text,
+        quantity=measured,
+        scale=scale,
+        offset=offset,
+        datum=PressureDatum(_DATUM_WORDS.get(datum, datum)) if datum else None,
+    )
+
+
+def _by_pint(base: str, stripped: str, text: str) -> tuple[Quantity, float, float]:
+    """Reduce any unit to SI: what it measures, its scale and its offset."""
     spelt = _MILLION.sub(r"M\g<of>", _NORM.sub(r"\g<prefix>\g<kind>m3", base))
     try:
         unit = _registry().Unit(_SPELLINGS.get(base, spelt))
@@ -205,22 +229,9 @@ def parse_unit(text: str) -> Unit:
         hint = f"; did you mean '{near[0]}'?" if near else ""
         raise UnitError(f"'{text}' is not a unit{hint}") from error
     measured = _quantity_of(unit, text)
-    if (measured is Quantity.PRESSURE) != (datum is not None):
-        if datum is None:
-            raise UnitError(
-                f"'{text}' is a pressure without a datum; write '{base}(a)' for absolute, "
-                f"'{base}(g)' for gauge, '{base}(vac)' for vacuum or '{base}(d)' for a difference"
-            )
-        raise UnitError(f"'{text}': only a pressure can be absolute or gauge")
     zero = cast("float", _registry().Quantity(0.0, unit).to(measured.value).magnitude)
     one = cast("float", _registry().Quantity(1.0, unit).to(measured.value).magnitude)
-    return Unit(
-        text=text,
-        quantity=measured,
-        scale=one - zero,
-        offset=zero if measured is Quantity.TEMPERATURE else 0.0,
-        datum=PressureDatum(_DATUM_WORDS.get(datum, datum)) if datum else None,
-    )
+    return measured, one - zero, zero if measured is Quantity.TEMPERATURE else 0.0
 
 
 def _refuse_two_meanings(text: str, base: str) -> None:

@@ -5,6 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from monitor.site import units
+from monitor.site.factors import FACTORS
 from monitor.site.units import Quantity, UnitError, duration_s, parse_unit, quantity
 
 
@@ -29,6 +31,12 @@ from monitor.site.units import Quantity, UnitError, duration_s, parse_unit, quan
 )
 def test_units_meet_their_published_factors(text, value, si, source):
     assert parse_unit(text).to_si(np.array(value)) == pytest.approx(si, rel=1e-9), source
+
+
+@pytest.mark.parametrize("base", FACTORS)
+def test_a_unit_that_is_known_beforehand_is_what_pint_gives(base):
+    measured, scale, offset = units._by_pint(base, base, base)
+    assert FACTORS[base] == (measured.value, scale, offset)
 
 
 @pytest.mark.parametrize(
