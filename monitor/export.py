@@ -9,6 +9,7 @@ import pandas as pd
 import pyarrow as pa
 from pyarrow import parquet
 
+from monitor.flags import describe
 from monitor.store.alarms import AlarmRecord
 from monitor.store.batch import (
     CONDITION_COLUMNS,
@@ -32,10 +33,10 @@ DAY = 86400
 _ALL = 1_000_000_000
 
 _COLUMNS: dict[str, tuple[str, ...]] = {
-    "streams": ("time", "subject", *STREAM_COLUMNS, "flag", "run_id"),
-    "equipment": ("time", "subject", *EQUIPMENT_COLUMNS, "flag", "run_id"),
-    "conditions": ("time", "subject", "figure", *CONDITION_COLUMNS, "flag", "run_id"),
-    "ledger": ("time", *LEDGER_COLUMNS, "flag", "run_id"),
+    "streams": ("time", "subject", *STREAM_COLUMNS, "flag", "rests_on", "run_id"),
+    "equipment": ("time", "subject", *EQUIPMENT_COLUMNS, "flag", "rests_on", "run_id"),
+    "conditions": ("time", "subject", "figure", *CONDITION_COLUMNS, "flag", "rests_on", "run_id"),
+    "ledger": ("time", *LEDGER_COLUMNS, "flag", "rests_on", "run_id"),
     "alarms": ("alarm_id", *(n for n in AlarmRecord.__dataclass_fields__ if n != "alarm_id")),
 }
 _COLUMNS["runs"] = tuple(Run.__dataclass_fields__)
@@ -122,11 +123,18 @@ def _with_runs(
 ) -> pd.DataFrame:
     """Figures with the number of the run that made each: see the runs for program and site file."""
     frame = _figures(store, what, start, end).reset_index()
+    frame["rests_on"] = _in_words(frame["flag"])
     keys = [key for key in _KEYS if key in frame.columns]
     runs = store.run_numbers(what, start, end)
     # As text on both sides: the store deals in categories.
     named = {key: "str" for key in keys if key != "time"}
     return frame.astype(named).merge(runs.astype(named), how="left", on=keys)
+
+
+def _in_words(flags: pd.Series[int]) -> pd.Series[str]:
+    """Say what each row rests on; there are few different flags."""
+    words = {flag: describe(int(flag)) for flag in flags.unique()}
+    return flags.map(words).astype("str")
 
 
 def _no_formulas(table: pd.DataFrame) -> pd.DataFrame:

@@ -9,6 +9,7 @@ import pytest
 
 import connectors
 from monitor.equipment import KINDS
+from monitor.flags import Flag, describe
 from monitor.site import models
 
 if TYPE_CHECKING:
@@ -52,6 +53,11 @@ def test_every_kind_and_port_is_documented(kind):
     row = next(line for line in README.splitlines() if line.startswith(f"| `{kind.name}` |"))
     for port in kind.ports:
         assert f"`{port.name}`" in row
+
+
+@pytest.mark.parametrize("flag", Flag, ids=lambda f: f.name)
+def test_every_flag_is_documented_with_its_number(flag):
+    assert f"| {flag.value} | {describe(flag)} |" in README
 
 
 def test_the_documented_defaults_are_the_ones_in_force():
