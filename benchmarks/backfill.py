@@ -17,10 +17,13 @@ lostwork stores more than the scripts do: states, flags, uncertainties, the qual
 roll-ups by shift and month. Where both have a figure, they are compared. Each runs in a process of
 its own; wall and CPU seconds are those after the imports, the children's whole; the memory is the
 largest of the process + that of its child. lostwork's seconds hold reading the site file, making
-the store, and the fits that the steam tables make at first use: a second, however long the stretch.
+the store, and the fits that the steam tables make at first use: a second or two, however long the
+stretch.
 
 Ratios belong to one run on one machine: seconds do not travel, and beside other work two processes
-are not twice as fast as one.
+are not twice as fast as one. Measured last on two shared cores, CPU seconds beside lostwork's in
+one process: 90 days of 5-minute figures, plain script 4.4, tuned 0.8, bare calls 0.4; 30 days of
+1-minute figures 6.7, 0.8 and 0.6.
 """
 
 from __future__ import annotations
