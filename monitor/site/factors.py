@@ -1,7 +1,8 @@
 """The units that nearly every site writes, reduced to SI beforehand.
 
-Reading all units that there are takes pint half a second at the start of each command; a site with
-these alone is spared it. Each number is the one that pint gives to the last bit; a test compares.
+Reading all units that there are takes pint a third of a second at the start of each command; a site
+with these alone is spared it. Each number is the one that pint gives to the last bit; a test
+compares.
 """
 
 from __future__ import annotations
