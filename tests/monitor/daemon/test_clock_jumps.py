@@ -11,6 +11,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from monitor import log
 from monitor.commands.opening import opened
 from monitor.running import Runner, new_scheduler
 from monitor.site.shifts import ShiftCalendar
@@ -75,6 +76,8 @@ def test_a_clock_that_jumps_forward_skips_to_the_present_at_once(jump, interval)
 
 
 def test_a_clock_that_was_a_year_ahead_leaves_no_job_waiting_for_a_year(make_plant, tmp_path):
+    # Another test's stderr, which the log may still go to, is closed.
+    log.configure()
     plant = make_plant(tmp_path / "site", days=0.5)
     scheduler = new_scheduler()
     runner = Runner("site", lambda: opened(plant.path), scheduler)
