@@ -8,9 +8,10 @@ from typing import TYPE_CHECKING, Any
 
 from dashboards.embed import Chart
 from dashboards.files import COSTS_FILE, write_atomically
-from dashboards.formats import money_column, plotly_text, quantity, shorten
+from dashboards.formats import money_column, plotly_text, quantity
+from dashboards.ranking import end_words, print_height, ranking_layout
 from dashboards.render import render_page
-from dashboards.theme import COLOURS, SIZES, axis, base_layout
+from dashboards.theme import COLOURS
 
 if TYPE_CHECKING:
     from collections.abc import Iterable, Sequence
@@ -20,7 +21,6 @@ if TYPE_CHECKING:
 __all__ = ["write_costs"]
 
 _MOST_BARS = 15
-_LABEL = 40
 
 
 def write_costs(view: CostsView, folder: Path) -> Path:
@@ -75,43 +75,17 @@ def _ranking(rows: Sequence[CostRow], currency: str) -> Chart | None:
         return None
     ranked = ranked[:_MOST_BARS]
     money = money_column((row.cost_per_day for row in ranked), currency)
-    avoidable = [max(row.avoidable_per_day, 0.0) or 0.0 for row in ranked]
-    avoidable = [value if math.isfinite(value) else 0.0 for value in avoidable]
+    # Above nothing and known, or nothing: NaN is not above it.
+    avoidable = [row.avoidable_per_day if row.avoidable_per_day > 0 else 0.0 for row in ranked]
     rest = [row.cost_per_day - part for row, part in zip(ranked, avoidable, strict=True)]
+    costs = [row.cost_per_day for row in ranked]
     data = [
         _bars(rest, ranked, "unavoidable, or not compared", COLOURS["soft"], money.unit),
         _bars(avoidable, ranked, "avoidable", COLOURS["vermilion"], money.unit),
-        {
-            "type": "scatter",
-            "mode": "text",
-            "x": [row.cost_per_day for row in ranked],
-            "y": list(range(len(ranked))),
-            "text": [f"\u2002{plotly_text(money.with_unit(row.cost_per_day))}" for row in ranked],
-            "textposition": "middle right",
-            "cliponaxis": False,
-            "showlegend": False,
-            "hoverinfo": "skip",
-        },
+        end_words(costs, [money.with_unit(cost) for cost in costs]),
     ]
-    layout = base_layout(
-        62 + 26 * len(ranked) + 20,
-        hovermode="closest",
-        barmode="stack",
-        margin={"l": 56, "r": 60, "t": 34, "b": 36, "pad": 4},
-        bargap=0.35,
-        xaxis=axis(
-            range=[0, ranked[0].cost_per_day * 1.25],
-            title={"text": f"{money.unit} per day", "standoff": 6},
-        ),
-        yaxis=axis(
-            autorange="reversed",
-            tickmode="array",
-            tickvals=list(range(len(ranked))),
-            ticktext=[plotly_text(shorten(row.name, _LABEL)) for row in ranked],
-            showgrid=False,
-            tickfont={"size": SIZES["small"], "color": COLOURS["ink"]},
-        ),
-    )
+    names, span = [row.name for row in ranked], (0.0, costs[0] * 1.25)
+    layout = ranking_layout(names, span, f"{money.unit} per day", barmode="stack")
     listed = "; ".join(
         f"{row.name} {quantity(row.cost_per_day, currency, 3)} a day" for row in ranked[:5]
     )
@@ -121,7 +95,7 @@ def _ranking(rows: Sequence[CostRow], currency: str) -> Chart | None:
         {"data": data, "layout": layout},
         f"Cost of destroyed exergy by equipment, the dearest first: {listed}.",
         note=f"{more} more in the table below." if more else "",
-        print_height=62 + 22 * len(ranked) + 20,
+        print_height=print_height(len(ranked)),
     )
 
 

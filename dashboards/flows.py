@@ -10,12 +10,12 @@ from dashboards.embed import Chart
 from dashboards.flow_graph import SMALL, columns, flow_graph, through
 from dashboards.flow_layout import flow_layout
 from dashboards.formats import MISSING, Column, money_column, plotly_text, power_column, shorten
+from dashboards.ranking import end_words, print_height, ranking_layout
 from dashboards.theme import (
     COLOURS,
     FLOW_COLOURS,
     FLOW_WORDS,
     SIZES,
-    axis,
     base_layout,
     tinted,
 )
@@ -166,7 +166,6 @@ def ranked_destruction(rows: Sequence[EquipmentRow], currency: str) -> Chart | N
     scale = power_column(row.destroyed_kw for row in ranked)
     money = money_column((row.cost_per_day for row in ranked), currency)
     positions = list(range(len(ranked)))
-    names = [plotly_text(shorten(row.name, _LABEL)) for row in ranked]
     words = [
         _bar_words(scale.with_unit(row.destroyed_kw), money.with_unit(row.cost_per_day))
         for row in ranked
@@ -199,44 +198,17 @@ def ranked_destruction(rows: Sequence[EquipmentRow], currency: str) -> Chart | N
     ends = [max(0.0, *(x for x in pair if math.isfinite(x))) for pair in both]
     lowest = min(x for pair in both for x in (0.0, *pair) if math.isfinite(x))
     highest = max(*ends, 0.0)
-    labels: dict[str, Any] = {
-        "type": "scatter",
-        "mode": "text",
-        "x": ends,
-        "y": positions,
-        "text": [f"\u2002{plotly_text(word)}" for word in words],
-        "textposition": "middle right",
-        "cliponaxis": False,
-        "showlegend": False,
-        "hoverinfo": "skip",
-    }
-    layout = base_layout(
-        62 + 26 * len(ranked) + 20,
-        hovermode="closest",
-        margin={"l": 56, "r": 60, "t": 34, "b": 36, "pad": 4},
-        bargap=0.35,
-        # A third of the width belongs to the words at the bars' ends.
-        xaxis=axis(
-            range=[lowest * 1.1, (highest or 1.0) * 1.5],
-            title={"text": scale.unit, "standoff": 6},
-        ),
-        yaxis=axis(
-            autorange="reversed",
-            tickmode="array",
-            tickvals=positions,
-            ticktext=names,
-            showgrid=False,
-            tickfont={"size": SIZES["small"], "color": COLOURS["ink"]},
-        ),
-    )
+    # A third of the width belongs to the words at the bars' ends.
+    span = (lowest * 1.1, (highest or 1.0) * 1.5)
+    layout = ranking_layout([row.name for row in ranked], span, scale.unit)
     listed = "; ".join(f"{row.name} {word}" for row, word in zip(ranked[:5], words, strict=False))
     rest = len(rows) - len(ranked)
     return Chart(
         "ranking",
-        {"data": [bars, reference, labels], "layout": layout},
+        {"data": [bars, reference, end_words(ends, words)], "layout": layout},
         f"Destroyed exergy by equipment, most first: {listed}.",
         note=f"{rest} more in the table below." if rest else "",
-        print_height=62 + 22 * len(ranked) + 20,
+        print_height=print_height(len(ranked)),
     )
 
 

@@ -6,7 +6,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, cast
+from typing import TYPE_CHECKING
 
 from monitor.economics import (
     cost_of_losses,
@@ -16,11 +16,10 @@ from monitor.economics import (
     supplied_prices,
     unit_costs,
 )
+from monitor.store.read import means_of
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
-
-    import pandas as pd
 
     from monitor.economics import Prices, UnitCosts
     from monitor.site.load import Site
@@ -93,8 +92,8 @@ class SpanCosts:
 
 def span_costs(site: Site, store: SiteStore, start: Instant, end: Instant) -> SpanCosts:
     """Carry the costs of what enters over the mean exergy rates of [start, end)."""
-    rates = _column(store.means("stream", start, end), "exergy_live_kw")
-    stored = _column(store.means("equipment", start, end), "stored_rate_live_kw")
+    rates = means_of(store.means("stream", start, end), "exergy_live_kw")
+    stored = means_of(store.means("equipment", start, end), "stored_rate_live_kw")
 
     def carried(prices: Prices) -> ChainCosts:
         streams = unit_costs(site, rates, prices, stored)
@@ -111,11 +110,3 @@ def span_costs(site: Site, store: SiteStore, start: Instant, end: Instant) -> Sp
         carried(supplied_emissions(site)),
         carried(supplied_fuel(site)),
     )
-
-
-def _column(means: pd.DataFrame, figure: str) -> dict[str, float]:
-    if not len(means):
-        return {}
-    at = means.index.get_level_values("figure") == figure
-    rows = means[at].droplevel("figure")["mean"]
-    return {str(k): float(cast("float", v)) for k, v in rows.items()}

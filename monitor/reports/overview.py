@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING, Literal, cast
+from typing import TYPE_CHECKING, Literal
 
 from dashboards.views import FlowLink, OverviewView
+from monitor.store.read import means_of
 
 if TYPE_CHECKING:
-    import pandas as pd
-
     from monitor.reports.gather import Gathered
 
 __all__ = ["flow_links", "node_names", "overview_view"]
@@ -51,14 +50,14 @@ def _boundary(stream: str) -> str:
 def flow_links(gathered: Gathered) -> tuple[FlowLink, ...]:
     """Mean exergy rate of every stream, and of what each piece of equipment destroys and loses."""
     means = gathered.store.means("stream", gathered.start, gathered.end)
-    rates = _column(means, "exergy_live_kw")
+    rates = means_of(means, "exergy_live_kw")
     links = [_stream_link(gathered, s, rates[s]) for s in gathered.site.streams if s in rates]
     sinks: tuple[tuple[str, Literal["destroyed", "lost"], str], ...] = (
         ("destroyed_live_kw", "destroyed", "Destroyed"),
         ("heat_loss_exergy_live_kw", "lost", "Heat lost"),
     )
     for figure, kind, word in sinks:
-        found = _column(gathered.equipment_means, figure)
+        found = means_of(gathered.equipment_means, figure)
         links += [
             FlowLink(i.id, kind, f"{word} in {i.name}", found[i.id], kind)
             for i in gathered.items
@@ -76,11 +75,3 @@ def _stream_link(gathered: Gathered, stream_id: str, kw: float) -> FlowLink:
     return FlowLink(
         source, target, stream.name or stream_id, kw, "lost" if target == "lost" else kind
     )
-
-
-def _column(means: pd.DataFrame, figure: str) -> dict[str, float]:
-    if not len(means):
-        return {}
-    at = means.index.get_level_values("figure") == figure
-    rows = means[at].droplevel("figure")["mean"]
-    return {str(k): float(cast("float", v)) for k, v in rows.items()}

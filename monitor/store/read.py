@@ -27,7 +27,7 @@ from monitor.store.spans import Spans
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
-__all__ = ["Reads", "energy_mwh"]
+__all__ = ["Reads", "energy_mwh", "means_of"]
 
 Resolution = Literal["hour", "shift", "day", "month"]
 
@@ -43,6 +43,15 @@ def energy_mwh(rollup: pd.DataFrame) -> pd.Series[float]:
         rollup: with ``mean`` [kW] and ``covered_s`` [s], as `Reads.rollups` gives.
     """
     return rollup["mean"] * rollup["covered_s"] / _KJ_PER_MWH
+
+
+def means_of(means: pd.DataFrame, figure: str) -> dict[str, float]:
+    """One figure's mean by subject, out of what `Reads.means` gives."""
+    if not len(means):
+        return {}
+    at = means.index.get_level_values("figure") == figure
+    rows = means[at].droplevel("figure")["mean"]
+    return {str(subject): float(mean) for subject, mean in rows.items()}
 
 
 class Reads(SiteHandle):
